@@ -1,0 +1,1 @@
+"""Errors, checks, grid and window values, view codes, site pixels and safe writing."""
