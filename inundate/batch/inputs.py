@@ -184,7 +184,11 @@ def read_weather(file: str) -> pd.DataFrame:
 
 def read_decisions(file: str) -> pd.DataFrame:
     """Read an analyst's decisions: scene_id, wetland_id ("" = all), use (bool), reason."""
-    table = _read_csv(file, ("scene_id", "wetland_id", "use", "reason"), dtype=dict.fromkeys(("scene_id", "wetland_id", "use", "reason"), "str"))
+    table = _read_csv(
+        file,
+        ("scene_id", "wetland_id", "use", "reason"),
+        dtype=dict.fromkeys(("scene_id", "wetland_id", "use", "reason"), "str"),
+    )
     table = table.fillna("")
     use = table["use"].str.strip().str.lower()
     wrong = ~use.isin(["true", "false"])

@@ -28,7 +28,7 @@ class Progress:
     def say(self, text: str) -> None:
         """Print one line."""
         if not self.quiet:
-            print(text, file=self.stream, flush=True)  # noqa: T201
+            print(text, file=self.stream, flush=True)
 
     @contextmanager
     def step(self, name: str, total: int | None = None) -> Iterator[Any]:

@@ -103,7 +103,5 @@ def make_site(grid: Grid, rows: np.ndarray, cols: np.ndarray, *, margin: int = 0
     label = (r // block) * (grid.width // block + 1) + c // block
     for one in np.unique(label):
         mine = label == one
-        windows.append(
-            Window(int(r[mine].min()), int(r[mine].max()) + 1, int(c[mine].min()), int(c[mine].max()) + 1)
-        )
+        windows.append(Window(int(r[mine].min()), int(r[mine].max()) + 1, int(c[mine].min()), int(c[mine].max()) + 1))
     return Site(grid, r.astype(np.int32), c.astype(np.int32), tuple(windows))

@@ -61,7 +61,14 @@ def write_map(path: Path, grid: Grid, blocks: Iterable[tuple[Window, np.ndarray]
         else:
             rough = scratch.with_suffix(".rough.tif")
             try:
-                sparse = {**profile, "tiled": True, "blockxsize": 512, "blockysize": 512, "sparse_ok": "TRUE", "compress": "DEFLATE"}
+                sparse = {
+                    **profile,
+                    "tiled": True,
+                    "blockxsize": 512,
+                    "blockysize": 512,
+                    "sparse_ok": "TRUE",
+                    "compress": "DEFLATE",
+                }
                 with rasterio.open(rough, "w", **sparse) as out:
                     for window, values in blocks:
                         where = RasterWindow(window.col0, window.row0, values.shape[1], values.shape[0])

@@ -30,11 +30,15 @@ def _stations(out: netCDF4.Dataset, wetlands: pd.DataFrame, crs: str) -> None:
         variable.setncatts({"standard_name": key, "long_name": f"{key} of the wetland's centroid", "units": unit})
         variable[:] = np.asarray(values)
     largest = out.createVariable("area_max", "f8", ("wetland",))
-    largest.setncatts({"long_name": "largest extent of the wetland", "units": "m2", "coordinates": "lat lon wetland_id"})
+    largest.setncatts(
+        {"long_name": "largest extent of the wetland", "units": "m2", "coordinates": "lat lon wetland_id"}
+    )
     largest[:] = wetlands["area_max_m2"].to_numpy()
     grid = out.createVariable("crs", "i4")
     grid.setncatts({"grid_mapping_name": "latitude_longitude", "crs_wkt": CRS.from_epsg(4326).to_wkt()})
-    grid.setncatts({"semi_major_axis": 6378137.0, "inverse_flattening": 298.257223563, "longitude_of_prime_meridian": 0.0})
+    grid.setncatts(
+        {"semi_major_axis": 6378137.0, "inverse_flattening": 298.257223563, "longitude_of_prime_meridian": 0.0}
+    )
 
 
 def _time(out: netCDF4.Dataset, days: np.ndarray) -> None:
@@ -105,7 +109,9 @@ def write_daily_netcdf(path: Path, daily: pd.DataFrame, wetlands: pd.DataFrame, 
             "area_hi": ("upper end of the 90 percent interval of inundated area", "area_hi_m2"),
         }
         for key, (words_, column) in words.items():
-            variable = out.createVariable(key, "f4", ("wetland", "time"), zlib=True, fill_value=_FILL, chunksizes=chunks)
+            variable = out.createVariable(
+                key, "f4", ("wetland", "time"), zlib=True, fill_value=_FILL, chunksizes=chunks
+            )
             extra = {"ancillary_variables": "area_lo area_hi basis leaf_state"} if key == "area" else {}
             variable.setncatts({"long_name": words_, "units": "m2", **common, **extra})
             variable[:] = ordered[column].to_numpy(np.float32).reshape(shape)
@@ -143,6 +149,10 @@ def write_draws_netcdf(
         number.setncatts({"long_name": "number of the draw", "units": "1"})
         number[:] = np.arange(draws.shape[0])
         chunks = (1, min(draws.shape[1], 64), min(draws.shape[2], 1024))
-        area_ = out.createVariable("area", "f4", ("draw", "wetland", "time"), zlib=True, fill_value=_FILL, chunksizes=chunks)
-        area_.setncatts({"long_name": "inundated area", "units": "m2", "coordinates": "lat lon wetland_id", "grid_mapping": "crs"})
+        area_ = out.createVariable(
+            "area", "f4", ("draw", "wetland", "time"), zlib=True, fill_value=_FILL, chunksizes=chunks
+        )
+        area_.setncatts(
+            {"long_name": "inundated area", "units": "m2", "coordinates": "lat lon wetland_id", "grid_mapping": "crs"}
+        )
         area_[:] = draws.astype(np.float32)
