@@ -1,0 +1,37 @@
+"""Sensor profiles, catalog, windows of reflectance and clear view, co-registration, normalisation, elevation windows.
+
+Everything that opens scene files lives here. A profile says how a sensor's bands and mask are found and scaled, the
+catalog turns a STAC catalog or a table into scenes, ``read_view`` gives blocks on the area's grid.
+"""
+
+from inundate.scenes.areas import area_grid, context_windows
+from inundate.scenes.catalog import Catalog, open_catalog, scene_times
+from inundate.scenes.elevation import read_elevation
+from inundate.scenes.masks import MaskRule, MaskRules
+from inundate.scenes.reading import read_view
+from inundate.scenes.scene import BandSource, MaskSource, Scene, SceneError, fingerprint
+from inundate.scenes.sensors import SHIPPED_PROFILES, SensorProfile, load_profile
+from inundate.scenes.view import Block, SiteGather, View
+
+__all__ = [
+    "SHIPPED_PROFILES",
+    "BandSource",
+    "Block",
+    "Catalog",
+    "MaskRule",
+    "MaskRules",
+    "MaskSource",
+    "Scene",
+    "SceneError",
+    "SensorProfile",
+    "SiteGather",
+    "View",
+    "area_grid",
+    "context_windows",
+    "fingerprint",
+    "load_profile",
+    "open_catalog",
+    "read_elevation",
+    "read_view",
+    "scene_times",
+]

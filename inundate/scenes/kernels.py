@@ -1,0 +1,144 @@
+"""Compiled inner loops: raw numbers to reflectance on the area's grid, mask values to view codes."""
+
+from __future__ import annotations
+
+import numpy as np
+from numba import njit
+
+_FILL_CODE = np.uint8(255)
+
+
+@njit(cache=True, nogil=True, inline="always")
+def _value(raw: float, fill: float, low: float, high: float) -> float:
+    """Return the raw number, NaN where it is fill or out of range (fill is tested before any scaling)."""
+    if raw == fill or not (low <= raw <= high):
+        return np.nan
+    return raw
+
+
+@njit(cache=True, nogil=True)
+def copy_band(raw, origin, numbers, out, code):  # type: ignore[no-untyped-def]
+    """Scale a source on the same pixels.
+
+    Parameters
+    ----------
+    raw : ndarray, shape (row, column)
+        Part of the source.
+    origin : (int, int)
+        Row and column of ``out[0, 0]`` in ``raw``; may lie outside.
+    numbers : (float, float, float, float, float)
+        Scale, offset, fill (NaN where none), least and greatest valid raw number.
+    out : ndarray of float32, shape (row, column)
+        Filled with reflectance, NaN where there is none.
+    code : ndarray of uint8, shape (row, column)
+        Set to 255 where ``out`` is NaN.
+
+    Returns
+    -------
+    int
+        Number of finite pixels.
+    """
+    scale, offset, fill, low, high = numbers
+    n = 0
+    for i in range(out.shape[0]):
+        r = i + origin[0]
+        for j in range(out.shape[1]):
+            c = j + origin[1]
+            value = np.nan
+            if 0 <= r < raw.shape[0] and 0 <= c < raw.shape[1]:
+                value = _value(float(raw[r, c]), fill, low, high)
+            if not np.isnan(value):
+                out[i, j] = np.float32(value * scale + offset)
+                n += 1
+            else:
+                out[i, j] = np.nan
+                code[i, j] = _FILL_CODE
+    return n
+
+
+@njit(cache=True, nogil=True)
+def interpolate_band(raw, rows, cols, numbers, out, code):  # type: ignore[no-untyped-def]
+    """Scale a coarser or offset source by bilinear interpolation between the pixel centres that hold data.
+
+    Parameters
+    ----------
+    raw : ndarray, shape (row, column)
+    rows, cols : ndarray of float64
+        Position of each output row and column in ``raw``: 0 is the centre of its first pixel. NaN where the output
+        pixel's centre lies off the source.
+    numbers, out, code
+        As in :func:`copy_band`.
+
+    Returns
+    -------
+    int
+        Number of finite pixels. A pixel whose nearest source pixel holds no data is NaN; else the weights of source
+        pixels without data go to the others.
+    """
+    scale, offset, fill, low, high = numbers
+    height, width = raw.shape
+    n = 0
+    for i in range(out.shape[0]):
+        y = rows[i]
+        for j in range(out.shape[1]):
+            x = cols[j]
+            total = 0.0
+            weight = 0.0
+            if not (np.isnan(y) or np.isnan(x)):
+                near_r = min(max(int(np.floor(y + 0.5)), 0), height - 1)
+                near_c = min(max(int(np.floor(x + 0.5)), 0), width - 1)
+                near = _value(float(raw[near_r, near_c]), fill, low, high)
+                if not np.isnan(near):
+                    r0, c0 = int(np.floor(y)), int(np.floor(x))
+                    fy, fx = y - r0, x - c0
+                    for dr in range(2):
+                        r = min(max(r0 + dr, 0), height - 1)
+                        wy = fy if dr else 1.0 - fy
+                        for dc in range(2):
+                            c = min(max(c0 + dc, 0), width - 1)
+                            w = wy * (fx if dc else 1.0 - fx)
+                            if w > 0.0:
+                                value = _value(float(raw[r, c]), fill, low, high)
+                                if not np.isnan(value):
+                                    total += w * value
+                                    weight += w
+            if weight > 0.0:
+                out[i, j] = np.float32(total / weight * scale + offset)
+                n += 1
+            else:
+                out[i, j] = np.nan
+                code[i, j] = _FILL_CODE
+    return n
+
+
+@njit(cache=True, nogil=True)
+def decode_mask(raw, rows, cols, table, code):  # type: ignore[no-untyped-def]
+    """Look up view codes of the nearest mask pixels.
+
+    Parameters
+    ----------
+    raw : ndarray of unsigned integer, shape (row, column)
+    rows, cols : ndarray of int64
+        Row and column in ``raw`` of each output row and column, -1 where off the source.
+    table : ndarray of uint8, shape (65536,)
+    code : ndarray of uint8, shape (row, column)
+        Filled; 255 off the source.
+
+    Returns
+    -------
+    (int, int)
+        Number of pixels that are clear, and that are not fill.
+    """
+    clear = 0
+    seen = 0
+    for i in range(code.shape[0]):
+        r = rows[i]
+        for j in range(code.shape[1]):
+            c = cols[j]
+            value = _FILL_CODE
+            if r >= 0 and c >= 0:
+                value = table[raw[r, c]]
+            code[i, j] = value
+            clear += value == 0
+            seen += value != 255
+    return clear, seen
