@@ -110,7 +110,10 @@ def _blocks(site: Site, values: np.ndarray) -> list[tuple[Any, np.ndarray]]:
     for window in site.windows:
         block = np.full(window.shape, 255, np.uint8)
         inside = np.flatnonzero(
-            (site.rows >= window.row0) & (site.rows < window.row1) & (site.cols >= window.col0) & (site.cols < window.col1)
+            (site.rows >= window.row0)
+            & (site.rows < window.row1)
+            & (site.cols >= window.col0)
+            & (site.cols < window.col1)
         )
         block[site.rows[inside] - window.row0, site.cols[inside] - window.col0] = values[inside]
         out.append((window, block))

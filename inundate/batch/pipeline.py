@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import tomllib
+from itertools import pairwise
 from pathlib import Path
 from typing import Annotated, Any, Literal
 
@@ -33,7 +34,7 @@ class Area(_Section):
 
         try:
             crs = CRS.from_user_input(value)
-        except CRSError as err:
+        except (CRSError, ValueError) as err:
             message = f"{value!r} is not a known coordinate reference system; give for example 'EPSG:32633'"
             raise ValueError(message) from err
         if not crs.is_projected or abs(crs.linear_units_factor[1] - 1.0) > 1e-9:
@@ -125,7 +126,7 @@ class Series(_Section):
     @field_validator("size_class_edges_ha")
     @classmethod
     def _rising(cls, value: tuple[float, ...]) -> tuple[float, ...]:
-        if any(b <= a for a, b in zip(value, value[1:], strict=False)) or any(v <= 0 for v in value):
+        if any(b <= a for a, b in pairwise(value)) or any(v <= 0 for v in value):
             message = f"{list(value)} must be positive and rising; order the edges in hectares from small to large"
             raise ValueError(message)
         return value

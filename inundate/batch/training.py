@@ -53,7 +53,10 @@ def match_labels(
         chosen.append(order["scene_id"].iloc[best] if near else None)
     labels = labels.assign(scene_id=chosen)
     lost = labels["scene_id"].isna()
-    refused = [Refusal("label", str(r), f"label row {r}: no scene within {MATCH_DAYS} days; it is left out") for r in labels.loc[lost, "row"]]
+    refused = [
+        Refusal("label", str(r), f"label row {r}: no scene within {MATCH_DAYS} days; it is left out")
+        for r in labels.loc[lost, "row"]
+    ]
     labels = labels[~lost]
     table, off = _label_pixels(labels, grid)
     refused += [Refusal("label", str(r), f"label row {r}: lies outside the scenes' grid; it is left out") for r in off]

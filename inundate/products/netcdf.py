@@ -17,13 +17,14 @@ _FILL = np.float32(9.96921e36)
 def _stations(out: netCDF4.Dataset, wetlands: pd.DataFrame, crs: str) -> None:
     from pyproj import CRS, Transformer
 
-    width = max(int(wetlands["wetland_id"].str.encode("utf-8").str.len().max()), 1)
+    encoded = [str(w).encode("utf-8") for w in wetlands["wetland_id"]]
+    width = max(map(len, encoded), default=1)
     out.createDimension("wetland", len(wetlands))
     out.createDimension("name_length", width)
     name = out.createVariable("wetland_id", "S1", ("wetland", "name_length"))
     name.setncatts({"long_name": "wetland identifier", "cf_role": "timeseries_id"})
+    name[:] = np.array(encoded, dtype=f"S{width}").view("S1").reshape(len(encoded), width)
     name._Encoding = "utf-8"
-    name[:] = np.array(wetlands["wetland_id"].str.encode("utf-8"), dtype=f"S{width}")
     lon, lat = Transformer.from_crs(crs, "EPSG:4326", always_xy=True).transform(wetlands["x"], wetlands["y"])
     for key, unit, values in (("longitude", "degrees_east", lon), ("latitude", "degrees_north", lat)):
         variable = out.createVariable(key[:3], "f8", ("wetland",))
@@ -50,6 +51,7 @@ def _time(out: netCDF4.Dataset, days: np.ndarray) -> None:
             "long_name": "day (UTC)",
             "units": "days since 1970-01-01 00:00:00",
             "calendar": "standard",
+            "units_metadata": "leap_seconds: none",
             "axis": "T",
         }
     )

@@ -58,7 +58,7 @@ def shape_table(name: str, table: pd.DataFrame) -> pd.DataFrame:
     Returns
     -------
     DataFrame
-        ``date`` columns are midnight UTC (``datetime64[ms]``), ``datetime`` is UTC-aware; text is ``object``;
+        ``date`` columns are midnight UTC (``datetime64[ms]``), ``datetime`` is UTC-aware; text is ``str``;
         measures are float64.
 
     Raises
@@ -84,7 +84,7 @@ def shape_table(name: str, table: pd.DataFrame) -> pd.DataFrame:
         elif pd.api.types.is_float_dtype(out[column]):
             out[column] = out[column].astype("float64") + 0.0
         elif isinstance(out[column].dtype, pd.CategoricalDtype) or pd.api.types.is_string_dtype(out[column]):
-            out[column] = out[column].astype(object)
+            out[column] = out[column].astype("str")
     keys = [k for k in _KEYS if k in columns]
     if name == "size_classes":
         keys = ["date", "size_class"]
