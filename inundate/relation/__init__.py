@@ -1,0 +1,13 @@
+"""Stage-area relations: from pairs of stage and observed extent to area and volume with honest bands.
+
+:func:`make_pairs` joins observed extents with daily stage; :func:`fit_relations` fits every wetland at once (power law,
+power law with stage offset, monotone spline, elevation), chooses by held-out date blocks, pools across wetlands and reports
+shifts; :class:`StageAreaRelation` is the same for one wetland as a scikit-learn estimator.
+"""
+
+from inundate.relation.fit import fit_relations
+from inundate.relation.options import RelationOptions
+from inundate.relation.pairs import make_pairs
+from inundate.relation.relations import RelationSet
+
+__all__ = ["RelationOptions", "RelationSet", "fit_relations", "make_pairs"]

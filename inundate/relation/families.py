@@ -1,0 +1,178 @@
+"""The families of stage-area curves, compiled: every fit, band and table of the part evaluates these.
+
+All curves give the share of the largest extent, 0..1, from stage in metres: 0 at and below stage 0, never falling, never
+above 1. Parameters are unbounded reals in a vector of length ``N_PARAM`` of which a family uses the first
+``FAMILY_SIZE[family]``:
+
+- ``power`` (Hayashi & van der Kamp 2000): log h_full, log b. Share = (h / h_full)^b with b = 2/p; h_full is the stage at
+  which the law reaches the largest extent.
+- ``power_offset``: log h_full, log b, offset. Share = ((h - offset) / h_full)^b.
+- ``spline``: the same three and four log increments: a monotone cubic (Fritsch & Carlson 1980, SIAM J. Numer. Anal. 17,
+  238) through knots at u = 0, 1/4, 1/2, 3/4, 1 of u = ((h - offset) / h_full)^b, each rise exp(increment) / 4.
+- ``elevation``: vertical offset (m) and roughness (m) of the elevation model's hypsometry. Share = H_roughness(h + offset):
+  positive roughness blurs the hypsometry (ground rougher than the model shows), negative sharpens it (model noisier
+  than the ground: elevations drawn together about their mean so that the variance falls by roughness^2).
+"""
+
+from __future__ import annotations
+
+import numba as nb
+import numpy as np
+
+FAMILIES = ("power", "power_offset", "spline", "elevation")
+POWER, POWER_OFFSET, SPLINE, ELEVATION = range(4)
+FAMILY_SIZE = np.array([2, 3, 7, 2])
+N_PARAM = 7
+N_KNOT = 4
+N_WORK = 3 + 2 * (N_KNOT + 1)
+ROUGHNESS_M = np.array([-0.30, -0.20, -0.10, -0.05, 0.0, 0.05, 0.10, 0.20, 0.30])
+N_TABLE = 161
+_DRY_RAMP_M = 0.03
+
+
+@nb.njit(cache=True, nogil=True)
+def prepare(family: int, theta: np.ndarray, work: np.ndarray) -> None:
+    """Turn a parameter vector into the numbers that :func:`share_at` needs (written into ``work``, ``(N_WORK,)``)."""
+    if family == 3:
+        work[0] = theta[0]
+        work[1] = theta[1]
+        return
+    work[0] = np.exp(min(max(theta[0], -6.0), 6.0))
+    work[1] = np.exp(min(max(theta[1], -3.0), 3.0))
+    work[2] = theta[2] if family > 0 else 0.0
+    if family != 2:
+        return
+    work[3] = 0.0
+    for k in range(N_KNOT):
+        work[4 + k] = work[3 + k] + np.exp(min(max(theta[3 + k], -4.0), 4.0)) / N_KNOT
+    slope = 4 + N_KNOT
+    work[slope] = (work[4] - work[3]) * N_KNOT
+    work[slope + N_KNOT] = (work[3 + N_KNOT] - work[2 + N_KNOT]) * N_KNOT
+    for k in range(1, N_KNOT):
+        below = (work[3 + k] - work[2 + k]) * N_KNOT
+        above = (work[4 + k] - work[3 + k]) * N_KNOT
+        work[slope + k] = 2.0 * below * above / (below + above)
+
+
+@nb.njit(cache=True, nogil=True)
+def _warp(u: float, work: np.ndarray) -> float:
+    slope = 4 + N_KNOT
+    if u >= 1.0:
+        return work[3 + N_KNOT] + work[slope + N_KNOT] * (u - 1.0)
+    k = min(int(u * N_KNOT), N_KNOT - 1)
+    t = u * N_KNOT - k
+    step = 1.0 / N_KNOT
+    t2 = t * t
+    t3 = t2 * t
+    return (
+        (2 * t3 - 3 * t2 + 1) * work[3 + k]
+        + (t3 - 2 * t2 + t) * step * work[slope + k]
+        + (3 * t2 - 2 * t3) * work[4 + k]
+        + (t3 - t2) * step * work[slope + k + 1]
+    )
+
+
+@nb.njit(cache=True, nogil=True)
+def share_at(family: int, work: np.ndarray, table: np.ndarray, span: np.ndarray, h: float) -> float:
+    """Return the share of the largest extent at stage ``h``.
+
+    ``table`` (roughness level, ``N_TABLE``) and ``span`` (first stage, step) describe the hypsometry; only the elevation
+    family reads them.
+    """
+    if h <= 0.0:
+        return 0.0
+    if family == 3:
+        place = (h + work[0] - span[0]) / span[1]
+        place = min(max(place, 0.0), table.shape[1] - 1.0)
+        i = min(int(place), table.shape[1] - 2)
+        part = place - i
+        r = min(max(work[1], ROUGHNESS_M[0]), ROUGHNESS_M[-1])
+        k = 0
+        while k < ROUGHNESS_M.size - 2 and r > ROUGHNESS_M[k + 1]:
+            k += 1
+        mix = (r - ROUGHNESS_M[k]) / (ROUGHNESS_M[k + 1] - ROUGHNESS_M[k])
+        low = table[k, i] + part * (table[k, i + 1] - table[k, i])
+        high = table[k + 1, i] + part * (table[k + 1, i + 1] - table[k + 1, i])
+        value = (low + mix * (high - low)) * min(1.0, h / _DRY_RAMP_M)
+        return min(max(value, 0.0), 1.0)
+    x = (h - work[2]) / work[0]
+    if x <= 0.0:
+        return 0.0
+    u = x ** work[1]
+    if family == 2:
+        u = _warp(u, work)
+    if work[2] < 0.0 and h < -work[2]:
+        u *= h / -work[2]
+    return min(u, 1.0)
+
+
+@nb.njit(cache=True, nogil=True)
+def curve_of(family: int, theta: np.ndarray, table: np.ndarray, span: np.ndarray, stage: np.ndarray) -> np.ndarray:
+    """Return shares (float64, shape of ``stage``) of one curve; NaN stage gives NaN."""
+    work = np.zeros(N_WORK)
+    prepare(family, theta, work)
+    out = np.empty(stage.size)
+    for i in range(stage.size):
+        out[i] = np.nan if np.isnan(stage[i]) else share_at(family, work, table, span, stage[i])
+    return out
+
+
+@nb.njit(cache=True, nogil=True)
+def full_stage(family: int, theta: np.ndarray, table: np.ndarray, span: np.ndarray) -> float:
+    """Return the lowest stage (m) at which a curve reaches its cap, by bisection; the search ends at 400 m."""
+    work = np.zeros(N_WORK)
+    prepare(family, theta, work)
+    low, high = 0.0, 0.25
+    while high < 400.0 and share_at(family, work, table, span, high) < 0.999999:
+        low = high
+        high *= 1.6
+    for _ in range(40):
+        middle = 0.5 * (low + high)
+        if share_at(family, work, table, span, middle) < 0.999999:
+            low = middle
+        else:
+            high = middle
+    return high
+
+
+def empty_table() -> tuple[np.ndarray, np.ndarray]:
+    """Return a hypsometry table and span of the right shape for curves that do not read them."""
+    return np.zeros((ROUGHNESS_M.size, N_TABLE)), np.array([0.0, 1.0])
+
+
+def hypsometry_table(stage_m: np.ndarray, area_m2: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+    """Lay a hypsometry out for the elevation family.
+
+    Parameters
+    ----------
+    stage_m, area_m2 : ndarray, shape (step,)
+        Cumulative area below each stage above the lowest cell; the last area counts as the largest extent.
+
+    Returns
+    -------
+    table : ndarray, shape (roughness level, ``N_TABLE``)
+        Share of the largest extent, rising along the second axis, at the levels ``ROUGHNESS_M``.
+    span : ndarray, shape (2,)
+        Stage of the first column and the step, m.
+    """
+    order = np.argsort(stage_m, kind="stable")
+    stage = np.asarray(stage_m, float)[order]
+    share = np.maximum.accumulate(np.asarray(area_m2, float)[order])
+    share = share / max(share[-1], 1e-9)
+    rise = np.diff(share, prepend=0.0)
+    mean = float(np.sum(rise * stage))
+    spread = float(np.sqrt(max(np.sum(rise * (stage - mean) ** 2), 1e-12)))
+    top = float(stage[-1])
+    pad = 2.0 * float(ROUGHNESS_M[-1])
+    grid = np.linspace(-pad, top + pad, N_TABLE)
+    table = np.empty((ROUGHNESS_M.size, N_TABLE))
+    for k, rough in enumerate(ROUGHNESS_M):
+        if rough <= 0:
+            shrink = np.sqrt(max(1.0 - (rough / spread) ** 2, 0.15))
+            place = mean + (stage - mean) * shrink
+            table[k] = np.interp(grid, place, share, left=0.0, right=1.0)
+        else:
+            nodes, heft = np.polynomial.hermite_e.hermegauss(15)
+            shifted = np.interp(grid[:, None] - rough * nodes[None, :], stage, share, left=0.0, right=1.0)
+            table[k] = np.maximum.accumulate(shifted @ (heft / heft.sum()))
+    return np.clip(table, 0.0, 1.0), np.array([grid[0], grid[1] - grid[0]])
