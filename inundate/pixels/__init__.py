@@ -1,0 +1,41 @@
+"""Features, examples, the water classifier and the water fraction of mixed pixels, and fast exact scoring of forests.
+
+Arrays and tables in and out, no files but the model folder (LightGBM text and a JSON card). Labels become examples
+(``check_labels``, ``label_pixels``, ``match_scenes``, ``make_examples``), examples become models (``train_models``, or
+``WaterClassifier`` and ``FractionModel`` alone), and models score features (``features``).
+"""
+
+from inundate.pixels.classifier import WaterClassifier
+from inundate.pixels.examples import (
+    ExampleSet,
+    ViewState,
+    check_labels,
+    join_starter,
+    label_pixels,
+    make_examples,
+    match_scenes,
+    starter_examples,
+)
+from inundate.pixels.features import FEATURES, features
+from inundate.pixels.fraction import FractionModel
+from inundate.pixels.mixing import MixOptions, mix_examples
+from inundate.pixels.training import PixelModels, train_models
+
+__all__ = [
+    "FEATURES",
+    "ExampleSet",
+    "FractionModel",
+    "MixOptions",
+    "PixelModels",
+    "ViewState",
+    "WaterClassifier",
+    "check_labels",
+    "features",
+    "join_starter",
+    "label_pixels",
+    "make_examples",
+    "match_scenes",
+    "mix_examples",
+    "starter_examples",
+    "train_models",
+]
