@@ -1,0 +1,171 @@
+"""Area and sd of one wetland in each scene, from its visible pixels and its shape."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from inundate.common.codes import ViewCode
+from inundate.extent.kernels import near_cloud, posteriors
+from inundate.extent.noise import BAND_EDGES, NoiseModel, kind_of
+from inundate.extent.stack import SceneStack, WetlandPixels, as_fraction
+
+LEFT_OVER = 0.25
+"""Part of a shape's variance that views do not remove: water does not always take the same way."""
+
+
+@dataclass(frozen=True, slots=True)
+class Shape:
+    """How a wetland's pixels fill.
+
+    Attributes
+    ----------
+    prior, filling : ndarray of float32, shape (pixel, step)
+        Before and after looking at views.
+    source : str
+        ``cells``, ``order`` or ``outline``.
+    departure_var : float
+        Variance of a half-full pixel's water about ``filling``.
+    n_views : int
+        Good views that taught it.
+    """
+
+    prior: np.ndarray
+    filling: np.ndarray
+    source: str
+    departure_var: float
+    n_views: int
+
+
+@dataclass(frozen=True, slots=True)
+class Views:
+    """What all scenes show of one wetland's pixels; arrays (scene, pixel) but for the last five, (scene,).
+
+    ``kind`` is -1 where not seen; ``clear_fraction`` and ``view_fraction`` are shares of the largest extent, as are
+    ``ice`` (snow or ice), ``off`` (fill: outside the scene).
+    """
+
+    fraction: np.ndarray
+    kind: np.ndarray
+    widen: np.ndarray
+    clear_fraction: np.ndarray
+    view_fraction: np.ndarray
+    ice: np.ndarray
+    off: np.ndarray
+    leaf: np.ndarray
+
+
+def look(stack: SceneStack, wetland: WetlandPixels, leaf: np.ndarray) -> Views:
+    """Gather one wetland's pixels from a stack.
+
+    Parameters
+    ----------
+    stack : SceneStack
+    wetland : WetlandPixels
+    leaf : ndarray of uint8, shape (scene,)
+
+    Returns
+    -------
+    Views
+    """
+    at, known = np.maximum(wetland.pixel, 0), wetland.pixel >= 0
+    code = np.where(known[None, :], stack.code[:, at], np.uint8(ViewCode.FILL))
+    fraction = np.clip(as_fraction(stack.fraction[:, at]), 0.0, 1.0)
+    seen = (code == ViewCode.CLEAR) & np.isfinite(fraction)
+    if stack.view is None:
+        view = np.ones(fraction.shape, np.float32)
+    else:
+        view = np.clip(np.nan_to_num(as_fraction(stack.view[:, at]), nan=1.0), 0.0, 1.0)
+    near = near_cloud(np.ascontiguousarray(code), wetland.near)
+    kind = np.where(seen, kind_of(leaf[:, None], view, near), np.int16(-1)).astype(np.int16)
+    widen = np.ones(fraction.shape, np.float32)
+    if stack.fraction_sd is not None:
+        var = as_fraction(stack.fraction_sd[:, at]) ** 2
+        with np.errstate(invalid="ignore"):
+            usual = 0.02 + 0.2 * fraction * (1 - fraction)
+            widen = np.clip(np.nan_to_num(var / usual, nan=1.0), 0.5, 4.0).astype(np.float32)
+    if stack.unlike is not None:
+        widen = np.where(stack.unlike[:, at], widen * 4, widen).astype(np.float32)
+    part = wetland.area_m2 / max(wetland.area_max_m2, 1e-9)
+    return Views(
+        np.nan_to_num(fraction),
+        kind,
+        widen,
+        seen @ part,
+        (seen * view) @ part,
+        (code == ViewCode.SNOW_ICE) @ part,
+        (code == ViewCode.FILL) @ part,
+        leaf,
+    )
+
+
+def expected_fraction(filling: np.ndarray, wetland: WetlandPixels) -> np.ndarray:
+    """Water fraction of whole pixels at each step: own part, and other wetlands' part as full as this one.
+
+    Returns float32 (pixel, step).
+    """
+    steps = filling.shape[1]
+    fullness = np.linspace(0.0, 1.0, steps)[None, :]
+    e = wetland.share[:, None] * filling + wetland.other[:, None] * fullness
+    return np.ascontiguousarray(np.clip(e, 0.0, 1.0), dtype=np.float32)
+
+
+def weigh(views: Views, shape: Shape, wetland: WetlandPixels, noise: NoiseModel) -> tuple[np.ndarray, np.ndarray]:
+    """Posterior over steps of area, and misfit, of each scene: float64 (scene, step) and (scene,)."""
+    e = expected_fraction(shape.filling, wetland)
+    strangers = 1.0 + 4.0 * np.minimum(wetland.other, 0.5)
+    widen = np.ascontiguousarray(views.widen * strangers[None, :], dtype=np.float32)
+    shared = np.array([noise.rho, noise.temper])
+    fraction = np.ascontiguousarray(views.fraction, dtype=np.float32)
+    return posteriors(fraction, views.kind, widen, e, noise.table, shared, np.log(noise.area_prior))
+
+
+def pixel_terms(views: Views, noise: NoiseModel, e: np.ndarray) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+    """Unbiased water fraction of whole pixels, its variance, and the slope; (scene, pixel), 0 where not seen.
+
+    ``e`` is the expected water fraction of whole pixels, (scene, pixel).
+    """
+    row = noise.table[np.maximum(views.kind, 0)]
+    seen = views.kind >= 0
+    slope = np.maximum(row[..., 1], 1e-3)
+    var = (row[..., 2] + row[..., 3] * 4 * e * (1 - e)) * views.widen / slope**2
+    value = (views.fraction - row[..., 0]) / slope
+    return np.where(seen, value, 0.0), np.where(seen, var, 1e6), np.where(seen, slope, 0.0)
+
+
+def areas(views: Views, shape: Shape, wetland: WetlandPixels, noise: NoiseModel) -> tuple[np.ndarray, np.ndarray]:
+    """Mean area and sd (before scaling) of one wetland in each scene.
+
+    The level that explains the visible pixels gives every pixel an expected filling; each visible pixel then moves from
+    it towards what was seen, as far as the shape's departure variance outweighs the pixel's error.
+
+    Returns
+    -------
+    area, sd : ndarray of float64, shape (scene,)
+        Share of the largest extent, 0..1.
+    """
+    post, misfit = weigh(views, shape, wetland, noise)
+    steps = post.shape[1]
+    level = np.linspace(0.0, 1.0, steps)
+    mean = post @ level
+    var = np.maximum(post @ level**2 - mean**2, 0.0) + 1.0 / (12.0 * (steps - 1) ** 2)
+    var *= np.clip(misfit, 1.0, 4.0)
+    filled = post @ shape.filling.T.astype(float)
+    other = wetland.other[None, :] * mean[:, None]
+    e = np.clip(wetland.share[None, :] * filled + other, 0.0, 1.0)
+    value, error, _ = pixel_terms(views, noise, e)
+    mixed = 0.9 * 4 * filled * (1 - filled) + 0.02
+    own = shape.departure_var * mixed * wetland.share[None, :] ** 2
+    gain = np.where(views.kind >= 0, own / (own + error), 0.0)
+    cell = wetland.area_m2 / np.maximum(wetland.share, 1e-12) / wetland.area_max_m2
+    move = gain * np.clip(value - e, -1.0, 1.0) * (1.0 - wetland.other[None, :])
+    area = mean + move @ cell
+    var += 2.0 * (own * (1 - gain)) @ cell**2
+    var += noise.steady_var * (4 * mean * (1 - mean) * 0.9 + 0.1)
+    return np.clip(area, 0.0, 1.0), np.sqrt(var)
+
+
+def band_of(view_fraction: np.ndarray) -> np.ndarray:
+    """Band of view (int64) in which a view fraction lies."""
+    return np.digitize(view_fraction, BAND_EDGES)
