@@ -9,11 +9,14 @@ from inundate.scenes.catalog import Catalog, open_catalog, scene_times
 from inundate.scenes.elevation import read_elevation
 from inundate.scenes.masks import MaskRule, MaskRules
 from inundate.scenes.reading import read_view
+from inundate.scenes.reference import NO_SHIFT, Reference, Shift, ShiftOptions
 from inundate.scenes.scene import BandSource, MaskSource, Scene, SceneError, fingerprint
 from inundate.scenes.sensors import SHIPPED_PROFILES, SensorProfile, load_profile
+from inundate.scenes.shifting import apply_shift
 from inundate.scenes.view import Block, SiteGather, View
 
 __all__ = [
+    "NO_SHIFT",
     "SHIPPED_PROFILES",
     "BandSource",
     "Block",
@@ -21,11 +24,15 @@ __all__ = [
     "MaskRule",
     "MaskRules",
     "MaskSource",
+    "Reference",
     "Scene",
     "SceneError",
     "SensorProfile",
+    "Shift",
+    "ShiftOptions",
     "SiteGather",
     "View",
+    "apply_shift",
     "area_grid",
     "context_windows",
     "fingerprint",
