@@ -73,7 +73,7 @@ COUNTS = {
     "canopy": 420,
     "evergreen": 160,
     "dry_under_stems": 480,
-    "deep_shade": 160,
+    "deep_shade": 90,
     "mixed": 900,
 }
 
@@ -129,7 +129,7 @@ def one(family: str, rng: s.Rng, zenith: float) -> tuple[np.ndarray, float, floa
         return s.senesced(rng, DRY_GROUND[int(rng.integers(3))](rng), zenith), 0.0, any_leaf, seen
     if family == "canopy":
         lai = s.uniform(rng, 0.2, 7)
-        spectrum = s.canopy(rng, lai, DRY_GROUND[int(rng.integers(3))](rng), zenith) * s.uniform(rng, 0.55, 1.0)
+        spectrum = s.canopy(rng, lai, DRY_GROUND[int(rng.integers(3))](rng), zenith) * s.log_uniform(rng, 0.3, 1.0)
         return spectrum, 0.0, min(lai / 4, 1.0), gap(lai)
     if family == "evergreen":
         return s.canopy(rng, s.uniform(rng, 2, 6), s.litter(rng), zenith) * s.uniform(rng, 0.3, 0.8), 0.0, any_leaf, 0.1
@@ -157,6 +157,8 @@ def row(family: str, number: int) -> dict[str, object]:
     spectrum = s.hazed(rng, spectrum, haze) * s.uniform(rng, 0.94, 1.06)
     if np.isnan(leaf_share):
         leaf_share = 0.0 if rng.random() < 0.5 else s.uniform(rng, 0, 1)
+    if rng.random() < 0.2:  # an atmosphere that was corrected too far
+        spectrum = spectrum - s.uniform(rng, 0, 0.012)
     sensor = str(rng.choice(list(SENSOR_SHARE), p=list(SENSOR_SHARE.values())))
     values = {k: v + 0.002 * rng.standard_normal() for k, v in to_bands(spectrum, sensor).items()}
     labelled = not MIXED_OUT[0] < fraction < MIXED_OUT[1]
