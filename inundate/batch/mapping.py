@@ -15,6 +15,7 @@ from inundate.common.codes import ViewCode
 from inundate.common.site import Site
 from inundate.products import write_map
 
+UNLIKE_SCALE = 0.2  # a pixel is unlike all examples from one radius on: 20 in the archive's percent
 SCORE_COLUMNS = ("probability", "fraction", "fraction_sd", "unlike", "ndvi", "code")
 
 
@@ -27,6 +28,8 @@ class ScoreJob:
     scene_id : str
     leaf_share : ndarray of float32, shape (wetland,)
         Leaf share of each wetland at the scene's date.
+    leaf_state : ndarray of uint8, shape (wetland,)
+        Leaf state code of each wetland, which picks the calibration.
     owner : ndarray of int32, shape (pixel,)
         Wetland row of each site pixel.
     sun_elevation_deg : float
@@ -39,6 +42,7 @@ class ScoreJob:
 
     scene_id: str
     leaf_share: np.ndarray
+    leaf_state: np.ndarray
     owner: np.ndarray
     sun_elevation_deg: float
     site: Site
@@ -46,11 +50,30 @@ class ScoreJob:
     model_mark: str
 
 
-@lru_cache(maxsize=2)
-def _models(folder: Path, mark: str) -> tuple[Any, Any]:  # noqa: ARG001 - the mark is part of the cache's key
-    from inundate.pixels import FractionModel, WaterClassifier
+class _Scorer:
+    """Both models of a folder behind the fast forest."""
 
-    return WaterClassifier.load(folder), FractionModel.load(folder)
+    def __init__(self, folder: Path) -> None:
+        from inundate.pixels import FractionModel, WaterClassifier
+
+        self.classifier = WaterClassifier.load(folder)
+        self.fraction = FractionModel.load(folder)
+
+    def score(self, table: np.ndarray, leaf_state: np.ndarray) -> dict[str, np.ndarray]:
+        """Return probability, fraction, fraction_sd and unlike (0..1, in fifths of a radius) of feature rows."""
+        raw = self.classifier.raw_score(table)
+        fraction = self.fraction.predict(table)
+        return {
+            "probability": self.classifier.probability_of_raw(raw, leaf_state),
+            "fraction": fraction,
+            "fraction_sd": self.fraction.sd(fraction),
+            "unlike": np.clip(self.classifier.unlike(table) * UNLIKE_SCALE, 0.0, 1.0),
+        }
+
+
+@lru_cache(maxsize=2)
+def _scorer(folder: Path, mark: str) -> _Scorer:  # noqa: ARG001 - the mark is part of the cache's key
+    return _Scorer(folder)
 
 
 def ndvi_code(ndvi: np.ndarray) -> np.ndarray:
@@ -87,15 +110,13 @@ def score_scene(job: ScoreJob) -> dict[str, Any]:
     columns["code"] = code
     columns["ndvi"] = ndvi_code(pixel_ndvi(bands, reflectance, code))
     if seen.size:
-        classifier, fraction_model = _models(archive.models, job.model_mark)
-        leaf = job.leaf_share[job.owner[seen]].astype(np.float32)
+        scorer = _scorer(archive.models, job.model_mark)
+        owner = job.owner[seen]
+        leaf = job.leaf_share[owner].astype(np.float32)
         table = features(np.ascontiguousarray(reflectance[:, seen]), bands, leaf, job.sun_elevation_deg)
         ones = np.ones(seen.size, bool)
-        columns["probability"][seen] = percent(classifier.predict_water(table, leaf_share=leaf), ones)
-        fraction, sd = fraction_model.predict(table, return_sd=True)
-        columns["fraction"][seen] = percent(fraction, ones)
-        columns["fraction_sd"][seen] = percent(sd, ones)
-        columns["unlike"][seen] = percent(classifier.unlike(table), ones)
+        for name, values in scorer.score(table, job.leaf_state[owner]).items():
+            columns[name][seen] = percent(values, ones)
     nbytes = write_score(archive.score(job.scene_id), columns)
     blocks = _blocks(job.site, columns["probability"])
     tags = {"SCENE_ID": job.scene_id, "CONTENT": "water probability, percent; 255 = not seen"}

@@ -1,120 +1,125 @@
-"""From labels to the classifier: labels meet scenes, samples become examples, the models are trained and kept."""
+"""Training of the pixel models from archived label samples."""
 
 from __future__ import annotations
 
+from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
 import numpy as np
 import pandas as pd
 
-from inundate.common.errors import Refusal
-from inundate.common.grid import Grid
+from inundate.batch.archive import read_view
+from inundate.batch.imagery import LabelPixels, array_mark
+from inundate.batch.layout import Layout
+from inundate.batch.seasons import ScenePlace
+from inundate.batch.work import Work, code_mark, settings_mark, table_mark
+from inundate.common.codes import BAND_ROLES, ViewCode
+from inundate.common.writing import replacing_folder, write_json, write_table
 
 if TYPE_CHECKING:
-    import geopandas as gpd
+    from inundate.leaves import LeafCalendar
+    from inundate.pixels import ExampleSet
 
-MATCH_DAYS = 2  # a label without a scene of its own day takes the nearest within two days; common practice, no source
+
+@dataclass(frozen=True, slots=True)
+class Trained:
+    """The fingerprint of the models that stand in ``out/models``, and what the user should know of them."""
+
+    mark: str
+    notes: list[str]
 
 
-def match_labels(
-    labels: gpd.GeoDataFrame, scenes: pd.DataFrame, grid: Grid, wetlands: gpd.GeoDataFrame
-) -> tuple[pd.DataFrame, list[Refusal]]:
-    """Give each label its scene and its pixels.
+def train(
+    work: Work,
+    layout: Layout,
+    labels: LabelPixels | None,
+    places: list[ScenePlace],
+    leaves: tuple[LeafCalendar, pd.DataFrame],
+) -> Trained:
+    """Train the classifier and the fraction model where labels, samples, settings or code changed."""
+    from inundate.pixels import train_models
 
-    Parameters
-    ----------
-    labels : GeoDataFrame
-        row, date, scene_id, label, wetland_id, source, geometry.
-    scenes : DataFrame
-        scene_id, datetime; one row a scene.
-    grid : Grid
-    wetlands : GeoDataFrame
-        wetland_id, geometry; labels without a wetland_id get the nearest one.
+    archive, ledger, settings = work.archive, work.ledger, work.pipeline.classifier
+    with work.progress.step("classifier"):
+        examples = _examples(work, layout, labels, places, leaves)
+        work.refuse(list(examples.refused))
+        parts = {
+            "examples": table_mark(examples.table) + array_mark(examples.reflectance),
+            "code": code_mark("pixels"),
+            **settings_mark(work.pipeline, "classifier"),
+        }
+        if ledger.why("models", "pixels", parts, archive.models / "water.txt") is not None:
+            strata = _strata(examples.table, layout)
+            models = train_models(examples, seed=settings.seed, num_threads=2, strata=strata)
+            with replacing_folder(archive.models) as scratch:
+                models.classifier.save(scratch)
+                models.fraction.save(scratch)
+                write_table(scratch / "doubtful_labels.parquet", models.doubtful)
+                write_json(scratch / "notes.json", list(models.notes))
+            ledger.put("models", "pixels", parts, detail={"notes": list(models.notes)})
+        unit = ledger.get("models", "pixels")
+    notes = [] if unit is None else list(unit.detail.get("notes", []))
+    for note in notes:
+        work.progress.say(f"classifier: {note}")
+    return Trained("" if unit is None else unit.fingerprint, notes)
 
-    Returns
-    -------
-    matched : DataFrame
-        row, scene_id, date, label, wetland_id, source, grid_row, grid_col; one row a label pixel, sorted.
-    refused : list of Refusal
-        Labels with no scene within two days, or outside the grid.
-    """
-    known = set(scenes["scene_id"])
-    order = scenes.sort_values(["datetime", "scene_id"]).reset_index(drop=True)
-    noon = labels["date"] + pd.Timedelta(hours=12)
-    times = order["datetime"].to_numpy()
-    chosen = []
-    for scene_id, when in zip(labels["scene_id"], noon, strict=True):
-        if scene_id:
-            chosen.append(scene_id if scene_id in known else None)
+
+def _strata(table: pd.DataFrame, layout: Layout) -> pd.DataFrame:
+    """Size class of each example's wetland, for scores told apart."""
+    area = layout.wetlands.set_index("wetland_id")["area_max_m2"]
+    largest = table["wetland_id"].map(area)
+    size = np.where(largest.isna(), "outside", np.where(largest < 3000, "under 0.3 ha", "0.3 ha and more"))
+    return pd.DataFrame({"size": size.astype(str)})
+
+
+def _examples(
+    work: Work,
+    layout: Layout,
+    labels: LabelPixels | None,
+    places: list[ScenePlace],
+    leaves: tuple[LeafCalendar, pd.DataFrame],
+) -> ExampleSet:
+    from inundate.pixels import ViewState, make_examples, starter_examples
+
+    settings = work.pipeline.classifier
+    if labels is None:
+        return starter_examples()
+    standing = {p.scene_id: p for p in places}
+    table = labels.table[labels.table["scene_id"].isin(standing)].reset_index(drop=True)
+    values = np.full((len(BAND_ROLES), len(table)), np.nan, np.float32)
+    clear = np.zeros(len(table), bool)
+    for scene_id, rows in table.groupby("scene_id"):
+        site = labels.site(str(scene_id), layout)
+        path = work.archive.sample(str(scene_id))
+        if site is None or not path.exists():
             continue
-        gap = np.abs(times - np.datetime64(when))
-        best = int(np.argmin(gap)) if gap.size else -1
-        near = best >= 0 and gap[best] <= np.timedelta64(MATCH_DAYS * 24 + 12, "h")
-        chosen.append(order["scene_id"].iloc[best] if near else None)
-    labels = labels.assign(scene_id=chosen)
-    lost = labels["scene_id"].isna()
-    refused = [
-        Refusal("label", str(r), f"label row {r}: no scene within {MATCH_DAYS} days; it is left out")
-        for r in labels.loc[lost, "row"]
-    ]
-    labels = labels[~lost]
-    table, off = _label_pixels(labels, grid)
-    refused += [Refusal("label", str(r), f"label row {r}: lies outside the scenes' grid; it is left out") for r in off]
-    table = _nearest_wetland(table, grid, wetlands)
-    table["date"] = table["scene_id"].map(order.set_index("scene_id")["datetime"]).dt.normalize()
-    keep = ["row", "scene_id", "date", "label", "wetland_id", "source", "grid_row", "grid_col"]
-    return table[keep].sort_values(["scene_id", "row", "grid_row", "grid_col"]).reset_index(drop=True), refused
+        bands, reflectance, code = read_view(path)
+        at = site.positions(rows["grid_row"].to_numpy(), rows["grid_col"].to_numpy())
+        where = rows.index.to_numpy()
+        for i, band in enumerate(bands):
+            values[BAND_ROLES.index(band), where] = reflectance[i, at]
+        clear[where] = code[at] == ViewCode.CLEAR
+    owner = _nearest(table, layout)
+    calendar, settled = leaves
+    share = settled.to_numpy()[settled.index.get_indexer(table["scene_id"]), owner]
+    state, _ = calendar.states(layout.wetlands["wetland_id"].to_numpy()[owner], table["date"].to_numpy())
+    sun = table["scene_id"].map({p.scene_id: p.sun_elevation_deg for p in places}).to_numpy(float)
+    return make_examples(
+        table,
+        values,
+        BAND_ROLES,
+        ViewState(share.astype(np.float32), state, sun.astype(np.float32)),
+        clear=clear,
+        min_own=settings.minimum_examples,
+        starter=settings.starter_examples,
+    )
 
 
-def _label_pixels(labels: gpd.GeoDataFrame, grid: Grid) -> tuple[pd.DataFrame, list[int]]:
-    """Return one row a label pixel (points: theirs; polygons: pixels whose centre lies inside, else the centroid's)."""
-    import shapely
+def _nearest(table: pd.DataFrame, layout: Layout) -> np.ndarray:
+    """Return the row of the wetland whose leaf state serves each label: its own, else the nearest."""
+    from scipy.spatial import cKDTree
 
-    parts, off = [], []
-    for item in labels.itertuples():
-        shape = item.geometry
-        if shape.geom_type == "Point":
-            rows, cols = grid.locate(np.array([shape.x]), np.array([shape.y]))
-        else:
-            r0, c0 = grid.locate(np.array([shape.bounds[0]]), np.array([shape.bounds[3]]))
-            r1, c1 = grid.locate(np.array([shape.bounds[2]]), np.array([shape.bounds[1]]))
-            rr, cc = np.meshgrid(np.arange(r0[0], r1[0] + 1), np.arange(c0[0], c1[0] + 1), indexing="ij")
-            x, y = grid.centres(rr.ravel(), cc.ravel())
-            inside = shapely.contains_xy(shape, x, y)
-            rows, cols = rr.ravel()[inside], cc.ravel()[inside]
-            if rows.size == 0:
-                middle = shape.representative_point()
-                rows, cols = grid.locate(np.array([middle.x]), np.array([middle.y]))
-        on = grid.inside(rows, cols)
-        if not on.any():
-            off.append(int(item.row))
-            continue
-        parts.append(
-            pd.DataFrame(
-                {
-                    "row": int(item.row),
-                    "scene_id": item.scene_id,
-                    "label": item.label,
-                    "wetland_id": item.wetland_id,
-                    "source": item.source,
-                    "grid_row": rows[on],
-                    "grid_col": cols[on],
-                }
-            )
-        )
-    columns = ["row", "scene_id", "label", "wetland_id", "source", "grid_row", "grid_col"]
-    return (pd.concat(parts, ignore_index=True) if parts else pd.DataFrame(columns=columns)), off
-
-
-def _nearest_wetland(table: pd.DataFrame, grid: Grid, wetlands: gpd.GeoDataFrame) -> pd.DataFrame:
-    import shapely
-
-    known = set(wetlands["wetland_id"])
-    blank = ~table["wetland_id"].isin(known)
-    if blank.any():
-        x, y = grid.centres(table.loc[blank, "grid_row"].to_numpy(), table.loc[blank, "grid_col"].to_numpy())
-        tree = shapely.STRtree(wetlands.geometry.to_numpy())
-        index = tree.nearest(shapely.points(x, y))
-        table = table.copy()
-        table.loc[blank, "wetland_id"] = wetlands["wetland_id"].to_numpy()[index]
-    return table
+    own = pd.Index(layout.wetlands["wetland_id"]).get_indexer(table["wetland_id"])
+    x, y = layout.grid.centres(table["grid_row"].to_numpy(), table["grid_col"].to_numpy())
+    _, near = cKDTree(layout.wetlands[["x", "y"]].to_numpy()).query(np.column_stack([x, y]))
+    return np.where(own >= 0, own, near)

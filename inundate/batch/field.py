@@ -1,0 +1,58 @@
+"""Step from logger files to the stage record of the area."""
+
+from __future__ import annotations
+
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+import pandas as pd
+
+from inundate.batch.layout import Layout
+from inundate.batch.work import Inputs, Work, code_mark
+from inundate.common.errors import InputError
+
+if TYPE_CHECKING:
+    from inundate.stage import StageResult
+
+
+def latitudes(layout: Layout) -> dict[str, float]:
+    """Return the latitude of each wetland's centroid, degrees."""
+    from pyproj import Transformer
+
+    table = layout.wetlands
+    _, lat = Transformer.from_crs(layout.grid.crs, "EPSG:4326", always_xy=True).transform(table["x"], table["y"])
+    return dict(zip(table["wetland_id"], np.asarray(lat, float), strict=True))
+
+
+def stage_record(work: Work, inputs: Inputs, layout: Layout, last: pd.Timestamp | None) -> StageResult | None:
+    """Build the stage record; None where the pipeline names no loggers.
+
+    Raises
+    ------
+    InputError
+        When the registry is wrong as a whole, or names a wetland that the layer does not have.
+    """
+    from inundate.stage import LoggerFiles, daily_stage, read_barometer, read_checks, read_registry
+
+    files = work.pipeline.input_files()
+    if "loggers.registry" not in files:
+        return None
+    with work.progress.step("stage record"):
+        registry = read_registry(files["loggers.registry"])
+        known = set(layout.wetlands["wetland_id"])
+        strange = registry[~registry["wetland_id"].isin(known)]
+        if len(strange):
+            first = strange.iloc[0]
+            message = f"{files['loggers.registry']}: logger '{first['logger_id']}' stands in wetland '{first['wetland_id']}', which {files['area.wetlands']} does not have; correct wetland_id"
+            raise InputError(message)
+        barometer = read_barometer(files["loggers.barometer"]) if "loggers.barometer" in files else None
+        checks, refused = read_checks(files["loggers.checks"], registry) if "loggers.checks" in files else (None, [])
+        work.refuse(list(refused))
+        readings = LoggerFiles(files["loggers.registry"], registry)
+        extra: dict[str, Any] = {}
+        if inputs.weather is not None:
+            extra["weather"] = inputs.weather
+        result = daily_stage(registry, readings, barometer, checks, latitudes(layout), **extra)
+        work.refuse(list(result.refused))
+        _ = code_mark
+    return result

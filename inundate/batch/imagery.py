@@ -1,0 +1,223 @@
+"""Steps from scenes to archived views: layout, reading, leaf calendar."""
+
+from __future__ import annotations
+
+import hashlib
+from dataclasses import dataclass
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+import pandas as pd
+
+from inundate.batch.compute import run_units
+from inundate.batch.layout import Layout, make_layout
+from inundate.batch.reading import ReadJob, ReadPlan, read_scene
+from inundate.batch.seasons import ScenePlace, update_greenness
+from inundate.batch.work import Inputs, Work, code_mark, settings_mark, table_mark
+from inundate.common.errors import InputError, Refusal
+from inundate.common.site import Site, make_site
+from inundate.common.writing import write_table, write_text
+
+if TYPE_CHECKING:
+    from inundate.leaves import LeafCalendar
+    from inundate.scenes import Scene
+
+LEAF_STEP = (
+    0.1  # leaf share is given to the classifier in tenths, and a settled tenth moves only when it is off by more
+)
+
+
+def array_mark(*arrays: np.ndarray) -> str:
+    """Return a hash of arrays' bytes."""
+    digest = hashlib.blake2b(digest_size=12)
+    for array in arrays:
+        digest.update(str(array.shape).encode())
+        digest.update(np.ascontiguousarray(array).tobytes())
+    return digest.hexdigest()
+
+
+def lay_out(work: Work, inputs: Inputs) -> Layout:
+    """Lay the wetlands out on the area's grid."""
+    from inundate.scenes import area_grid
+
+    with work.progress.step("layout"):
+        grid = area_grid(
+            inputs.catalog.scenes,
+            inputs.profile,
+            work.pipeline.area.crs,
+            tuple(inputs.shapes.total_bounds),
+            margin_m=10 * inputs.profile.step_m,
+        )
+        elevation = work.pipeline.input_files().get("area.elevation")
+        layout = make_layout(inputs.shapes, grid, elevation)
+        work.refuse(layout.refused)
+        if elevation is not None and layout.cells is None:
+            work.notes.append(f"{elevation}: the elevation model holds no value in any wetland; it is not used")
+    return layout
+
+
+@dataclass(frozen=True, slots=True)
+class LabelPixels:
+    """Labels on pixels and scenes: one row a labelled pixel (see pixels.match_scenes)."""
+
+    table: pd.DataFrame
+
+    def site(self, scene_id: str, layout: Layout) -> Site | None:
+        """Return the pixels under one scene's labels."""
+        rows = self.table[self.table["scene_id"] == scene_id]
+        if rows.empty:
+            return None
+        return make_site(layout.grid, rows["grid_row"].to_numpy(), rows["grid_col"].to_numpy(), block=32)
+
+
+def place_labels(work: Work, inputs: Inputs, layout: Layout, scenes: list[Scene]) -> LabelPixels | None:
+    """Put labels on pixels and scenes; None without labels."""
+    from inundate.pixels import check_labels, label_pixels, match_scenes
+
+    if inputs.labels is None:
+        return None
+    try:
+        labels = check_labels(inputs.labels)
+        pixels, off = label_pixels(labels, layout.grid)
+        if pixels.empty:
+            message = "labels: none lies inside the area of the scenes; check coordinates and reference system"
+            raise InputError(message)
+        times = pd.DataFrame({"scene_id": [s.scene_id for s in scenes], "datetime": [s.datetime for s in scenes]})
+        matched, late = match_scenes(pixels, times)
+    except InputError as err:
+        message = f"{work.pipeline.input_files()['labels.examples']}: {err}"
+        raise InputError(message) from err
+    work.refuse([*off, *late])
+    return LabelPixels(matched)
+
+
+def read_new(
+    work: Work, inputs: Inputs, layout: Layout, labels: LabelPixels | None, scenes: list[Scene], registrar: Any
+) -> list[ScenePlace]:
+    """Read what is new or changed; return the scenes whose views stand in the archive, by time.
+
+    ``registrar`` carries the co-registration reference (see :mod:`inundate.batch.registering`).
+    """
+    from inundate.scenes import fingerprint as scene_mark
+
+    archive, ledger = work.archive, work.ledger
+    plan = ReadPlan(
+        inputs.profile,
+        layout.site,
+        archive.out,
+        context=registrar.context,
+        reference=registrar.reference,
+        normalise=work.pipeline.extent.normalisation,
+        shift_limit_px=work.pipeline.extent.shift_limit_px,
+    )
+    common = {
+        "site": array_mark(
+            layout.site.rows, layout.site.cols, np.array([layout.grid.west, layout.grid.north, layout.grid.step])
+        ),
+        "sensor": inputs.marks["scenes.sensor"],
+        "reference": registrar.mark,
+        "normalisation": work.pipeline.extent.normalisation,
+        "code": code_mark("scenes"),
+    }
+    jobs, parts_of = [], []
+    for scene in scenes:
+        mine = {**common, "scene": scene_mark(scene)}
+        label_site = labels.site(scene.scene_id, layout) if labels is not None else None
+        sample = {**mine, "labels": "" if label_site is None else array_mark(label_site.rows, label_site.cols)}
+        stale = ledger.why("view", scene.scene_id, mine, archive.view(scene.scene_id))
+        bare = label_site is not None and ledger.why("sample", scene.scene_id, sample, archive.sample(scene.scene_id))
+        if stale or bare:
+            jobs.append(ReadJob(plan, scene, label_site if (bare or stale) else None, bool(stale)))
+            parts_of.append((mine, sample))
+    with work.progress.step("reading scenes", len(jobs)) as advance:
+        for outcome in run_units(read_scene, jobs, work.pipeline.compute, work.progress.say):
+            _record_reading(work, jobs[outcome.index], parts_of[outcome.index], outcome)
+            advance(1, (outcome.result or {}).get("read_bytes", 0))
+    return _standing(work, scenes)
+
+
+def _record_reading(work: Work, job: ReadJob, parts: tuple[dict[str, Any], dict[str, Any]], outcome: Any) -> None:
+    scene_id = job.scene.scene_id
+    if outcome.error is not None:
+        work.ledger.put("view", scene_id, parts[0], state="set_aside", detail={"reason": outcome.error})
+        return
+    units = []
+    if job.want_view:
+        units.append(("view", scene_id, parts[0], "done", outcome.result))
+    if job.label_site is not None:
+        units.append(("sample", scene_id, parts[1], "done", {}))
+    work.ledger.put_many(units)
+
+
+def _standing(work: Work, scenes: list[Scene]) -> list[ScenePlace]:
+    units = work.ledger.all("view")
+    places = []
+    for scene in scenes:
+        unit = units.get(scene.scene_id)
+        if unit is None or unit.state != "done":
+            reason = "was not read" if unit is None else unit.detail["reason"]
+            work.refuse([Refusal("scene", scene.scene_id, reason)])
+            continue
+        sun = scene.sun_elevation_deg if np.isfinite(scene.sun_elevation_deg) else 40.0
+        places.append(ScenePlace(scene.scene_id, pd.Timestamp(scene.datetime), float(sun), unit.fingerprint))
+    if not places:
+        message = f"{work.pipeline.input_files()['scenes.catalog']}: none of {len(scenes)} scenes could be read; the first says: {work.refused[-1].reason}"
+        raise InputError(message)
+    return sorted(places, key=lambda p: (p.datetime, p.scene_id))
+
+
+def follow_leaves(
+    work: Work, inputs: Inputs, layout: Layout, places: list[ScenePlace]
+) -> tuple[LeafCalendar, pd.DataFrame]:
+    """Fit the leaf calendar and settle each scene's leaf share.
+
+    Returns
+    -------
+    calendar : LeafCalendar
+    settled : DataFrame
+        One row a scene (index scene_id), one column a wetland: leaf share in tenths.
+    """
+    from inundate.leaves import LeafCalendar
+
+    archive, ledger = work.archive, work.ledger
+    with work.progress.step("leaf states"):
+        greenness = update_greenness(archive, layout, places)
+        temperature = None
+        if inputs.weather is not None and "air_temperature_c" in inputs.weather.columns:
+            temperature = inputs.weather[["date", "air_temperature_c"]].dropna()
+        path = archive.folder / "leaves.json"
+        parts = {
+            "greenness": table_mark(greenness[["wetland_id", "scene_id", "date", "ndvi", "weight"]]),
+            "temperature": table_mark(temperature),
+            "code": code_mark("leaves"),
+            **settings_mark(work.pipeline, "leaves"),
+        }
+        if ledger.why("leaves", "calendar", parts, path) is None:
+            calendar = LeafCalendar.from_json(path.read_text(encoding="utf-8"))
+        else:
+            seen = greenness[np.isfinite(greenness["ndvi"]) & (greenness["weight"] > 0.2)]
+            calendar = LeafCalendar().fit(seen, temperature=temperature, fixed=work.pipeline.leaves.fixed())
+            write_text(path, calendar.to_json())
+            ledger.put("leaves", "calendar", parts)
+        return calendar, _settle(work, layout, calendar, places)
+
+
+def _settle(work: Work, layout: Layout, calendar: LeafCalendar, places: list[ScenePlace]) -> pd.DataFrame:
+    """Round each scene's leaf share to tenths; a tenth settled earlier stays unless it is off by more than a tenth.
+
+    So a month of new views, which moves the calendar a little, does not make the whole archive be scored anew.
+    """
+    ids = layout.wetlands["wetland_id"].to_numpy()
+    n, m = len(places), len(ids)
+    dates = np.repeat(np.array([p.datetime.normalize() for p in places], "datetime64[ns]"), m)
+    _, share = calendar.states(np.tile(ids, n), dates)
+    fresh = pd.DataFrame(share.reshape(n, m).astype(np.float64), index=[p.scene_id for p in places], columns=ids)
+    rounded = (fresh / LEAF_STEP).round() * LEAF_STEP
+    path = work.archive.table("leaf_share")
+    if path.exists():
+        old = pd.read_parquet(path).set_index("scene_id").reindex(index=fresh.index, columns=ids)
+        rounded = old.where((old - fresh).abs() <= LEAF_STEP, rounded)
+    rounded = rounded.round(1)
+    rounded.index.name = "scene_id"
+    write_table(path, rounded.reset_index())
+    return rounded
