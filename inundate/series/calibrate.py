@@ -1,0 +1,155 @@
+"""Weights of predictors, and widths of intervals, from held-out evidence; worth of views under leaves from loggers."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from inundate.series.fitting import Setup
+from inundate.series.heldout import Evidence, relation_share
+from inundate.series.inputs import Events
+from inundate.series.maps import share_at
+
+WIDTH_90 = 1.6448536269514722
+# Weight of the pooled value beside a wetland's or a cell's own, in independent blocks; common practice, no source.
+_SHRINK_BLOCKS = 8.0
+_CANDIDATES = np.linspace(0, 1, 9)
+
+
+@dataclass(frozen=True, slots=True)
+class Widths:
+    """Factors on the level's standard deviation.
+
+    Attributes
+    ----------
+    predicted : ndarray, shape (4, 3)
+        By leaf state and size third, for days without own stage.
+    stage : float
+        For days with own stage.
+    """
+
+    predicted: np.ndarray
+    stage: float
+
+
+def size_third(area_max_m2: np.ndarray) -> np.ndarray:
+    """Return 0, 1 or 2 by thirds of the largest extent (ties by position)."""
+    rank = np.argsort(np.argsort(area_max_m2, kind="stable"), kind="stable")
+    return (rank * 3) // max(area_max_m2.size, 1)
+
+
+def _clusters(evidence: Evidence) -> np.ndarray:
+    """Weights by which each wetland and block counts once, whatever its number of days."""
+    key = evidence.wetland * 1000 + evidence.block
+    _, inverse, counts = np.unique(key, return_inverse=True, return_counts=True)
+    return 1 / counts[inverse]
+
+
+def choose_weights(evidence: Evidence | None, wetlands: int, kinds: int) -> tuple[np.ndarray, np.ndarray]:
+    """Return the weight of each predictor (wetland, kind) and its held-out RMSE (wetland, kind; NaN where not scored).
+
+    A wetland's own held-out error counts beside that of all; rows from loggers under leaves count as the aim is there.
+    """
+    scores = np.full((wetlands, kinds), np.nan)
+    if evidence is None or evidence.day.size == 0:
+        return np.full((wetlands, kinds), 1 / kinds), scores
+    weight = _clusters(evidence)
+    square = [(evidence.share[k] - evidence.truth) ** 2 for k in range(kinds)]
+    mass = np.bincount(evidence.wetland, weight, wetlands)
+    for k in range(kinds):
+        total = np.bincount(evidence.wetland, weight * square[k], wetlands)
+        scores[:, k] = np.where(mass > 0, np.sqrt(total / np.where(mass > 0, mass, 1)), np.nan)
+    if kinds == 1:
+        return np.ones((wetlands, 1)), scores
+    blended = np.array([(w * evidence.share[0] + (1 - w) * evidence.share[1] - evidence.truth) ** 2 for w in _CANDIDATES])
+    aim = weight * np.where(evidence.from_stage & (evidence.leaf != 0), 3.0, 1.0)
+    pooled = (blended * aim).sum(axis=1) / aim.sum()
+    own = np.array([np.bincount(evidence.wetland, b * weight, wetlands) for b in blended])
+    best = _CANDIDATES[np.argmin((own + _SHRINK_BLOCKS * pooled[:, None]) / (mass + _SHRINK_BLOCKS), axis=0)]
+    return np.column_stack([best, 1 - best]), scores
+
+
+def solve_width(gap: np.ndarray, sd: np.ndarray, noise: np.ndarray, weight: np.ndarray, aim: float = 0.9) -> float:
+    """Return the factor on ``sd`` at which a share ``aim`` of gaps lies inside; ``noise`` is the hidden value's own error."""
+    low, high = 0.2, 6.0
+    for _ in range(40):
+        middle = np.sqrt(low * high)
+        inside = np.abs(gap) <= WIDTH_90 * np.sqrt((middle * sd) ** 2 + noise**2)
+        if (inside * weight).sum() >= aim * weight.sum():
+            high = middle
+        else:
+            low = middle
+    return float(np.sqrt(low * high))
+
+
+def blended_evidence(evidence: Evidence, weights: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+    """Return the mean and sd (m) of the blended prediction of each row."""
+    w = weights[evidence.wetland].T
+    mean = (w * evidence.mean).sum(axis=0)
+    var = (w * (evidence.sd**2 + (evidence.mean - mean) ** 2)).sum(axis=0)
+    return mean, np.sqrt(var)
+
+
+def fit_widths(evidence: Evidence | None, weights: np.ndarray, third: np.ndarray) -> np.ndarray:
+    """Return factors (leaf state, size third) so that intervals of hidden blocks hold 90 % of what was hidden."""
+    out = np.ones((4, 3))
+    if evidence is None or evidence.day.size == 0:
+        return out
+    mean, sd = blended_evidence(evidence, weights)
+    gap = np.where(mean < evidence.low, evidence.low - mean, np.where(mean > evidence.high, evidence.high - mean, 0.0))
+    weight = _clusters(evidence)
+    every = solve_width(gap, sd, evidence.level_sd, weight)
+    for leaf in range(4):
+        in_leaf = evidence.leaf == leaf
+        for size in range(3):
+            cell = in_leaf & (third[evidence.wetland] == size)
+            value, mass = every, _SHRINK_BLOCKS
+            for rows in (in_leaf, cell):
+                blocks = weight[rows].sum()
+                if blocks > 0:
+                    own = solve_width(gap[rows], sd[rows], evidence.level_sd[rows], weight[rows])
+                    value = np.exp((mass * np.log(value) + blocks * np.log(own)) / (mass + blocks))
+            out[leaf, size] = value
+    return out
+
+
+def stage_width(setup: Setup, views: Events, stage: Events) -> float:
+    """Return the factor on the relation's error at which leaf-off views on days with stage lie inside as often as due."""
+    pairs = _pairs(views.keep(views.kind == 0), stage)
+    if pairs[0].size < 20:
+        return 1.0
+    share, sd = relation_share(setup, stage)
+    v = views.keep(views.kind == 0)
+    gap = v.value[pairs[0]] - share[pairs[1]]
+    return float(np.clip(solve_width(gap, sd[pairs[1]], v.sd[pairs[0]], np.ones(gap.size)), 0.7, 2.0))
+
+
+def _pairs(views: Events, stage: Events) -> tuple[np.ndarray, np.ndarray]:
+    """Return positions of views and of stage events of the same wetland and day."""
+    key_v = views.owner * 1_000_000 + views.day
+    key_s = stage.owner * 1_000_000 + stage.day
+    return np.intersect1d(key_v, key_s, return_indices=True)[1:]
+
+
+def worth_of_views(setup: Setup, views: Events, stage: Events) -> np.ndarray:
+    """Return the factor (4,) on the views' standard deviation by leaf state at which they agree with loggers.
+
+    At least 1: a view is never trusted more than it claims. Without 20 pairs in a state, views of that state count as
+    claimed in leaf-off, and with three times their error under leaves (common practice, no source).
+    """
+    out = np.array([1.0, 3.0, 3.0, 3.0])
+    share, sd = relation_share(setup, stage)
+    at_v, at_s = _pairs(views, stage)
+    for leaf in range(4):
+        rows = views.kind[at_v] == leaf
+        if rows.sum() < 20:
+            continue
+        gap = views.value[at_v[rows]] - share[at_s[rows]]
+        out[leaf] = max(solve_width(gap, views.sd[at_v[rows]], sd[at_s[rows]], np.ones(gap.size)), 1.0)
+    return out
+
+
+def share_of(setup: Setup, wetland: np.ndarray, level: np.ndarray) -> np.ndarray:
+    """Return shares at levels (m), one wetland position each."""
+    return np.array([share_at(x, setup.maps.share[i], setup.maps.full_m[i]) for i, x in zip(wetland, level, strict=True)])

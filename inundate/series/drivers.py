@@ -1,0 +1,180 @@
+"""What drives every wetland's level: rain, evapotranspiration, the region's loggers, and the season."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+import pandas as pd
+from numba import njit
+
+from inundate.series.inputs import SPIN_UP_DAYS, Panel
+
+# Memory lengths (days) of antecedent rain minus evapotranspiration: weeks to seasons, common practice, no source.
+MEMORIES_DAYS = (5.0, 15.0, 45.0, 120.0, 300.0)
+# Degree-day melt, m of water per degree and day; common practice, no source.
+MELT_M = 0.003
+
+
+@dataclass(frozen=True, slots=True)
+class Drivers:
+    """Daily drivers; the first ``spin`` days lie before the panel's first day.
+
+    Attributes
+    ----------
+    rain_m, pet_m : ndarray, shape (spin + day,)
+        Rain and melt, and potential evapotranspiration, m; zeros without weather.
+    wetness : ndarray, shape (spin + day, memory)
+        Antecedent rain minus evapotranspiration at each memory length, standardised.
+    season : ndarray, shape (spin + day, 4)
+        Cosine and sine of one and two cycles a year.
+    loggers : ndarray, shape (fold + 1, spin + day, component)
+        Regional signals of the loggers; fold 0 rests on all loggers, fold f leaves out those of fold f.
+    fold : ndarray of int, shape (wetland,)
+        Fold of each wetland with stage (1 ..), 0 for others.
+    has_weather : bool
+    spin : int
+    """
+
+    rain_m: np.ndarray
+    pet_m: np.ndarray
+    wetness: np.ndarray
+    season: np.ndarray
+    loggers: np.ndarray
+    fold: np.ndarray
+    has_weather: bool
+    spin: int
+
+
+@njit(cache=True, nogil=True)
+def leaky_sum(x, memory):
+    """Exponentially weighted mean with the given memory (days), started at the series' mean."""
+    out = np.empty(x.size)
+    keep = np.exp(-1.0 / memory)
+    level = x.mean()
+    for t in range(x.size):
+        level = keep * level + (1.0 - keep) * x[t]
+        out[t] = level
+    return out
+
+
+@njit(cache=True, nogil=True)
+def snow_and_melt(rain, temperature, melt_rate):
+    """Rain plus melt (m) of precipitation that is held as snow below 0 degrees Celsius."""
+    out = np.empty(rain.size)
+    pack = 0.0
+    for t in range(rain.size):
+        if temperature[t] < 0.0:
+            pack += rain[t]
+            out[t] = 0.0
+        else:
+            melt = min(pack, melt_rate * temperature[t])
+            pack -= melt
+            out[t] = rain[t] + melt
+    return out
+
+
+def _full_column(weather: pd.DataFrame, column: str, days: pd.DatetimeIndex) -> np.ndarray:
+    """Return a weather column on all days, gaps filled by the mean of that time of year (31-day window)."""
+    known = weather[column].astype(float).dropna()
+    if known.empty:
+        return np.zeros(len(days))
+    by_day = known.groupby(known.index.day_of_year).mean().reindex(range(1, 367))
+    wrapped = pd.concat([by_day, by_day, by_day], ignore_index=True)
+    smooth = wrapped.rolling(31, center=True, min_periods=1).mean().interpolate(limit_direction="both")
+    typical = smooth.to_numpy()[366 : 2 * 366]
+    out = known.reindex(days).to_numpy(float, copy=True)
+    gap = ~np.isfinite(out)
+    out[gap] = typical[days.day_of_year.to_numpy()[gap] - 1]
+    return out
+
+
+def _standardise(x: np.ndarray, tail: int) -> np.ndarray:
+    window = x[-tail:]
+    sd = window.std(axis=0)
+    return (x - window.mean(axis=0)) / np.where(sd > 0, sd, 1.0)
+
+
+def _components(level: np.ndarray, guess: np.ndarray, most: int) -> np.ndarray:
+    """Return smooth-filled principal signals (day, component) of logger levels (day, logger) with gaps.
+
+    Each logger is standardised; gaps are filled from the signals themselves (iterated), and days with no logger at all
+    from ``guess`` (day, predictor) by ridge regression.
+    """
+    count = min(most, level.shape[1])
+    known = np.isfinite(level)
+    sd = np.nanstd(level, axis=0)
+    z = (level - np.nanmean(level, axis=0)) / np.where(sd > 0, sd, 1)
+    x = np.column_stack([np.ones(len(z)), guess])
+    filled = z.copy()
+    for j in range(z.shape[1]):
+        ok = known[:, j]
+        gram = x[ok].T @ x[ok] + np.eye(x.shape[1])
+        filled[~ok, j] = x[~ok] @ np.linalg.solve(gram, x[ok].T @ z[ok, j])
+    for _ in range(12):
+        u, s, vt = np.linalg.svd(filled, full_matrices=False)
+        low = (u[:, :count] * s[:count]) @ vt[:count]
+        some = known.any(axis=1)[:, None] & ~known
+        filled = np.where(some, low, filled)
+    u, s, vt = np.linalg.svd(filled, full_matrices=False)
+    sign = np.where(vt[:count].sum(axis=1) < 0, -1.0, 1.0)
+    return u[:, :count] * s[:count] * sign
+
+
+def logger_folds(panel: Panel, most: int = 5) -> np.ndarray:
+    """Return the fold of each wetland with at least 60 days of stage (1 ..), 0 for others; by rank of size, so even."""
+    days = np.diff(panel.stage.start)
+    logged = np.flatnonzero(days >= 60)
+    fold = np.zeros(len(panel.ids), int)
+    count = max(min(most, logged.size), 1)
+    order = logged[np.lexsort((logged, panel.area_max_m2[logged]))]
+    fold[order] = np.arange(order.size) % count + 1
+    return fold
+
+
+def _logger_signals(panel: Panel, fold: np.ndarray, guess: np.ndarray, spin: int) -> np.ndarray:
+    days, logged = len(panel.dates), np.flatnonzero(fold > 0)
+    level = np.full((days, logged.size), np.nan)
+    for j, i in enumerate(logged):
+        part = slice(panel.stage.start[i], panel.stage.start[i + 1])
+        level[panel.stage.day[part], j] = panel.stage.value[part]
+    most = 2 if logged.size >= 4 else 1
+    signals = np.zeros((int(fold.max()) + 1, spin + days, most if logged.size else 0))
+    for f in range(signals.shape[0]):
+        use = fold[logged] != f if f else np.ones(logged.size, bool)
+        if not use.any():
+            continue
+        full = np.vstack([np.full((spin, int(use.sum())), np.nan), level[:, use]])
+        got = _standardise(_components(full, guess, most), days)
+        signals[f, :, : got.shape[1]] = got
+    return signals
+
+
+def build_drivers(panel: Panel) -> Drivers:
+    """Make the drivers of a panel.
+
+    Parameters
+    ----------
+    panel : Panel
+
+    Returns
+    -------
+    Drivers
+    """
+    spin = SPIN_UP_DAYS
+    days = pd.date_range(pd.Timestamp(panel.dates[0]) - pd.Timedelta(days=spin), pd.Timestamp(panel.dates[-1]), freq="D")
+    turn = 2 * np.pi * days.day_of_year.to_numpy() / 365.25
+    season = np.column_stack([np.cos(turn), np.sin(turn), np.cos(2 * turn), np.sin(2 * turn)])
+    rain, pet = np.zeros(len(days)), np.zeros(len(days))
+    wetness = np.zeros((len(days), 0))
+    if panel.weather is not None:
+        rain = _full_column(panel.weather, "precipitation_mm", days) / 1000
+        pet = _full_column(panel.weather, "pet_mm", days) / 1000
+        if "air_temperature_c" in panel.weather and panel.weather["air_temperature_c"].notna().any():
+            rain = snow_and_melt(rain, _full_column(panel.weather, "air_temperature_c", days), MELT_M)
+        net = rain - pet
+        wetness = _standardise(np.column_stack([leaky_sum(net, m) for m in MEMORIES_DAYS]), len(panel.dates))
+    fold = logger_folds(panel)
+    guess = np.column_stack([wetness, season])
+    loggers = _logger_signals(panel, fold, guess, spin)
+    return Drivers(rain, pet, wetness, season, loggers, fold, panel.weather is not None, spin)

@@ -1,0 +1,186 @@
+"""Gap-filled daily extent of every wetland."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+
+import numpy as np
+import pandas as pd
+
+from inundate.series.calibrate import (
+    WIDTH_90,
+    blended_evidence,
+    choose_weights,
+    fit_widths,
+    size_third,
+    stage_width,
+    worth_of_views,
+)
+from inundate.series.drivers import build_drivers
+from inundate.series.fitting import Setup, make_setup
+from inundate.series.heldout import Evidence, hide_blocks, hide_loggers, join
+from inundate.series.inputs import Events, FillOptions, SeriesInputs, build_panel
+from inundate.series.maps import LevelMaps, build_maps, slope_at
+from inundate.series.model import Fitted, Levels, available_kinds, blend, fit_kind, smooth_levels
+from inundate.series.result import Joint, SeriesResult, daily_table
+from inundate.series.smooth import area_moments
+
+OBSERVED, STAGE, NEIGHBOURS, SEASON = range(4)
+
+
+def fill_series(inputs: SeriesInputs, *, options: FillOptions | None = None, seed: int = 0) -> SeriesResult:
+    """Fill the daily extent of every wetland, with 90 % intervals and the reason for each choice.
+
+    A wetland's level is what its predictor says plus a slowly varying departure, observed by views (through the bounded
+    level-area map, with error) and by its own logger. Predictors are a mass balance and a linear one on antecedent rain
+    minus evapotranspiration, season and the region's loggers; parameters are pooled across wetlands by size and cover.
+    They are blended, and intervals calibrated, by hiding whole seasons of views and whole loggers.
+
+    Parameters
+    ----------
+    inputs : SeriesInputs
+    options : FillOptions or None
+    seed : int
+        Same seed, same result, whatever the order of rows or the number of workers.
+
+    Returns
+    -------
+    SeriesResult
+
+    Raises
+    ------
+    InputError
+        If a table lacks a column, an id occurs twice, an area is not positive or the dates are reversed.
+    """
+    options = options or FillOptions()
+    panel = build_panel(inputs, options)
+    setup = make_setup(panel, build_drivers(panel), options, seed)
+    logged = {panel.ids[i] for i in np.flatnonzero(setup.drivers.fold > 0)}
+    blind = _blind_maps(setup, inputs, logged)
+    worth = worth_of_views(setup, panel.views, panel.stage)
+    views = panel.views.with_sd(panel.views.sd * worth[panel.views.kind])
+    fits = [fit_kind(setup, kind, views, panel.stage) for kind in available_kinds(setup)]
+    parts = [hide_loggers(setup, blind, fits, views, panel.stage), hide_blocks(setup, fits, views, panel.stage)]
+    found = [p for p in parts if p is not None and p.day.size]
+    evidence = join(found) if found else None
+    weights, scores = choose_weights(evidence, len(panel.ids), len(fits))
+    everyone = range(len(panel.ids))
+    levels = blend([smooth_levels(setup, f, everyone, views, panel.stage, f.posterior) for f in fits], weights)
+    wide = _widen(setup, levels, evidence, weights, views)
+    reasons = _reasons(setup, fits, weights, scores, evidence)
+    return _assemble(setup, levels, wide, views, (reasons, _joint(evidence, weights, fits)))
+
+
+def _blind_maps(setup: Setup, inputs: SeriesInputs, logged: set[str]) -> LevelMaps:
+    """Return level maps in which wetlands with logger are treated as if they had none."""
+
+    class Others:
+        def predict(self, wetland_id: str, stage_m: np.ndarray) -> pd.DataFrame:
+            if inputs.relations is None or wetland_id in logged:
+                raise KeyError(wetland_id)
+            return inputs.relations.predict(wetland_id, stage_m)
+
+    return build_maps(setup.panel.ids, setup.panel.area_max_m2, Others(), inputs.hypsometry)
+
+
+def _stage_days(stage: Events, days: int) -> np.ndarray:
+    out = np.zeros((stage.start.size - 1, days), bool)
+    out[stage.owner, stage.day] = True
+    return out
+
+
+def _widen(setup: Setup, levels: Levels, evidence: Evidence | None, weights: np.ndarray, views: Events) -> np.ndarray:
+    """Return calibrated standard deviations of levels (wetland, day)."""
+    panel = setup.panel
+    third = size_third(panel.area_max_m2)
+    factor = fit_widths(evidence, weights, third)
+    sd = levels.sd * factor[panel.leaf, third[:, None]].astype(np.float32)
+    own = _stage_days(panel.stage, len(panel.dates))
+    relation = stage_width(setup, views, panel.stage)
+    for i in np.flatnonzero(own.any(axis=1)):
+        table, full = setup.maps.share[i], float(setup.maps.full_m[i])
+        days = np.flatnonzero(own[i])
+        level = levels.mean[i, days].astype(float)
+        nodes = np.linspace(0, full, table.size)
+        error = np.interp(level, nodes, setup.maps.sd[i]) * relation
+        slope = np.array([slope_at(x, table, full) for x in level])
+        extra = np.where(slope > 0, error / np.maximum(slope, 0.02 / full), 0.0)
+        sd[i, days] = np.sqrt(levels.sd[i, days] ** 2 + extra**2)
+    return sd
+
+
+def _joint(evidence: Evidence | None, weights: np.ndarray, fits: Sequence[Fitted]) -> Joint:
+    """Measure how held-out errors hang together, across wetlands on one day and in time."""
+    memory = float(np.median(np.concatenate([f.departure.memory for f in fits])))
+    if evidence is None:
+        return Joint(memory, 0.5)
+    mean, sd = blended_evidence(evidence, weights)
+    z = np.clip((0.5 * (np.clip(evidence.low, mean, None) + np.clip(evidence.high, None, mean)) - mean) / sd, -3, 3)
+    frame = pd.DataFrame({"w": evidence.wetland, "d": evidence.day // 5, "z": z}).groupby(["w", "d"], as_index=False)["z"].mean()
+    by_day = frame.groupby("d")["z"].agg(["sum", "count", lambda x: (x**2).sum()])
+    total, count, square = (by_day.iloc[:, k].to_numpy(float) for k in range(3))
+    many = count > 1
+    if many.sum() < 3 or square.sum() <= 0:
+        return Joint(memory, 0.5)
+    cross = (total[many] ** 2 - square[many]).sum() / (count[many] * (count[many] - 1)).sum()
+    shared = float(np.clip(cross / (square.sum() / count.sum()), 0, 0.9))
+    later = frame.assign(d=frame["d"] + 2).merge(frame, on=["w", "d"], suffixes=("", "_later"))
+    if len(later) >= 50:
+        level = np.clip((later["z"] * later["z_later"]).mean() / (frame["z"] ** 2).mean(), 0.05, 0.95)
+        memory = float(np.clip(-10 / np.log(level), 3, 200))
+    return Joint(memory, shared)
+
+
+def _basis(setup: Setup, levels: Levels, fits: Sequence[Fitted], views: Events) -> np.ndarray:
+    """Return basis codes (wetland, day): a view counts as observed where it is sharper than the predictor's departure."""
+    panel = setup.panel
+    regional = setup.drivers.has_weather or bool((setup.drivers.fold > 0).any())
+    out = np.full(levels.mean.shape, NEIGHBOURS if regional else SEASON, np.uint8)
+    stage = _stage_days(panel.stage, len(panel.dates))
+    out[stage] = STAGE
+    out[views.owner, views.day] = np.where(views.sd <= 0.15, OBSERVED, out[views.owner, views.day])
+    return out
+
+
+def _reasons(setup: Setup, fits: Sequence[Fitted], weights: np.ndarray, scores: np.ndarray, evidence: Evidence | None) -> pd.DataFrame:
+    panel = setup.panel
+    logged = np.diff(panel.stage.start)
+    frame = pd.DataFrame({"wetland_id": panel.ids, "area_source": panel.maps.source})
+    names = [f.kind for f in fits]
+    lead = np.argmax(weights, axis=1)
+    frame["predictor"] = [names[k] if weights[i, k] >= 0.999 else "blend" for i, k in enumerate(lead)]
+    for k, fit in enumerate(fits):
+        key = fit.kind.replace(" ", "_")
+        frame[f"weight_{key}"] = weights[:, k]
+        frame[f"score_{key}"] = scores[:, k]
+    frame["departure_sd_m"] = sum(weights[:, k] * f.departure.sd for k, f in enumerate(fits)) * setup.maps.full_m
+    frame["departure_memory_days"] = sum(weights[:, k] * f.departure.memory for k, f in enumerate(fits))
+    frame["n_views"] = np.diff(panel.views.start)
+    frame["n_stage_days"] = logged
+    words = []
+    for i in range(len(panel.ids)):
+        lean = ", ".join(f"{names[k]} {weights[i, k]:.2f}" for k in range(len(names)) if weights[i, k] > 0)
+        if evidence is None:
+            tail = "nothing could be held out, so predictors count alike"
+        elif np.isfinite(scores[i]).any():
+            tail = "held-out RMSE " + ", ".join(f"{names[k]} {scores[i, k]:.3f}" for k in range(len(names))) + " of the largest extent"
+        else:
+            tail = "not scored itself, weights from the other wetlands"
+        own = f"own stage on {logged[i]} days; else " if logged[i] else ""
+        words.append(f"{own}{lean}: {tail}")
+    frame["why"] = words
+    return frame
+
+
+def _assemble(setup: Setup, levels: Levels, sd: np.ndarray, views: Events, rest: tuple[pd.DataFrame, Joint]) -> SeriesResult:
+    panel = setup.panel
+    count, days = levels.mean.shape
+    areas = tuple(np.empty((count, days), np.float32) for _ in range(3))
+    one = [np.empty(days) for _ in range(3)]
+    for i in range(count):
+        area_moments(levels.mean[i].astype(float), sd[i].astype(float), setup.maps.share[i], float(setup.maps.full_m[i]), *one, WIDTH_90)
+        for k in range(3):
+            areas[k][i] = np.minimum(one[k] * panel.area_max_m2[i], panel.area_max_m2[i])
+    basis = _basis(setup, levels, (), views)
+    daily = daily_table(panel.ids, panel.dates, areas, basis, panel.leaf)
+    return SeriesResult(daily, rest[0], panel.lacked, panel.ids, panel.dates, levels.mean, sd, setup.maps, panel.area_max_m2, rest[1], setup.seed)

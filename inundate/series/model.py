@@ -1,0 +1,212 @@
+"""The statistical frame: predictors fitted and pooled, departure smoothed, views weighed by what they proved worth."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+import numpy as np
+
+from inundate.series.fitting import (
+    KINDS,
+    Departure,
+    Posterior,
+    Prior,
+    Setup,
+    first_prior,
+    fit_many,
+    in_threads,
+    member_paths,
+    pool_items,
+    pooled_prior,
+    targets,
+)
+from inundate.series.inputs import Events
+from inundate.series.kalman import smooth_one
+from inundate.series.smooth import find_sites, smooth_members
+
+# Candidate sizes (share of the full level) and memories (days) of the departure.
+DEPARTURE_SD = (0.02, 0.04, 0.07, 0.12, 0.2, 0.32)
+DEPARTURE_MEMORY = (6.0, 18.0, 50.0)
+_FIRST_SD, _FIRST_MEMORY = 0.12, 18.0
+
+
+@dataclass(frozen=True, slots=True)
+class Fitted:
+    """One predictor kind, fitted to all wetlands."""
+
+    kind: str
+    prior: Prior
+    posterior: Posterior
+    departure: Departure
+
+
+@dataclass(frozen=True, slots=True)
+class Levels:
+    """Level of wetlands a day: ``mean`` and ``sd`` (wetland, day) in m; ``info`` is the variance of the day's events."""
+
+    mean: np.ndarray
+    sd: np.ndarray
+    info: np.ndarray
+
+
+def available_kinds(setup: Setup) -> tuple[str, ...]:
+    """Return the predictor kinds that the inputs allow; the mass balance needs weather."""
+    return KINDS if setup.drivers.has_weather else KINDS[1:]
+
+
+def _events_of(views: Events, stage: Events, i: int) -> tuple[np.ndarray, ...]:
+    v, s = slice(views.start[i], views.start[i + 1]), slice(stage.start[i], stage.start[i + 1])
+    day = np.concatenate([views.day[v], stage.day[s]])
+    is_stage = np.r_[np.zeros(views.day[v].size, bool), np.ones(stage.day[s].size, bool)]
+    order = np.lexsort((is_stage, day))
+    return (
+        day[order],
+        np.concatenate([views.value[v], stage.value[s]])[order],
+        np.concatenate([views.sd[v], stage.sd[s]])[order],
+        np.concatenate([views.kind[v], stage.kind[s]])[order],
+        is_stage[order],
+    )
+
+
+def _sites(setup: Setup, i: int, paths: np.ndarray, events: tuple[np.ndarray, ...], sd: float, memory: float) -> tuple[np.ndarray, np.ndarray]:
+    path, spread = paths.mean(axis=0), paths.var(axis=0)
+    site, site_var = np.empty(path.size), np.empty(path.size)
+    phi = float(np.exp(-1 / memory))
+    s0 = sd * sd
+    table, full = setup.maps.share[i], float(setup.maps.full_m[i])
+    find_sites(path, spread, *events, table, full, phi, s0 * (1 - phi * phi), s0, setup.options.outlier_share, site, site_var)
+    return site, site_var
+
+
+def departure_loglik(setup: Setup, i: int, paths: np.ndarray, events: tuple[np.ndarray, ...]) -> np.ndarray:
+    """Return the log-likelihood (sd, memory) of a wetland's events for each candidate departure."""
+    full = float(setup.maps.full_m[i])
+    out = np.zeros((len(DEPARTURE_SD), len(DEPARTURE_MEMORY)))
+    if events[0].size == 0:
+        return out
+    site, site_var = _sites(setup, i, paths, events, _FIRST_SD * full, _FIRST_MEMORY)
+    y = site - paths.mean(axis=0)
+    total = site_var + paths.var(axis=0)
+    mean, var = np.empty(y.size), np.empty(y.size)
+    for a, sd in enumerate(DEPARTURE_SD):
+        for b, memory in enumerate(DEPARTURE_MEMORY):
+            phi, s0 = float(np.exp(-1 / memory)), (sd * full) ** 2
+            out[a, b] = smooth_one(y, total, phi, s0 * (1 - phi * phi), s0, mean, var)
+    return out
+
+
+def pooled_departure(logliks: np.ndarray) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+    """Choose size and memory a wetland under a prior learned from all wetlands (EM over the candidate grid).
+
+    Parameters
+    ----------
+    logliks : ndarray, shape (wetland, sd, memory)
+
+    Returns
+    -------
+    sd, memory : ndarray, shape (wetland,)
+        Posterior mean of the sd, and of the log memory.
+    prior : ndarray, shape (sd, memory)
+    """
+    flat = logliks.reshape(len(logliks), -1)
+    like = np.exp(flat - flat.max(axis=1, keepdims=True))
+    weight = np.full(flat.shape[1], 1 / flat.shape[1])
+    for _ in range(30):
+        member = like * weight
+        member /= member.sum(axis=1, keepdims=True)
+        weight = (member.sum(axis=0) + 1 / flat.shape[1]) / (len(flat) + 1)
+    member = like * weight
+    member /= member.sum(axis=1, keepdims=True)
+    sd, memory = np.meshgrid(DEPARTURE_SD, DEPARTURE_MEMORY, indexing="ij")
+    return np.sqrt(member @ (sd.ravel() ** 2)), np.exp(member @ np.log(memory.ravel())), weight.reshape(sd.shape)
+
+
+def fit_kind(setup: Setup, kind: str, views: Events, stage: Events) -> Fitted:
+    """Fit one predictor kind to all wetlands: pooled prior by EM, departure by likelihood, then every wetland."""
+    count = len(setup.panel.ids)
+    departure = Departure(np.full(count, _FIRST_SD), np.full(count, _FIRST_MEMORY))
+    items = pool_items(setup)
+    prior = first_prior(setup, kind)
+    start: np.ndarray | None = None
+    width = prior.coef.shape[1]
+    for step in range(4):
+        aims = {int(i): targets(setup, i, views, stage, departure) for i in items}
+        post = fit_many(setup, kind, [int(i) for i in items], aims.__getitem__, lambda _i, p=prior: p, start, 12 if step == 0 else 5)
+        if len(items):
+            start = np.zeros((count, width))
+            start[items] = post.theta
+            prior = pooled_prior(setup, kind, items, post)
+        if step == 1 and len(items):
+            departure = _fit_departure(setup, kind, items, post, views, stage)
+    everyone = list(range(count))
+    known = set(items.tolist())
+    begin = setup.group @ prior.coef
+    if start is not None:
+        begin[items] = start[items]
+    post = fit_many(setup, kind, everyone, lambda i: targets(setup, i, views, stage, departure), lambda _i: prior, begin, 8)
+    if len(known):
+        departure = _fit_departure(setup, kind, np.arange(count), post, views, stage)
+    return Fitted(kind, prior, post, departure)
+
+
+def _fit_departure(setup: Setup, kind: str, items: np.ndarray, post: Posterior, views: Events, stage: Events) -> Departure:
+    def work(row: int) -> np.ndarray:
+        i = int(items[row])
+        paths = member_paths(setup, kind, i, post.theta[row], post.cov[row])
+        return departure_loglik(setup, i, paths, _events_of(views, stage, i))
+
+    logliks = np.array(in_threads(work, range(len(items)), setup.options.workers))
+    sd, memory, weight = pooled_departure(logliks)
+    grid_sd, grid_memory = np.meshgrid(DEPARTURE_SD, DEPARTURE_MEMORY, indexing="ij")
+    count = len(setup.panel.ids)
+    every_sd = np.full(count, np.sqrt((weight * grid_sd**2).sum()))
+    every_memory = np.full(count, np.exp((weight * np.log(grid_memory)).sum()))
+    every_sd[items], every_memory[items] = sd, memory
+    return Departure(every_sd, every_memory)
+
+
+def smooth_levels(setup: Setup, fit: Fitted, items: Sequence[int], views: Events, stage: Events, posterior: Posterior) -> Levels:
+    """Smooth levels of wetlands with one predictor; rows follow ``items``, as do those of ``posterior``."""
+    days = len(setup.panel.dates)
+    out = Levels(*(np.empty((len(items), days), np.float32) for _ in range(3)))
+
+    def work(row: int) -> None:
+        i = int(items[row])
+        paths = member_paths(setup, fit.kind, i, posterior.theta[row], posterior.cov[row])
+        sd, memory = float(fit.departure.sd[i] * setup.maps.full_m[i]), float(fit.departure.memory[i])
+        site, site_var = _sites(setup, i, paths, _events_of(views, stage, i), sd, memory)
+        phi, s0 = float(np.exp(-1 / memory)), sd * sd
+        mean, var = np.empty(days), np.empty(days)
+        smooth_members(paths, site, site_var, phi, s0 * (1 - phi * phi), s0, mean, var)
+        out.mean[row], out.sd[row], out.info[row] = mean, np.sqrt(np.maximum(var, 1e-8)), site_var
+
+    in_threads(work, range(len(items)), setup.options.workers)
+    return out
+
+
+def blend(levels: Sequence[Levels], weights: np.ndarray) -> Levels:
+    """Blend predictors' levels; the spread between them counts in the variance.
+
+    Parameters
+    ----------
+    levels : sequence of Levels, one a kind
+    weights : ndarray, shape (wetland, kind)
+
+    Returns
+    -------
+    Levels
+    """
+    if len(levels) == 1:
+        return levels[0]
+    w = weights.astype(np.float32)
+    mean, var, precision = np.zeros_like(levels[0].mean), np.zeros_like(levels[0].mean), np.zeros_like(levels[0].mean)
+    for k, one in enumerate(levels):
+        share = w[:, k : k + 1]
+        mean += share * one.mean
+        precision += share / one.info
+    for k, one in enumerate(levels):
+        var += w[:, k : k + 1] * (one.sd**2 + (one.mean - mean) ** 2)
+    with np.errstate(divide="ignore"):
+        info = 1 / precision
+    return Levels(mean, np.sqrt(var), info)
