@@ -1,0 +1,37 @@
+"""From logger readings to daily stage: files, clock, pressure and depth, quality, datum, drift and steps, days.
+
+``read_registry``, ``LoggerFiles`` (or ``read_readings``), ``read_barometer`` and ``read_checks`` open files; all else
+takes and returns tables. ``daily_stage`` makes the record of all loggers, ``build_record`` that of one,
+``wetland_daily`` one row a wetland and date; each change and each refused reading is in ``corrections`` and ``flagged``.
+"""
+
+from inundate.stage.daily import StageResult, daily_stage, wetland_daily
+from inundate.stage.options import FLAGS, QUALITIES, StageOptions
+from inundate.stage.readings import (
+    Barometer,
+    LoggerFiles,
+    Readings,
+    read_barometer,
+    read_checks,
+    read_readings,
+    read_registry,
+)
+from inundate.stage.record import LoggerRecord, build_record
+
+__all__ = [
+    "FLAGS",
+    "QUALITIES",
+    "Barometer",
+    "LoggerFiles",
+    "LoggerRecord",
+    "Readings",
+    "StageOptions",
+    "StageResult",
+    "build_record",
+    "daily_stage",
+    "read_barometer",
+    "read_checks",
+    "read_readings",
+    "read_registry",
+    "wetland_daily",
+]

@@ -1,0 +1,198 @@
+"""Daily stage of all loggers of an area."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass, field
+
+import numpy as np
+import pandas as pd
+
+from inundate.common.errors import InputError, Refusal
+from inundate.stage.days import CORRECTION_COLUMNS, DAILY_COLUMNS
+from inundate.stage.options import QUALITIES, StageOptions
+from inundate.stage.readings import Barometer, Readings
+from inundate.stage.record import (
+    LoggerRecord,
+    Prepared,
+    frost_days,
+    own_checks,
+    prepare_logger,
+    rain_series,
+    settle,
+)
+from inundate.stage.steps import Surroundings
+
+
+@dataclass(slots=True)
+class StageResult:
+    """Stage of all loggers.
+
+    Attributes
+    ----------
+    daily : DataFrame
+        wetland_id, logger_id, date, stage_m, stage_sd_m, stage_min_m, stage_max_m, n, quality, censored, period; one
+        row a logger and day with usable readings, sorted. ``censored``: the water stands at or below ``stage_m``.
+        ``period`` rises where a step could not be bridged.
+    corrections : DataFrame
+        logger_id, kind, start, end, value_m, sd_m, why: all that was changed or left out.
+    notes : list of str
+        What an analyst should know.
+    refused : list of Refusal
+        Loggers and checks set aside.
+    flagged : dict of str to DataFrame
+        By logger_id every reading: time, raw_value, depth_m, stage_m, flag (empty where ``keep_flagged`` is off).
+    """
+
+    daily: pd.DataFrame
+    corrections: pd.DataFrame
+    notes: list[str] = field(default_factory=list)
+    refused: list[Refusal] = field(default_factory=list)
+    flagged: dict[str, pd.DataFrame] = field(default_factory=dict)
+
+
+def daily_stage(
+    registry: pd.DataFrame,
+    readings: Mapping[str, Readings],
+    barometer: Barometer | None = None,
+    checks: pd.DataFrame | None = None,
+    latitudes: Mapping[str, float] | None = None,
+    options: StageOptions | None = None,
+    *,
+    weather: pd.DataFrame | None = None,
+) -> StageResult:
+    """Turn the readings of all loggers into daily stage with uncertainty, flags and corrections.
+
+    Parameters
+    ----------
+    registry : DataFrame
+        From ``read_registry``.
+    readings : mapping of logger_id to Readings
+        May read on demand (``LoggerFiles``); each logger is asked for once.
+    barometer : Barometer, optional
+        Needed by absolute loggers.
+    checks : DataFrame, optional
+        logger_id, time, stage_m [, sd_m, line].
+    latitudes : mapping of wetland_id to float
+        Degrees; of every wetland of the area.
+    options : StageOptions, optional
+    weather : DataFrame, optional
+        date, precipitation_mm [, air_temperature_c]; helps to tell rain and ice from faults.
+
+    Returns
+    -------
+    StageResult
+        A logger that can't be used is refused and the rest goes on.
+
+    Raises
+    ------
+    InputError
+        When latitudes are missing or no logger at all can be used.
+    """
+    options = options or StageOptions()
+    if latitudes is None:
+        message = "daily_stage: latitudes is None; give the latitude of every wetland, degrees"
+        raise InputError(message)
+    frost = frost_days(weather)
+    ready: dict[str, Prepared] = {}
+    refused: list[Refusal] = []
+    for logger_id, rows in registry.groupby("logger_id", sort=True):
+        try:
+            if logger_id not in readings:
+                message = f"logger {logger_id}: no readings; give its file in the registry"
+                raise InputError(message)
+            ready[str(logger_id)] = prepare_logger(
+                rows, readings[str(logger_id)], barometer, latitudes, options, frost=frost
+            )
+        except InputError as fault:
+            refused.append(Refusal("logger", str(logger_id), str(fault)))
+    if refused and not ready:
+        message = f"none of {len(refused)} loggers can be used; the first: {refused[0].reason}"
+        raise InputError(message)
+    around = Surroundings(rain_series(weather), {k: p.hours for k, p in ready.items()})
+    made: dict[str, LoggerRecord] = {}
+    for logger_id in list(ready):
+        try:
+            made[logger_id] = settle(ready[logger_id], own_checks(checks, logger_id), around, options)
+        except InputError as fault:
+            refused.append(Refusal("logger", logger_id, str(fault)))
+    return _gather(made, refused, _shared_clock(ready))
+
+
+def _shared_clock(ready: dict[str, Prepared]) -> list[str]:
+    absolute = [p for p in ready.values() if any(s.row["kind"] == "absolute" for s in p.spans)]
+    off = [p for p in absolute if any(s.clock for s in p.spans)]
+    hours = {s.clock[0].hours for p in off for s in p.spans if s.clock}
+    if len(absolute) >= 2 and len(off) == len(absolute) and len(hours) == 1:
+        only = hours.pop()
+        return [f"all {len(off)} absolute loggers seem {-only:+d} h off the barometer: likelier its clock is wrong"]
+    return []
+
+
+def _gather(made: dict[str, LoggerRecord], refused: list[Refusal], notes: list[str]) -> StageResult:
+    daily = [r.daily for r in made.values()]
+    rows = [r.corrections for r in made.values() if len(r.corrections)]
+    table = pd.concat(daily, ignore_index=True) if daily else pd.DataFrame(columns=list(DAILY_COLUMNS))
+    changed = pd.concat(rows, ignore_index=True) if rows else pd.DataFrame(columns=list(CORRECTION_COLUMNS))
+    return StageResult(
+        table.sort_values(["wetland_id", "date", "logger_id"], ignore_index=True),
+        changed.sort_values(["logger_id", "start", "kind"], kind="stable", ignore_index=True),
+        notes + [n for r in made.values() for n in r.notes],
+        refused + [f for r in made.values() for f in r.refused],
+        {k: r.flagged for k, r in made.items() if r.flagged is not None},
+    )
+
+
+def wetland_daily(result: StageResult | pd.DataFrame) -> pd.DataFrame:
+    """Make one row a wetland and date from several loggers.
+
+    Where two loggers give a level, they are weighed by their variances, and the standard deviation is that of the
+    better one or half their disagreement, whichever is more (their errors may be shared). A logger that is dry gives
+    way to one that is not; where all are dry the lowest sensor speaks.
+
+    Parameters
+    ----------
+    result : StageResult or DataFrame
+        Or its ``daily`` table.
+
+    Returns
+    -------
+    DataFrame
+        wetland_id, logger_id (joined by ``+``), date, stage_m, stage_sd_m, stage_min_m, stage_max_m, n, quality (the
+        worst), censored, period (numbered anew in each wetland, by first day), sorted by wetland_id and date.
+    """
+    daily = result.daily if isinstance(result, StageResult) else result
+    key = ["wetland_id", "date"]
+    alone = ~daily.duplicated(key, keep=False)
+    shared = [_merge(group) for _, group in daily[~alone].groupby(key, sort=False)]
+    single = daily[alone].copy()
+    single["_part"] = single["logger_id"] + "#" + single["period"].astype(str)
+    out = pd.concat([single, pd.DataFrame(shared, columns=single.columns)], ignore_index=True) if shared else single
+    out = out.sort_values(key, ignore_index=True).astype({c: daily[c].dtype for c in daily.columns})
+    for _, rows in out.groupby("wetland_id", sort=False):
+        names = {name: i + 1 for i, name in enumerate(dict.fromkeys(rows["_part"]))}
+        out.loc[rows.index, "period"] = rows["_part"].map(names)
+    return out.drop(columns="_part")
+
+
+def _merge(group: pd.DataFrame) -> dict:
+    wet = group[~group["censored"]]
+    if wet.empty:
+        low = group.iloc[int(group["stage_m"].argmin())]
+        return {**low.to_dict(), "_part": f"{low['logger_id']}#{low['period']}"}
+    weight = 1.0 / wet["stage_sd_m"].to_numpy() ** 2
+    weight /= weight.sum()
+    stage = wet["stage_m"].to_numpy()
+    worst = max(wet["quality"], key=QUALITIES.index)
+    out = wet.iloc[0].to_dict()
+    out.update(
+        logger_id="+".join(wet["logger_id"]),
+        stage_m=float(weight @ stage),
+        stage_sd_m=float(max(wet["stage_sd_m"].min(), np.ptp(stage) / 2)),
+        stage_min_m=float(weight @ wet["stage_min_m"]),
+        stage_max_m=float(weight @ wet["stage_max_m"]),
+        n=int(wet["n"].sum()),
+        quality=worst,
+        _part="+".join(f"{a}#{b}" for a, b in zip(wet["logger_id"], wet["period"], strict=True)),
+    )
+    return out

@@ -1,0 +1,331 @@
+"""One logger's record: its spans set on the wetland's datum, dry times found, corrections listed, days made."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass, field
+
+import numpy as np
+import pandas as pd
+
+from inundate.common.errors import InputError, Refusal
+from inundate.stage.datum import Evidence, Offset, Step, choose_steps, doubtful_checks, fit_offset
+from inundate.stage.days import Settled, correction_rows, daily_rows, flagged_frame
+from inundate.stage.dry import Dryness, find_dry
+from inundate.stage.options import StageOptions
+from inundate.stage.prepare import Span, prepare_span
+from inundate.stage.readings import Barometer, Readings
+from inundate.stage.signals import HOUR_NS, Hours, interpolate, stamp
+from inundate.stage.steps import Surroundings, hidden_candidates, jump_candidates
+
+
+@dataclass(slots=True)
+class LoggerRecord:
+    """One logger's result.
+
+    Attributes
+    ----------
+    daily, corrections : DataFrame
+        Rows of ``StageResult.daily`` and ``StageResult.corrections``.
+    flagged : DataFrame or None
+        Every reading: time, raw_value, depth_m, stage_m, flag.
+    notes : list of str
+    refused : list of Refusal
+    """
+
+    daily: pd.DataFrame
+    corrections: pd.DataFrame
+    flagged: pd.DataFrame | None
+    notes: list[str] = field(default_factory=list)
+    refused: list[Refusal] = field(default_factory=list)
+
+
+@dataclass(slots=True)
+class Prepared:
+    """One logger's spans, joined by hours, before it is set on its datum.
+
+    Attributes
+    ----------
+    logger_id : str
+    spans : list of Span
+    hours : Hours
+        Depth above the sensor by hours, all spans one after another.
+    span : ndarray of int64, shape (hour,)
+        Position of each hour's span.
+    height_m : ndarray of float64, shape (hour,)
+    """
+
+    logger_id: str
+    spans: list[Span]
+    hours: Hours
+    span: np.ndarray
+    height_m: np.ndarray
+
+
+def prepare_logger(
+    rows: pd.DataFrame,
+    readings: Readings,
+    barometer: Barometer | None,
+    latitudes: Mapping[str, float],
+    options: StageOptions,
+    *,
+    frost: np.ndarray | None = None,
+) -> Prepared:
+    """Prepare every registry row of one logger and join them.
+
+    Parameters
+    ----------
+    rows : DataFrame
+        The logger's rows of the registry, sorted by valid_from.
+    readings : Readings
+    barometer : Barometer or None
+    latitudes : mapping of wetland_id to degrees
+    options : StageOptions
+    frost : ndarray of int64, optional
+
+    Returns
+    -------
+    Prepared
+
+    Raises
+    ------
+    InputError
+        See ``prepare.prepare_span``; also where a wetland's latitude is not given.
+    """
+    spans = []
+    for row in rows.to_dict("records"):
+        if row["wetland_id"] not in latitudes:
+            message = (
+                f"logger {row['logger_id']}: its wetland {row['wetland_id']!r} is not among the wetlands; "
+                "correct wetland_id in the registry"
+            )
+            raise InputError(message)
+        spans.append(prepare_span(row, readings, barometer, latitudes[row["wetland_id"]], options, frost=frost))
+        if not options.keep_flagged:
+            spans[-1].raw = spans[-1].depth = np.empty(0)
+    parts = [s.hours for s in spans]
+    hours = Hours(
+        *(np.concatenate([getattr(p, k) for p in parts]) for k in ("hour", "time", "n", "mean", "low", "high"))
+    )
+    size = [p.hour.size for p in parts]
+    height = np.repeat([float(s.row["height_m"]) for s in spans], size)
+    return Prepared(str(rows["logger_id"].iloc[0]), spans, hours, np.repeat(np.arange(len(spans)), size), height)
+
+
+def _sd(row: Mapping, name: str, default: float) -> float:
+    value = row.get(name, np.nan)
+    return default if value is None or pd.isna(value) else float(value)
+
+
+def _gather_checks(made: Prepared, checks: pd.DataFrame, options: StageOptions) -> tuple[pd.DataFrame, list[Refusal]]:
+    """Match checks with the record: add raw stage, depth and span; refuse what lies outside it."""
+    time = checks["time"].to_numpy("datetime64[ns]").view(np.int64)
+    usual = int(np.median(np.diff(made.hours.time[:5000]))) if made.hours.time.size > 2 else HOUR_NS
+    reach = max(int(options.check_reach_h * HOUR_NS), int(1.5 * usual))
+    order = np.argsort(time, kind="stable")
+    checks, time = checks.iloc[order].reset_index(drop=True), time[order]
+    depth = interpolate(time, made.hours.time, made.hours.mean, 2 * reach)
+    near = np.clip(np.searchsorted(made.hours.time, time), 0, max(made.hours.time.size - 1, 0))
+    edge = np.abs(made.hours.time[near] - time) <= HOUR_NS
+    depth = np.where(np.isnan(depth) & edge, made.hours.mean[near], depth)
+    out = checks.assign(depth_m=depth, raw_m=depth + made.height_m[near], span=made.span[near], ns=time)
+    refused = []
+    first, last = (stamp(t) for t in made.hours.time[[0, -1]])
+    for row in out[out["depth_m"].isna()].to_dict("records"):
+        line = row.get("line", "")
+        where = "in a hole of" if first <= str(row["time"])[:16].replace(" ", "T") <= last else "outside"
+        refused.append(
+            Refusal(
+                "check",
+                str(line),
+                f"field check{f' at line {line}' if line else ''} of logger {made.logger_id} at {row['time']}: it lies "
+                f"{where} the logger's usable record ({first} to {last}), so it can't be compared; correct its time or "
+                "leave it",
+            )
+        )
+    return out[out["depth_m"].notna()].reset_index(drop=True), refused
+
+
+def _evidence(
+    made: Prepared, checks: pd.DataFrame, dryness: Dryness, options: StageOptions
+) -> tuple[Evidence, np.ndarray]:
+    """Offsets told by checks on wet times and by the zero of dry spells; and which checks (positions) were used."""
+    time = checks["ns"].to_numpy(np.int64)
+    near = np.clip(np.searchsorted(made.hours.time, time), 0, made.hours.time.size - 1)
+    dry = dryness.dry[near] | dryness.dry[np.maximum(near - 1, 0)]
+    used = np.flatnonzero(~dry)
+    sd = checks["sd_m"].fillna(options.check_sd_m).to_numpy(float)
+    sd = np.hypot(sd, dryness.spread_m)
+    spells = dryness.spells
+    row = made.spans[0].row
+    zero_at = np.array([(a + b) // 2 for a, b, _, _ in spells], np.int64)
+    zero_span = made.span[np.clip(np.searchsorted(made.hours.time, zero_at), 0, made.span.size - 1)]
+    return Evidence(
+        np.r_[time[used], zero_at],
+        np.r_[(checks["stage_m"] - checks["raw_m"]).to_numpy(float)[used], [-z for *_, z, _ in spells]],
+        np.r_[sd[used], [max(s, 0.002) for *_, s in spells]],
+        np.r_[np.zeros(used.size, bool), np.ones(len(spells), bool)],
+        np.r_[checks["span"].to_numpy(np.int64)[used], zero_span],
+        int(made.hours.time[0]),
+        tuple(_sd(s.row, "height_sd_m", options.height_sd_m) for s in made.spans),
+        _sd(row, "sensor_sd_m", options.sensor_sd_m),
+    ), used
+
+
+def _dry_by(offset: Offset, made: Prepared, noise: float) -> Dryness:
+    zero, sd = offset.at(made.hours.time, made.span, part="zero")
+    return find_dry(made.hours, -zero, sd, noise)
+
+
+def settle(made: Prepared, checks: pd.DataFrame, around: Surroundings, options: StageOptions) -> LoggerRecord:
+    """Set a prepared logger on its datum and make its days.
+
+    Parameters
+    ----------
+    made : Prepared
+    checks : DataFrame
+        The logger's checks: time, stage_m, sd_m (NaN where not told) and optionally line.
+    around : Surroundings
+        Rain and the other loggers.
+    options : StageOptions
+
+    Returns
+    -------
+    LoggerRecord
+    """
+    if not made.hours.time.size:
+        message = f"logger {made.logger_id}: no usable reading is left after quality control; look at its file"
+        raise InputError(message)
+    noise = max(s.noise for s in made.spans)
+    matched, refused = _gather_checks(made, checks, options)
+    empty = _evidence(
+        made, matched.iloc[:0], Dryness(np.zeros(made.span.size, bool), made.height_m, noise, []), options
+    )
+    dryness = _dry_by(fit_offset(empty[0]), made, noise)
+    offset, doubtful = None, np.empty(0, int)
+    for _ in range(2):
+        evidence, used = _evidence(made, matched, dryness, options)
+        candidates = _candidates(made, matched, dryness, around, options)
+        offset = choose_steps(evidence, candidates)
+        doubtful = doubtful_checks(evidence, offset.steps)
+        if doubtful.size:
+            evidence = evidence.take(np.delete(np.arange(evidence.time.size), doubtful))
+            offset = choose_steps(evidence, candidates)
+        dryness = _dry_by(offset, made, noise)
+    assert_offset = offset if offset is not None else fit_offset(empty[0])
+    for i in doubtful:
+        refused.append(_doubt(made.logger_id, matched.iloc[used[i]]))
+    settled = Settled(made.logger_id, made.spans, made.hours, made.span, made.height_m, assert_offset, dryness, noise)
+    notes = [n for s in made.spans for n in s.notes]
+    notes += _step_notes(settled, candidates)
+    return LoggerRecord(
+        daily_rows(settled),
+        correction_rows(settled),
+        flagged_frame(settled) if options.keep_flagged else None,
+        notes,
+        refused,
+    )
+
+
+def _candidates(
+    made: Prepared, checks: pd.DataFrame, dryness: Dryness, around: Surroundings, options: StageOptions
+) -> list[Step]:
+    noise = max(s.noise for s in made.spans)
+    jumps = jump_candidates(made.logger_id, made.hours, ~dryness.dry, noise, options.least_step_m, around)
+    edges = {int(made.hours.time[i]) for i in np.flatnonzero(np.diff(made.span)) + 1}
+    jumps = [j for j in jumps if j.time not in edges]
+    return jumps + hidden_candidates(made.hours, dryness.dry, checks["ns"].to_numpy(np.int64))
+
+
+def _doubt(logger_id: str, row: pd.Series) -> Refusal:
+    return Refusal(
+        "check",
+        str(row.get("line", "")),
+        f"field check of logger {logger_id} at {row['time']}: {row['stage_m']:.3f} m is "
+        f"{(row['stage_m'] - row['raw_m']) * 100:+.1f} cm off the raw record and contradicted by the checks about it; "
+        "it is not used; look at the field notes",
+    )
+
+
+def _step_notes(settled: Settled, candidates: list[Step]) -> list[str]:
+    out = []
+    for step, (size, sd) in zip(settled.offset.steps, settled.offset.sizes(), strict=True):
+        out.append(
+            f"logger {settled.logger_id}: the record steps by {-size * 100:+.1f} cm (sd {sd * 100:.1f}) at "
+            f"{stamp(step.time)} ({step.why}); taken as a moved sensor"
+        )
+    taken = {s.time for s in settled.offset.steps}
+    for step in candidates:
+        if step.log_odds > 0 and step.time not in taken:
+            out.append(
+                f"logger {settled.logger_id}: the record changes by {step.size_m * 100:+.1f} cm at "
+                f"{stamp(step.time)} ({step.why}), but the checks speak against a moved sensor; "
+                "left as it is"
+            )
+    return out
+
+
+def build_record(
+    rows: pd.DataFrame,
+    readings: Readings,
+    barometer: Barometer | None,
+    checks: pd.DataFrame | None,
+    latitude_deg: float,
+    *,
+    options: StageOptions | None = None,
+    weather: pd.DataFrame | None = None,
+) -> LoggerRecord:
+    """Make one logger's record by itself (no other loggers to compare with).
+
+    Parameters
+    ----------
+    rows : DataFrame
+        The logger's rows of the registry.
+    readings : Readings
+    barometer : Barometer or None
+    checks : DataFrame or None
+        All or the logger's own checks.
+    latitude_deg : float
+    options : StageOptions, optional
+    weather : DataFrame, optional
+        date, precipitation_mm [, air_temperature_c].
+
+    Returns
+    -------
+    LoggerRecord
+
+    Raises
+    ------
+    InputError
+        See :func:`prepare_logger`.
+    """
+    options = options or StageOptions()
+    latitudes = dict.fromkeys(rows["wetland_id"], latitude_deg)
+    made = prepare_logger(rows, readings, barometer, latitudes, options, frost=frost_days(weather))
+    return settle(made, own_checks(checks, made.logger_id), Surroundings(rain_series(weather), {}), options)
+
+
+def own_checks(checks: pd.DataFrame | None, logger_id: str) -> pd.DataFrame:
+    """Return one logger's checks with all columns, also where there are none."""
+    if checks is None:
+        checks = pd.DataFrame(columns=["logger_id", "time", "stage_m"])
+    out = checks[checks["logger_id"] == logger_id].copy()
+    if "sd_m" not in out:
+        out["sd_m"] = np.nan
+    return out.astype({"time": "datetime64[ns]", "stage_m": float, "sd_m": float})
+
+
+def rain_series(weather: pd.DataFrame | None) -> pd.Series | None:
+    """Return daily rain by date, or None."""
+    if weather is None or "precipitation_mm" not in weather:
+        return None
+    return pd.Series(weather["precipitation_mm"].to_numpy(float), pd.DatetimeIndex(weather["date"]))
+
+
+def frost_days(weather: pd.DataFrame | None) -> np.ndarray | None:
+    """Return days (since 1970) which with the two before had a mean air temperature under -2, or None."""
+    if weather is None or "air_temperature_c" not in weather:
+        return None
+    table = pd.Series(weather["air_temperature_c"].to_numpy(float), pd.DatetimeIndex(weather["date"])).sort_index()
+    cold = (table < -2).astype(int).rolling(3).sum() == 3
+    return table.index[cold].to_numpy("datetime64[D]").astype(np.int64)

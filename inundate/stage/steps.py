@@ -1,0 +1,166 @@
+"""Sudden changes of level that may be a moved sensor, and what speaks for or against it."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from itertools import pairwise
+
+import numba
+import numpy as np
+import pandas as pd
+
+from inundate.stage.datum import Step
+from inundate.stage.signals import DAY_NS, HOUR_NS, Hours, spread
+
+_SIDE = 6
+_REACH_NS = 12 * HOUR_NS
+
+
+@numba.njit(cache=True, nogil=True)
+def _sides(time: np.ndarray, x: np.ndarray, at: np.ndarray, side: int, reach: int) -> tuple[np.ndarray, np.ndarray]:
+    """Medians of up to ``side`` values before and after the step between at and at + 1."""
+    before, after = np.empty(at.size), np.empty(at.size)
+    for k in range(at.size):
+        i = at[k]
+        lo = i
+        while lo > 0 and i - lo < side - 1 and time[i] - time[lo - 1] <= reach:
+            lo -= 1
+        hi = i + 1
+        while hi + 1 < x.size and hi - i < side and time[hi + 1] - time[i + 1] <= reach:
+            hi += 1
+        before[k] = np.median(x[lo : i + 1])
+        after[k] = np.median(x[i + 1 : hi + 1])
+    return before, after
+
+
+@dataclass(slots=True)
+class Surroundings:
+    """What the neighbourhood says of a change at a time.
+
+    Attributes
+    ----------
+    rain : Series of float, or None
+        Daily precipitation, mm, indexed by date.
+    changes : dict of str to (hour, change) arrays
+        Change of level over the hour (m), by logger: from other loggers.
+    """
+
+    rain: pd.Series | None
+    changes: dict[str, Hours]
+
+    def others(self, logger_id: str, time: int) -> np.ndarray:
+        """Return changes (m) of the other loggers' level over three hours about a time."""
+        out = []
+        hour = time // HOUR_NS
+        for name, hours in self.changes.items():
+            if name == logger_id:
+                continue
+            i = np.searchsorted(hours.hour, [hour - 2, hour + 1])
+            if i[1] < hours.hour.size and i[1] > i[0] and hours.hour[i[1]] - hours.hour[i[0]] <= 6:
+                out.append(hours.mean[i[1]] - hours.mean[i[0]])
+        return np.array(out)
+
+    def rain_mm(self, time: int) -> float:
+        """Return rain (mm) of the day and the day before; NaN where not known."""
+        if self.rain is None or self.rain.empty:
+            return float("nan")
+        day = pd.Timestamp(time // DAY_NS * DAY_NS)
+        known = self.rain.reindex([day - pd.Timedelta(days=1), day])
+        return float(known.sum()) if known.notna().any() else float("nan")
+
+
+def jump_candidates(
+    logger_id: str, hours: Hours, wet: np.ndarray, noise: float, least: float, around: Surroundings
+) -> list[Step]:
+    """List sudden changes between neighbouring hours, with odds by rain and by what other loggers did.
+
+    Parameters
+    ----------
+    logger_id : str
+    hours : Hours
+        Depth by hours.
+    wet : ndarray of bool, shape (hour,)
+        False where the sensor is dry: a change there is water coming or going.
+    noise : float
+        sd of a reading, m.
+    least : float
+        Smallest change listed, m.
+    around : Surroundings
+
+    Returns
+    -------
+    list of Step
+        Largest by significance first, at most 16.
+    """
+    x, time = hours.mean, hours.time
+    if x.size < 2 * _SIDE:
+        return []
+    change = np.diff(x)
+    close = np.diff(time) <= _REACH_NS
+    usual = max(spread(change[close]), noise)
+    limit = max(least, 6.0 * usual)
+    at = np.flatnonzero((np.abs(change) >= 0.6 * limit) & close & wet[1:] & wet[:-1])
+    if not at.size:
+        return []
+    before, after = _sides(time, x, at, _SIDE, _REACH_NS)
+    size = after - before
+    sharp = (np.abs(size) >= limit) & (np.abs(change[at]) >= 0.6 * np.abs(size)) & (change[at] * size > 0)
+    out: list[Step] = []
+    order = sorted(np.flatnonzero(sharp), key=lambda k: -abs(size[k]))
+    for k in order:
+        moment = int(time[at[k] + 1])
+        if all(abs(s.time - moment) > _REACH_NS for s in out):
+            odds, why = _odds(logger_id, moment, float(size[k]), around)
+            sd = float(np.hypot(usual * np.sqrt(2.0), 0.003))
+            out.append(Step(moment, float(size[k]), sd, odds, "jump", why))
+        if len(out) >= 16:
+            break
+    return out
+
+
+def _odds(logger_id: str, time: int, size: float, around: Surroundings) -> tuple[float, str]:
+    """Log odds that a sudden change is a moved sensor. Common practice, no source: rain and company excuse a rise."""
+    others, rain = around.others(logger_id, time), around.rain_mm(time)
+    same = others * np.sign(size)
+    company = others.size > 0 and np.median(same) > max(0.25 * abs(size), 0.004)
+    if company:
+        return -7.0, f"{others.size} other loggers change alike (median {np.median(others) * 100:+.1f} cm)"
+    quiet = others.size >= 2 and bool((np.abs(others) < 0.25 * abs(size)).mean() > 0.7)
+    calm = f"{others.size} other loggers stay" if quiet else "no other logger to compare"
+    if size < 0:
+        return (4.0 if quiet else 2.0), f"a sudden fall that draining can't give; {calm}"
+    if np.isfinite(rain):
+        if rain < 0.5:
+            return (4.0 if quiet else 2.0), f"a sudden rise without rain ({rain:.1f} mm in two days); {calm}"
+        if size > 0.02 * rain:
+            return (1.0 if quiet else -2.0), f"a sudden rise of over 20 times the rain ({rain:.1f} mm); {calm}"
+        return (-3.0 if quiet else -5.0), f"a sudden rise with rain ({rain:.1f} mm); {calm}"
+    return (1.0 if quiet else -2.0), f"a sudden rise, rain not known; {calm}"
+
+
+def hidden_candidates(hours: Hours, dry: np.ndarray, checks: np.ndarray) -> list[Step]:
+    """List places where a step could hide from the record: holes over half a day, dry spells, and between checks.
+
+    Parameters
+    ----------
+    hours : Hours
+    dry : ndarray of bool, shape (hour,)
+    checks : ndarray of int64
+        Times of checks, ns, sorted.
+
+    Returns
+    -------
+    list of Step
+        Size 0 with a wide sd (15 cm): checks alone must size it.
+    """
+    out: list[Step] = []
+    hole = np.flatnonzero(np.diff(hours.time) > _REACH_NS)
+    for i in sorted(hole, key=lambda i: hours.time[i] - hours.time[i + 1])[:10]:
+        out.append(Step(int(hours.time[i + 1]), 0.0, 0.15, -5.0, "gap", "in a hole of the record"))
+    edge = np.flatnonzero(np.diff(np.r_[0, dry.astype(np.int8), 0]))
+    for a, b in list(zip(edge[::2], edge[1::2], strict=True))[:10]:
+        middle = (hours.time[a] + hours.time[b - 1]) // 2
+        out.append(Step(int(middle), 0.0, 0.15, -6.0, "dry", "while the sensor was dry"))
+    for a, b in pairwise(checks[1:-1].tolist()):
+        out.append(Step(int((a + b) // 2), 0.0, 0.15, -7.0, "checks", "between two checks"))
+    return out
