@@ -7,20 +7,24 @@ catalog turns a STAC catalog or a table into scenes, ``read_view`` gives blocks 
 from inundate.scenes.areas import area_grid, context_windows
 from inundate.scenes.catalog import Catalog, open_catalog, scene_times
 from inundate.scenes.elevation import read_elevation
+from inundate.scenes.looks import ShiftOptions
 from inundate.scenes.masks import MaskRule, MaskRules
+from inundate.scenes.normalise import Gain, apply_gain
 from inundate.scenes.reading import read_view
-from inundate.scenes.reference import NO_SHIFT, Reference, Shift, ShiftOptions
+from inundate.scenes.reference import CHANNELS, NO_SHIFT, Reference, Shift
 from inundate.scenes.scene import BandSource, MaskSource, Scene, SceneError, fingerprint
 from inundate.scenes.sensors import SHIPPED_PROFILES, SensorProfile, load_profile
 from inundate.scenes.shifting import apply_shift
 from inundate.scenes.view import Block, SiteGather, View
 
 __all__ = [
+    "CHANNELS",
     "NO_SHIFT",
     "SHIPPED_PROFILES",
     "BandSource",
     "Block",
     "Catalog",
+    "Gain",
     "MaskRule",
     "MaskRules",
     "MaskSource",
@@ -32,6 +36,7 @@ __all__ = [
     "ShiftOptions",
     "SiteGather",
     "View",
+    "apply_gain",
     "apply_shift",
     "area_grid",
     "context_windows",

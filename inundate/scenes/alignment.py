@@ -17,8 +17,8 @@ from numba import njit
 
 _BISQUARE = 4.685  # 95 % efficiency under normal errors (Holland and Welsch 1977)
 _MAD_TO_SD = 1.4826
-_ITERATIONS = 12
-_CONVERGED_PX = 2e-3
+_ITERATIONS = 8
+_CONVERGED_PX = 3e-3
 _MIN_POINTS = 24
 
 
@@ -48,6 +48,24 @@ class Points:
     weight: np.ndarray
     start: np.ndarray
     cell: np.ndarray
+
+    def coarse(self, every: int = 3) -> Points:
+        """Return every so many points of each group."""
+        group = np.repeat(np.arange(self.start.size - 1), np.diff(self.start))
+        keep = (np.arange(group.size) - self.start[group]) % every == 0
+        start = np.concatenate([[0], np.cumsum(np.bincount(group[keep], minlength=self.start.size - 1))])
+        return Points(
+            self.window[keep],
+            self.channel[keep],
+            self.row[keep],
+            self.col[keep],
+            self.value[keep],
+            self.along_col[keep],
+            self.along_row[keep],
+            self.weight[keep],
+            start.astype(np.int64),
+            self.cell,
+        )
 
 
 @dataclass(frozen=True, slots=True)
@@ -222,8 +240,18 @@ def _reweight(seen, value, gain, offset, start, robust):  # type: ignore[no-unty
     return scale
 
 
-def align(points: Points, stack: np.ndarray, *, reach: int) -> Alignment | None:
-    """Find the shift of a view against a reference.
+@dataclass(frozen=True, slots=True)
+class Start:
+    """Best whole-pixel shift, the share of variance that it explains, and whether it lies at the end of the search."""
+
+    dx: int
+    dy: int
+    explained: float
+    at_border: bool
+
+
+def search(points: Points, stack: np.ndarray, *, reach: int) -> Start:
+    """Search the whole-pixel shift that explains most; a third of the points serves.
 
     Parameters
     ----------
@@ -231,23 +259,21 @@ def align(points: Points, stack: np.ndarray, *, reach: int) -> Alignment | None:
     stack : ndarray of float32, shape (window, channel, row, column)
         The view's structure image, NaN where not clear.
     reach : int
-        Whole pixels to search on each side.
-
-    Returns
-    -------
-    Alignment or None
-        The view shows at ``(row + dy, col + dx)`` what the reference shows at ``(row, col)``. None where too little is seen.
+        Pixels to search on each side.
     """
-    best, where = -1.0, (0, 0)
+    few = points.coarse()
+    best, where = 0.0, (0, 0)
     for dy in range(-reach, reach + 1):
         for dx in range(-reach, reach + 1):
-            seen = _at(points, stack, float(dy), float(dx))
-            share = _explained(seen, points.value, points.weight, points.start)
+            share = _explained(_at(few, stack, float(dy), float(dx)), few.value, few.weight, few.start)
             if share > best:
                 best, where = share, (dy, dx)
-    if best <= 0.0:
-        return None
-    return _refine(points, stack, where, max(abs(where[0]), abs(where[1])) == reach)
+    return Start(where[1], where[0], float(best), max(abs(where[0]), abs(where[1])) == reach)
+
+
+def align(points: Points, stack: np.ndarray, *, reach: int) -> Alignment | None:
+    """Find the shift of a view against a reference: :func:`search`, then :func:`refine`."""
+    return refine(points, stack, search(points, stack, reach=reach))
 
 
 def _at(points: Points, stack: np.ndarray, dy: float, dx: float) -> np.ndarray:
@@ -255,8 +281,17 @@ def _at(points: Points, stack: np.ndarray, dy: float, dx: float) -> np.ndarray:
     return seen
 
 
-def _refine(points: Points, stack: np.ndarray, where: tuple[int, int], at_border: bool) -> Alignment | None:
-    dy, dx = float(where[0]), float(where[1])
+def refine(points: Points, stack: np.ndarray, begin: Start) -> Alignment | None:
+    """Refine a whole-pixel shift to a small part of a pixel.
+
+    Returns
+    -------
+    Alignment or None
+        The view shows at ``(row + dy, col + dx)`` what the reference shows at ``(row, col)``. None where too little is seen.
+    """
+    if begin.explained <= 0.0:
+        return None
+    dy, dx = float(begin.dy), float(begin.dx)
     robust = np.ones(points.value.size)
     cells = np.zeros((int(points.cell.max()) + 1, 5))
     for _ in range(_ITERATIONS):
@@ -287,8 +322,8 @@ def _refine(points: Points, stack: np.ndarray, where: tuple[int, int], at_border
             break
     explained = _explained(_at(points, stack, dy, dx), points.value, points.weight, points.start)
     live = cells[:, 0] + cells[:, 2] > 0.0
-    strayed = max(abs(dy - where[0]), abs(dx - where[1])) > 1.0
-    return Alignment(dx, dy, _jackknife(cells[live]), int(live.sum()), float(explained), at_border or strayed)
+    strayed = max(abs(dy - begin.dy), abs(dx - begin.dx)) > 1.5
+    return Alignment(dx, dy, _jackknife(cells[live]), int(live.sum()), float(explained), begin.at_border or strayed)
 
 
 def _step(total: np.ndarray) -> np.ndarray | None:

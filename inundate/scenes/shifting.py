@@ -54,7 +54,7 @@ def _shift_block(values, code, dy, dx, out, out_code):  # type: ignore[no-untype
                 out[band, i, j] = np.float32(total / weight) if weight > 0.5 else np.nan
 
 
-def apply_shift(view: View, shift: Shift) -> View:
+def apply_shift(view: View, shift: Shift, *, force: bool = False) -> View:
     """Bring a view to the reference's place.
 
     Reflectance by cubic convolution (Keys 1981, IEEE Trans. Acoust. 29:1153, a = -0.5): at half a pixel it keeps 98 % of
@@ -66,12 +66,17 @@ def apply_shift(view: View, shift: Shift) -> View:
     ----------
     view : View
     shift : Shift
-        Applied as it stands, whether confident or not; whole-pixel shifts copy values.
+        Applied where confident; whole-pixel shifts copy values.
+    force : bool
+        Apply it even where not confident.
 
     Returns
     -------
     View
+        The same view where nothing is applied.
     """
+    if not (shift.confident or force):
+        return view
     blocks = []
     for block in view.blocks:
         values, code = np.empty_like(block.reflectance), np.empty_like(block.code)
