@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import itertools
 import re
 from dataclasses import dataclass
 
@@ -43,7 +44,7 @@ def check_fixed(fixed: dict[str, str] | None, offset_days: int) -> dict[str, flo
             raise InputError(message)
         out[key] = float(season_time(np.array([date.to_datetime64()]), offset_days)[1][0])
     given = [(k, out[k]) for k in FIXED_KEYS if k in out]
-    for (one, a), (two, b) in zip(given[:-1], given[1:], strict=True):
+    for (one, a), (two, b) in itertools.pairwise(given):
         if a >= b:
             message = f"fixed leaf dates: {one} = {fixed[one]} is not before {two} = {fixed[two]}"  # type: ignore[index]
             raise InputError(message + "; order them green_up, leaf_on, leaf_fall, leaf_off")

@@ -17,6 +17,7 @@ from inundate.pixels.examples import (
     starter_examples,
 )
 from inundate.pixels.features import FEATURES, features
+from inundate.pixels.forest import FastForest, ForestFallbackWarning, JointForest
 from inundate.pixels.fraction import FractionModel
 from inundate.pixels.mixing import MixOptions, mix_examples
 from inundate.pixels.training import PixelModels, train_models
@@ -24,7 +25,10 @@ from inundate.pixels.training import PixelModels, train_models
 __all__ = [
     "FEATURES",
     "ExampleSet",
+    "FastForest",
+    "ForestFallbackWarning",
     "FractionModel",
+    "JointForest",
     "MixOptions",
     "PixelModels",
     "ViewState",

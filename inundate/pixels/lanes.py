@@ -1,0 +1,59 @@
+"""Sixty-four rows at once: one compare-and-choose step, written so that the compiler uses whole vector registers.
+
+The step is generic LLVM code: it is right on every processor, and quick where one register (or two, or four) holds 64
+bytes.
+"""
+
+from __future__ import annotations
+
+from typing import Any
+
+from llvmlite import ir
+from numba.core import types
+from numba.extending import intrinsic
+
+LANES = 64
+"""Rows handled by one step."""
+
+_BYTE = ir.IntType(8)
+_BYTES = ir.VectorType(_BYTE, LANES)
+_INT = ir.IntType(32)
+
+
+def _splat(builder: ir.IRBuilder, value: ir.Value, vector: ir.VectorType) -> ir.Value:
+    empty = ir.Constant(vector, ir.Undefined)
+    one = builder.insert_element(empty, value, ir.Constant(_INT, 0))
+    return builder.shuffle_vector(one, empty, ir.Constant(ir.VectorType(_INT, LANES), [0] * LANES))
+
+
+def _pointer(builder: ir.IRBuilder, data: ir.Value, offset: ir.Value, vector: ir.VectorType) -> ir.Value:
+    return builder.bitcast(builder.gep(data, [offset]), vector.as_pointer())
+
+
+@intrinsic  # type: ignore[untyped-decorator]
+def choose(  # type: ignore[no-untyped-def]
+    _typing, codes, code_at, threshold, bytes_, left_at, right_at, out_at  # noqa: ARG001
+):
+    """``bytes_[out_at + r] = bytes_[(right_at if codes[code_at + r] > threshold else left_at) + r]`` for 64 ``r``.
+
+    ``codes`` is a contiguous array of uint8 or uint16, ``threshold`` of the same type; ``bytes_`` is contiguous uint8.
+    Offsets are uint64 elements. Nothing is checked: offsets must lie inside.
+    """
+    number = codes.dtype
+    signature = types.void(codes, types.uint64, number, bytes_, types.uint64, types.uint64, types.uint64)
+    lanes = ir.VectorType(ir.IntType(number.bitwidth), LANES)
+
+    def generate(context: Any, builder: Any, sig: Any, args: Any) -> Any:
+        codes_, code_at_, threshold_, bytes__, left_, right_, out_ = args
+        from_codes = context.make_array(sig.args[0])(context, builder, codes_).data
+        data = context.make_array(sig.args[3])(context, builder, bytes__).data
+        load = [
+            builder.load(_pointer(builder, base, at, kind), align=1)
+            for base, at, kind in ((from_codes, code_at_, lanes), (data, left_, _BYTES), (data, right_, _BYTES))
+        ]
+        above = builder.icmp_unsigned(">", load[0], _splat(builder, threshold_, lanes))
+        chosen = builder.select(above, load[2], load[1])
+        builder.store(chosen, _pointer(builder, data, out_, _BYTES), align=1)
+        return context.get_dummy_value()
+
+    return signature, generate
