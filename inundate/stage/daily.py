@@ -9,17 +9,20 @@ import numpy as np
 import pandas as pd
 
 from inundate.common.errors import InputError, Refusal
-from inundate.stage.days import CORRECTION_COLUMNS, DAILY_COLUMNS
+from inundate.stage.datum import Priors
+from inundate.stage.days import CORRECTION_COLUMNS, DAILY_COLUMNS, SLOW_SD_M
 from inundate.stage.options import QUALITIES, StageOptions
 from inundate.stage.readings import Barometer, Readings
 from inundate.stage.record import (
+    Found,
     LoggerRecord,
     Prepared,
+    find_datum,
     frost_days,
+    make_record,
     own_checks,
     prepare_logger,
     rain_series,
-    settle,
 )
 from inundate.stage.steps import Surroundings
 
@@ -110,13 +113,29 @@ def daily_stage(
         message = f"none of {len(refused)} loggers can be used; the first: {refused[0].reason}"
         raise InputError(message)
     around = Surroundings(rain_series(weather), {k: p.hours for k, p in ready.items()})
-    made: dict[str, LoggerRecord] = {}
-    for logger_id in list(ready):
-        try:
-            made[logger_id] = settle(ready[logger_id], own_checks(checks, logger_id), around, options)
-        except InputError as fault:
-            refused.append(Refusal("logger", logger_id, str(fault)))
+    found: dict[str, Found] = {}
+    priors = Priors()
+    for again in (False, True):
+        if again:
+            priors = priors.learn([f.settled.offset for f in found.values()])
+        for logger_id in list(ready):
+            try:
+                found[logger_id] = find_datum(ready[logger_id], own_checks(checks, logger_id), around, options, priors)
+            except InputError as fault:
+                del ready[logger_id]
+                refused.append(Refusal("logger", logger_id, str(fault)))
+    _share_slow_errors(found)
+    made = {k: make_record(f, options) for k, f in found.items()}
     return _gather(made, refused, _shared_clock(ready))
+
+
+def _share_slow_errors(found: dict[str, Found]) -> None:
+    """Give each logger the scatter that it shows when dry, or the middle one of the others."""
+    seen = [f.settled.dryness.day_spread_m for f in found.values()]
+    known = [s for s in seen if np.isfinite(s)]
+    usual = float(np.median(known)) if known else SLOW_SD_M
+    for one, own in zip(found.values(), seen, strict=True):
+        one.settled.slow_m = max(own if np.isfinite(own) else usual, 5e-4)
 
 
 def _shared_clock(ready: dict[str, Prepared]) -> list[str]:

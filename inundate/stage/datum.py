@@ -8,12 +8,48 @@ from itertools import product
 import numpy as np
 
 YEAR_NS = 365.25 * 86400e9
-# What may be, and how likely before any check is seen. Common practice, no source: most sensors drift by well under
-# 1 cm a year, few by several; most surveys and checks are as good as told, few are several times worse.
-_SLOPES = ((0.0, 0.60), (0.01, 0.25), (0.05, 0.15))
-_WANDER = ((0.0, 0.70), (0.01, 0.20), (0.04, 0.10))
-_SURVEY = ((1.0, 0.70), (3.0, 0.20), (10.0, 0.10))
-_CHECKS = ((1.0, 0.60), (1.6, 0.25), (3.0, 0.15))
+#: What may be: sd of a linear drift and of a random walk (m a year), survey and sensor accuracy as multiples of what is
+#: told, checks likewise.
+_SLOPES = np.array([0.0, 0.01, 0.05])
+_WANDER = np.array([0.0, 0.01, 0.04])
+_SURVEY = np.array([0.2, 1.0, 3.0, 10.0])
+_CHECKS = np.array([1.0, 1.6, 3.0])
+_MODELS = np.array(list(product(_SLOPES, _WANDER, _SURVEY, _CHECKS)))
+
+
+@dataclass(frozen=True, slots=True)
+class Priors:
+    """How likely each kind of error is before a logger's checks are seen.
+
+    Attributes
+    ----------
+    slope, wander, survey, checks : tuple of float
+        Weights that sum to one. The defaults are common practice, no source: most sensors drift by well under 1 cm a
+        year, few by several; most surveys and checks are as good as told, few are several times worse.
+    """
+
+    slope: tuple[float, ...] = (0.60, 0.25, 0.15)
+    wander: tuple[float, ...] = (0.70, 0.20, 0.10)
+    survey: tuple[float, ...] = (0.15, 0.60, 0.15, 0.10)
+    checks: tuple[float, ...] = (0.60, 0.25, 0.15)
+
+    def log_weights(self) -> np.ndarray:
+        """Return log weights of all models, shape (model,)."""
+        parts = product(self.slope, self.wander, self.survey, self.checks)
+        return np.array([float(np.log(np.prod(p))) for p in parts])
+
+    def learn(self, offsets: list[Offset], strength: float = 4.0) -> Priors:
+        """Return the weights that the loggers of an area show (one step of EM), these counting as ``strength`` loggers."""
+        shape = (_SLOPES.size, _WANDER.size, _SURVEY.size, _CHECKS.size)
+        told = [o for o in offsets if (~o.evidence.zero).sum() >= 3]
+        out = []
+        for axis, own in enumerate((self.slope, self.wander, self.survey, self.checks)):
+            others = tuple(i for i in range(4) if i != axis)
+            count = strength * np.array(own)
+            for offset in told:
+                count = count + offset.weights.reshape(shape).sum(axis=others)
+            out.append(tuple(float(c) for c in count / count.sum()))
+        return Priors(*out)
 
 
 @dataclass(frozen=True, slots=True)
@@ -98,12 +134,24 @@ class Offset:
     steps : tuple of Step
     log_evidence : float
         Log likelihood of the evidence, averaged over the models.
+    weights : ndarray of float64, shape (model,)
+        Posterior weights of the models.
+    inverse, pull : ndarray of float64, shapes (model, obs, obs) and (model, obs)
+        Inverse covariance of the evidence, and that times its residual.
     """
 
     evidence: Evidence
     steps: tuple[Step, ...]
     log_evidence: float
-    _models: list[tuple[float, tuple[float, ...], np.ndarray, np.ndarray]] = field(default_factory=list)
+    weights: np.ndarray = field(default_factory=lambda: np.empty(0))
+    inverse: np.ndarray = field(default_factory=lambda: np.empty((0, 0, 0)))
+    pull: np.ndarray = field(default_factory=lambda: np.empty((0, 0)))
+
+    def _leading(self) -> list[tuple[float, np.ndarray, np.ndarray, np.ndarray]]:
+        """Weight, model, inverse covariance and pull of the models that matter."""
+        keep = np.flatnonzero(self.weights > 2e-3)
+        total = self.weights[keep].sum()
+        return [(float(self.weights[k] / total), _MODELS[k], self.inverse[k], self.pull[k]) for k in keep]
 
     def at(self, time: np.ndarray, span: np.ndarray, *, part: str = "all") -> tuple[np.ndarray, np.ndarray]:
         """Return offset and its standard deviation.
@@ -127,7 +175,7 @@ class Offset:
         basis, prior_mean = _basis(time, span, part != "zero", part != "height", e, self.steps)
         seen, _ = _basis(e.time, e.span, ~e.zero, np.ones(e.time.size, bool), e, self.steps)
         years, seen_years = (time - e.start) / YEAR_NS, (e.time - e.start) / YEAR_NS
-        for weight, model, inverse, pull in self._models:
+        for weight, model, inverse, pull in self._leading():
             var = _variances(model, e, self.steps)
             cross = (basis * var) @ seen.T
             own = (basis**2) @ var
@@ -147,7 +195,7 @@ class Offset:
         out = []
         for i in range(first, first + len(self.steps)):
             mean = second = 0.0
-            for weight, model, inverse, pull in self._models:
+            for weight, model, inverse, pull in self._leading():
                 var = _variances(model, e, self.steps)[i]
                 m = float(prior_mean[i] + var * (seen[:, i] @ pull))
                 v = max(float(var - var**2 * (seen[:, i] @ inverse @ seen[:, i])), 0.0)
@@ -176,12 +224,22 @@ def _basis(
     return out, np.r_[np.zeros(k + 2), [-s.size_m for s in steps]]
 
 
-def _variances(model: tuple[float, ...], e: Evidence, steps: tuple[Step, ...]) -> np.ndarray:
-    slope, _, survey, _ = model
-    return np.r_[[(survey * s) ** 2 for s in e.height_sd_m], e.sensor_sd_m**2, slope**2, [s.sd_m**2 for s in steps]]
+def _variances(model: np.ndarray, e: Evidence, steps: tuple[Step, ...]) -> np.ndarray:
+    """Prior variances of the columns: shape (column,), or (model, column) for several models."""
+    slope, survey = model[..., 0, None], model[..., 2, None]
+    known = np.ones((*model.shape[:-1], 1))
+    return np.concatenate(
+        [
+            (survey * np.array(e.height_sd_m)) ** 2,
+            (survey * e.sensor_sd_m) ** 2,
+            slope**2,
+            known * np.array([s.sd_m**2 for s in steps]),
+        ],
+        axis=-1,
+    )
 
 
-def fit_offset(evidence: Evidence, steps: tuple[Step, ...] = ()) -> Offset:
+def fit_offset(evidence: Evidence, steps: tuple[Step, ...] = (), priors: Priors | None = None) -> Offset:
     """Weigh survey, sensor accuracy, drift and given steps against the evidence.
 
     The offset is a Gaussian process: a constant (survey error of the period, sensor zero), a linear drift, a random
@@ -194,6 +252,7 @@ def fit_offset(evidence: Evidence, steps: tuple[Step, ...] = ()) -> Offset:
     evidence : Evidence
         May be empty: the prior then speaks alone.
     steps : tuple of Step
+    priors : Priors, optional
 
     Returns
     -------
@@ -209,32 +268,27 @@ def fit_offset(evidence: Evidence, steps: tuple[Step, ...] = ()) -> Offset:
     years = (e.time - e.start) / YEAR_NS
     shared = np.minimum(years[:, None], years[None, :])
     residual = e.offset_m - seen @ prior_mean
-    found = []
-    for slope, wander, survey, worse in product(_SLOPES, _WANDER, _SURVEY, _CHECKS):
-        model = (slope[0], wander[0], survey[0], worse[0])
-        noise = np.where(e.zero, e.sd_m, e.sd_m * worse[0])
-        cov = (seen * _variances(model, e, steps)) @ seen.T + wander[0] ** 2 * shared + np.diag(noise**2)
-        inverse = np.linalg.inv(cov) if e.time.size else np.zeros((0, 0))
-        pull = inverse @ residual
-        size = np.linalg.slogdet(cov)[1] if e.time.size else 0.0
-        log = -0.5 * (residual @ pull + size + e.time.size * np.log(2 * np.pi))
-        found.append((log + np.log(slope[1] * wander[1] * survey[1] * worse[1]), model, inverse, pull))
-    top = max(f[0] for f in found)
-    weights = np.exp([f[0] - top for f in found])
-    log_evidence = float(top + np.log(weights.sum()))
-    weights /= weights.sum()
-    kept = [(w, *f[1:]) for w, f in zip(weights, found, strict=True) if w > 2e-3]
-    total = sum(k[0] for k in kept)
-    return Offset(e, steps, log_evidence, [(k[0] / total, *k[1:]) for k in kept])
+    noise = np.where(e.zero, e.sd_m, e.sd_m * _MODELS[:, 3, None])
+    cov = (seen * _variances(_MODELS, e, steps)[:, None, :]) @ seen.T
+    cov += _MODELS[:, 1, None, None] ** 2 * shared
+    cov[:, np.arange(e.time.size), np.arange(e.time.size)] += noise**2
+    inverse = np.linalg.inv(cov)
+    pull = inverse @ residual
+    log = -0.5 * (pull @ residual + np.linalg.slogdet(cov)[1] + e.time.size * np.log(2 * np.pi))
+    log += (priors or Priors()).log_weights()
+    weights = np.exp(log - log.max())
+    total = float(weights.sum())
+    return Offset(e, steps, float(log.max() + np.log(total)), weights / total, inverse, pull)
 
 
-def choose_steps(evidence: Evidence, candidates: list[Step], most: int = 6) -> Offset:
+def choose_steps(evidence: Evidence, candidates: list[Step], priors: Priors | None = None, most: int = 6) -> Offset:
     """Accept the steps that record and checks together make likelier than not, best first.
 
     Parameters
     ----------
     evidence : Evidence
     candidates : list of Step
+    priors : Priors, optional
     most : int
         Most steps accepted.
 
@@ -242,12 +296,12 @@ def choose_steps(evidence: Evidence, candidates: list[Step], most: int = 6) -> O
     -------
     Offset
     """
-    current = fit_offset(evidence)
+    current = fit_offset(evidence, (), priors)
     left = list(candidates)
     for _ in range(most):
         best: tuple[float, Offset, Step] | None = None
         for step in left:
-            tried = fit_offset(evidence, tuple(sorted((*current.steps, step), key=lambda s: s.time)))
+            tried = fit_offset(evidence, tuple(sorted((*current.steps, step), key=lambda s: s.time)), priors)
             gain = tried.log_evidence - current.log_evidence + step.log_odds
             if gain > 0 and (best is None or gain > best[0]):
                 best = (gain, tried, step)
@@ -258,23 +312,27 @@ def choose_steps(evidence: Evidence, candidates: list[Step], most: int = 6) -> O
     return current
 
 
-def doubtful_checks(evidence: Evidence, steps: tuple[Step, ...], limit: float = 4.5) -> np.ndarray:
-    """Return positions of checks that the rest contradict (left-out residual over ``limit`` sd), worst first.
+def doubtful_evidence(offset: Offset, limit: float = 4.5) -> np.ndarray:
+    """Return positions of evidence that the rest contradicts (left-out residual over ``limit`` sd), worst first.
 
-    Never more than a fifth of the checks, and none where there are fewer than four.
+    Never more than a fifth of it (one of four to nine), and none where there are fewer than four. Left-out residuals
+    come from the inverse covariance (Rasmussen & Williams 2006, eq. 5.12).
+
+    Parameters
+    ----------
+    offset : Offset
+    limit : float
+
+    Returns
+    -------
+    ndarray of int64
     """
-    out: list[int] = []
+    evidence, out = offset.evidence, []
     keep = np.arange(evidence.time.size)
-    checks = int((~evidence.zero).sum())
-    while checks >= 4 and len(out) < checks // 5 + (checks < 5):
-        scores = np.zeros(keep.size)
-        for i in range(keep.size):
-            if evidence.zero[keep[i]]:
-                continue
-            rest = fit_offset(evidence.take(np.delete(keep, i)), steps)
-            one = evidence.take(keep[i : i + 1])
-            mean, sd = rest.at(one.time, one.span)
-            scores[i] = abs(one.offset_m[0] - mean[0]) / np.hypot(sd[0], one.sd_m[0])
+    while evidence.time.size >= 4 and len(out) < max(evidence.time.size // 5, 1):
+        rest = fit_offset(evidence.take(keep), offset.steps) if out else offset
+        top = int(np.argmax(rest.weights))
+        scores = np.abs(rest.pull[top]) / np.sqrt(np.diagonal(rest.inverse[top]))
         worst = int(np.argmax(scores))
         if scores[worst] <= limit:
             break

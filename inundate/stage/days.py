@@ -29,7 +29,7 @@ DAILY_COLUMNS = (
 )
 #: Greatest sd (m) of a step's size at which the record is taken on across it; beyond, a new period begins.
 BRIDGE_SD_M = 0.015
-_SLOW_SD_M = 0.002
+SLOW_SD_M = 0.002
 
 
 @dataclass(slots=True)
@@ -47,6 +47,8 @@ class Settled:
     dryness : Dryness
     noise : float
         sd of a reading, m.
+    slow_m : float
+        sd of errors that a day does not average out, m.
     """
 
     logger_id: str
@@ -57,6 +59,7 @@ class Settled:
     offset: Offset
     dryness: Dryness
     noise: float
+    slow_m: float = SLOW_SD_M
 
 
 def _period_starts(settled: Settled) -> np.ndarray:
@@ -73,7 +76,7 @@ def daily_rows(settled: Settled) -> pd.DataFrame:
     """Make daily means with honest standard deviations.
 
     The variance of a day is that of the offset (survey, sensor zero, drift, steps, checks), of slow errors that a day
-    does not average out (the scatter of six-hour means seen when dry, at least 2 mm), of reading noise over n, of the
+    does not average out, of reading noise over n, of the
     hours that are missing, and 0.15 % of depth where density had no temperature.
 
     Parameters
@@ -105,7 +108,7 @@ def daily_rows(settled: Settled) -> pd.DataFrame:
     usual = max(float(np.median(count)), 1.0)
     missing = np.clip(1.0 - count / usual, 0.0, 1.0)
     swing = spread(np.diff(mean)) if mean.size > 2 else 0.0
-    slow = max(settled.dryness.spread_m if settled.dryness.spells else _SLOW_SD_M, _SLOW_SD_M)
+    slow = settled.slow_m
     warm = 0.0015 * np.maximum(np.add.reduceat(hours.mean, start) / count, 0.0)
     var = sd**2 + slow**2 + settled.noise**2 / n + (missing * swing) ** 2 + warm**2
     var = np.where(censored, tall_sd**2 + slow**2, var)

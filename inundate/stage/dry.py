@@ -10,7 +10,7 @@ from inundate.stage.signals import Hours, best_path, spread
 
 _BLOCK_H = 6
 _CHANGE = 6.0
-_SURE = 8
+_SURE = 20
 
 
 @dataclass(slots=True)
@@ -25,13 +25,17 @@ class Dryness:
     spread_m : float
         Scatter of six-hour means about it.
     spells : list of (int, int, float, float)
-        Of at least two days: first and last time (ns), depth read, and its standard error.
+        Of at least five days: first and last time (ns), depth read, and its standard error.
+    day_spread_m : float
+        Scatter of daily means about the spells' own; NaN without spells. What a day does not average out: the two
+        sensors' slow errors.
     """
 
     dry: np.ndarray
     zero_m: np.ndarray
     spread_m: float
     spells: list[tuple[int, int, float, float]]
+    day_spread_m: float = float("nan")
 
 
 def find_dry(hours: Hours, zero_m: np.ndarray, zero_sd_m: np.ndarray, noise_m: float) -> Dryness:
@@ -77,7 +81,8 @@ def find_dry(hours: Hours, zero_m: np.ndarray, zero_sd_m: np.ndarray, noise_m: f
         if (before == path).all():
             break
     dry = np.repeat(path.astype(bool), count)
-    return Dryness(dry, np.repeat(zero, count), steady, _spells(hours, level, path, (start, count), steady))
+    spells = _spells(hours, level, path, (start, count), steady)
+    return Dryness(dry, np.repeat(zero, count), steady, spells, _day_spread(level, path))
 
 
 def _runs(path: np.ndarray) -> list[tuple[int, int]]:
@@ -103,6 +108,16 @@ def _learn(
         zero[a:b] = fitted
         scatter[lo:hi] = np.hypot(steady, np.sqrt(gain[0]) * own)
     return zero, scatter, steady
+
+
+def _day_spread(level: np.ndarray, path: np.ndarray) -> float:
+    rest = []
+    for a, b in _runs(path):
+        if b - a >= _SURE:
+            # the first and last day may hold water
+            days = level[a + 4 : b - 4][: (b - a - 8) // 4 * 4].reshape(-1, 4).mean(axis=1)
+            rest.append(days - np.median(days))
+    return spread(np.concatenate(rest)) if rest else float("nan")
 
 
 def _spells(

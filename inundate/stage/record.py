@@ -9,7 +9,7 @@ import numpy as np
 import pandas as pd
 
 from inundate.common.errors import InputError, Refusal
-from inundate.stage.datum import Evidence, Offset, Step, choose_steps, doubtful_checks, fit_offset
+from inundate.stage.datum import Evidence, Offset, Priors, Step, choose_steps, doubtful_evidence, fit_offset
 from inundate.stage.days import Settled, correction_rows, daily_rows, flagged_frame
 from inundate.stage.dry import Dryness, find_dry
 from inundate.stage.options import StageOptions
@@ -163,7 +163,7 @@ def _evidence(
     return Evidence(
         np.r_[time[used], zero_at],
         np.r_[(checks["stage_m"] - checks["raw_m"]).to_numpy(float)[used], [-z for *_, z, _ in spells]],
-        np.r_[sd[used], [max(s, 0.002) for *_, s in spells]],
+        np.r_[sd[used], [max(s, 0.003) for *_, s in spells]],
         np.r_[np.zeros(used.size, bool), np.ones(len(spells), bool)],
         np.r_[checks["span"].to_numpy(np.int64)[used], zero_span],
         int(made.hours.time[0]),
@@ -177,8 +177,32 @@ def _dry_by(offset: Offset, made: Prepared, noise: float) -> Dryness:
     return find_dry(made.hours, -zero, sd, noise)
 
 
-def settle(made: Prepared, checks: pd.DataFrame, around: Surroundings, options: StageOptions) -> LoggerRecord:
-    """Set a prepared logger on its datum and make its days.
+@dataclass(slots=True)
+class Found:
+    """A logger set on its datum, before its tables are made.
+
+    Attributes
+    ----------
+    settled : Settled
+    candidates : list of Step
+        Steps that were weighed.
+    refused : list of Refusal
+        Checks set aside.
+    """
+
+    settled: Settled
+    candidates: list[Step]
+    refused: list[Refusal]
+
+
+def find_datum(
+    made: Prepared,
+    checks: pd.DataFrame,
+    around: Surroundings,
+    options: StageOptions,
+    priors: Priors | None = None,
+) -> Found:
+    """Find a prepared logger's offset, drift and steps, and its dry times, each by the help of the other.
 
     Parameters
     ----------
@@ -188,42 +212,63 @@ def settle(made: Prepared, checks: pd.DataFrame, around: Surroundings, options: 
     around : Surroundings
         Rain and the other loggers.
     options : StageOptions
+    priors : Priors, optional
 
     Returns
     -------
-    LoggerRecord
+    Found
+
+    Raises
+    ------
+    InputError
+        When no reading is left.
     """
     if not made.hours.time.size:
         message = f"logger {made.logger_id}: no usable reading is left after quality control; look at its file"
         raise InputError(message)
     noise = max(s.noise for s in made.spans)
     matched, refused = _gather_checks(made, checks, options)
-    empty = _evidence(
-        made, matched.iloc[:0], Dryness(np.zeros(made.span.size, bool), made.height_m, noise, []), options
-    )
-    dryness = _dry_by(fit_offset(empty[0]), made, noise)
-    offset, doubtful = None, np.empty(0, int)
-    for _ in range(2):
+    nothing = Dryness(np.zeros(made.span.size, bool), made.height_m, noise, [])
+    offset = fit_offset(_evidence(made, matched.iloc[:0], nothing, options)[0], (), priors)
+    dryness = _dry_by(offset, made, noise)
+    candidates: list[Step] = []
+    doubtful: list[int] = []
+    for _ in range(3):
         evidence, used = _evidence(made, matched, dryness, options)
         candidates = _candidates(made, matched, dryness, around, options)
-        offset = choose_steps(evidence, candidates)
-        doubtful = doubtful_checks(evidence, offset.steps)
-        if doubtful.size:
-            evidence = evidence.take(np.delete(np.arange(evidence.time.size), doubtful))
-            offset = choose_steps(evidence, candidates)
-        dryness = _dry_by(offset, made, noise)
-    assert_offset = offset if offset is not None else fit_offset(empty[0])
-    for i in doubtful:
-        refused.append(_doubt(made.logger_id, matched.iloc[used[i]]))
-    settled = Settled(made.logger_id, made.spans, made.hours, made.span, made.height_m, assert_offset, dryness, noise)
-    notes = [n for s in made.spans for n in s.notes]
-    notes += _step_notes(settled, candidates)
+        offset = choose_steps(evidence, candidates, priors)
+        odd = doubtful_evidence(offset)
+        if odd.size:
+            offset = choose_steps(evidence.take(np.delete(np.arange(evidence.time.size), odd)), candidates, priors)
+        doubtful = [int(used[i]) for i in odd if i < used.size]
+        before, dryness = dryness, _dry_by(offset, made, noise)
+        if (before.dry == dryness.dry).all():
+            break
+    refused += [_doubt(made.logger_id, matched.iloc[i]) for i in doubtful]
+    settled = Settled(made.logger_id, made.spans, made.hours, made.span, made.height_m, offset, dryness, noise)
+    return Found(settled, candidates, refused)
+
+
+def make_record(found: Found, options: StageOptions) -> LoggerRecord:
+    """Make the tables of a logger that is set on its datum.
+
+    Parameters
+    ----------
+    found : Found
+    options : StageOptions
+
+    Returns
+    -------
+    LoggerRecord
+    """
+    settled = found.settled
+    notes = [n for s in settled.spans for n in s.notes] + _step_notes(settled, found.candidates)
     return LoggerRecord(
         daily_rows(settled),
         correction_rows(settled),
         flagged_frame(settled) if options.keep_flagged else None,
         notes,
-        refused,
+        found.refused,
     )
 
 
@@ -302,7 +347,8 @@ def build_record(
     options = options or StageOptions()
     latitudes = dict.fromkeys(rows["wetland_id"], latitude_deg)
     made = prepare_logger(rows, readings, barometer, latitudes, options, frost=frost_days(weather))
-    return settle(made, own_checks(checks, made.logger_id), Surroundings(rain_series(weather), {}), options)
+    around = Surroundings(rain_series(weather), {})
+    return make_record(find_datum(made, own_checks(checks, made.logger_id), around, options), options)
 
 
 def own_checks(checks: pd.DataFrame | None, logger_id: str) -> pd.DataFrame:
