@@ -9,7 +9,7 @@ import numpy as np
 from inundate.series.fitting import Setup
 from inundate.series.heldout import Evidence, relation_share
 from inundate.series.inputs import Events
-from inundate.series.maps import share_at
+from inundate.series.worth import pair_events
 
 WIDTH_90 = 1.6448536269514722
 # Weight of the pooled value beside a wetland's or a cell's own, in independent blocks; common practice, no source.
@@ -116,40 +116,10 @@ def fit_widths(evidence: Evidence | None, weights: np.ndarray, third: np.ndarray
 
 def stage_width(setup: Setup, views: Events, stage: Events) -> float:
     """Return the factor on the relation's error at which leaf-off views on days with stage lie inside as often as due."""
-    pairs = _pairs(views.keep(views.kind == 0), stage)
+    pairs = pair_events(views.keep(views.kind == 0), stage)
     if pairs[0].size < 20:
         return 1.0
     share, sd = relation_share(setup, stage)
     v = views.keep(views.kind == 0)
     gap = v.value[pairs[0]] - share[pairs[1]]
     return float(np.clip(solve_width(gap, sd[pairs[1]], v.sd[pairs[0]], np.ones(gap.size)), 0.7, 2.0))
-
-
-def _pairs(views: Events, stage: Events) -> tuple[np.ndarray, np.ndarray]:
-    """Return positions of views and of stage events of the same wetland and day."""
-    key_v = views.owner * 1_000_000 + views.day
-    key_s = stage.owner * 1_000_000 + stage.day
-    return np.intersect1d(key_v, key_s, return_indices=True)[1:]
-
-
-def worth_of_views(setup: Setup, views: Events, stage: Events) -> np.ndarray:
-    """Return the factor (4,) on the views' standard deviation by leaf state at which they agree with loggers.
-
-    At least 1: a view is never trusted more than it claims. Without 20 pairs in a state, views of that state count as
-    claimed in leaf-off, and with three times their error under leaves (common practice, no source).
-    """
-    out = np.array([1.0, 3.0, 3.0, 3.0])
-    share, sd = relation_share(setup, stage)
-    at_v, at_s = _pairs(views, stage)
-    for leaf in range(4):
-        rows = views.kind[at_v] == leaf
-        if rows.sum() < 20:
-            continue
-        gap = views.value[at_v[rows]] - share[at_s[rows]]
-        out[leaf] = max(solve_width(gap, views.sd[at_v[rows]], sd[at_s[rows]], np.ones(gap.size)), 1.0)
-    return out
-
-
-def share_of(setup: Setup, wetland: np.ndarray, level: np.ndarray) -> np.ndarray:
-    """Return shares at levels (m), one wetland position each."""
-    return np.array([share_at(x, setup.maps.share[i], setup.maps.full_m[i]) for i, x in zip(wetland, level, strict=True)])

@@ -14,16 +14,16 @@ from inundate.series.calibrate import (
     fit_widths,
     size_third,
     stage_width,
-    worth_of_views,
 )
 from inundate.series.drivers import build_drivers
 from inundate.series.fitting import Setup, make_setup
 from inundate.series.heldout import Evidence, hide_blocks, hide_loggers, join
 from inundate.series.inputs import Events, FillOptions, SeriesInputs, build_panel
 from inundate.series.maps import LevelMaps, build_maps, slope_at
-from inundate.series.model import Fitted, Levels, available_kinds, blend, fit_kind, smooth_levels
+from inundate.series.model import Fitted, Levels, available_kinds, blend, fit_kind, learn_kind, smooth_levels
 from inundate.series.result import Joint, SeriesResult, daily_table
 from inundate.series.smooth import area_moments
+from inundate.series.worth import leaf_off_factor, worth_of_views
 
 OBSERVED, STAGE, NEIGHBOURS, SEASON = range(4)
 
@@ -57,9 +57,8 @@ def fill_series(inputs: SeriesInputs, *, options: FillOptions | None = None, see
     setup = make_setup(panel, build_drivers(panel), options, seed)
     logged = {panel.ids[i] for i in np.flatnonzero(setup.drivers.fold > 0)}
     blind = _blind_maps(setup, inputs, logged)
-    worth = worth_of_views(setup, panel.views, panel.stage)
-    views = panel.views.with_sd(panel.views.sd * worth[panel.views.kind])
-    fits = [fit_kind(setup, kind, views, panel.stage) for kind in available_kinds(setup)]
+    views, begun = weigh_views(setup, blind)
+    fits = [fit_kind(setup, k, views, panel.stage, b) for k, b in zip(available_kinds(setup), begun, strict=True)]
     parts = [hide_loggers(setup, blind, fits, views, panel.stage), hide_blocks(setup, fits, views, panel.stage)]
     found = [p for p in parts if p is not None and p.day.size]
     evidence = join(found) if found else None
@@ -81,6 +80,24 @@ def _blind_maps(setup: Setup, inputs: SeriesInputs, logged: set[str]) -> LevelMa
             return inputs.relations.predict(wetland_id, stage_m)
 
     return build_maps(setup.panel.ids, setup.panel.area_max_m2, Others(), inputs.hypsometry)
+
+
+def weigh_views(setup: Setup, blind: LevelMaps) -> tuple[Events, list[Fitted | None]]:
+    """Return views with the errors they proved to have, and the predictor learned from leaf-off views on the way."""
+    panel = setup.panel
+    kinds = available_kinds(setup)
+    factor = np.where(panel.views.kind == 0, leaf_off_factor(setup, panel.views, panel.stage), 1.0)
+    views = panel.views.with_sd(panel.views.sd * factor)
+    begun: list[Fitted | None] = [None] * len(kinds)
+    evidence = None
+    if setup.drivers.fold.any() and (views.kind != 0).any():
+        bare = views.keep(views.kind == 0)
+        first = learn_kind(setup, kinds[0], bare, panel.stage)
+        evidence = hide_loggers(setup, blind, [first], bare, panel.stage)
+        begun[0] = first
+    sd = views.sd * worth_of_views(setup, views, evidence)
+    views = views.with_sd(sd)
+    return views.keep(np.isfinite(sd)), begun
 
 
 def _stage_days(stage: Events, days: int) -> np.ndarray:

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Mapping, Sequence
 from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass, replace
 
@@ -22,6 +22,8 @@ from inundate.series.drivers import Drivers
 from inundate.series.inputs import Events, FillOptions, Panel
 from inundate.series.maps import LevelMaps
 
+# Day (spin-up included), level (m), and inverse errors below and above (1 / m) of a wetland's events.
+Aim = tuple[np.ndarray, np.ndarray, np.ndarray, np.ndarray]
 KINDS = ("mass balance", "linear")
 # Days between stage values that enter a fit (the departure between neighbours is nearly the same).
 _STAGE_STEP = 7
@@ -140,7 +142,7 @@ def _crowding(day: np.ndarray, memory: float) -> np.ndarray:
     return 1 + ahead + behind
 
 
-def targets(setup: Setup, i: int, views: Events, stage: Events, departure: Departure) -> tuple[np.ndarray, ...]:
+def targets(setup: Setup, i: int, views: Events, stage: Events, departure: Departure) -> Aim:
     """Return day (spin included), level and one-sided inverse errors of all events of a wetland, for a fit."""
     table, full = setup.maps.share[i], float(setup.maps.full_m[i])
     part = slice(views.start[i], views.start[i + 1])
@@ -162,7 +164,7 @@ def targets(setup: Setup, i: int, views: Events, stage: Events, departure: Depar
     return day + setup.drivers.spin, level, wide[0], wide[1]
 
 
-def fit_one(setup: Setup, kind: str, i: int, aim: tuple[np.ndarray, ...], prior: Prior, start: np.ndarray | None, rounds: int) -> tuple[np.ndarray, np.ndarray]:
+def fit_one(setup: Setup, kind: str, i: int, aim: Aim, prior: Prior, start: np.ndarray | None, rounds: int) -> tuple[np.ndarray, np.ndarray]:
     """Return the most probable parameters of a wetland and their covariance."""
     mean = setup.group[i] @ prior.coef
     precision = np.linalg.inv(prior.cov)
@@ -180,11 +182,13 @@ def fit_one(setup: Setup, kind: str, i: int, aim: tuple[np.ndarray, ...], prior:
     return theta, np.linalg.inv(hess)
 
 
-def fit_many(setup: Setup, kind: str, items: Sequence[int], aims: Callable[[int], tuple[np.ndarray, ...]], prior: Callable[[int], Prior], start: np.ndarray | None, rounds: int) -> Posterior:
-    """Fit the wetlands in ``items``; rows of the posterior follow ``items``."""
+def fit_many(
+    setup: Setup, kind: str, items: Sequence[int], aims: Mapping[int, Aim], prior: Prior, start: np.ndarray | None, rounds: int
+) -> Posterior:
+    """Fit the wetlands in ``items``; rows of the posterior follow ``items``, those of ``start`` all wetlands."""
 
     def work(i: int) -> tuple[np.ndarray, np.ndarray]:
-        return fit_one(setup, kind, i, aims(i), prior(i), None if start is None else start[i], rounds)
+        return fit_one(setup, kind, i, aims[i], prior, None if start is None else start[i], rounds)
 
     got = in_threads(work, items, setup.options.workers)
     return Posterior(np.array([g[0] for g in got]), np.array([g[1] for g in got]))

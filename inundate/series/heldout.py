@@ -129,7 +129,8 @@ def hide_loggers(setup: Setup, blind: LevelMaps, fits: Sequence[Fitted], views: 
         for fit in fits:
             post = type(fit.posterior)(fit.posterior.theta[others], fit.posterior.cov[others])
             prior = pooled_prior(setup, fit.kind, others, post)
-            got = fit_many(hidden, fit.kind, items.tolist(), lambda i, d=fit.departure: targets(hidden, i, views, none, d), lambda _i, p=prior: p, None, 12)
+            aims = {int(i): targets(hidden, int(i), views, none, fit.departure) for i in items}
+            got = fit_many(hidden, fit.kind, items.tolist(), aims, prior, None, 12)
             levels.append(smooth_levels(hidden, fit, items.tolist(), views, none, got))
         wanted = stage.keep(np.isin(stage.owner, items))
         row = np.searchsorted(items, wanted.owner)
@@ -173,7 +174,7 @@ def hide_blocks(setup: Setup, fits: Sequence[Fitted], views: Events, stage: Even
         levels = []
         for fit in fits:
             aims = {int(i): targets(setup, int(i), seen, kept, fit.departure) for i in items}
-            got = fit_many(setup, fit.kind, items.tolist(), aims.__getitem__, lambda _i, p=fit.prior: p, fit.posterior.theta, 4)
+            got = fit_many(setup, fit.kind, items.tolist(), aims, fit.prior, fit.posterior.theta, 4)
             levels.append(smooth_levels(setup, fit, items.tolist(), seen, kept, got))
         gone = sample.keep((group[sample.day] == g) & (sample.kind == 0))
         row = np.searchsorted(items, gone.owner)

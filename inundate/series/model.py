@@ -122,32 +122,51 @@ def pooled_departure(logliks: np.ndarray) -> tuple[np.ndarray, np.ndarray, np.nd
     return np.sqrt(member @ (sd.ravel() ** 2)), np.exp(member @ np.log(memory.ravel())), weight.reshape(sd.shape)
 
 
-def fit_kind(setup: Setup, kind: str, views: Events, stage: Events) -> Fitted:
-    """Fit one predictor kind to all wetlands: pooled prior by EM, departure by likelihood, then every wetland."""
-    count = len(setup.panel.ids)
-    departure = Departure(np.full(count, _FIRST_SD), np.full(count, _FIRST_MEMORY))
-    items = pool_items(setup)
-    prior = first_prior(setup, kind)
-    start: np.ndarray | None = None
-    width = prior.coef.shape[1]
-    for step in range(4):
-        aims = {int(i): targets(setup, i, views, stage, departure) for i in items}
-        post = fit_many(setup, kind, [int(i) for i in items], aims.__getitem__, lambda _i, p=prior: p, start, 12 if step == 0 else 5)
-        if len(items):
-            start = np.zeros((count, width))
-            start[items] = post.theta
-            prior = pooled_prior(setup, kind, items, post)
-        if step == 1 and len(items):
+def learn_kind(setup: Setup, kind: str, views: Events, stage: Events, begin: Fitted | None = None) -> Fitted:
+    """Learn the pooled prior of one predictor kind (EM) and its departure (likelihood) from the pool of wetlands.
+
+    Parameters
+    ----------
+    setup : Setup
+    kind : str
+    views, stage : Events
+    begin : Fitted or None
+        An earlier result to start from.
+
+    Returns
+    -------
+    Fitted
+        With parameters of the pool's wetlands; others hold their prior.
+    """
+    count, items = len(setup.panel.ids), pool_items(setup)
+    prior = first_prior(setup, kind) if begin is None else begin.prior
+    departure = Departure(np.full(count, _FIRST_SD), np.full(count, _FIRST_MEMORY)) if begin is None else begin.departure
+    theta = setup.group @ prior.coef if begin is None else begin.posterior.theta.copy()
+    cov = np.repeat(prior.cov[None], count, axis=0)
+    if not items.size:
+        return Fitted(kind, prior, Posterior(theta, cov), departure)
+    rounds = (12, 5, 5, 5) if begin is None else (5, 5)
+    for step, most in enumerate(rounds):
+        aims = {int(i): targets(setup, int(i), views, stage, departure) for i in items}
+        post = fit_many(setup, kind, items.tolist(), aims, prior, theta, most)
+        theta[items], cov[items] = post.theta, post.cov
+        prior = pooled_prior(setup, kind, items, post)
+        if step == 1:
             departure = _fit_departure(setup, kind, items, post, views, stage)
-    everyone = list(range(count))
-    known = set(items.tolist())
-    begin = setup.group @ prior.coef
-    if start is not None:
-        begin[items] = start[items]
-    post = fit_many(setup, kind, everyone, lambda i: targets(setup, i, views, stage, departure), lambda _i: prior, begin, 8)
-    if len(known):
-        departure = _fit_departure(setup, kind, np.arange(count), post, views, stage)
-    return Fitted(kind, prior, post, departure)
+    return Fitted(kind, prior, Posterior(theta, cov), departure)
+
+
+def fit_kind(setup: Setup, kind: str, views: Events, stage: Events, begin: Fitted | None = None) -> Fitted:
+    """Fit one predictor kind to all wetlands under the prior that the pool teaches."""
+    learned = learn_kind(setup, kind, views, stage, begin)
+    everyone = range(len(setup.panel.ids))
+    aims = {i: targets(setup, i, views, stage, learned.departure) for i in everyone}
+    theta = setup.group @ learned.prior.coef
+    items = pool_items(setup)
+    theta[items] = learned.posterior.theta[items]
+    post = fit_many(setup, kind, list(everyone), aims, learned.prior, theta, 8)
+    departure = _fit_departure(setup, kind, np.arange(theta.shape[0]), post, views, stage)
+    return Fitted(kind, learned.prior, post, departure)
 
 
 def _fit_departure(setup: Setup, kind: str, items: np.ndarray, post: Posterior, views: Events, stage: Events) -> Departure:
