@@ -56,6 +56,11 @@ class Views:
     leaf: np.ndarray
 
 
+def pick_views(views: Views, scenes: np.ndarray) -> Views:
+    """Return the views of some scenes (index or boolean array)."""
+    return Views(*(getattr(views, name)[scenes] for name in Views.__slots__))
+
+
 def look(stack: SceneStack, wetland: WetlandPixels, leaf: np.ndarray) -> Views:
     """Gather one wetland's pixels from a stack.
 
@@ -100,20 +105,36 @@ def look(stack: SceneStack, wetland: WetlandPixels, leaf: np.ndarray) -> Views:
     )
 
 
-def expected_fraction(filling: np.ndarray, wetland: WetlandPixels) -> np.ndarray:
-    """Water fraction of whole pixels at each step: own part, and other wetlands' part as full as this one.
+def neighbour_mean(values: np.ndarray, wetland: WetlandPixels) -> np.ndarray:
+    """Mean over the eight touching pixels, those outside the wetland counting 0; float64 (pixel, step)."""
+    padded = np.vstack([values, np.zeros((1, values.shape[1]))])
+    out = np.zeros(values.shape)
+    for k in range(8):
+        out += padded[wetland.near[:, k]]
+    return out / 8.0
 
-    Returns float32 (pixel, step).
+
+def expected_fraction(filling: np.ndarray, wetland: WetlandPixels, blur: float) -> np.ndarray:
+    """Water fraction of whole pixels at each step of area, as scenes show it.
+
+    Own part as ``filling`` has it, other wetlands' part as full as this one, then ``blur`` of it exchanged with the eight
+    touching pixels (coarser bands, point spread and shift carry water over the outline).
+
+    Returns
+    -------
+    ndarray of float32, shape (pixel, step)
     """
     steps = filling.shape[1]
     fullness = np.linspace(0.0, 1.0, steps)[None, :]
-    e = wetland.share[:, None] * filling + wetland.other[:, None] * fullness
-    return np.ascontiguousarray(np.clip(e, 0.0, 1.0), dtype=np.float32)
+    e = np.clip(wetland.share[:, None] * filling + wetland.other[:, None] * fullness, 0.0, 1.0)
+    if blur != 0.0:
+        e = np.clip(e + blur * (neighbour_mean(e, wetland) - e), 0.0, 1.0)
+    return np.ascontiguousarray(e, dtype=np.float32)
 
 
 def weigh(views: Views, shape: Shape, wetland: WetlandPixels, noise: NoiseModel) -> tuple[np.ndarray, np.ndarray]:
     """Posterior over steps of area, and misfit, of each scene: float64 (scene, step) and (scene,)."""
-    e = expected_fraction(shape.filling, wetland)
+    e = expected_fraction(shape.filling, wetland, noise.blur)
     strangers = 1.0 + 4.0 * np.minimum(wetland.other, 0.5)
     widen = np.ascontiguousarray(views.widen * strangers[None, :], dtype=np.float32)
     shared = np.array([noise.rho, noise.temper])
@@ -145,15 +166,14 @@ def areas(views: Views, shape: Shape, wetland: WetlandPixels, noise: NoiseModel)
     area, sd : ndarray of float64, shape (scene,)
         Share of the largest extent, 0..1.
     """
-    post, misfit = weigh(views, shape, wetland, noise)
+    post, misfit, _ = weigh(views, shape, wetland, noise)
     steps = post.shape[1]
     level = np.linspace(0.0, 1.0, steps)
     mean = post @ level
     var = np.maximum(post @ level**2 - mean**2, 0.0) + 1.0 / (12.0 * (steps - 1) ** 2)
     var *= np.clip(misfit, 1.0, 4.0)
     filled = post @ shape.filling.T.astype(float)
-    other = wetland.other[None, :] * mean[:, None]
-    e = np.clip(wetland.share[None, :] * filled + other, 0.0, 1.0)
+    e = post @ expected_fraction(shape.filling, wetland, noise.blur).T.astype(float)
     value, error, _ = pixel_terms(views, noise, e)
     mixed = 0.9 * 4 * filled * (1 - filled) + 0.02
     own = shape.departure_var * mixed * wetland.share[None, :] ** 2

@@ -18,7 +18,7 @@ def posteriors(  # noqa: PLR0912
     noise: np.ndarray,
     shared: np.ndarray,
     log_prior: np.ndarray,
-) -> tuple[np.ndarray, np.ndarray]:
+) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
     """Posterior over the steps of wetland area, scene by scene.
 
     Residuals have a standard deviation that depends on kind and on how mixed a pixel is, share a random effect within
@@ -45,12 +45,14 @@ def posteriors(  # noqa: PLR0912
         Sums to 1; the prior where nothing is seen.
     misfit : ndarray of float64, shape (scene,)
         Mean robust squared standardised residual at the most likely step; 0 where nothing is seen.
+    evidence : ndarray of float64, shape (scene,)
+        Log of the likelihood averaged over the prior, up to a constant; 0 where nothing is seen.
     """
     scenes, pixels = fraction.shape
     steps = expected.shape[1]
     rho, temper = shared[0], shared[1]
     post = np.empty((scenes, steps))
-    misfit = np.zeros(scenes)
+    misfit, evidence = np.zeros(scenes), np.zeros(scenes)
     square, linear, pull = np.empty(steps), np.empty(steps), np.empty(steps)
     product, logs, ll = np.empty(steps), np.empty(steps), np.empty(steps)
     for t in range(scenes):
@@ -100,7 +102,8 @@ def posteriors(  # noqa: PLR0912
             post[t, k] /= total
         if n > 0:
             misfit[t] = square[top] / n
-    return post, misfit
+            evidence[t] = ll[top] + np.log(total)
+    return post, misfit, evidence
 
 
 @njit(cache=True, nogil=True)

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
 import pandas as pd
 
@@ -12,12 +14,13 @@ from inundate.extent.estimate import (
     areas,
     band_of,
     expected_fraction,
+    pick_views,
     pixel_terms,
     weigh,
 )
-from inundate.extent.noise import BAND_EDGES, VIEW_CLASSES, NoiseModel, NoiseSums
+from inundate.extent.noise import BAND_EDGES, BLURS, VIEW_CLASSES, NoiseModel, NoiseSums
 from inundate.extent.shapes import edge_distance, refine_shape, shape_from_cells, shape_from_order
-from inundate.extent.stack import ExtentOptions, WetlandPixels
+from inundate.extent.stack import NEAR_STEPS, ExtentOptions, WetlandPixels
 
 FEW_VIEWS = 4
 """Views below which a ranking by wetness is not tried; common practice, no source."""
@@ -68,17 +71,15 @@ def renew_shape(views: Views, shape: Shape, wetland: WetlandPixels, noise: Noise
     prior_var = noise.shape_var[shape.source]
     if teach.sum() < 2:
         return Shape(shape.prior, shape.prior, shape.source, prior_var, int(teach.sum()))
-    some = Views(*(getattr(views, n)[teach] for n in Views.__slots__))
-    post, misfit = weigh(some, shape, wetland, noise)
+    some = pick_views(views, teach)
+    post, misfit, _ = weigh(some, shape, wetland, noise)
     filled = post @ shape.filling.T.astype(float)
-    level = np.linspace(0, 1, post.shape[1])
-    other = wetland.other[None, :] * (post @ level)[:, None]
-    e = np.clip(wetland.share[None, :] * filled + other, 0.0, 1.0)
+    e = post @ expected_fraction(shape.filling, wetland, noise.blur).T.astype(float)
     value, error, _ = pixel_terms(some, noise, e)
     share = np.maximum(wetland.share, 1e-3)[None, :]
     error = error * np.clip(misfit, 1.0, 4.0)[:, None] + LEFT_OVER * prior_var * share**2
     precision = np.where(some.kind >= 0, share**2 / error, 0.0)
-    filling = refine_shape(shape.prior, 1.0 / prior_var, wetland, post, (value - other) / share, precision)
+    filling = refine_shape(shape.prior, 1.0 / prior_var, wetland, post, filled + (value - e) / share, precision)
     taught = float(np.average(precision.sum(axis=0), weights=wetland.area_m2)) / 4.0
     departure = 1.0 / (1.0 / prior_var + taught) + LEFT_OVER * prior_var
     return Shape(shape.prior, filling, shape.source, min(departure, prior_var), int(good_views(views, options).sum()))
@@ -121,11 +122,11 @@ def noise_sums(
 ) -> NoiseSums:
     """What one wetland tells about errors."""
     sums = NoiseSums(shape.filling.shape[1])
-    post, misfit = weigh(views, shape, wetland, noise)
+    post, misfit, _ = weigh(views, shape, wetland, noise)
     level = np.linspace(0, 1, post.shape[1])
     mean = post @ level
     sd = np.sqrt(np.maximum(post @ level**2 - mean**2, 0))
-    expected = expected_fraction(shape.filling, wetland).astype(float)
+    expected = expected_fraction(shape.filling, wetland, noise.blur).astype(float)
     e = post @ expected.T
     row = noise.table[np.maximum(views.kind, 0)]
     fit = row[..., 0] + row[..., 1] * e
@@ -135,9 +136,11 @@ def noise_sums(
     own = (views.kind >= 0) & sure[:, None] & (step == VIEW_CLASSES - 1)
     sums.add_own(views.kind[own], views.fraction[own].astype(float), e[own], var[own], fit[own])
     good = good_views(views, options) & (sd < 0.1)
+    sums.blur += blur_evidence(views, shape, wetland, noise, options)
     sums.area += post[good].sum(axis=0)
     _add_pairs(sums, (views.fraction - fit) / np.sqrt(var), (views.kind >= 0) & good[:, None], wetland)
-    _add_shape(sums, shape, (views.fraction - fit), e, var, (views.kind >= 0) & good[:, None])
+    whole = (views.kind >= 0) & good[:, None] & (wetland.share > 0.3)[None, :]
+    _add_shape(sums, shape, views.fraction - fit, e, var, whole)
     ref, ref_sd = reference_levels(days, mean, sd, good, noise.drift_var)
     with np.errstate(invalid="ignore"):
         held = (views.kind >= 0) & (step < VIEW_CLASSES - 1) & (ref_sd < 0.12)[:, None]
@@ -151,6 +154,15 @@ def noise_sums(
     return sums
 
 
+def blur_evidence(
+    views: Views, shape: Shape, wetland: WetlandPixels, noise: NoiseModel, options: ExtentOptions
+) -> np.ndarray:
+    """Log evidence of the good views under each candidate of ``BLURS``; float64 (candidate,)."""
+    good = good_views(views, options)
+    some = pick_views(views, good)
+    return np.array([weigh(some, shape, wetland, replace(noise, blur=b))[2].sum() for b in BLURS])
+
+
 def _add_pairs(sums: NoiseSums, u: np.ndarray, seen: np.ndarray, wetland: WetlandPixels) -> None:
     """Products of standardised residuals of pixel pairs: all, side by side, corner to corner."""
     u = np.where(seen, np.clip(u, -3, 3), 0.0)
@@ -158,10 +170,7 @@ def _add_pairs(sums: NoiseSums, u: np.ndarray, seen: np.ndarray, wetland: Wetlan
     keep = n >= 5
     total = (u.sum(axis=1) ** 2 - (u**2).sum(axis=1))[keep]
     sums.pairs[0] += (float((total / n[keep]).sum()), float((n[keep] - 1).sum()))
-    steps = [(i, j) for i in (-2, -1, 0, 1, 2) for j in (-2, -1, 0, 1, 2) if (i, j) != (0, 0)]
-    for k, (i, j) in enumerate(steps):
-        if max(abs(i), abs(j)) != 1:
-            continue
+    for k, (i, j) in enumerate(NEAR_STEPS[:8]):
         near = wetland.near[:, k]
         other = np.where(near >= 0, near, 0)
         both = seen & seen[:, other] & (near >= 0)[None, :]
@@ -220,7 +229,7 @@ def masked_checks(
         views.off[keep],
         views.leaf[keep],
     )
-    full = Views(*(getattr(views, n)[keep] for n in Views.__slots__))
+    full = pick_views(views, keep)
     a, sa = areas(full, shape, wetland, noise)
     b, sb = areas(some, shape, wetland, noise)
     bands = band_of(some.view_fraction)

@@ -19,6 +19,8 @@ BAND_EDGES = (0.3, 0.5, 0.7, 0.9)
 _SLOPE = (0.2, 0.4, 0.65, 0.9, 1.0)
 _PURE = (0.08, 0.07, 0.05, 0.025, 0.01)
 _MIXED = 0.02
+BLURS = np.linspace(0.0, 0.5, 6)
+"""Candidates for the part of a pixel's water fraction that comes from its neighbours."""
 _HELD = 200.0
 """Pixels that the starting values of a kind weigh."""
 
@@ -67,6 +69,8 @@ class NoiseModel:
         Factor on sd by band of view.
     steady_var : float
         Variance (share of the largest extent, at half full) of errors that a wetland keeps from scene to scene.
+    blur : float
+        Part of a pixel's water fraction that comes from the eight pixels around it.
     """
 
     table: np.ndarray
@@ -77,6 +81,7 @@ class NoiseModel:
     drift_var: float
     scale: np.ndarray
     steady_var: float
+    blur: float = 0.0
 
     def to_dict(self) -> dict[str, object]:
         """Return plain values for JSON."""
@@ -89,6 +94,7 @@ class NoiseModel:
             "drift_var": self.drift_var,
             "scale": self.scale.tolist(),
             "steady_var": self.steady_var,
+            "blur": self.blur,
         }
 
     @classmethod
@@ -153,11 +159,12 @@ class NoiseSums:
         self.line = np.zeros((KINDS, 6))
         self.pairs = np.zeros((3, 2))
         self.area = np.zeros(steps)
+        self.blur = np.zeros(BLURS.size)
         self.shape = {name: np.zeros(2) for name in ("cells", "order", "outline")}
 
     def add(self, other: NoiseSums) -> None:
         """Add the sums of another wetland."""
-        for name in ("dry", "wet", "half", "line", "pairs", "area"):
+        for name in ("dry", "wet", "half", "line", "pairs", "area", "blur"):
             getattr(self, name)[...] += getattr(other, name)
         for name, value in other.shape.items():
             self.shape[name] += value
@@ -207,7 +214,19 @@ def renew_noise(old: NoiseModel, sums: NoiseSums, start: NoiseModel) -> NoiseMod
     for name, first in start.shape_var.items():
         total, n = sums.shape[name]
         var[name] = float(np.clip((total + 50 * first) / (n + 50), 0.003, 0.15))
-    return replace(old, table=table, rho=rho, temper=temper, shape_var=var, area_prior=prior)
+    blur = _top_of(BLURS, sums.blur)
+    return replace(old, table=table, rho=rho, temper=temper, shape_var=var, area_prior=prior, blur=blur)
+
+
+def _top_of(x: np.ndarray, y: np.ndarray) -> float:
+    """Place of the highest value, by a parabola through it and its neighbours; 0 when nothing tells."""
+    top = int(np.argmax(y))
+    if np.ptp(y) < 2.0 or top == 0:
+        return float(x[0])
+    if top == y.size - 1:
+        return float(x[-1])
+    left, mid, right = y[top - 1 : top + 2]
+    return float(x[top] + 0.5 * (x[1] - x[0]) * (left - right) / (left - 2 * mid + right))
 
 
 def _own_rows(sums: NoiseSums, start: NoiseModel) -> np.ndarray:

@@ -203,10 +203,10 @@ class ExtentObserver(BaseEstimator):
             for wetland in sample:
                 views = self._views(stack, wetland)
                 shape = first_shape(self.cells_.get(wetland.name), wetland, views, noise, options)
-                shape_sums = noise_sums(views, shape, wetland, noise, days, options).shape
+                before = noise_sums(views, shape, wetland, noise, days, options)
                 shape = renew_shape(views, shape, wetland, noise, options)
                 mine = noise_sums(views, shape, wetland, noise, days, options)
-                mine.shape = shape_sums
+                mine.shape, mine.blur = before.shape, before.blur
                 sums.add(mine)
             noise = renew_noise(noise, sums, start)
         return self._scale(stack, sample, noise, options)

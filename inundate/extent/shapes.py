@@ -44,7 +44,7 @@ def shape_from_cells(cells: pd.DataFrame, wetland: WetlandPixels, steps: int) ->
         Water fraction of the wetland's part of each pixel at area k / (steps - 1) of the largest extent; None when
         less than half the wetland has elevation or all is flat.
     """
-    seen = wetland.pixel >= 0
+    seen = (wetland.pixel >= 0) & (wetland.share > 0)
     if not seen.any() or cells.empty or cells["area_m2"].sum() < LEAST_COVER * wetland.area_max_m2:
         return None
     place = np.full((int(np.ptp(wetland.row[seen])) + 1, int(np.ptp(wetland.col[seen])) + 1), -1, np.int64)

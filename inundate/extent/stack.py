@@ -123,6 +123,13 @@ class ExtentOptions:
     seed: int = 0
 
 
+NEAR_STEPS = sorted(
+    ((i, j) for i in (-2, -1, 0, 1, 2) for j in (-2, -1, 0, 1, 2) if (i, j) != (0, 0)),
+    key=lambda ij: (max(abs(ij[0]), abs(ij[1])), abs(ij[0]) + abs(ij[1]), ij),
+)
+"""Row and column steps to the 24 neighbours, nearest first."""
+
+
 def as_fraction(values: np.ndarray) -> np.ndarray:
     """Return float32 fractions with NaN from float values or uint8 percent with 255 missing."""
     if values.dtype == np.uint8:
@@ -133,19 +140,22 @@ def as_fraction(values: np.ndarray) -> np.ndarray:
 
 
 def weights_on_site(weights: pd.DataFrame, site: Site) -> pd.DataFrame:
-    """Add the position in the site to a weight table.
+    """Add the position in the site to a weight table, and the pixels that touch each wetland from outside.
+
+    Water that coarser bands, point spread or shift carry over the outline shows in the touching pixels; they join with
+    share 0 as far as they are site pixels (build the site with a margin of one pixel or more).
 
     Parameters
     ----------
     weights : DataFrame
-        From :func:`inundate.extent.pixel_weights`.
+        From :func:`inundate.extent.pixel_weights`, all wetlands of the area.
     site : Site
         Holds every pixel of the table.
 
     Returns
     -------
     DataFrame
-        The table with ``pixel`` (int64).
+        The table with ``pixel`` (int64, position in the site), and the rows of share 0; sorted by wetland_id, row, col.
 
     Raises
     ------
@@ -160,7 +170,15 @@ def weights_on_site(weights: pd.DataFrame, site: Site) -> pd.DataFrame:
             "build the site from the same weights"
         )
         raise InputError(text)
-    return weights.assign(pixel=place)
+    own = weights.assign(pixel=place)
+    steps = [own.assign(row=own["row"] + i, col=own["col"] + j) for i, j in NEAR_STEPS[:8]]
+    ring = pd.concat(steps, ignore_index=True).drop_duplicates(["wetland_id", "row", "col"])
+    ring["pixel"] = site.positions(ring["row"].to_numpy(), ring["col"].to_numpy())
+    held = np.bincount(own["pixel"].to_numpy(), weights=own["share"].to_numpy(), minlength=max(site.size, 1))
+    ring = ring[ring["pixel"] >= 0].assign(share=0.0)
+    ring["other_share"] = np.minimum(held[ring["pixel"].to_numpy(np.int64)], 1.0)
+    out = pd.concat([own, ring], ignore_index=True).drop_duplicates(["wetland_id", "row", "col"], keep="first")
+    return out.sort_values(["wetland_id", "row", "col"], ignore_index=True)
 
 
 @dataclass(frozen=True, slots=True)
@@ -179,7 +197,8 @@ class WetlandPixels:
     area_m2 : ndarray of float64, shape (n,)
         Area of the wetland's part of each pixel; sums to ``area_max_m2``.
     near : ndarray of int64, shape (n, 24)
-        Positions within this wetland of the pixels at most two rows and columns away, -1 where none.
+        Positions within this wetland of the pixels at most two rows and columns away, -1 where none; the first eight are
+        those that touch: north, west, east, south, then the corners.
     """
 
     name: str
@@ -201,8 +220,7 @@ def _neighbours(row: np.ndarray, col: np.ndarray) -> np.ndarray:
     r, c = row - row.min() + 2, col - col.min() + 2
     place = np.full((int(r.max()) + 3, int(c.max()) + 3), -1, np.int64)
     place[r, c] = np.arange(row.size)
-    steps = [(i, j) for i in (-2, -1, 0, 1, 2) for j in (-2, -1, 0, 1, 2) if (i, j) != (0, 0)]
-    for k, (i, j) in enumerate(steps):
+    for k, (i, j) in enumerate(NEAR_STEPS):
         out[:, k] = place[r + i, c + j]
     return out
 
