@@ -5,9 +5,10 @@ power law with stage offset, monotone spline, elevation), chooses by held-out da
 shifts; :class:`StageAreaRelation` is the same for one wetland as a scikit-learn estimator.
 """
 
+from inundate.relation.estimator import StageAreaRelation
 from inundate.relation.fit import fit_relations
 from inundate.relation.options import RelationOptions
 from inundate.relation.pairs import make_pairs
 from inundate.relation.relations import RelationSet
 
-__all__ = ["RelationOptions", "RelationSet", "fit_relations", "make_pairs"]
+__all__ = ["RelationOptions", "RelationSet", "StageAreaRelation", "fit_relations", "make_pairs"]

@@ -8,9 +8,10 @@ import numpy as np
 import pandas as pd
 
 from inundate.common.seeds import rng_for
-from inundate.relation import solve
+from inundate.relation import reading
 from inundate.relation.families import FAMILY_SIZE, N_PARAM, full_stage
 from inundate.relation.pairs import stack_tables
+from inundate.relation.reading import Drawn, Ground
 
 N_GRID = 241
 AREA_LO, AREA_HI, AREA_SD, VOLUME, VOLUME_LO, VOLUME_HI = range(6)
@@ -23,7 +24,7 @@ def draw_curves(
     weights: np.ndarray,
     datum: np.ndarray,
     random: tuple[int, int],
-) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+) -> Drawn:
     """Draw curves of every unit: families by their weights, parameters about their fits, one datum error each.
 
     Parameters
@@ -57,7 +58,7 @@ def draw_curves(
                 family[u, rows] = code
                 drawn[u, rows] = theta[code][u] + z[rows, :N_PARAM] @ roots[code][u].T
             begin = cut[code]
-    return family, drawn, shift
+    return Drawn(family, drawn, shift)
 
 
 def _roots(cov: np.ndarray, size: int) -> np.ndarray:
@@ -101,20 +102,18 @@ class Curves:
     hypsometry: dict[str, tuple[np.ndarray, np.ndarray]]
     family: np.ndarray = field(init=False)
     best: np.ndarray = field(init=False)
-    which: np.ndarray = field(init=False)
-    tables: np.ndarray = field(init=False)
-    spans: np.ndarray = field(init=False)
+    ground: Ground = field(init=False)
     grid: np.ndarray = field(init=False)
     values: np.ndarray = field(init=False)
-    drawn: tuple[np.ndarray, np.ndarray, np.ndarray] = field(init=False)
+    drawn: Drawn = field(init=False)
 
     def __post_init__(self) -> None:
         """Draw curves and lay the bands out on each unit's grid of stages."""
         self.family = self.weights.argmax(axis=1)
         self.best = np.stack([self.theta[int(f)][u] for u, f in enumerate(self.family)]).reshape(-1, N_PARAM)
         place = {key: i for i, key in enumerate(self.hypsometry)}
-        self.which = self.table["wetland_id"].map(place).fillna(-1).to_numpy(np.int64)
-        self.tables, self.spans = stack_tables(self.hypsometry)
+        which = self.table["wetland_id"].map(place).fillna(-1).to_numpy(np.int64)
+        self.ground = Ground(*stack_tables(self.hypsometry), which)
         keys = list(zip(self.table["wetland_id"], self.table["period"], strict=True))
         self.drawn = draw_curves(
             keys, self.theta, self.cov, self.weights, self.datum_sd_m, (self.seed, self.n_draws)
@@ -129,18 +128,17 @@ class Curves:
 
     def central(self, unit: np.ndarray, stage_m: np.ndarray) -> np.ndarray:
         """Return the share of the largest extent (row,) at each row's stage on its unit's curve."""
-        return solve.share_of_units(
-            self.family, self.best, unit, self.tables, self.spans, self.which, np.asarray(stage_m, float)
+        return reading.share_of_units(
+            self.family, self.best, unit, self.ground, np.asarray(stage_m, float)
         )
 
     def top_stage(self) -> np.ndarray:
         """Return the stage (m) at which each unit's curve reaches its largest extent."""
+        place = np.maximum(self.ground.which, 0)
         return np.array(
             [
-                full_stage(
-                    int(self.family[u]), self.best[u], self.tables[max(self.which[u], 0)], self.spans[max(self.which[u], 0)]
-                )
-                for u in range(self.size)
+                full_stage(int(self.family[u]), self.best[u], self.ground.tables[t], self.ground.spans[t])
+                for u, t in enumerate(place)
             ]
         )
 
@@ -153,11 +151,7 @@ class Curves:
     def _bands(self) -> np.ndarray:
         unit = np.repeat(np.arange(self.size), N_GRID)
         centre = self.central(unit, self.grid.ravel()).reshape(self.grid.shape)
-        family, theta, shift = self.drawn
-        tail = 0.5 * (1.0 - self.level)
-        out = solve.bands(
-            family, theta, shift, self.tables, self.spans, self.which, self.grid, centre, tail
-        )
+        out = reading.bands(self.drawn, self.ground, self.grid, centre, 0.5 * (1.0 - self.level))
         factor = self.widening()
         for low, high, mid, cap in (
             (AREA_LO, AREA_HI, centre, 1.0),
@@ -187,7 +181,7 @@ class Curves:
         stage = np.asarray(stage_m, float)
         size = self.table["area_max_m2"].to_numpy(float)[unit]
         share = self.central(unit, stage)
-        side = solve.band_at(self.grid, self.values[:, :3], unit, stage)
+        side = reading.band_at(self.grid, self.values[:, :3], unit, stage)
         return pd.DataFrame(
             {
                 "stage_m": stage,
@@ -207,11 +201,12 @@ class Curves:
         out = np.empty((n, np.size(stage_m)))
         size = float(self.table["area_max_m2"].iloc[unit])
         stage = np.asarray(stage_m, float)
-        which = self.which[unit : unit + 1]
+        ground = self.ground._replace(which=self.ground.which[unit : unit + 1])
+        at = np.zeros(N_GRID, np.int64)
         for row, d in enumerate(take):
             wet = np.where(grid > 0, grid + shift[unit, d], 0.0)
-            one = solve.share_of_units(
-                family[unit, d : d + 1], theta[unit, d : d + 1], np.zeros(N_GRID, np.int64), self.tables, self.spans, which, wet
+            one = reading.share_of_units(
+                family[unit, d : d + 1], theta[unit, d : d + 1], at, ground, wet
             )
             curve = np.clip(np.maximum.accumulate(centre + factor * (one - centre)), 0.0, 1.0)
             out[row] = np.where(stage > 0, np.interp(stage, grid, curve), 0.0) * size

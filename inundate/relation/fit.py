@@ -10,8 +10,9 @@ import pandas as pd
 
 from inundate.common.codes import LeafCode
 from inundate.common.errors import Refusal
-from inundate.relation import solve
+from inundate.relation import reading, solve
 from inundate.relation.choose import band_scale, choose, date_blocks, mixture_error, stage_blocks
+from inundate.relation.curves import Curves
 from inundate.relation.families import (
     ELEVATION,
     FAMILIES,
@@ -22,11 +23,12 @@ from inundate.relation.families import (
 from inundate.relation.options import RelationOptions
 from inundate.relation.pairs import Units, lay_out
 from inundate.relation.prior import Prior, default_prior, learn_prior
-from inundate.relation.curves import Curves
+from inundate.relation.reading import Ground
 from inundate.relation.relations import RELATION_COLUMNS, RelationSet, named_parameters
 from inundate.relation.shifts import find_hysteresis, find_shifts
 
-_NO_EVIDENCE = np.array([1.0, 6.0, 0.0])
+# Pairs' worth of belief in the noise scale that all wetlands share.
+_NOISE_PAIRS = 6.0
 # Starting belief that extents seen through leaves are twice as uncertain as stated, until their own residuals speak.
 _LEAF_START = 2.0
 
@@ -83,8 +85,8 @@ def fit_relations(
     priors = {code: default_prior(code, units) for code in codes}
     stated = units.pairs[:, 3].copy()
     units.pairs[:, 3] = stated * np.where(_in_leaf(units), _LEAF_START, 1.0)
-    fits = _fit_all(units, codes, priors, options.nu, {code: 1.0 for code in codes})
-    noise = {code: 1.0 for code in codes}
+    noise = dict.fromkeys(codes, 1.0)
+    fits = _fit_all(units, codes, priors, options.nu, noise)
     for _ in range(2):
         inflate = leaf_inflation(units, fits[codes[-1] if codes[-1] != ELEVATION else codes[0]], codes, stated)
         units.pairs[:, 3] = stated * inflate
@@ -118,29 +120,21 @@ def _starts(units: Units, code: int, prior: Prior, fits: dict[int, Fit]) -> np.n
     return starts
 
 
+def ground_of(units: Units) -> Ground:
+    """Return the hypsometry of all units as the compiled code reads it."""
+    return Ground(units.tables, units.spans, units.table["hypsometry"].to_numpy(np.int64))
+
+
 def _fit_all(
     units: Units, codes: list[int], priors: dict[int, Prior], nu: float, noise: dict[int, float]
 ) -> dict[int, Fit]:
-    which = units.table["hypsometry"].to_numpy(np.int64)
     fits: dict[int, Fit] = {}
     for code in codes:
         starts = np.ascontiguousarray(_starts(units, code, priors[code], fits))
-        settings = _NO_EVIDENCE.copy()
-        settings[0] = noise[code]
-        got = solve.fit_units(
-            code,
-            int(FAMILY_SIZE[code]),
-            starts,
-            priors[code].mean,
-            priors[code].precision,
-            units.pairs,
-            units.first,
-            nu,
-            settings,
-            units.tables,
-            units.spans,
-            which,
-        )
+        belief = solve.Belief(priors[code].mean, priors[code].precision)
+        settings = np.array([noise[code], _NOISE_PAIRS, nu])
+        flat = solve.Flat(units.pairs, units.first)
+        got = solve.fit_units(code, int(FAMILY_SIZE[code]), starts, belief, flat, ground_of(units), settings)
         fits[code] = Fit(*got)
     return fits
 
@@ -152,9 +146,9 @@ def _shared_noise(units: Units, fit: Fit) -> float:
 
 def predicted(units: Units, fit: Fit, code: int) -> np.ndarray:
     """Return the fitted share at every pair."""
-    which = units.table["hypsometry"].to_numpy(np.int64)
-    return solve.share_of_units(
-        np.full(fit.theta.shape[0], code), fit.theta, units.unit_of_pair, units.tables, units.spans, which, units.pairs[:, 0]
+    family = np.full(fit.theta.shape[0], code)
+    return reading.share_of_units(
+        family, fit.theta, units.unit_of_pair, ground_of(units), np.ascontiguousarray(units.pairs[:, 0])
     )
 
 
@@ -182,25 +176,13 @@ def leaf_inflation(units: Units, fit: Fit, codes: list[int], stated: np.ndarray)
 def _hold_out(
     units: Units, codes: list[int], priors: dict[int, Prior], fits: dict[int, Fit], blocks: np.ndarray, nu: float
 ) -> dict[int, np.ndarray]:
-    which = units.table["hypsometry"].to_numpy(np.int64)
-    return {
-        code: solve.hold_out(
-            code,
-            int(FAMILY_SIZE[code]),
-            fits[code].theta,
-            priors[code].mean,
-            priors[code].precision,
-            units.pairs,
-            units.first,
-            blocks,
-            nu,
-            fits[code].phi,
-            units.tables,
-            units.spans,
-            which,
-        )
-        for code in codes
-    }
+    flat, ground = solve.Flat(units.pairs, units.first), ground_of(units)
+    out = {}
+    for code in codes:
+        belief = solve.Belief(priors[code].mean, priors[code].precision)
+        fitted = (fits[code].theta, fits[code].phi, float(nu))
+        out[code] = solve.hold_out(code, int(FAMILY_SIZE[code]), fitted, belief, flat, ground, blocks)
+    return out
 
 
 def _scales(
@@ -279,8 +261,8 @@ def _relations_table(
     best = weights.argmax(axis=1)
     table = units.table
     size = table["area_max_m2"].to_numpy(float)
-    rmse = choices.loc[choices["chosen"], ["wetland_id", "period", "heldout_rmse_m2"]]
-    rmse = table[["wetland_id", "period"]].merge(rmse, on=["wetland_id", "period"], how="left")["heldout_rmse_m2"]
+    scores = choices.loc[choices["chosen"], ["wetland_id", "period", "heldout_rmse_m2"]]
+    rmse = table[["wetland_id", "period"]].merge(scores, on=["wetland_id", "period"], how="left")["heldout_rmse_m2"]
     own = np.array([fits[int(f)].own[u] / FAMILY_SIZE[f] for u, f in enumerate(best)])
     words = [
         json.dumps(named_parameters(int(f), fits[int(f)].theta[u], float(size[u]))) for u, f in enumerate(best)

@@ -184,7 +184,7 @@ def lay_out(
     sites = sites.sort_values("wetland_id", kind="stable").reset_index(drop=True)
     tables, spans, laid, place = _hypsometries(hypsometry, sites)
     clean, refused = _clean(pairs, sites, options)
-    clean = _believable(clean, sites, laid, options, refused)
+    clean = _believable(clean, laid, options, refused)
     units = _unit_table(clean, sites, place)
     joined = clean.merge(
         units[["wetland_id", "period", "unit", "area_max_m2"]], on=["wetland_id", "period"], how="left"
@@ -222,8 +222,8 @@ def _hypsometries(
     if hypsometry is not None and len(hypsometry):
         need(hypsometry, "hypsometry", ("wetland_id", "stage_m", "area_m2"))
         known = set(sites["wetland_id"])
-        for key, rows in hypsometry.groupby(hypsometry["wetland_id"].astype(str), sort=True):
-            rows = rows.dropna(subset=["stage_m", "area_m2"]).sort_values("stage_m", kind="stable")
+        for key, found in hypsometry.groupby(hypsometry["wetland_id"].astype(str), sort=True):
+            rows = found.dropna(subset=["stage_m", "area_m2"]).sort_values("stage_m", kind="stable")
             if key not in known or len(rows) < 3 or not rows["area_m2"].max() > 0:
                 continue
             stage, area = rows["stage_m"].to_numpy(float), np.maximum.accumulate(rows["area_m2"].to_numpy(float))
@@ -251,10 +251,12 @@ def _clean(
             clean[column] = value
     clean["censored"] = clean["censored"].fillna(False).astype(bool)
     size = clean["wetland_id"].map(sites.set_index("wetland_id")["area_max_m2"])
-    for column, value in (("stage_sd_m", options.stage_sd_m), ("area_sd_m2", options.area_sd_share * size)):
+    for column in ("stage_sd_m", "area_sd_m2"):
         if column not in clean:
             clean[column] = np.nan
-        clean[column] = clean[column].astype(float).where(clean[column] >= 0).fillna(value)
+        clean[column] = clean[column].astype(float).where(clean[column].astype(float) >= 0)
+    clean["stage_sd_m"] = clean["stage_sd_m"].fillna(options.stage_sd_m)
+    clean["area_sd_m2"] = clean["area_sd_m2"].fillna(options.area_sd_share * size)
     refused: list[Refusal] = []
     for key in sorted(set(clean.loc[size.isna(), "wetland_id"])):
         reason = f"pairs, wetland {key}: it is not among the wetlands; its pairs are left out; add its polygon"
@@ -272,7 +274,6 @@ def _clean(
 
 def _believable(
     clean: pd.DataFrame,
-    sites: pd.DataFrame,
     laid: dict[str, tuple[np.ndarray, np.ndarray]],
     options: RelationOptions,
     refused: list[Refusal],
@@ -301,7 +302,6 @@ def _believable(
         if reason:
             refused.append(Refusal("wetland", str(key), reason))
             keep[rows.index.to_numpy()] = False
-    del sites
     return clean.loc[keep].reset_index(drop=True)
 
 
@@ -321,16 +321,17 @@ def _unit_table(clean: pd.DataFrame, sites: pd.DataFrame, place: dict[str, int])
     following = units.groupby("wetland_id")["start"].shift(-1)
     units["valid_to"] = following - pd.Timedelta(days=1)
     units["hypsometry"] = units["wetland_id"].map(place).fillna(-1).astype(np.int64)
-    units["note"] = [_note(row.n_pairs, row.stage_min_m, row.stage_max_m) for row in units.itertuples()]
+    spread = (units["stage_max_m"] - units["stage_min_m"]).to_numpy(float)
+    units["note"] = [_note(n, wide) for n, wide in zip(units["n_pairs"].to_numpy(), spread, strict=True)]
     units["unit"] = np.arange(len(units))
     return units.drop(columns="start")
 
 
-def _note(n_pairs: int, low: float, high: float) -> str:
+def _note(n_pairs: int, spread_m: float) -> str:
     if n_pairs == 0:
         return "no pairs: the relation rests on other wetlands and elevation alone"
     if n_pairs == 1:
         return "one pair: the shape is borrowed from other wetlands"
-    if high - low < 0.03:
+    if spread_m < 0.03:
         return f"all {n_pairs} pairs lie within 3 cm of stage: the shape is borrowed from other wetlands"
     return ""

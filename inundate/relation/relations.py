@@ -11,7 +11,7 @@ import pandas as pd
 
 from inundate.common.errors import InputError, Refusal
 from inundate.common.writing import plain
-from inundate.relation import solve
+from inundate.relation import reading
 from inundate.relation.curves import Curves
 from inundate.relation.families import ELEVATION, FAMILIES, FAMILY_SIZE, N_PARAM, POWER, SPLINE
 
@@ -78,7 +78,7 @@ class RelationSet:
         self.shifts = tables["shifts"]
         self.hysteresis = tables["hysteresis"]
         self.refused = list(refused)
-        self._rows = {key: rows.to_numpy() for key, rows in curves.table.groupby("wetland_id")["unit"]}
+        self._rows = {str(key): rows.to_numpy() for key, rows in curves.table.groupby("wetland_id")["unit"]}
         self._starts = curves.table["valid_from"].to_numpy("datetime64[ns]")
 
     @property
@@ -187,7 +187,7 @@ class RelationSet:
             message = f"step_m: got {step_m!r}; it must be above 0 m; 0.01 is usual"
             raise InputError(message)
         c = self._curves
-        end = np.minimum(np.maximum(c.top_stage() + step_m, c.table["stage_max_m"].fillna(0.0)), c.grid[:, -1])
+        end = np.minimum(np.maximum(c.top_stage() + step_m, c.table["stage_max_m"].fillna(0.0).to_numpy(float)), c.grid[:, -1])
         count = np.ceil(end / step_m - 1e-9).astype(np.int64) + 1
         if count.size and count.max() > _STEPS_MOST:
             message = f"step_m: {step_m} m gives {count.max()} rows for one wetland; at most {_STEPS_MOST}; take a coarser step"
@@ -196,8 +196,8 @@ class RelationSet:
         stage = (np.arange(unit.size) - np.repeat(np.cumsum(count) - count, count)) * step_m
         out = c.read(unit, stage).drop(columns="area_sd_m2")
         size = c.table["area_max_m2"].to_numpy(float)[unit]
-        side = solve.band_at(c.grid, c.values[:, 3:], unit, stage)
-        volume = solve.volume_of_rows(c.family, c.best, unit, c.tables, c.spans, c.which, stage) * size
+        side = reading.band_at(c.grid, c.values[:, 3:], unit, stage)
+        volume = reading.volume_of_rows(c.family, c.best, unit, c.ground, stage) * size
         base = side[:, 0] * size
         out["volume_m3"] = volume
         out["volume_lo_m3"] = np.clip(volume - np.maximum(base - side[:, 1] * size, 0.0), 0.0, None)

@@ -10,12 +10,53 @@ confirmed period of it). Areas are shares of the largest extent.
 
 from __future__ import annotations
 
+from typing import NamedTuple
+
 import numba as nb
 import numpy as np
 
 from inundate.relation.families import N_PARAM, N_WORK, prepare, share_at
+from inundate.relation.reading import Ground
 
 MAX_STEPS = 40
+STAGE, STAGE_SD, SHARE, SHARE_SD, CENSORED = range(5)
+
+
+class Flat(NamedTuple):
+    """Pairs of all units: ``pairs`` (pair, 5) stage, stage sd, share, share sd, censored; ``first`` (unit + 1,)."""
+
+    pairs: np.ndarray
+    first: np.ndarray
+
+
+class Belief(NamedTuple):
+    """Gaussian prior: ``mean`` (unit, N_PARAM) and ``precision`` (unit, N_PARAM, N_PARAM)."""
+
+    mean: np.ndarray
+    precision: np.ndarray
+
+
+class One(NamedTuple):
+    """Everything that one unit's fit reads."""
+
+    mean: np.ndarray
+    precision: np.ndarray
+    pairs: np.ndarray
+    use: np.ndarray
+    table: np.ndarray
+    span: np.ndarray
+    nu: float
+
+
+class Space(NamedTuple):
+    """Scratch of one fit: Jacobian (pair, N_PARAM), value, raw sd, sd (pair,), slope (N_PARAM,), curve numbers (N_WORK,)."""
+
+    jac: np.ndarray
+    value: np.ndarray
+    raw: np.ndarray
+    sigma: np.ndarray
+    slope: np.ndarray
+    work: np.ndarray
 
 
 @nb.njit(cache=True, nogil=True)
@@ -49,180 +90,178 @@ def _solve_lower(lower: np.ndarray, size: int, right: np.ndarray, out: np.ndarra
 
 
 @nb.njit(cache=True, nogil=True)
-def inverse(matrix: np.ndarray, size: int, out: np.ndarray) -> bool:
-    """Invert the leading ``size`` block of a positive definite matrix into ``out``; false when it is not one."""
+def _invert(matrix: np.ndarray, size: int, out: np.ndarray) -> None:
     lower = np.zeros((N_PARAM, N_PARAM))
-    if not _cholesky(matrix, size, lower):
-        return False
-    unit = np.zeros(N_PARAM)
-    column = np.zeros(N_PARAM)
+    _cholesky(matrix, size, lower)
+    unit, column = np.zeros(N_PARAM), np.zeros(N_PARAM)
     for j in range(size):
         unit[:] = 0.0
         unit[j] = 1.0
         _solve_lower(lower, size, unit, column)
         for i in range(size):
             out[i, j] = column[i]
-    return True
 
 
 @nb.njit(cache=True, nogil=True)
-def _residual(y: float, value: float, censored: bool) -> float:
+def _residual(y: float, value: float, censored: float) -> float:
     gap = y - value
-    return max(gap, 0.0) if censored else gap
+    return max(gap, 0.0) if censored > 0.5 else gap
 
 
 @nb.njit(cache=True, nogil=True)
-def raw_sigma(family, work, table, span, h, sh, sy):  # noqa: ANN001, ANN201
-    """Return the effective sd of one pair: area sd and stage sd times the local slope."""
+def raw_sigma(family: int, work: np.ndarray, table: np.ndarray, span: np.ndarray, pair: np.ndarray) -> float:
+    """Return the effective sd of one pair: area sd, and stage sd times the slope over that sd."""
+    h, sh, sy = pair[STAGE], pair[STAGE_SD], pair[SHARE_SD]
     reach = max(sh, 0.005)
     rise = share_at(family, work, table, span, h + reach) - share_at(family, work, table, span, h - reach)
     return np.sqrt(sy * sy + (rise / (2.0 * reach) * sh) ** 2)
 
 
 @nb.njit(cache=True, nogil=True)
-def _prior_cost(theta, mean, precision, size):  # noqa: ANN001, ANN202
+def _cost(family: int, size: int, theta: np.ndarray, one: One, space: Space) -> float:
+    prepare(family, theta, space.work)
     total = 0.0
     for i in range(size):
         for j in range(size):
-            total += (theta[i] - mean[i]) * precision[i, j] * (theta[j] - mean[j])
-    return 0.5 * total
-
-
-@nb.njit(cache=True, nogil=True)
-def _cost(family, size, theta, mean, precision, pairs, use, sigma, nu, table, span, work):  # noqa: ANN001, ANN202
-    prepare(family, theta, work)
-    total = _prior_cost(theta, mean, precision, size)
-    for i in range(pairs.shape[0]):
-        if use[i]:
-            value = share_at(family, work, table, span, pairs[i, 0])
-            z = _residual(pairs[i, 2], value, pairs[i, 4] > 0.5) / sigma[i]
-            total += 0.5 * (nu + 1.0) * np.log1p(z * z / nu)
+            total += 0.5 * (theta[i] - one.mean[i]) * one.precision[i, j] * (theta[j] - one.mean[j])
+    for i in range(one.use.size):
+        if one.use[i]:
+            value = share_at(family, space.work, one.table, one.span, one.pairs[i, STAGE])
+            z = _residual(one.pairs[i, SHARE], value, one.pairs[i, CENSORED]) / space.sigma[i]
+            total += 0.5 * (one.nu + 1.0) * np.log1p(z * z / one.nu)
     return total
 
 
 @nb.njit(cache=True, nogil=True)
-def gradient(family, size, theta, table, span, h, work, out):  # noqa: ANN001, ANN201
-    """Write d share / d parameter at one stage into ``out`` (central differences)."""
+def gradient(
+    family: int, size: int, theta: np.ndarray, ground: tuple[np.ndarray, np.ndarray], h: float, out: np.ndarray
+) -> None:
+    """Write d share / d parameter at stage ``h`` into ``out`` (central differences); ``ground`` is (table, span)."""
+    table, span = ground
+    work = np.zeros(N_WORK)
     probe = theta.copy()
     for j in range(size):
-        step = 1e-4
-        probe[j] = theta[j] + step
+        probe[j] = theta[j] + 1e-4
         prepare(family, probe, work)
         up = share_at(family, work, table, span, h)
-        probe[j] = theta[j] - step
+        probe[j] = theta[j] - 1e-4
         prepare(family, probe, work)
-        out[j] = (up - share_at(family, work, table, span, h)) / (2.0 * step)
+        out[j] = (up - share_at(family, work, table, span, h)) / 2e-4
         probe[j] = theta[j]
 
 
 @nb.njit(cache=True, nogil=True)
-def _jacobian(family, size, theta, pairs, table, span, work, out, value):  # noqa: ANN001, ANN202
-    prepare(family, theta, work)
-    n = pairs.shape[0]
+def _linearise(family: int, size: int, theta: np.ndarray, phi: float, one: One, space: Space) -> None:
+    prepare(family, theta, space.work)
+    n = one.use.size
     for i in range(n):
-        value[i] = share_at(family, work, table, span, pairs[i, 0])
+        space.value[i] = share_at(family, space.work, one.table, one.span, one.pairs[i, STAGE])
+        space.raw[i] = raw_sigma(family, space.work, one.table, one.span, one.pairs[i])
+        space.sigma[i] = phi * space.raw[i]
     probe = theta.copy()
     for j in range(size):
         probe[j] = theta[j] + 1e-5
-        prepare(family, probe, work)
+        prepare(family, probe, space.work)
         for i in range(n):
-            out[i, j] = (share_at(family, work, table, span, pairs[i, 0]) - value[i]) / 1e-5
+            value = share_at(family, space.work, one.table, one.span, one.pairs[i, STAGE])
+            space.jac[i, j] = (value - space.value[i]) / 1e-5
         probe[j] = theta[j]
-    prepare(family, theta, work)
 
 
 @nb.njit(cache=True, nogil=True)
-def fit_one(family, size, theta, mean, precision, pairs, use, phi, nu, table, span, info):  # noqa: ANN001, ANN201
-    """Fit one curve from ``theta`` (changed in place); ``info`` receives the data's information matrix.
+def _curvature(size: int, theta: np.ndarray, one: One, space: Space, info: np.ndarray) -> None:
+    """Fill the pairs' information matrix and the downhill slope at ``theta``."""
+    info[:, :] = 0.0
+    for a in range(size):
+        space.slope[a] = 0.0
+        for b in range(size):
+            space.slope[a] += one.precision[a, b] * (one.mean[b] - theta[b])
+    for i in range(one.use.size):
+        gap = _residual(one.pairs[i, SHARE], space.value[i], one.pairs[i, CENSORED])
+        if not one.use[i] or (one.pairs[i, CENSORED] > 0.5 and gap == 0.0):
+            continue
+        z = gap / space.sigma[i]
+        heft = (one.nu + 1.0) / (one.nu + z * z) / (space.sigma[i] * space.sigma[i])
+        for a in range(size):
+            space.slope[a] += heft * space.jac[i, a] * gap
+            for b in range(size):
+                info[a, b] += heft * space.jac[i, a] * space.jac[i, b]
 
-    ``pairs`` has columns stage, stage sd, share, share sd, censored (0/1). Returns the cost, the weighted sum of squared
-    raw residuals (for the noise scale) and the number of pairs in use.
-    """
-    n = pairs.shape[0]
-    work = np.zeros(N_WORK)
-    jac = np.zeros((n, N_PARAM))
-    value = np.zeros(n)
-    raw = np.zeros(n)
-    sigma = np.ones(n)
+
+@nb.njit(cache=True, nogil=True)
+def _step(size: int, damp: float, one: One, space: Space, info: np.ndarray, move: np.ndarray) -> bool:
     matrix = np.zeros((N_PARAM, N_PARAM))
     lower = np.zeros((N_PARAM, N_PARAM))
-    slope = np.zeros(N_PARAM)
-    move = np.zeros(N_PARAM)
-    trial = theta.copy()
-    damp = 1e-3
-    cost = 0.0
-    fresh = True
+    for a in range(size):
+        for b in range(size):
+            matrix[a, b] = info[a, b] + one.precision[a, b]
+        matrix[a, a] *= 1.0 + damp
+    if not _cholesky(matrix, size, lower):
+        return False
+    _solve_lower(lower, size, space.slope, move)
+    return True
+
+
+@nb.njit(cache=True, nogil=True)
+def fit_one(family: int, size: int, theta: np.ndarray, phi: float, one: One, info: np.ndarray) -> tuple[float, float, float]:
+    """Fit one curve from ``theta`` (changed in place); ``info`` receives the information of the pairs.
+
+    Returns the cost, the weighted sum of squared raw residuals (for the noise scale) and the number of pairs that count.
+    """
+    n = one.use.size
+    space = Space(
+        np.zeros((n, N_PARAM)), np.zeros(n), np.ones(n), np.ones(n), np.zeros(N_PARAM), np.zeros(N_WORK)
+    )
+    move, trial = np.zeros(N_PARAM), theta.copy()
+    damp, cost, fresh = 1e-3, 0.0, True
     for _ in range(MAX_STEPS):
         if fresh:
-            _jacobian(family, size, theta, pairs, table, span, work, jac, value)
-            for i in range(n):
-                raw[i] = raw_sigma(family, work, table, span, pairs[i, 0], pairs[i, 1], pairs[i, 3])
-                sigma[i] = phi * raw[i]
-            cost = _cost(family, size, theta, mean, precision, pairs, use, sigma, nu, table, span, work)
-            info[:, :] = 0.0
-            for a in range(size):
-                slope[a] = 0.0
-                for b in range(size):
-                    slope[a] += precision[a, b] * (mean[b] - theta[b])
-            for i in range(n):
-                if not use[i]:
-                    continue
-                gap = _residual(pairs[i, 2], value[i], pairs[i, 4] > 0.5)
-                if pairs[i, 4] > 0.5 and gap == 0.0:
-                    continue
-                z = gap / sigma[i]
-                heft = (nu + 1.0) / (nu + z * z) / (sigma[i] * sigma[i])
-                for a in range(size):
-                    slope[a] += heft * jac[i, a] * gap
-                    for b in range(a + 1):
-                        info[a, b] += heft * jac[i, a] * jac[i, b]
-            for a in range(size):
-                for b in range(a):
-                    info[b, a] = info[a, b]
-        for a in range(size):
-            for b in range(size):
-                matrix[a, b] = info[a, b] + precision[a, b]
-            matrix[a, a] *= 1.0 + damp
-        if not _cholesky(matrix, size, lower):
-            damp = damp * 10.0 + 1e-6
-            fresh = False
+            _linearise(family, size, theta, phi, one, space)
+            cost = _cost(family, size, theta, one, space)
+            _curvature(size, theta, one, space, info)
+        if not _step(size, damp, one, space, info, move):
+            damp, fresh = damp * 10.0 + 1e-6, False
             continue
-        _solve_lower(lower, size, slope, move)
         longest = 0.0
         for a in range(size):
             move[a] = min(max(move[a], -1.0), 1.0)
             trial[a] = theta[a] + move[a]
             longest = max(longest, abs(move[a]))
-        new = _cost(family, size, trial, mean, precision, pairs, use, sigma, nu, table, span, work)
-        if new <= cost:
-            for a in range(size):
-                theta[a] = trial[a]
+        new = _cost(family, size, trial, one, space)
+        fresh = new <= cost
+        if fresh:
+            theta[:] = trial
             damp = max(damp * 0.2, 1e-9)
-            fresh = True
             if longest < 1e-4 or cost - new < 1e-7 * (1.0 + abs(cost)):
                 break
         else:
             damp *= 6.0
-            fresh = False
             if longest < 1e-5 or damp > 1e8:
                 break
-    total, count = 0.0, 0.0
-    for i in range(n):
-        if use[i] and not (pairs[i, 4] > 0.5 and pairs[i, 2] <= value[i]):
-            z = _residual(pairs[i, 2], value[i], pairs[i, 4] > 0.5) / raw[i]
-            total += (nu + 1.0) / (nu + (z / phi) ** 2) * z * z
-            count += 1.0
-    return cost, total, count
+    return cost, *_spread_of_residuals(phi, one, space)
 
 
 @nb.njit(cache=True, nogil=True)
-def _posterior(size, info, precision, cov):  # noqa: ANN001, ANN202
+def _spread_of_residuals(phi: float, one: One, space: Space) -> tuple[float, float]:
+    total, count = 0.0, 0.0
+    for i in range(one.use.size):
+        gap = _residual(one.pairs[i, SHARE], space.value[i], one.pairs[i, CENSORED])
+        if one.use[i] and not (one.pairs[i, CENSORED] > 0.5 and gap == 0.0):
+            z = gap / space.raw[i]
+            total += (one.nu + 1.0) / (one.nu + (z / phi) ** 2) * z * z
+            count += 1.0
+    return total, count
+
+
+@nb.njit(cache=True, nogil=True)
+def posterior(size: int, info: np.ndarray, precision: np.ndarray, cov: np.ndarray) -> float:
+    """Write the posterior covariance into ``cov``; return how many parameters the pairs decide."""
     matrix = np.zeros((N_PARAM, N_PARAM))
     for a in range(size):
         for b in range(size):
             matrix[a, b] = info[a, b] + precision[a, b]
         matrix[a, a] += 1e-9
-    inverse(matrix, size, cov)
+    _invert(matrix, size, cov)
     own = 0.0
     for a in range(size):
         for b in range(size):
@@ -231,16 +270,14 @@ def _posterior(size, info, precision, cov):  # noqa: ANN001, ANN202
 
 
 @nb.njit(cache=True, nogil=True)
-def _with_scale(family, size, theta, mean, precision, pairs, use, nu, noise, table, span, info, cov):  # noqa: ANN001, ANN202
-    """Fit with the noise scale renewed between rounds; ``noise`` holds (prior scale, prior count, fixed scale or 0)."""
-    phi = noise[2] if noise[2] > 0 else noise[0]
-    cost, own = 0.0, 0.0
-    rounds = 1 if noise[2] > 0 else 4
-    for _ in range(rounds):
-        cost, total, count = fit_one(family, size, theta, mean, precision, pairs, use, phi, nu, table, span, info)
-        own = _posterior(size, info, precision, cov)
-        if noise[2] > 0:
-            break
+def _with_scale(
+    family: int, size: int, theta: np.ndarray, one: One, noise: np.ndarray, info: np.ndarray, cov: np.ndarray
+) -> tuple[float, float, float]:
+    """Fit with the noise scale renewed between rounds; ``noise`` holds its prior value and that value's worth in pairs."""
+    phi, cost, own = noise[0], 0.0, 0.0
+    for _ in range(4):
+        cost, total, count = fit_one(family, size, theta, phi, one, info)
+        own = posterior(size, info, one.precision, cov)
         old = phi
         phi = np.sqrt((total + noise[1] * noise[0] ** 2) / (max(count - own, 0.25 * count) + noise[1]))
         phi = min(max(phi, 0.2), 8.0)
@@ -250,7 +287,9 @@ def _with_scale(family, size, theta, mean, precision, pairs, use, nu, noise, tab
 
 
 @nb.njit(cache=True, nogil=True)
-def fit_units(family, size, starts, mean, precision, pairs, first, nu, noise, tables, spans, which):  # noqa: ANN001, ANN201
+def fit_units(
+    family: int, size: int, starts: np.ndarray, belief: Belief, flat: Flat, ground: Ground, noise: np.ndarray
+) -> tuple[np.ndarray, np.ndarray, np.ndarray, np.ndarray, np.ndarray]:
     """Fit one family to every unit.
 
     Parameters
@@ -259,230 +298,103 @@ def fit_units(family, size, starts, mean, precision, pairs, first, nu, noise, ta
         Family code and its number of parameters.
     starts : ndarray, shape (unit, start, N_PARAM)
         Starting points; the fit of lowest cost is kept.
-    mean : ndarray, shape (unit, N_PARAM); precision : ndarray, shape (unit, N_PARAM, N_PARAM)
-        Gaussian prior.
-    pairs : ndarray, shape (pair, 5)
-        Stage, stage sd, share, share sd, censored.
-    first : ndarray of int, shape (unit + 1,)
-    nu : float
-        Degrees of freedom of the Student-t.
+    belief : Belief
+    flat : Flat
+    ground : Ground
     noise : ndarray, shape (3,)
-        Prior noise scale, its weight in pairs, and a fixed scale (0 to estimate it).
-    tables, spans : ndarray
-        Hypsometry tables (table, level, column) and spans (table, 2).
-    which : ndarray of int, shape (unit,)
-        Table of each unit; -1 for none.
+        Prior noise scale, its worth in pairs, and the degrees of freedom of the Student-t.
 
     Returns
     -------
     theta (unit, N_PARAM), info (unit, N_PARAM, N_PARAM), cov (same), phi (unit,), own (unit,)
-        ``own`` is the effective number of parameters that the data decide.
+        ``own`` is the effective number of parameters that the pairs decide.
     """
-    units = first.size - 1
+    units = flat.first.size - 1
     theta = np.zeros((units, N_PARAM))
     info = np.zeros((units, N_PARAM, N_PARAM))
     cov = np.zeros((units, N_PARAM, N_PARAM))
-    phi = np.ones(units)
-    own = np.zeros(units)
-    one_info = np.zeros((N_PARAM, N_PARAM))
-    one_cov = np.zeros((N_PARAM, N_PARAM))
+    phi, own = np.ones(units), np.zeros(units)
+    one_info, one_cov = np.zeros((N_PARAM, N_PARAM)), np.zeros((N_PARAM, N_PARAM))
     for u in range(units):
-        mine = pairs[first[u] : first[u + 1]]
+        mine = flat.pairs[flat.first[u] : flat.first[u + 1]]
+        t = max(ground.which[u], 0)
         use = np.ones(mine.shape[0], np.bool_)
-        table, span = tables[max(which[u], 0)], spans[max(which[u], 0)]
+        one = One(belief.mean[u], belief.precision[u], mine, use, ground.tables[t], ground.spans[t], noise[2])
         best = np.inf
         for s in range(starts.shape[1]):
             guess = starts[u, s].copy()
             one_cov[:, :] = 0.0
-            got = _with_scale(
-                family, size, guess, mean[u], precision[u], mine, use, nu, noise, table, span, one_info, one_cov
-            )
+            got = _with_scale(family, size, guess, one, noise, one_info, one_cov)
             rank = got[0] + mine.shape[0] * np.log(got[1])
             if rank < best - 1e-9:
                 best = rank
-                theta[u] = guess
-                info[u] = one_info
-                cov[u] = one_cov
-                phi[u] = got[1]
-                own[u] = got[2]
+                theta[u], info[u], cov[u] = guess, one_info, one_cov
+                phi[u], own[u] = got[1], got[2]
     return theta, info, cov, phi, own
 
 
 @nb.njit(cache=True, nogil=True)
-def hold_out(family, size, theta, mean, precision, pairs, first, blocks, nu, phi, tables, spans, which):  # noqa: ANN001, ANN201
+def hold_out(
+    family: int, size: int, fitted: tuple[np.ndarray, np.ndarray, float], belief: Belief, flat: Flat, ground: Ground, blocks: np.ndarray
+) -> np.ndarray:
     """Refit without each block in turn and predict the block.
-
-    ``blocks`` (pair,) numbers the blocks of each unit from 0; -1 is never held out. Returns an array (pair, 4): predicted
-    share, its model sd, the noise sd there, and 1 where the stage lies outside the stages fitted to; NaN where nothing was
-    held out.
-    """
-    out = np.full((pairs.shape[0], 4), np.nan)
-    info = np.zeros((N_PARAM, N_PARAM))
-    cov = np.zeros((N_PARAM, N_PARAM))
-    work = np.zeros(N_WORK)
-    slope = np.zeros(N_PARAM)
-    for u in range(first.size - 1):
-        lo, hi = first[u], first[u + 1]
-        if hi - lo < 2:
-            continue
-        table, span = tables[max(which[u], 0)], spans[max(which[u], 0)]
-        for k in range(blocks[lo:hi].max() + 1):
-            use = blocks[lo:hi] != k
-            left = use.sum()
-            if left == 0 or left == hi - lo:
-                continue
-            guess = theta[u].copy()
-            fit_one(family, size, guess, mean[u], precision[u], pairs[lo:hi], use, phi[u], nu, table, span, info)
-            cov[:, :] = 0.0
-            _posterior(size, info, precision[u], cov)
-            low, high = np.inf, -np.inf
-            for i in range(lo, hi):
-                if use[i - lo]:
-                    low, high = min(low, pairs[i, 0]), max(high, pairs[i, 0])
-            for i in range(lo, hi):
-                if use[i - lo]:
-                    continue
-                h = pairs[i, 0]
-                gradient(family, size, guess, table, span, h, work, slope)
-                spread = 0.0
-                for a in range(size):
-                    for b in range(size):
-                        spread += slope[a] * cov[a, b] * slope[b]
-                prepare(family, guess, work)
-                out[i, 0] = share_at(family, work, table, span, h)
-                out[i, 1] = np.sqrt(max(spread, 0.0))
-                out[i, 2] = phi[u] * raw_sigma(family, work, table, span, h, pairs[i, 1], pairs[i, 3])
-                out[i, 3] = 1.0 if h < low or h > high else 0.0
-    return out
-
-
-@nb.njit(cache=True, nogil=True)
-def bands(families, draws, shift, tables, spans, which, grid, centre, tail):  # noqa: ANN001, ANN201
-    """Quantiles of area and volume over draws of curves.
 
     Parameters
     ----------
-    families : ndarray of int, shape (unit, draw); draws : ndarray, shape (unit, draw, N_PARAM)
-    shift : ndarray, shape (unit, draw)
-        Stage datum error of each draw, m.
-    grid : ndarray, shape (unit, step)
-        Stages from 0 up, m.
-    centre : ndarray, shape (unit, step)
-        The chosen curve.
-    tail : float
-        Share of draws left out on each side.
+    fitted : (theta (unit, N_PARAM), phi (unit,), nu)
+        Full fits, where each refit starts.
+    blocks : ndarray of int, shape (pair,)
+        Blocks of each unit numbered from 0; -1 is never held out. Others as in :func:`fit_units`.
 
     Returns
     -------
-    ndarray, shape (unit, 6, step): area low, high, sd about the chosen curve, volume (share x m) of it, low, high.
+    ndarray, shape (pair, 4)
+        Predicted share, its model sd, the noise sd there, and 1 where the stage lies outside the stages fitted to; NaN where
+        nothing was held out.
     """
-    units, n = families.shape
-    steps = grid.shape[1]
-    out = np.zeros((units, 6, steps))
-    works = np.zeros((n, N_WORK))
-    column = np.zeros(n)
-    last = np.zeros(n)
-    volume = np.zeros(n)
-    place_lo, place_hi = tail * (n - 1), (1.0 - tail) * (n - 1)
-    for u in range(units):
-        table, span = tables[max(which[u], 0)], spans[max(which[u], 0)]
-        for d in range(n):
-            prepare(families[u, d], draws[u, d], works[d])
-            last[d] = 0.0
-            volume[d] = 0.0
-        for g in range(steps):
-            h = grid[u, g]
-            width = h - grid[u, g - 1] if g > 0 else 0.0
-            square = 0.0
-            for d in range(n):
-                value = 0.0
-                if h > 0.0:
-                    value = share_at(families[u, d], works[d], table, span, h + shift[u, d])
-                volume[d] += 0.5 * width * (value + last[d])
-                last[d] = value
-                column[d] = value
-                square += (value - centre[u, g]) ** 2
-            out[u, 2, g] = np.sqrt(square / n)
-            column.sort()
-            out[u, 0, g] = _quantile(column, place_lo)
-            out[u, 1, g] = _quantile(column, place_hi)
-            column[:] = volume
-            column.sort()
-            out[u, 4, g] = _quantile(column, place_lo)
-            out[u, 5, g] = _quantile(column, place_hi)
-            if g > 0:
-                out[u, 3, g] = out[u, 3, g - 1] + 0.5 * width * (centre[u, g] + centre[u, g - 1])
-    return out
-
-
-@nb.njit(cache=True, nogil=True)
-def _quantile(rising: np.ndarray, place: float) -> float:
-    i = min(int(place), rising.size - 2)
-    return rising[i] + (place - i) * (rising[i + 1] - rising[i])
-
-
-@nb.njit(cache=True, nogil=True)
-def share_of_units(family, theta, unit, tables, spans, which, stage):  # noqa: ANN001, ANN201
-    """Return the share at each row's stage on the curve of the row's unit; ``family`` (unit,), ``unit`` (row,)."""
-    out = np.empty(stage.size)
-    work = np.zeros(N_WORK)
-    last = -1
-    for i in range(stage.size):
-        u = unit[i]
-        if u != last:
-            prepare(family[u], theta[u], work)
-            last = u
-        out[i] = np.nan
-        if not np.isnan(stage[i]):
-            out[i] = share_at(family[u], work, tables[max(which[u], 0)], spans[max(which[u], 0)], stage[i])
-    return out
-
-
-@nb.njit(cache=True, nogil=True)
-def band_at(grid, values, unit, stage):  # noqa: ANN001, ANN201
-    """Interpolate band values (unit, kind, step) on rising stages ``grid`` (unit, step) at each row; returns (row, kind)."""
-    kinds, steps = values.shape[1], values.shape[2]
-    out = np.empty((stage.size, kinds))
-    for i in range(stage.size):
-        u = unit[i]
-        h = stage[i]
-        if np.isnan(h):
-            out[i] = np.nan
+    theta, phi, nu = fitted
+    out = np.full((flat.pairs.shape[0], 4), np.nan)
+    info = np.zeros((N_PARAM, N_PARAM))
+    for u in range(flat.first.size - 1):
+        lo, hi = flat.first[u], flat.first[u + 1]
+        if hi - lo < 2:
             continue
-        if h <= 0.0:
-            out[i] = 0.0
-            continue
-        j = np.searchsorted(grid[u], h) - 1
-        j = min(max(j, 0), steps - 2)
-        part = min((h - grid[u, j]) / (grid[u, j + 1] - grid[u, j]), 1.0)
-        for k in range(kinds):
-            out[i, k] = values[u, k, j] + part * (values[u, k, j + 1] - values[u, k, j])
+        t = max(ground.which[u], 0)
+        for k in range(blocks[lo:hi].max() + 1):
+            use = blocks[lo:hi] != k
+            if use.sum() == 0 or use.all():
+                continue
+            one = One(
+                belief.mean[u], belief.precision[u], flat.pairs[lo:hi], use, ground.tables[t], ground.spans[t], nu
+            )
+            guess = theta[u].copy()
+            fit_one(family, size, guess, phi[u], one, info)
+            _predict_left_out(family, size, guess, phi[u], one, info, out[lo:hi])
     return out
 
 
 @nb.njit(cache=True, nogil=True)
-def volume_of_rows(family, theta, unit, tables, spans, which, stage):  # noqa: ANN001, ANN201
-    """Return the integral of share over stage (m) from 0 to each row's stage.
-
-    Rows of a unit must follow each other with rising stage, the first at or below 0; each step is integrated by the
-    three-point Gauss-Legendre rule on four parts.
-    """
-    out = np.zeros(stage.size)
-    work = np.zeros(N_WORK)
-    node = np.sqrt(0.6)
-    for i in range(stage.size):
-        u = unit[i]
-        table, span = tables[max(which[u], 0)], spans[max(which[u], 0)]
-        if i == 0 or unit[i - 1] != u:
-            prepare(family[u], theta[u], work)
-            out[i] = 0.0
+def _predict_left_out(
+    family: int, size: int, theta: np.ndarray, phi: float, one: One, info: np.ndarray, out: np.ndarray
+) -> None:
+    cov = np.zeros((N_PARAM, N_PARAM))
+    slope, work = np.zeros(N_PARAM), np.zeros(N_WORK)
+    posterior(size, info, one.precision, cov)
+    low, high = np.inf, -np.inf
+    for i in range(one.use.size):
+        if one.use[i]:
+            low, high = min(low, one.pairs[i, STAGE]), max(high, one.pairs[i, STAGE])
+    prepare(family, theta, work)
+    for i in range(one.use.size):
+        if one.use[i]:
             continue
-        total = 0.0
-        half = (stage[i] - stage[i - 1]) / 8.0
-        for part in range(4):
-            middle = stage[i - 1] + (2 * part + 1) * half
-            total += 5.0 * share_at(family[u], work, table, span, middle - node * half)
-            total += 8.0 * share_at(family[u], work, table, span, middle)
-            total += 5.0 * share_at(family[u], work, table, span, middle + node * half)
-        out[i] = out[i - 1] + total * half / 9.0
-    return out
+        h = one.pairs[i, STAGE]
+        gradient(family, size, theta, (one.table, one.span), h, slope)
+        spread = 0.0
+        for a in range(size):
+            for b in range(size):
+                spread += slope[a] * cov[a, b] * slope[b]
+        out[i, 0] = share_at(family, work, one.table, one.span, h)
+        out[i, 1] = np.sqrt(max(spread, 0.0))
+        out[i, 2] = phi * raw_sigma(family, work, one.table, one.span, one.pairs[i])
+        out[i, 3] = 1.0 if h < low or h > high else 0.0
