@@ -19,7 +19,7 @@ _BISQUARE = 4.685  # 95 % efficiency under normal errors (Holland and Welsch 197
 _MAD_TO_SD = 1.4826
 _ITERATIONS = 8
 _CONVERGED_PX = 3e-3
-_MIN_POINTS = 24
+_MIN_POINTS = 8
 
 
 @dataclass(frozen=True, slots=True)
