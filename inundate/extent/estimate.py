@@ -132,14 +132,37 @@ def expected_fraction(filling: np.ndarray, wetland: WetlandPixels, blur: float) 
     return np.ascontiguousarray(e, dtype=np.float32)
 
 
+def with_gradients(e: np.ndarray, wetland: WetlandPixels) -> np.ndarray:
+    """Stack expected fractions with their change for a shift of one pixel along columns and rows: (3, pixel, step).
+
+    Central differences; pixels not held count 0.
+    """
+    padded = np.vstack([e, np.zeros((1, e.shape[1]), e.dtype)])
+    out = np.empty((3, *e.shape), np.float32)
+    out[0] = e
+    up, left, right, down = (padded[wetland.near[:, k]] for k in range(4))
+    out[1], out[2] = 0.5 * (left - right), 0.5 * (up - down)
+    return out
+
+
 def weigh(views: Views, shape: Shape, wetland: WetlandPixels, noise: NoiseModel) -> tuple[np.ndarray, np.ndarray]:
-    """Posterior over steps of area, and misfit, of each scene: float64 (scene, step) and (scene,)."""
-    e = expected_fraction(shape.filling, wetland, noise.blur)
+    """Posterior over steps of area (scene, step), and what :func:`posteriors` says beside it (scene, 4); float64."""
+    e = with_gradients(expected_fraction(shape.filling, wetland, noise.blur), wetland)
     strangers = 1.0 + 4.0 * np.minimum(wetland.other, 0.5)
     widen = np.ascontiguousarray(views.widen * strangers[None, :], dtype=np.float32)
-    shared = np.array([noise.rho, noise.temper])
+    shared = np.array([noise.rho, noise.temper, noise.shift_px])
     fraction = np.ascontiguousarray(views.fraction, dtype=np.float32)
     return posteriors(fraction, views.kind, widen, e, noise.table, shared, np.log(noise.area_prior))
+
+
+def fitted_fraction(
+    post: np.ndarray, rest: np.ndarray, shape: Shape, wetland: WetlandPixels, noise: NoiseModel
+) -> tuple[np.ndarray, np.ndarray]:
+    """Expected water fraction of whole pixels given the posterior: as the ground lies, and as shifted; (scene, pixel)."""
+    e = with_gradients(expected_fraction(shape.filling, wetland, noise.blur), wetland).astype(float)
+    still = post @ e[0].T
+    moved = still + rest[:, 2:3] * (post @ e[1].T) + rest[:, 3:4] * (post @ e[2].T)
+    return still, np.clip(moved, 0.0, 1.0)
 
 
 def pixel_terms(views: Views, noise: NoiseModel, e: np.ndarray) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
@@ -166,14 +189,14 @@ def areas(views: Views, shape: Shape, wetland: WetlandPixels, noise: NoiseModel)
     area, sd : ndarray of float64, shape (scene,)
         Share of the largest extent, 0..1.
     """
-    post, misfit, _ = weigh(views, shape, wetland, noise)
+    post, rest = weigh(views, shape, wetland, noise)
     steps = post.shape[1]
     level = np.linspace(0.0, 1.0, steps)
     mean = post @ level
     var = np.maximum(post @ level**2 - mean**2, 0.0) + 1.0 / (12.0 * (steps - 1) ** 2)
-    var *= np.clip(misfit, 1.0, 4.0)
+    var *= np.clip(rest[:, 0], 1.0, 4.0)
     filled = post @ shape.filling.T.astype(float)
-    e = post @ expected_fraction(shape.filling, wetland, noise.blur).T.astype(float)
+    _, e = fitted_fraction(post, rest, shape, wetland, noise)
     value, error, _ = pixel_terms(views, noise, e)
     mixed = 0.9 * 4 * filled * (1 - filled) + 0.02
     own = shape.departure_var * mixed * wetland.share[None, :] ** 2

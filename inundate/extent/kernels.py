@@ -10,7 +10,60 @@ OUTLIER = 9.0
 
 
 @njit(cache=True, nogil=True, fastmath=True)
-def posteriors(  # noqa: PLR0912
+def _add_pixel(
+    sums: np.ndarray, f: float, row: np.ndarray, wide: float, e: np.ndarray, gx: np.ndarray, gy: np.ndarray
+) -> None:
+    """Add one pixel to the sums (11, step): square, variance product, pull, and what shared errors need."""
+    offset, slope, pure, mixed = row[0], row[1], row[2] * wide, row[3] * wide * 4.0
+    for k in range(e.size):
+        water = np.float64(e[k])
+        v = pure + mixed * water * (1.0 - water)
+        inverse = 1.0 / v
+        r = f - offset - slope * water
+        z = r * r * inverse
+        w = 1.0 / (1.0 + z * (1.0 / OUTLIER))
+        root = np.sqrt(inverse)
+        x, y = slope * gx[k] * root, slope * gy[k] * root
+        u = r * root
+        sums[0, k] += z * w
+        sums[1, k] *= v
+        sums[2, k] += w
+        sums[3, k] += w * u
+        sums[4, k] += w * u * x
+        sums[5, k] += w * u * y
+        sums[6, k] += w * x
+        sums[7, k] += w * y
+        sums[8, k] += w * x * x
+        sums[9, k] += w * x * y
+        sums[10, k] += w * y * y
+
+
+@njit(cache=True, nogil=True, fastmath=True)
+def _settle_step(s: np.ndarray, logs: float, rho: float, per_shift: float) -> tuple[float, float, float]:
+    """Log-likelihood of one step with its shared errors integrated out, and the most likely shift."""
+    left = 1.0 - rho
+    a, b, c = s[8] / left + per_shift, s[10] / left + per_shift, s[2] / left + 1.0 / max(rho, 1e-6)
+    ab, ac, bc = s[9] / left, s[6] / left, s[7] / left
+    ya, yb, yc = s[4] / left, s[5] / left, s[3] / left
+    # Cholesky factor of the 3 x 3 precision of (shift x, shift y, common error)
+    l11 = np.sqrt(a)
+    l21, l31 = ab / l11, ac / l11
+    l22 = np.sqrt(max(b - l21 * l21, 1e-12))
+    l32 = (bc - l31 * l21) / l22
+    l33 = np.sqrt(max(c - l31 * l31 - l32 * l32, 1e-12))
+    q1 = ya / l11
+    q2 = (yb - l21 * q1) / l22
+    q3 = (yc - l31 * q1 - l32 * q2) / l33
+    gain = q1 * q1 + q2 * q2 + q3 * q3
+    x3 = q3 / l33
+    x2 = (q2 - l32 * x3) / l22
+    x1 = (q1 - l21 * x2 - l31 * x3) / l11
+    spread = 2.0 * np.log(l11 * l22 * l33) - 2.0 * np.log(per_shift) + np.log(max(rho, 1e-6))
+    return -0.5 * (s[0] / left - gain + logs + s[2] * np.log(left) + spread), x1, x2
+
+
+@njit(cache=True, nogil=True, fastmath=True)
+def posteriors(
     fraction: np.ndarray,
     kind: np.ndarray,
     widen: np.ndarray,
@@ -18,11 +71,12 @@ def posteriors(  # noqa: PLR0912
     noise: np.ndarray,
     shared: np.ndarray,
     log_prior: np.ndarray,
-) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+) -> tuple[np.ndarray, np.ndarray]:
     """Posterior over the steps of wetland area, scene by scene.
 
-    Residuals have a standard deviation that depends on kind and on how mixed a pixel is, share a random effect within
-    the scene, and lose their pull when far out (rho(z) = z / (1 + z / 9), Geman and McClure 1985).
+    Residuals have a standard deviation that depends on kind and on how mixed a pixel is; they share a common error and a
+    shift of the scene, both integrated out (Gaussian), and lose their pull when far out (rho(z) = z / (1 + z / 9), Geman
+    and McClure 1985).
 
     Parameters
     ----------
@@ -31,79 +85,58 @@ def posteriors(  # noqa: PLR0912
         Row of ``noise``; -1 where not seen.
     widen : ndarray of float32, shape (scene, pixel)
         Factor on the variance.
-    expected : ndarray of float32, shape (pixel, step)
-        Water fraction of the whole pixel at each step of wetland area.
+    expected : ndarray of float32, shape (3, pixel, step)
+        Water fraction of the whole pixel at each step of wetland area, and its change for a shift of one pixel along
+        columns and rows.
     noise : ndarray of float64, shape (kind, 4)
         Offset, slope, variance of pure pixels, added variance of a half-water pixel.
-    shared : ndarray of float64, shape (2,)
-        Correlation of errors within a scene; divisor of the log-likelihood for correlated neighbours.
+    shared : ndarray of float64, shape (3,)
+        Correlation of errors within a scene; divisor of the log-likelihood for correlated neighbours; sd of shift, pixels.
     log_prior : ndarray of float64, shape (step,)
 
     Returns
     -------
     post : ndarray of float64, shape (scene, step)
         Sums to 1; the prior where nothing is seen.
-    misfit : ndarray of float64, shape (scene,)
-        Mean robust squared standardised residual at the most likely step; 0 where nothing is seen.
-    evidence : ndarray of float64, shape (scene,)
-        Log of the likelihood averaged over the prior, up to a constant; 0 where nothing is seen.
+    rest : ndarray of float64, shape (scene, 4)
+        At the most likely step: mean robust squared standardised residual, log evidence (likelihood averaged over the
+        prior, up to a constant), shift along columns and along rows, pixels. 0 where nothing is seen.
     """
     scenes, pixels = fraction.shape
-    steps = expected.shape[1]
-    rho, temper = shared[0], shared[1]
-    post = np.empty((scenes, steps))
-    misfit, evidence = np.zeros(scenes), np.zeros(scenes)
-    square, linear, pull = np.empty(steps), np.empty(steps), np.empty(steps)
-    product, logs, ll = np.empty(steps), np.empty(steps), np.empty(steps)
+    steps = expected.shape[2]
+    per_shift = 1.0 / shared[2] ** 2
+    post, rest = np.empty((scenes, steps)), np.zeros((scenes, 4))
+    sums, logs, ll, shift = np.empty((11, steps)), np.empty(steps), np.empty(steps), np.empty((2, steps))
     for t in range(scenes):
-        square[:] = 0.0
-        linear[:] = 0.0
-        pull[:] = 0.0
+        sums[:] = 0.0
+        sums[1] = 1.0
         logs[:] = 0.0
-        product[:] = 1.0
         n = 0
         for p in range(pixels):
-            b = kind[t, p]
-            if b < 0:
+            if kind[t, p] < 0:
                 continue
             n += 1
-            f, wide = np.float64(fraction[t, p]), np.float64(widen[t, p])
-            offset, slope, pure, mixed = noise[b, 0], noise[b, 1], noise[b, 2] * wide, noise[b, 3] * wide
-            for k in range(steps):
-                e = np.float64(expected[p, k])
-                v = pure + mixed * 4.0 * e * (1.0 - e)
-                r = f - offset - slope * e
-                z = r * r / v
-                w = 1.0 / (1.0 + z * (1.0 / OUTLIER))
-                square[k] += z * w
-                linear[k] += w * r / np.sqrt(v)
-                pull[k] += w
-                product[k] *= v
+            _add_pixel(
+                sums, fraction[t, p], noise[kind[t, p]], widen[t, p], expected[0, p], expected[1, p], expected[2, p]
+            )
             if n % 32 == 0:
-                for k in range(steps):
-                    logs[k] += np.log(product[k])
-                    product[k] = 1.0
+                logs += np.log(sums[1])
+                sums[1] = 1.0
         if n == 0:
             ll[:] = log_prior
         else:
             for k in range(steps):
-                common = 1.0 - rho + rho * pull[k]
-                quad = (square[k] - rho / common * linear[k] * linear[k]) / (1.0 - rho)
-                ll[k] = -0.5 * (quad + logs[k] + np.log(product[k]) + np.log(common)) / temper + log_prior[k]
-        top = 0
-        for k in range(1, steps):
-            if ll[k] > ll[top]:
-                top = k
-        total = 0.0
-        for k in range(steps):
-            post[t, k] = np.exp(ll[k] - ll[top])
-            total += post[t, k]
-        for k in range(steps):
-            post[t, k] /= total
+                total = logs[k] + np.log(sums[1, k])
+                value, shift[0, k], shift[1, k] = _settle_step(sums[:, k], total, shared[0], per_shift)
+                ll[k] = value / shared[1] + log_prior[k]
+        top = int(np.argmax(ll))
+        post[t] = np.exp(ll - ll[top])
+        whole = post[t].sum()
+        post[t] /= whole
         if n > 0:
-            misfit[t] = square[top] / n
-            evidence[t] = ll[top] + np.log(total)
-    return post, misfit, evidence
+            rest[t, 0], rest[t, 1] = sums[0, top] / n, ll[top] + np.log(whole)
+            rest[t, 2], rest[t, 3] = shift[0, top], shift[1, top]
+    return post, rest
 
 
 @njit(cache=True, nogil=True)

@@ -14,11 +14,12 @@ from inundate.extent.estimate import (
     areas,
     band_of,
     expected_fraction,
+    fitted_fraction,
     pick_views,
     pixel_terms,
     weigh,
 )
-from inundate.extent.noise import BAND_EDGES, BLURS, VIEW_CLASSES, NoiseModel, NoiseSums
+from inundate.extent.noise import BAND_EDGES, BLURS, SHIFTS, VIEW_CLASSES, NoiseModel, NoiseSums
 from inundate.extent.shapes import edge_distance, refine_shape, shape_from_cells, shape_from_order
 from inundate.extent.stack import NEAR_STEPS, ExtentOptions, WetlandPixels
 
@@ -72,12 +73,12 @@ def renew_shape(views: Views, shape: Shape, wetland: WetlandPixels, noise: Noise
     if teach.sum() < 2:
         return Shape(shape.prior, shape.prior, shape.source, prior_var, int(teach.sum()))
     some = pick_views(views, teach)
-    post, misfit, _ = weigh(some, shape, wetland, noise)
+    post, rest = weigh(some, shape, wetland, noise)
     filled = post @ shape.filling.T.astype(float)
-    e = post @ expected_fraction(shape.filling, wetland, noise.blur).T.astype(float)
+    _, e = fitted_fraction(post, rest, shape, wetland, noise)
     value, error, _ = pixel_terms(some, noise, e)
     share = np.maximum(wetland.share, 1e-3)[None, :]
-    error = error * np.clip(misfit, 1.0, 4.0)[:, None] + LEFT_OVER * prior_var * share**2
+    error = error * np.clip(rest[:, 0], 1.0, 4.0)[:, None] + LEFT_OVER * prior_var * share**2
     precision = np.where(some.kind >= 0, share**2 / error, 0.0)
     filling = refine_shape(shape.prior, 1.0 / prior_var, wetland, post, filled + (value - e) / share, precision)
     taught = float(np.average(precision.sum(axis=0), weights=wetland.area_m2)) / 4.0
@@ -122,21 +123,20 @@ def noise_sums(
 ) -> NoiseSums:
     """What one wetland tells about errors."""
     sums = NoiseSums(shape.filling.shape[1])
-    post, misfit, _ = weigh(views, shape, wetland, noise)
+    post, rest = weigh(views, shape, wetland, noise)
     level = np.linspace(0, 1, post.shape[1])
     mean = post @ level
     sd = np.sqrt(np.maximum(post @ level**2 - mean**2, 0))
     expected = expected_fraction(shape.filling, wetland, noise.blur).astype(float)
-    e = post @ expected.T
+    _, e = fitted_fraction(post, rest, shape, wetland, noise)
     row = noise.table[np.maximum(views.kind, 0)]
     fit = row[..., 0] + row[..., 1] * e
     var = row[..., 2] + row[..., 3] * 4 * e * (1 - e)
     step = (np.maximum(views.kind, 0) // 2) % VIEW_CLASSES
-    sure = (sd < 0.1) & (views.view_fraction >= 0.5) & (views.ice < 0.02) & (misfit < 4)
+    sure = (sd < 0.1) & (views.view_fraction >= 0.5) & (views.ice < 0.02) & (rest[:, 0] < 4)
     own = (views.kind >= 0) & sure[:, None] & (step == VIEW_CLASSES - 1)
     sums.add_own(views.kind[own], views.fraction[own].astype(float), e[own], var[own], fit[own])
     good = good_views(views, options) & (sd < 0.1)
-    sums.blur += blur_evidence(views, shape, wetland, noise, options)
     sums.area += post[good].sum(axis=0)
     _add_pairs(sums, (views.fraction - fit) / np.sqrt(var), (views.kind >= 0) & good[:, None], wetland)
     whole = (views.kind >= 0) & good[:, None] & (wetland.share > 0.3)[None, :]
@@ -156,11 +156,12 @@ def noise_sums(
 
 def blur_evidence(
     views: Views, shape: Shape, wetland: WetlandPixels, noise: NoiseModel, options: ExtentOptions
-) -> np.ndarray:
-    """Log evidence of the good views under each candidate of ``BLURS``; float64 (candidate,)."""
-    good = good_views(views, options)
-    some = pick_views(views, good)
-    return np.array([weigh(some, shape, wetland, replace(noise, blur=b))[2].sum() for b in BLURS])
+) -> tuple[np.ndarray, np.ndarray]:
+    """Log evidence of the good views under each candidate of ``BLURS`` and of ``SHIFTS``; float64 (candidate,) each."""
+    some = pick_views(views, good_views(views, options))
+    blur = [weigh(some, shape, wetland, replace(noise, blur=b))[1][:, 1].sum() for b in BLURS]
+    shift = [weigh(some, shape, wetland, replace(noise, shift_px=s))[1][:, 1].sum() for s in SHIFTS]
+    return np.array(blur), np.array(shift)
 
 
 def _add_pairs(sums: NoiseSums, u: np.ndarray, seen: np.ndarray, wetland: WetlandPixels) -> None:

@@ -21,6 +21,8 @@ _PURE = (0.08, 0.07, 0.05, 0.025, 0.01)
 _MIXED = 0.02
 BLURS = np.linspace(0.0, 0.5, 6)
 """Candidates for the part of a pixel's water fraction that comes from its neighbours."""
+SHIFTS = np.array([0.03, 0.08, 0.13, 0.18, 0.23, 0.28, 0.33])
+"""Candidates for the sd of a scene's leftover shift, pixels."""
 _HELD = 200.0
 """Pixels that the starting values of a kind weigh."""
 
@@ -71,6 +73,8 @@ class NoiseModel:
         Variance (share of the largest extent, at half full) of errors that a wetland keeps from scene to scene.
     blur : float
         Part of a pixel's water fraction that comes from the eight pixels around it.
+    shift_px : float
+        Standard deviation of the shift that is left in a scene, pixels, each way.
     """
 
     table: np.ndarray
@@ -82,6 +86,7 @@ class NoiseModel:
     scale: np.ndarray
     steady_var: float
     blur: float = 0.0
+    shift_px: float = 0.1
 
     def to_dict(self) -> dict[str, object]:
         """Return plain values for JSON."""
@@ -95,6 +100,7 @@ class NoiseModel:
             "scale": self.scale.tolist(),
             "steady_var": self.steady_var,
             "blur": self.blur,
+            "shift_px": self.shift_px,
         }
 
     @classmethod
@@ -160,11 +166,12 @@ class NoiseSums:
         self.pairs = np.zeros((3, 2))
         self.area = np.zeros(steps)
         self.blur = np.zeros(BLURS.size)
+        self.shift = np.zeros(SHIFTS.size)
         self.shape = {name: np.zeros(2) for name in ("cells", "order", "outline")}
 
     def add(self, other: NoiseSums) -> None:
         """Add the sums of another wetland."""
-        for name in ("dry", "wet", "half", "line", "pairs", "area", "blur"):
+        for name in ("dry", "wet", "half", "line", "pairs", "area", "blur", "shift"):
             getattr(self, name)[...] += getattr(other, name)
         for name, value in other.shape.items():
             self.shape[name] += value
@@ -214,8 +221,9 @@ def renew_noise(old: NoiseModel, sums: NoiseSums, start: NoiseModel) -> NoiseMod
     for name, first in start.shape_var.items():
         total, n = sums.shape[name]
         var[name] = float(np.clip((total + 50 * first) / (n + 50), 0.003, 0.15))
-    blur = _top_of(BLURS, sums.blur)
-    return replace(old, table=table, rho=rho, temper=temper, shape_var=var, area_prior=prior, blur=blur)
+    blur, shift = _top_of(BLURS, sums.blur), _top_of(SHIFTS, sums.shift)
+    new = replace(old, table=table, rho=rho, temper=temper, shape_var=var, area_prior=prior)
+    return replace(new, blur=blur, shift_px=shift)
 
 
 def _top_of(x: np.ndarray, y: np.ndarray) -> float:

@@ -14,6 +14,7 @@ from inundate.common.errors import InputError
 from inundate.common.seeds import rng_for, seed_for
 from inundate.extent.estimate import Shape, Views, areas, band_of, look
 from inundate.extent.learn import (
+    blur_evidence,
     first_shape,
     fit_drift,
     masked_checks,
@@ -204,9 +205,11 @@ class ExtentObserver(BaseEstimator):
                 views = self._views(stack, wetland)
                 shape = first_shape(self.cells_.get(wetland.name), wetland, views, noise, options)
                 before = noise_sums(views, shape, wetland, noise, days, options)
+                edges = blur_evidence(views, shape, wetland, noise, options)
                 shape = renew_shape(views, shape, wetland, noise, options)
                 mine = noise_sums(views, shape, wetland, noise, days, options)
-                mine.shape, mine.blur = before.shape, before.blur
+                mine.shape = before.shape
+                mine.blur, mine.shift = edges
                 sums.add(mine)
             noise = renew_noise(noise, sums, start)
         return self._scale(stack, sample, noise, options)

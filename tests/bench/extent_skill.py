@@ -87,7 +87,11 @@ def run_world(seed: int, with_cells: bool) -> pd.DataFrame:
         {k: round(v, 3) for k, v in n.shape_var.items()},
         "scale",
         np.round(n.scale, 2),
-        "blur", round(n.blur, 3), "drift sd",
+        "blur",
+        round(n.blur, 3),
+        "shift",
+        round(n.shift_px, 3),
+        "drift sd",
         round(n.drift_var**0.5, 4),
     )
     print("  noise (leaf-off, view >= 0.9):", np.round(n.table[8], 3), "near cloud", np.round(n.table[9], 3))
