@@ -19,6 +19,7 @@ from inundate.pixels.calibration import Calibration
 from inundate.pixels.card import make_card, read_model, write_model
 from inundate.pixels.features import FEATURES
 from inundate.pixels.folds import FoldOptions, Folds, make_folds, row_keys
+from inundate.pixels.forest import FastForest
 from inundate.pixels.mislabelled import doubtful
 from inundate.pixels.scoring import error_table, leaf_state_names
 from inundate.pixels.unlike import Likeness
@@ -166,7 +167,6 @@ class WaterClassifier(ClassifierMixin, BaseEstimator):
             One class only, or more than two.
         """
         X, y = validate_data(self, X, y, dtype=np.float64, ensure_all_finite="allow-nan")
-        X = np.where(np.isinf(X), np.nan, X)
         check_classification_targets(y)
         self.classes_, code = np.unique(y, return_inverse=True)
         _check_classes(self.classes_)
@@ -232,7 +232,7 @@ class WaterClassifier(ClassifierMixin, BaseEstimator):
             used = weight
         self.n_trees_ = best or min(self.n_trees, _FEW_TREES)
         self.booster_ = train(X, y, used, options, self.n_trees_)
-        self._fast_ = None
+        self._fast = FastForest.from_booster(self.booster_)
         self.calibration_ = Calibration.fit(raw[known], y[known], used[known], state[known], self.shrink)
         columns = [i for i, name in enumerate(self.feature_names_) if name in BAND_ROLES] or list(range(X.shape[1]))
         self.likeness_ = Likeness.fit(X, tuple(columns), n_centres=64, seed=self.seed)
@@ -283,10 +283,13 @@ class WaterClassifier(ClassifierMixin, BaseEstimator):
 
     def raw_score(self, X: Any) -> np.ndarray:
         """Return the forest's raw score (log-odds before calibration), float64, shape (row,)."""
+        X = self._checked(X)
+        return self._fast.predict_raw(X, threads=self.num_threads)
+
+    def _checked(self, X: Any) -> np.ndarray:
         check_is_fitted(self, "booster_")
-        X = validate_data(self, X, dtype=np.float64, ensure_all_finite="allow-nan", reset=False)
-        X = np.where(np.isinf(X), np.nan, X)
-        return np.asarray(self.booster_.predict(X, raw_score=True, num_threads=self.num_threads), float)
+        kinds = [np.float32, np.float64]
+        return np.asarray(validate_data(self, X, dtype=kinds, ensure_all_finite="allow-nan", reset=False))
 
     def probability_of_raw(self, raw: np.ndarray, leaf_state: Any = None) -> np.ndarray:
         """Return calibrated probabilities of raw scores, for those who score by other means; shape (row,)."""
@@ -316,9 +319,7 @@ class WaterClassifier(ClassifierMixin, BaseEstimator):
 
         In radii of the nearest group of examples: about 99 in 100 examples lie below 1; NaN where every band is missing.
         """
-        check_is_fitted(self, "booster_")
-        X = validate_data(self, X, dtype=np.float64, ensure_all_finite="allow-nan", reset=False)
-        return self.likeness_.distance(np.where(np.isinf(X), np.nan, X))
+        return self.likeness_.distance(self._checked(X))
 
     def save(self, folder: str | Path) -> None:
         """Write ``water.txt`` (LightGBM text model) and ``water.json`` (card) into a folder."""
@@ -339,7 +340,8 @@ class WaterClassifier(ClassifierMixin, BaseEstimator):
         model.classes_ = np.asarray(card["classes"])
         model.feature_names_ = tuple(card["features"])
         model.n_features_in_ = len(model.feature_names_)
-        model.booster_, model.n_trees_, model._fast_ = booster, booster.num_trees(), None
+        model.booster_, model.n_trees_ = booster, booster.num_trees()
+        model._fast = FastForest.from_booster(booster)
         model.calibration_ = Calibration.from_json(card["calibration"])
         model.likeness_ = Likeness.from_json(card["likeness"])
         model.error_rates_ = pd.DataFrame(card["error_rates"])

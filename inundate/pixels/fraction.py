@@ -16,6 +16,7 @@ from inundate.pixels.boosting import BoostOptions, out_of_fold, train
 from inundate.pixels.card import read_model, versions, write_model
 from inundate.pixels.features import FEATURES
 from inundate.pixels.folds import FoldOptions, make_folds, row_keys
+from inundate.pixels.forest import FastForest
 
 _BINS = np.linspace(0.0, 1.0, 11)
 
@@ -97,7 +98,7 @@ class FractionModel(RegressorMixin, BaseEstimator):
         FractionModel
         """
         X, y = validate_data(self, X, y, dtype=np.float64, ensure_all_finite="allow-nan", y_numeric=True)
-        X, y = np.where(np.isinf(X), np.nan, X), np.asarray(y, np.float64)
+        y = np.asarray(y, np.float64)
         weight = _check_sample_weight(sample_weight, X, dtype=np.float64, ensure_non_negative=True)
         key = row_keys(X, y)
         group = key if wetland is None else np.asarray(wetland).astype(str)
@@ -149,6 +150,7 @@ class FractionModel(RegressorMixin, BaseEstimator):
         raw, best, losses = out_of_fold(X, y, weight, [s for s in splits if s[0].size], options)
         self.n_trees_ = best or min(self.n_trees, 60)
         self.booster_ = train(X, y, weight, options, self.n_trees_)
+        self._fast = FastForest.from_booster(self.booster_)
         self._set_residuals(np.clip(raw, 0, 1), y, weight)
         self._oof: np.ndarray = np.clip(raw, 0, 1)
         self.card_ = self._card(y.size, losses)
@@ -184,9 +186,9 @@ class FractionModel(RegressorMixin, BaseEstimator):
     def predict(self, X: Any) -> np.ndarray:
         """Return water fractions, float64, shape (row,), within 0..1."""
         check_is_fitted(self, "booster_")
-        X = validate_data(self, X, dtype=np.float64, ensure_all_finite="allow-nan", reset=False)
-        X = np.where(np.isinf(X), np.nan, X)
-        return np.clip(np.asarray(self.booster_.predict(X, num_threads=self.num_threads), float), 0.0, 1.0)
+        kinds = [np.float32, np.float64]
+        X = np.asarray(validate_data(self, X, dtype=kinds, ensure_all_finite="allow-nan", reset=False))
+        return np.clip(self._fast.predict(X, threads=self.num_threads), 0.0, 1.0)
 
     def sd(self, fraction: np.ndarray) -> np.ndarray:
         """Return the standard deviation of predicted fractions, by their tenth; shape as given."""
@@ -212,6 +214,7 @@ class FractionModel(RegressorMixin, BaseEstimator):
         booster, card = read_model(Path(folder), "fraction")
         model = cls(**card["settings"])
         model.booster_, model.n_trees_, model.card_ = booster, booster.num_trees(), card
+        model._fast = FastForest.from_booster(booster)
         model.feature_names_ = tuple(card["features"])
         model.n_features_in_ = len(model.feature_names_)
         sd = [np.nan if v is None else v for v in card["residual_sd"]]

@@ -24,8 +24,8 @@ class MixOptions:
     n : int
         Number of mixed examples.
     coarse : bool
-        True: the bands of ``COARSE_ROLES`` are twice as coarse as the others (their fraction is that of a block of 2 x 2
-        pixels). False: all bands have one pixel size.
+        True: the bands of ``COARSE_ROLES`` are twice as coarse as the others (their fraction is that of the 2 x 2
+        blocks around the pixel, interpolated bilinearly). False: all bands have one pixel size.
     offset_px : float
         Standard deviation of the offset between fine and coarse bands, and of band to band registration, in fine pixels.
     seed : int
@@ -38,7 +38,7 @@ class MixOptions:
 
 
 def shoreline_fractions(n: int, rng: np.random.Generator, offset_px: float) -> tuple[np.ndarray, np.ndarray]:
-    """Draw water fractions of a fine pixel and of the coarse pixel (2 x 2) that holds it, along random shores.
+    """Draw water fractions of a fine pixel as its fine and its coarse bands see it, along random shores.
 
     Parameters
     ----------
@@ -49,23 +49,30 @@ def shoreline_fractions(n: int, rng: np.random.Generator, offset_px: float) -> t
     Returns
     -------
     fine, coarse : ndarray of float64, shape (n,)
-        Each the mean over 8 x 8 or 16 x 16 points of a plane cut by a circle of drawn radius (0.6 to 30 fine pixels; the
-        large ones are near straight); the inside is water or dry with equal chance.
+        ``fine``: mean over 8 x 8 points of the pixel of a plane cut by a circle of drawn radius (0.6 to 30 fine pixels;
+        the large ones are near straight); the inside is water or dry with equal chance. ``coarse``: means of the four
+        coarse pixels (2 x 2 fine ones) around the fine pixel's centre, weighed 9, 3, 3, 1 sixteenths as in bilinear
+        interpolation to the fine grid.
     """
     step = (np.arange(8) + 0.5) / 8
     fx, fy = (a.ravel() for a in np.meshgrid(step, step))
-    wide = (np.arange(16) + 0.5) / 8
+    wide = (np.arange(16) + 0.5) / 4  # a block of 4 x 4 fine pixels: two coarse ones a side
     gx, gy = (a.ravel() for a in np.meshgrid(wide, wide))
-    corner = -rng.integers(0, 2, (n, 2)).astype(float) + offset_px * rng.standard_normal((n, 2))
+    # the fine pixel is the second or third of the block's four, along either side
+    second = rng.integers(0, 2, (n, 2))
+    corner = -(1.0 + second) + offset_px * rng.standard_normal((n, 2))
     radius = np.exp(rng.uniform(np.log(0.6), np.log(30.0), n))
     angle = rng.uniform(0, 2 * np.pi, n)
     away = rng.uniform(-1.6, 1.6, n)  # of the shore from the fine pixel's centre
     cx = 0.5 + np.cos(angle) * (radius + away)
     cy = 0.5 + np.sin(angle) * (radius + away)
-    inside_fine = (fx[None] - cx[:, None]) ** 2 + (fy[None] - cy[:, None]) ** 2 < radius[:, None] ** 2
+    square = radius[:, None] ** 2
+    fine = ((fx[None] - cx[:, None]) ** 2 + (fy[None] - cy[:, None]) ** 2 < square).mean(axis=1)
     px, py = gx[None] + corner[:, :1], gy[None] + corner[:, 1:]
-    inside_coarse = (px - cx[:, None]) ** 2 + (py - cy[:, None]) ** 2 < radius[:, None] ** 2
-    fine, coarse = inside_fine.mean(axis=1), inside_coarse.mean(axis=1)
+    inside = (px - cx[:, None]) ** 2 + (py - cy[:, None]) ** 2 < square
+    across = np.where(gx[None] < 2, 0.75 - 0.5 * second[:, :1], 0.25 + 0.5 * second[:, :1])
+    along = np.where(gy[None] < 2, 0.75 - 0.5 * second[:, 1:], 0.25 + 0.5 * second[:, 1:])
+    coarse = (inside * across * along).sum(axis=1) / (across * along).sum(axis=1)
     turn = rng.random(n) < 0.5
     return np.where(turn, 1 - fine, fine), np.where(turn, 1 - coarse, coarse)
 
