@@ -58,7 +58,12 @@ def last_day(month: str | None, observed: pd.DataFrame, stage: StageResult | Non
 
 
 def conclude(
-    work: Work, inputs: Inputs, layout: Layout, calendar: LeafCalendar, found: tuple[pd.DataFrame, StageResult | None], month: str | None
+    work: Work,
+    inputs: Inputs,
+    layout: Layout,
+    calendar: LeafCalendar,
+    found: tuple[pd.DataFrame, StageResult | None],
+    month: str | None,
 ) -> Findings:
     """Fit relations and fill the series."""
     from inundate.relation import fit_relations, make_pairs
@@ -72,12 +77,18 @@ def conclude(
     with work.progress.step("stage-area relations"):
         pairs = make_pairs(observed, daily if daily is not None else _no_stage())
         relations = fit_relations(pairs, wetlands, layout.hypsometry, seed=settings.relation.seed)
-    first = min(t for t in (pd.to_datetime(observed["datetime"]).min(), None if daily is None else daily["date"].min()) if t is not None and pd.notna(t))
+    first = min(
+        t
+        for t in (pd.to_datetime(observed["datetime"]).min(), None if daily is None else daily["date"].min())
+        if t is not None and pd.notna(t)
+    )
     dates = pd.date_range(pd.Timestamp(first).normalize(), last)
     leaf_daily = calendar.daily(dates)
     with work.progress.step("filling the series"):
         series = fill_series(
-            SeriesInputs(wetlands, observed, daily, relations, layout.hypsometry, inputs.weather, leaf_daily, dates[0], last),
+            SeriesInputs(
+                wetlands, observed, daily, relations, layout.hypsometry, inputs.weather, leaf_daily, dates[0], last
+            ),
             options=FillOptions(workers=settings.compute.workers),
             seed=settings.series.seed,
         )
@@ -99,9 +110,11 @@ def _no_stage() -> pd.DataFrame:
     )
 
 
-def write_tables(work: Work, inputs: Inputs, layout: Layout, found: Findings, folder: Path, before: Path | None) -> dict[str, Any]:
+def write_tables(
+    work: Work, inputs: Inputs, layout: Layout, found: Findings, folder: Path, before: Path | None
+) -> dict[str, Any]:
     """Write every product table, the NetCDF and the layer into ``folder``; return what the summary shows."""
-    from inundate.series import hydroperiod, size_classes
+    from inundate.series import hydroperiod, size_classes  # type: ignore[attr-defined]
     from inundate.stage import wetland_daily
 
     settings = work.pipeline.series
@@ -127,7 +140,9 @@ def write_tables(work: Work, inputs: Inputs, layout: Layout, found: Findings, fo
     if settings.draws:
         draws = found.series.draws(settings.draws)
         write_draws_netcdf(folder / "extent_draws.nc", draws, found.series.dates, found.wetlands, **place)
-    columns = found.wetlands[["wetland_id", "area_max_m2", "cover"]].merge(month_summary(daily, found.month), on="wetland_id", how="left")
+    columns = found.wetlands[["wetland_id", "area_max_m2", "cover"]].merge(
+        month_summary(daily, found.month), on="wetland_id", how="left"
+    )
     write_wetlands_layer(folder / "wetlands.gpkg", inputs.shapes, columns)
     return {"wetlands": len(found.wetlands), "days": int(daily["date"].nunique()), "changed_days": len(moved)}
 

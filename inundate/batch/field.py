@@ -2,13 +2,17 @@
 
 from __future__ import annotations
 
-from typing import TYPE_CHECKING, Any
+from dataclasses import replace
+from pathlib import Path
+from typing import TYPE_CHECKING
 
 import numpy as np
 import pandas as pd
 
+from inundate.batch.inputs import stat_mark
 from inundate.batch.layout import Layout
-from inundate.batch.work import Inputs, Work, code_mark
+from inundate.batch.pipeline import Pipeline
+from inundate.batch.work import Inputs, Work
 from inundate.common.errors import InputError
 
 if TYPE_CHECKING:
@@ -24,7 +28,7 @@ def latitudes(layout: Layout) -> dict[str, float]:
     return dict(zip(table["wetland_id"], np.asarray(lat, float), strict=True))
 
 
-def stage_record(work: Work, inputs: Inputs, layout: Layout, last: pd.Timestamp | None) -> StageResult | None:
+def stage_record(work: Work, inputs: Inputs, layout: Layout, month: str | None = None) -> StageResult | None:
     """Build the stage record; None where the pipeline names no loggers.
 
     Raises
@@ -48,11 +52,27 @@ def stage_record(work: Work, inputs: Inputs, layout: Layout, last: pd.Timestamp 
         barometer = read_barometer(files["loggers.barometer"]) if "loggers.barometer" in files else None
         checks, refused = read_checks(files["loggers.checks"], registry) if "loggers.checks" in files else (None, [])
         work.refuse(list(refused))
-        readings = LoggerFiles(files["loggers.registry"], registry)
-        extra: dict[str, Any] = {}
-        if inputs.weather is not None:
-            extra["weather"] = inputs.weather
-        result = daily_stage(registry, readings, barometer, checks, latitudes(layout), **extra)
+        readings = LoggerFiles(registry)
+        result = daily_stage(registry, readings, barometer, checks, latitudes(layout), weather=inputs.weather)
         work.refuse(list(result.refused))
-        _ = code_mark
+        work.notes.extend(result.notes)
+    if month is not None:
+        end = pd.Period(month, "M").end_time
+        daily = result.daily[pd.to_datetime(result.daily["date"]) <= end].reset_index(drop=True)
+        return replace(result, daily=daily)
     return result
+
+
+def logger_marks(pipeline: Pipeline) -> dict[str, str]:
+    """Return marks (size and time of change) of every logger file that the registry names."""
+    from inundate.stage import read_registry
+
+    files = pipeline.input_files()
+    if "loggers.registry" not in files:
+        return {}
+    registry = read_registry(files["loggers.registry"])
+    return {
+        f"logger file {path}": stat_mark(str(path))
+        for path in sorted(set(map(str, registry["file"])))
+        if Path(path).is_file()
+    }

@@ -116,9 +116,9 @@ def _elevation(
     if not parts or all(p.empty for p in parts):
         return None, None
     cells = pd.concat(parts, ignore_index=True)
-    cells = _on_site(cells, site)[["wetland_id", "pixel", "elevation_m", "area_m2"]]
+    cells = _on_site(cells, site)
     cells = cells.sort_values(["wetland_id", "pixel"], kind="stable").reset_index(drop=True)
-    return cells, hypsometry(cells, wetland_table(shapes))
+    return cells, hypsometry(cells, shapes)
 
 
 def _neighbourhood(shapes: gpd.GeoDataFrame, side: float = 2000.0) -> np.ndarray:

@@ -77,7 +77,7 @@ def map_new(work: Work, layout: Layout, places: list[ScenePlace], leaves: Leaves
 
 
 def observe(
-    work: Work, inputs: Inputs, layout: Layout, places: list[ScenePlace], leaves: Leaves, trained: Trained
+    work: Work, inputs: Inputs, layout: Layout, places: list[ScenePlace], calendar: LeafCalendar
 ) -> pd.DataFrame:
     """Return extent_observed of every wetland and scene, learnt and observed group by group of wetlands."""
     archive, ledger = work.archive, work.ledger

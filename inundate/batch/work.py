@@ -153,9 +153,6 @@ def open_inputs(work: Work) -> Inputs:
     if "labels.examples" in files:
         labels, refused = read_labels(files["labels.examples"], pipeline.area.crs)
         work.refuse(refused)
-    marks = {key: stat_mark(path) for key, path in files.items() if key != "scenes.catalog"}
-    marks |= {k: file_mark(files[k]) for k in files if Path(files[k]).suffix == ".csv" and "://" not in files[k]}
-    marks["scenes.sensor"] = file_mark(own) if sensor.endswith(".toml") else sensor
     return Inputs(
         shapes,
         profile,
@@ -164,8 +161,18 @@ def open_inputs(work: Work) -> Inputs:
         read_weather(files["weather.daily"]) if "weather.daily" in files else None,
         read_decisions(files["extent.decisions"]) if "extent.decisions" in files else None,
         read_walked(files["skill.walked_extents"]) if "skill.walked_extents" in files else None,
-        marks,
+        input_marks(pipeline),
     )
+
+
+def input_marks(pipeline: Pipeline) -> dict[str, str]:
+    """Return marks of the input files (tables by content, larger files by size and time of change)."""
+    files = pipeline.input_files()
+    marks = {key: stat_mark(path) for key, path in files.items() if key != "scenes.catalog"}
+    marks |= {k: file_mark(files[k]) for k in marks if Path(files[k]).suffix == ".csv" and "://" not in files[k]}
+    sensor = pipeline.scenes.sensor
+    marks["scenes.sensor"] = file_mark(pipeline.path(sensor)) if sensor.endswith(".toml") else sensor
+    return marks
 
 
 def settings_mark(pipeline: Pipeline, *sections: str) -> dict[str, Any]:

@@ -1,0 +1,332 @@
+"""Look at a pipeline and all its inputs before any work: what is there, what is missing, what is odd."""
+
+from __future__ import annotations
+
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+import pandas as pd
+
+from inundate.batch.archive import Archive
+from inundate.batch.inputs import read_decisions, read_labels, read_walked, read_weather, read_wetlands
+from inundate.batch.pipeline import Pipeline, load_pipeline
+from inundate.batch.progress import Progress
+from inundate.common.errors import InputError, Refusal
+
+HOLE_HOURS = 3
+
+
+class _Report:
+    """Rows of what was found, and refusals."""
+
+    def __init__(self) -> None:
+        self.rows: list[dict[str, str]] = []
+        self.refused: list[Refusal] = []
+
+    def good(self, item: str, words: str) -> None:
+        self.rows.append({"item": item, "state": "good", "words": words})
+
+    def odd(self, item: str, words: str) -> None:
+        self.rows.append({"item": item, "state": "odd", "words": words})
+
+    def none(self, item: str, words: str) -> None:
+        self.rows.append({"item": item, "state": "not given", "words": words})
+
+
+def check_pipeline(file: str | Path, *, why: bool, progress: Progress) -> dict[str, Any]:
+    """Read a pipeline and all its inputs; nothing is written.
+
+    Parameters
+    ----------
+    file : str or Path
+    why : bool
+        Also tell what the next run would read again, and why.
+    progress : Progress
+
+    Returns
+    -------
+    dict
+        rows (item, state: ``good`` / ``odd`` / ``not given``, words), refused, and ``why`` where asked for.
+
+    Raises
+    ------
+    InputError
+        On the first input that is wrong as a whole.
+    """
+    from inundate.scenes import load_profile, open_catalog
+
+    pipeline = load_pipeline(file)
+    files = pipeline.input_files()
+    report = _Report()
+    with progress.step("checking"):
+        shapes = read_wetlands(files["area.wetlands"], pipeline.area.crs)
+        sensor = pipeline.scenes.sensor
+        profile = load_profile(pipeline.path(sensor) if sensor.endswith(".toml") else sensor)
+        catalog = open_catalog(files["scenes.catalog"], profile)
+        report.refused += list(catalog.refused)
+        _check_wetlands(report, shapes, profile.step_m)
+        times = _check_scenes(report, catalog)
+        _check_elevation(report, pipeline, shapes)
+        _check_labels(report, pipeline, catalog, shapes)
+        _check_loggers(report, pipeline, shapes, times)
+        _check_rest(report, pipeline, times)
+        _check_output(report, pipeline)
+    result: dict[str, Any] = {
+        "pipeline": str(file),
+        "rows": report.rows,
+        "refused": [r.as_dict() for r in report.refused],
+    }
+    if why:
+        result["why"] = why_lines(pipeline, catalog)
+    return result
+
+
+def _check_wetlands(report: _Report, shapes: Any, step_m: float) -> None:
+    area = shapes["area_max_m2"]
+    report.good("wetlands", f"{len(shapes)} polygons, {area.min() / 1e4:.2f} to {area.max() / 1e4:.2f} ha")
+    small = shapes.loc[area < step_m**2, "wetland_id"]
+    if len(small):
+        report.odd(
+            "wetlands",
+            f"{len(small)} smaller than one pixel ({', '.join(small[:3])}): their extents will be very uncertain",
+        )
+    cover = shapes.geometry.union_all().area
+    if cover < 0.999 * area.sum():
+        report.odd(
+            "wetlands",
+            f"polygons overlap ({(area.sum() - cover) / 1e4:.2f} ha counted twice): totals of the landscape will be too large",
+        )
+
+
+def _check_scenes(report: _Report, catalog: Any) -> tuple[pd.Timestamp, pd.Timestamp]:
+    times = pd.to_datetime([s.datetime for s in catalog.scenes]).sort_values()
+    gaps = times.to_series().diff().max()
+    report.good("scenes", f"{len(times)} scenes, {times[0]:%Y-%m-%d} to {times[-1]:%Y-%m-%d}")
+    if len(times) > 1 and gaps > pd.Timedelta(days=60):
+        end = times.to_series().diff().idxmax()
+        report.odd("scenes", f"no scene for {gaps.days} days before {end:%Y-%m-%d}")
+    dark = sum(not np.isfinite(s.sun_elevation_deg) for s in catalog.scenes)
+    if dark:
+        report.odd("scenes", f"{dark} scenes do not tell the sun's elevation: 40 degrees is assumed")
+    if catalog.refused:
+        report.odd("scenes", f"{len(catalog.refused)} items cannot be used, each named below")
+    return times[0], times[-1]
+
+
+def _check_elevation(report: _Report, pipeline: Pipeline, shapes: Any) -> None:
+    from inundate.scenes import read_elevation
+
+    path = pipeline.input_files().get("area.elevation")
+    if path is None:
+        report.none("elevation", "relations and fills will rest on views and loggers alone")
+        return
+    empty = []
+    for wetland_id, shape in zip(shapes["wetland_id"], shapes.geometry, strict=True):
+        values, _, _ = read_elevation(path, pipeline.area.crs, shape.bounds)
+        if not np.isfinite(values).any():
+            empty.append(wetland_id)
+    if empty:
+        report.odd("elevation", f"no value in {len(empty)} of {len(shapes)} wetlands ({', '.join(empty[:3])})")
+    else:
+        report.good("elevation", "covers every wetland")
+
+
+def _check_labels(report: _Report, pipeline: Pipeline, catalog: Any, shapes: Any) -> None:
+    path = pipeline.input_files().get("labels.examples")
+    if path is None:
+        report.none("labels", "the starter examples will serve")
+        return
+    labels, refused = read_labels(path, pipeline.area.crs)
+    report.refused += refused
+    water = int((labels["label"] == "water").sum())
+    report.good("labels", f"{len(labels)} labels, {water} water, {len(labels) - water} dry")
+    days = np.sort(np.unique(pd.to_datetime([s.datetime for s in catalog.scenes]).normalize().to_numpy()))
+    own = labels["scene_id"].isin([s.scene_id for s in catalog.scenes]).to_numpy()
+    place = np.clip(np.searchsorted(days, labels["date"].to_numpy()), 1, max(days.size - 1, 1))
+    near = np.minimum(
+        np.abs(labels["date"].to_numpy() - days[place - 1]),
+        np.abs(labels["date"].to_numpy() - days[min(days.size, 1) * place - (days.size == 1)]),
+    )
+    lost = ~own & ~(near <= np.timedelta64(1, "D"))
+    if lost.any():
+        report.odd(
+            "labels",
+            f"{int(lost.sum())} labels have no scene within a day (first: row {int(labels['row'][lost].iloc[0])}); they will be left out",
+        )
+    west, south, east, north = shapes.total_bounds
+    bounds = labels.geometry.bounds
+    away = (
+        (bounds["maxx"] < west - 100)
+        | (bounds["minx"] > east + 100)
+        | (bounds["maxy"] < south - 100)
+        | (bounds["miny"] > north + 100)
+    )
+    if away.any():
+        report.odd(
+            "labels",
+            f"{int(away.sum())} labels lie outside the area of the wetlands (first: row {int(labels['row'][away].iloc[0])})",
+        )
+
+
+def _check_loggers(report: _Report, pipeline: Pipeline, shapes: Any, times: tuple[pd.Timestamp, pd.Timestamp]) -> None:
+    files = pipeline.input_files()
+    if "loggers.registry" not in files:
+        report.none("loggers", "no wetland has stage; fills rest on views, weather and season")
+        return
+    from inundate.stage import LoggerFiles, read_barometer, read_checks, read_registry
+
+    registry = read_registry(files["loggers.registry"])
+    strange = registry[~registry["wetland_id"].isin(set(shapes["wetland_id"]))]
+    if len(strange):
+        first = strange.iloc[0]
+        message = f"{files['loggers.registry']}: logger '{first['logger_id']}' stands in wetland '{first['wetland_id']}', which {files['area.wetlands']} does not have; correct wetland_id"
+        raise InputError(message)
+    logged = registry["wetland_id"].nunique()
+    report.good("loggers", f"{registry['logger_id'].nunique()} loggers in {logged} of {len(shapes)} wetlands")
+    readings = LoggerFiles(registry)
+    for logger_id in readings:
+        try:
+            series = readings[logger_id]
+        except InputError as err:
+            report.refused.append(Refusal("logger", str(logger_id), str(err)))
+            continue
+        span = pd.to_datetime(pd.Series(series.time)).agg(["min", "max"])
+        if span["max"] < times[0] or span["min"] > times[1]:
+            report.odd(
+                "loggers",
+                f"{logger_id}: readings {span['min']:%Y-%m-%d} to {span['max']:%Y-%m-%d} lie outside the scenes' dates",
+            )
+    _check_barometer(report, files, registry)
+    if "loggers.checks" in files:
+        checks, refused = read_checks(files["loggers.checks"], registry)
+        report.refused += list(refused)
+        bare = sorted(set(registry["logger_id"]) - set(checks["logger_id"]))
+        report.good("field checks", f"{len(checks)} readings of {checks['logger_id'].nunique()} loggers")
+        if bare:
+            report.odd("field checks", f"none for {', '.join(bare[:5])}: their datum and drift cannot be checked")
+    else:
+        report.none("field checks", "datum and drift of loggers cannot be checked")
+    _ = read_barometer
+
+
+def _check_barometer(report: _Report, files: dict[str, str], registry: pd.DataFrame) -> None:
+    from inundate.stage import read_barometer
+
+    absolute = registry[registry["kind"] == "absolute"]
+    if "loggers.barometer" not in files:
+        if len(absolute):
+            names = ", ".join(absolute["logger_id"].unique()[:5])
+            message = f"{files['loggers.registry']}: loggers {names} measure absolute pressure, and the pipeline names no barometer; add key 'loggers.barometer'"
+            raise InputError(message)
+        report.none("barometer", "not needed: no logger measures absolute pressure")
+        return
+    barometer = read_barometer(files["loggers.barometer"])
+    time = pd.to_datetime(pd.Series(barometer.time)).reset_index(drop=True)
+    gap = time.diff()
+    holes = gap > pd.Timedelta(hours=HOLE_HOURS)
+    report.good("barometer", f"{len(time)} readings, {time.min():%Y-%m-%d} to {time.max():%Y-%m-%d}")
+    if holes.any():
+        longest = gap.max() / pd.Timedelta(days=1)
+        report.odd(
+            "barometer",
+            f"{int(holes.sum())} holes over {HOLE_HOURS} h, the longest {longest:.1f} days: no stage there for absolute loggers",
+        )
+
+
+def _check_rest(report: _Report, pipeline: Pipeline, times: tuple[pd.Timestamp, pd.Timestamp]) -> None:
+    files = pipeline.input_files()
+    if "weather.daily" in files:
+        weather = read_weather(files["weather.daily"])
+        first, last = weather["date"].iloc[0], weather["date"].iloc[-1]
+        report.good("weather", f"{len(weather)} days, {first:%Y-%m-%d} to {last:%Y-%m-%d}")
+        missing = (
+            int(weather[["precipitation_mm", "pet_mm"]].isna().any(axis=1).sum())
+            + (last - first).days
+            + 1
+            - len(weather)
+        )
+        if missing:
+            report.odd("weather", f"{missing} days without value")
+        if first > times[0] or last < times[1].normalize():
+            report.odd("weather", "does not cover all scenes' dates")
+    else:
+        report.none("weather", "wetlands without logger will be filled by season and neighbours alone")
+    if "extent.decisions" in files:
+        report.good("decisions", f"{len(read_decisions(files['extent.decisions']))} decisions on views")
+    if "skill.walked_extents" in files:
+        report.good(
+            "walked extents", f"{len(read_walked(files['skill.walked_extents']))} extents measured on the ground"
+        )
+
+
+def _check_output(report: _Report, pipeline: Pipeline) -> None:
+    products = pipeline.out / "products"
+    months = sorted(p.name for p in products.glob("????-??")) if products.is_dir() else []
+    report.good(
+        "output", f"{pipeline.out}: " + (f"deliveries {months[0]} to {months[-1]}" if months else "no delivery yet")
+    )
+
+
+def why_lines(pipeline: Pipeline, catalog: Any) -> list[str]:
+    """Return, in words, what the next run would do and why."""
+    from inundate.batch.ledger import Ledger
+    from inundate.scenes import fingerprint as scene_mark
+
+    archive = Archive(pipeline.out)
+    if not (archive.folder / "ledger.sqlite").exists():
+        return [f"{len(catalog.scenes)} scenes to read: nothing was done yet"]
+    ledger = Ledger(archive.folder / "ledger.sqlite")
+    try:
+        lines = []
+        for scene in catalog.scenes:
+            unit = ledger.get("view", scene.scene_id)
+            if unit is None:
+                lines.append(f"scene {scene.scene_id}: new, to be read")
+            elif unit.parts.get("scene") != scene_mark(scene):
+                lines.append(f"scene {scene.scene_id}: its files, scaling or mask rules changed, to be read again")
+            elif unit.state == "done" and not archive.view(scene.scene_id).exists():
+                lines.append(f"scene {scene.scene_id}: its view is gone from the archive, to be read again")
+            elif unit.state == "set_aside":
+                lines.append(
+                    f"scene {scene.scene_id}: stays set aside until its files change: {unit.detail.get('reason')}"
+                )
+        lines += _changed_inputs(pipeline, ledger)
+        return lines or ["nothing changed: a run would leave the delivery as it stands"]
+    finally:
+        ledger.close()
+
+
+def _changed_inputs(pipeline: Pipeline, ledger: Any) -> list[str]:
+    from inundate.batch.field import logger_marks
+    from inundate.batch.run import ALL_PARTS
+    from inundate.batch.work import code_mark, input_marks
+
+    unit = ledger.get("delivery", "newest")
+    if unit is None:
+        return ["no delivery was finished yet"]
+    now = {**input_marks(pipeline), **logger_marks(pipeline)}
+    old = unit.parts.get("inputs", {})
+    lines = [
+        f"{key}: changed; what depends on it is done again"
+        for key in sorted({*now, *old})
+        if now.get(key) != old.get(key)
+    ]
+    settings = pipeline.model_dump(mode="json", exclude={"file", "compute"})
+    for section in sorted(settings):
+        if settings[section] != unit.parts.get("settings", {}).get(section):
+            lines.append(f"settings of [{section}]: changed; what depends on them is done again")
+    if unit.parts.get("code") != code_mark(*ALL_PARTS):
+        lines.append("the program's own code changed; steps whose code differs are done again")
+    return lines
+
+
+def check_lines(result: dict[str, Any]) -> list[str]:
+    """Return the table that ``inundate check`` prints."""
+    width = max((len(r["item"]) for r in result["rows"]), default=0)
+    lines = [f"{r['item']:<{width}}  {r['state']:<9}  {r['words']}" for r in result["rows"]]
+    odd = sum(r["state"] == "odd" for r in result["rows"])
+    lines.append(f"{odd} odd, {len(result['refused'])} refused" if odd or result["refused"] else "all good")
+    if "why" in result:
+        lines += ["", "the next run:", *(f"  {line}" for line in result["why"])]
+    return lines
