@@ -22,9 +22,9 @@ from inundate.stage.record import (
     make_record,
     own_checks,
     prepare_logger,
-    rain_series,
 )
-from inundate.stage.steps import Surroundings
+from inundate.stage.signals import Hours
+from inundate.stage.steps import Surroundings, sky_table
 
 
 @dataclass(slots=True)
@@ -112,11 +112,12 @@ def daily_stage(
     if refused and not ready:
         message = f"none of {len(refused)} loggers can be used; the first: {refused[0].reason}"
         raise InputError(message)
-    around = Surroundings(rain_series(weather), {k: p.hours for k, p in ready.items()})
+    around = Surroundings(sky_table(weather), {k: _wet(p.hours, p.hours.mean > 0.02) for k, p in ready.items()})
     found: dict[str, Found] = {}
     priors = Priors()
     for again in (False, True):
         if again:
+            around.levels = {k: _wet(ready[k].hours, ~f.settled.dryness.dry) for k, f in found.items()}
             priors = priors.learn([f.settled.offset for f in found.values()])
         for logger_id in list(ready):
             try:
@@ -127,6 +128,10 @@ def daily_stage(
     _share_slow_errors(found)
     made = {k: make_record(f, options) for k, f in found.items()}
     return _gather(made, refused, _shared_clock(ready))
+
+
+def _wet(hours: Hours, wet: np.ndarray) -> Hours:
+    return Hours(*(getattr(hours, k)[wet] for k in ("hour", "time", "n", "mean", "low", "high")))
 
 
 def _share_slow_errors(found: dict[str, Found]) -> None:

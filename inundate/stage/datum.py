@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from itertools import product
 
 import numpy as np
@@ -12,7 +12,7 @@ YEAR_NS = 365.25 * 86400e9
 #: told, checks likewise.
 _SLOPES = np.array([0.0, 0.01, 0.05])
 _WANDER = np.array([0.0, 0.01, 0.04])
-_SURVEY = np.array([0.2, 1.0, 3.0, 10.0])
+_SURVEY = np.array([0.1, 0.3, 1.0, 3.0, 10.0])
 _CHECKS = np.array([1.0, 1.6, 3.0])
 _MODELS = np.array(list(product(_SLOPES, _WANDER, _SURVEY, _CHECKS)))
 
@@ -26,30 +26,66 @@ class Priors:
     slope, wander, survey, checks : tuple of float
         Weights that sum to one. The defaults are common practice, no source: most sensors drift by well under 1 cm a
         year, few by several; most surveys and checks are as good as told, few are several times worse.
+    zero_sd_m : float
+        How well a dry sensor tells its zero under water, besides the scatter of its readings.
     """
 
     slope: tuple[float, ...] = (0.60, 0.25, 0.15)
     wander: tuple[float, ...] = (0.70, 0.20, 0.10)
-    survey: tuple[float, ...] = (0.15, 0.60, 0.15, 0.10)
+    survey: tuple[float, ...] = (0.10, 0.20, 0.50, 0.12, 0.08)
     checks: tuple[float, ...] = (0.60, 0.25, 0.15)
+    zero_sd_m: float = 0.003
 
     def log_weights(self) -> np.ndarray:
         """Return log weights of all models, shape (model,)."""
         parts = product(self.slope, self.wander, self.survey, self.checks)
         return np.array([float(np.log(np.prod(p))) for p in parts])
 
-    def learn(self, offsets: list[Offset], strength: float = 4.0) -> Priors:
-        """Return the weights that the loggers of an area show (one step of EM), these counting as ``strength`` loggers."""
-        shape = (_SLOPES.size, _WANDER.size, _SURVEY.size, _CHECKS.size)
-        told = [o for o in offsets if (~o.evidence.zero).sum() >= 3]
-        out = []
-        for axis, own in enumerate((self.slope, self.wander, self.survey, self.checks)):
-            others = tuple(i for i in range(4) if i != axis)
-            count = strength * np.array(own)
-            for offset in told:
-                count = count + offset.weights.reshape(shape).sum(axis=others)
-            out.append(tuple(float(c) for c in count / count.sum()))
-        return Priors(*out)
+    def learn(self, offsets: list[Offset], strength: float = 2.0) -> Priors:
+        """Return the weights that the loggers of an area show, the present ones counting as ``strength`` loggers.
+
+        Empirical Bayes by expectation-maximisation over the models' likelihoods; loggers with fewer than three checks
+        say nothing.
+
+        Parameters
+        ----------
+        offsets : list of Offset
+            Fitted with these priors.
+        strength : float
+
+        Returns
+        -------
+        Priors
+        """
+        told = [o.weights for o in offsets if (~o.evidence.zero).sum() >= 3]
+        if not told:
+            return self
+        axes = (self.slope, self.wander, self.survey, self.checks)
+        shape = tuple(len(a) for a in axes)
+        likelihood = np.array(told) / np.exp(self.log_weights())
+        new = self
+        for _ in range(50):
+            weights = likelihood * np.exp(new.log_weights())
+            share = (weights / weights.sum(axis=1, keepdims=True)).sum(axis=0).reshape(shape)
+            counts = [
+                strength * np.array(own) + share.sum(axis=tuple(i for i in range(4) if i != axis))
+                for axis, own in enumerate(axes)
+            ]
+            new = Priors(*(tuple(float(c) for c in count / count.sum()) for count in counts), self.zero_sd_m)
+        return replace(new, zero_sd_m=self._learn_zero(offsets))
+
+    def _learn_zero(self, offsets: list[Offset]) -> float:
+        """Scatter of dry readings about the fitted zero, over all loggers with several dry spells."""
+        rest = []
+        for offset in offsets:
+            e = offset.evidence
+            if e.zero.sum() >= 3:
+                rest.append((e.offset_m - offset.at(e.time, e.span, part="zero")[0])[e.zero])
+        if sum(r.size for r in rest) < 8:
+            return self.zero_sd_m
+        # each logger's own zero took a degree of freedom
+        square = sum(float(r @ r) for r in rest) / sum(r.size - 1 for r in rest)
+        return float(np.clip(np.sqrt(square), 0.001, 0.01))
 
 
 @dataclass(frozen=True, slots=True)

@@ -109,7 +109,8 @@ def daily_rows(settled: Settled) -> pd.DataFrame:
     missing = np.clip(1.0 - count / usual, 0.0, 1.0)
     swing = spread(np.diff(mean)) if mean.size > 2 else 0.0
     slow = settled.slow_m
-    warm = 0.0015 * np.maximum(np.add.reduceat(hours.mean, start) / count, 0.0)
+    cold = np.array([not s.warm for s in settled.spans])[settled.span[start]]
+    warm = 0.0015 * cold * np.maximum(np.add.reduceat(hours.mean, start) / count, 0.0)
     var = sd**2 + slow**2 + settled.noise**2 / n + (missing * swing) ** 2 + warm**2
     var = np.where(censored, tall_sd**2 + slow**2, var)
     period = 1 + np.searchsorted(_period_starts(settled), grid[:-1], side="right")

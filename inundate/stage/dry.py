@@ -116,7 +116,9 @@ def _day_spread(level: np.ndarray, path: np.ndarray) -> float:
         if b - a >= _SURE:
             # the first and last day may hold water
             days = level[a + 4 : b - 4][: (b - a - 8) // 4 * 4].reshape(-1, 4).mean(axis=1)
-            rest.append(days - np.median(days))
+            if days.size >= 3:
+                # a drift within the spell is no scatter
+                rest.append(days - np.polyval(np.polyfit(np.arange(days.size), days, 1), np.arange(days.size)))
     return spread(np.concatenate(rest)) if rest else float("nan")
 
 

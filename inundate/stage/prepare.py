@@ -39,6 +39,8 @@ class Span:
         Depth of good readings by hours.
     noise : float
         sd of a reading, m.
+    warm : bool
+        Whether the logger measured temperature.
     clock : list of ClockSpell
     notes : list of str
     """
@@ -50,6 +52,7 @@ class Span:
     flag: np.ndarray
     hours: Hours
     noise: float
+    warm: bool = True
     clock: list[ClockSpell] = field(default_factory=list)
     notes: list[str] = field(default_factory=list)
 
@@ -195,7 +198,8 @@ def prepare_span(
     depth, air = _depth(row, name, (time, raw, warmth), barometer, latitude_deg, options)
     flag = np.zeros(time.size, np.uint8)
     hours, noise = _flag_all(row, (time, raw, warmth), (depth, air), flag, frost)
-    span = Span(row, time, raw, depth, flag, hours, noise, spells)
+    warm = row["kind"] == "level" or (warmth is not None and bool(np.isfinite(warmth).mean() > 0.5))
+    span = Span(row, time, raw, depth, flag, hours, noise, warm, spells)
     _remark(span, readings, place)
     return span
 

@@ -16,7 +16,7 @@ from inundate.stage.options import StageOptions
 from inundate.stage.prepare import Span, prepare_span
 from inundate.stage.readings import Barometer, Readings
 from inundate.stage.signals import HOUR_NS, Hours, interpolate, stamp
-from inundate.stage.steps import Surroundings, hidden_candidates, jump_candidates
+from inundate.stage.steps import Surroundings, hidden_candidates, jump_candidates, sky_table
 
 
 @dataclass(slots=True)
@@ -147,7 +147,7 @@ def _gather_checks(made: Prepared, checks: pd.DataFrame, options: StageOptions) 
 
 
 def _evidence(
-    made: Prepared, checks: pd.DataFrame, dryness: Dryness, options: StageOptions
+    made: Prepared, checks: pd.DataFrame, dryness: Dryness, options: StageOptions, zero_sd_m: float
 ) -> tuple[Evidence, np.ndarray]:
     """Offsets told by checks on wet times and by the zero of dry spells; and which checks (positions) were used."""
     time = checks["ns"].to_numpy(np.int64)
@@ -163,7 +163,7 @@ def _evidence(
     return Evidence(
         np.r_[time[used], zero_at],
         np.r_[(checks["stage_m"] - checks["raw_m"]).to_numpy(float)[used], [-z for *_, z, _ in spells]],
-        np.r_[sd[used], [max(s, 0.003) for *_, s in spells]],
+        np.r_[sd[used], [np.hypot(s, zero_sd_m) for *_, s in spells]],
         np.r_[np.zeros(used.size, bool), np.ones(len(spells), bool)],
         np.r_[checks["span"].to_numpy(np.int64)[used], zero_span],
         int(made.hours.time[0]),
@@ -228,13 +228,14 @@ def find_datum(
         raise InputError(message)
     noise = max(s.noise for s in made.spans)
     matched, refused = _gather_checks(made, checks, options)
+    priors = priors or Priors()
     nothing = Dryness(np.zeros(made.span.size, bool), made.height_m, noise, [])
-    offset = fit_offset(_evidence(made, matched.iloc[:0], nothing, options)[0], (), priors)
+    offset = fit_offset(_evidence(made, matched.iloc[:0], nothing, options, priors.zero_sd_m)[0], (), priors)
     dryness = _dry_by(offset, made, noise)
     candidates: list[Step] = []
     doubtful: list[int] = []
     for _ in range(3):
-        evidence, used = _evidence(made, matched, dryness, options)
+        evidence, used = _evidence(made, matched, dryness, options, priors.zero_sd_m)
         candidates = _candidates(made, matched, dryness, around, options)
         offset = choose_steps(evidence, candidates, priors)
         odd = doubtful_evidence(offset)
@@ -347,7 +348,7 @@ def build_record(
     options = options or StageOptions()
     latitudes = dict.fromkeys(rows["wetland_id"], latitude_deg)
     made = prepare_logger(rows, readings, barometer, latitudes, options, frost=frost_days(weather))
-    around = Surroundings(rain_series(weather), {})
+    around = Surroundings(sky_table(weather), {})
     return make_record(find_datum(made, own_checks(checks, made.logger_id), around, options), options)
 
 
@@ -359,13 +360,6 @@ def own_checks(checks: pd.DataFrame | None, logger_id: str) -> pd.DataFrame:
     if "sd_m" not in out:
         out["sd_m"] = np.nan
     return out.astype({"time": "datetime64[ns]", "stage_m": float, "sd_m": float})
-
-
-def rain_series(weather: pd.DataFrame | None) -> pd.Series | None:
-    """Return daily rain by date, or None."""
-    if weather is None or "precipitation_mm" not in weather:
-        return None
-    return pd.Series(weather["precipitation_mm"].to_numpy(float), pd.DatetimeIndex(weather["date"]))
 
 
 def frost_days(weather: pd.DataFrame | None) -> np.ndarray | None:

@@ -39,20 +39,20 @@ class Surroundings:
 
     Attributes
     ----------
-    rain : Series of float, or None
-        Daily precipitation, mm, indexed by date.
-    changes : dict of str to (hour, change) arrays
-        Change of level over the hour (m), by logger: from other loggers.
+    weather : DataFrame or None
+        Indexed by date: rain_mm of the day and the day before, and melt (whether snow may be melting).
+    levels : dict of str to Hours
+        Depth by logger, at wet times.
     """
 
-    rain: pd.Series | None
-    changes: dict[str, Hours]
+    weather: pd.DataFrame | None
+    levels: dict[str, Hours]
 
     def others(self, logger_id: str, time: int) -> np.ndarray:
         """Return changes (m) of the other loggers' level over three hours about a time."""
         out = []
         hour = time // HOUR_NS
-        for name, hours in self.changes.items():
+        for name, hours in self.levels.items():
             if name == logger_id:
                 continue
             i = np.searchsorted(hours.hour, [hour - 2, hour + 1])
@@ -60,13 +60,37 @@ class Surroundings:
                 out.append(hours.mean[i[1]] - hours.mean[i[0]])
         return np.array(out)
 
-    def rain_mm(self, time: int) -> float:
-        """Return rain (mm) of the day and the day before; NaN where not known."""
-        if self.rain is None or self.rain.empty:
-            return float("nan")
+    def sky(self, time: int) -> tuple[float, bool]:
+        """Return rain (mm) of the day and the day before (NaN where not known), and whether snow may be melting."""
         day = pd.Timestamp(time // DAY_NS * DAY_NS)
-        known = self.rain.reindex([day - pd.Timedelta(days=1), day])
-        return float(known.sum()) if known.notna().any() else float("nan")
+        if self.weather is None or day not in self.weather.index:
+            return float("nan"), False
+        return float(self.weather.at[day, "rain_mm"]), bool(self.weather.at[day, "melt"])
+
+
+def sky_table(weather: pd.DataFrame | None) -> pd.DataFrame | None:
+    """Prepare daily weather for :class:`Surroundings`.
+
+    Snow may be melting on a day with a mean over 0.5 degrees where, within the 30 days before, more than 2 mm fell on
+    days under 1 degree. Common practice, no source.
+
+    Parameters
+    ----------
+    weather : DataFrame or None
+        date, precipitation_mm [, air_temperature_c].
+
+    Returns
+    -------
+    DataFrame or None
+    """
+    if weather is None or "precipitation_mm" not in weather:
+        return None
+    table = pd.DataFrame({"rain": weather["precipitation_mm"].to_numpy(float)}, pd.DatetimeIndex(weather["date"]))
+    table["warmth"] = np.nan if "air_temperature_c" not in weather else weather["air_temperature_c"].to_numpy(float)
+    table = table[~table.index.duplicated()].sort_index().asfreq("D")
+    snow = table["rain"].where(table["warmth"] < 1.0, 0.0).rolling(30, min_periods=1).sum()
+    rain = table["rain"].rolling(2, min_periods=1).sum()
+    return pd.DataFrame({"rain_mm": rain, "melt": (snow > 2.0) & (table["warmth"] > 0.5)})
 
 
 def jump_candidates(
@@ -120,22 +144,26 @@ def jump_candidates(
 
 def _odds(logger_id: str, time: int, size: float, around: Surroundings) -> tuple[float, str]:
     """Log odds that a sudden change is a moved sensor. Common practice, no source: rain and company excuse a rise."""
-    others, rain = around.others(logger_id, time), around.rain_mm(time)
+    others = around.others(logger_id, time)
+    rain, melt = around.sky(time)
     same = others * np.sign(size)
-    company = others.size > 0 and np.median(same) > max(0.25 * abs(size), 0.004)
-    if company:
+    if others.size and np.median(same) > max(0.25 * abs(size), 0.004):
         return -7.0, f"{others.size} other loggers change alike (median {np.median(others) * 100:+.1f} cm)"
+    if others.size and (same > 0.003).mean() >= 0.5:
+        return -4.0, f"{(same > 0.003).sum()} of {others.size} other loggers change a little in the same hours"
     quiet = others.size >= 2 and bool((np.abs(others) < 0.25 * abs(size)).mean() > 0.7)
     calm = f"{others.size} other loggers stay" if quiet else "no other logger to compare"
     if size < 0:
         return (4.0 if quiet else 2.0), f"a sudden fall that draining can't give; {calm}"
-    if np.isfinite(rain):
-        if rain < 0.5:
-            return (4.0 if quiet else 2.0), f"a sudden rise without rain ({rain:.1f} mm in two days); {calm}"
-        if size > 0.02 * rain:
-            return (1.0 if quiet else -2.0), f"a sudden rise of over 20 times the rain ({rain:.1f} mm); {calm}"
-        return (-3.0 if quiet else -5.0), f"a sudden rise with rain ({rain:.1f} mm); {calm}"
-    return (1.0 if quiet else -2.0), f"a sudden rise, rain not known; {calm}"
+    if not np.isfinite(rain):
+        return (1.0 if quiet else -2.0), f"a sudden rise, rain not known; {calm}"
+    if melt:
+        return (-2.0 if quiet else -4.0), f"a sudden rise while snow may be melting; {calm}"
+    if rain < 0.5:
+        return (4.0 if quiet else 2.0), f"a sudden rise without rain ({rain:.1f} mm in two days); {calm}"
+    if size > 0.02 * rain:
+        return (1.0 if quiet else -2.0), f"a sudden rise of over 20 times the rain ({rain:.1f} mm); {calm}"
+    return (-3.0 if quiet else -5.0), f"a sudden rise with rain ({rain:.1f} mm); {calm}"
 
 
 def hidden_candidates(hours: Hours, dry: np.ndarray, checks: np.ndarray) -> list[Step]:

@@ -29,23 +29,33 @@ def run(folder: Path):
     latitudes = dict(zip(shapes["wetland_id"], places, strict=True))
     result = daily_stage(registry, LoggerFiles(registry), barometer, checks, latitudes, weather=weather)
     result.refused[:0] = refused
-    return registry, result
+    return result
 
 
-def score(folder: Path, registry: pd.DataFrame, daily: pd.DataFrame) -> pd.DataFrame:
+def dry_days(faults: pd.DataFrame, dates: pd.Series) -> np.ndarray:
+    """Whether the water stood at or below the sensor for at least half of each day, by the truth's dry hours."""
+    hours = [
+        pd.date_range(row["start"], row["end"], freq="h") for row in faults[faults["fault"] == "dry"].to_dict("records")
+    ]
+    if not hours:
+        return np.zeros(len(dates), bool)
+    count = pd.Series(np.concatenate([h.floor("D").to_numpy() for h in hours])).value_counts()
+    return count.reindex(pd.DatetimeIndex(dates)).fillna(0).to_numpy() >= 12
+
+
+def score(folder: Path, daily: pd.DataFrame) -> pd.DataFrame:
     """One row a logger: error, coverage and dry agreement."""
     stage = pd.read_parquet(folder / "truth/stage_daily.parquet")
     stage["date"] = pd.to_datetime(stage["date"])
     faults = pd.read_parquet(folder / "truth/loggers.parquet")
-    height = registry.groupby("logger_id")["height_m"].first()
     rows = []
     for name, mine in daily.groupby("logger_id"):
         both = mine.merge(stage.rename(columns={"stage_m": "true_m"}), on=["wetland_id", "date"])
-        low_true = both["true_m"] <= height[name]
+        own = faults[faults["logger_id"] == name]
+        low_true = pd.Series(dry_days(own, both["date"]), both.index)
         wet = ~both["censored"] & ~low_true
         error = (both["stage_m"] - both["true_m"])[wet].to_numpy()
         z = np.abs(error) / both["stage_sd_m"][wet].to_numpy()
-        own = faults[faults["logger_id"] == name]
         rows.append(
             {
                 "logger": name,
@@ -58,6 +68,8 @@ def score(folder: Path, registry: pd.DataFrame, daily: pd.DataFrame) -> pd.DataF
                 "in_2sd": (z < 2).mean(),
                 "dry_true": int(low_true.sum()),
                 "dry_right": float((both["censored"] == low_true).mean()),
+                "right": int((both["censored"] == low_true).sum()),
+                "all": len(both),
                 "hit": int((z < 1).sum()),
                 "hit2": int((z < 2).sum()),
                 "sum2": float((error**2).sum()),
@@ -78,10 +90,10 @@ def main() -> None:
     tables = []
     for folder in folders:
         began = time.perf_counter()
-        registry, result = run(folder)
-        table = score(folder, registry, result.daily)
+        result = run(folder)
+        table = score(folder, result.daily)
         print(f"== {folder}: {time.perf_counter() - began:.1f} s")
-        print(table.drop(columns=["hit", "hit2", "sum2"]).round(3).to_string(index=False))
+        print(table.drop(columns=["hit", "hit2", "sum2", "right", "all"]).round(3).to_string(index=False))
         faults = pd.read_parquet(folder / "truth/loggers.parquet")
         print(faults[faults["fault"].str.contains("move")].to_string(index=False))
         steps = result.corrections[result.corrections["kind"].isin(["step", "clock"])]
@@ -98,7 +110,7 @@ def main() -> None:
         print(
             f"{name}: {len(part)} loggers, {days} days, RMSE {100 * np.sqrt(part['sum2'].sum() / days):.2f} cm, "
             f"within 1 sd {100 * part['hit'].sum() / days:.1f} %, within 2 sd {100 * part['hit2'].sum() / days:.1f} %, "
-            f"dry days right {100 * (part['dry_right'] * part['days']).sum() / days:.2f} %"
+            f"dry or not right {100 * part['right'].sum() / part['all'].sum():.2f} % of {part['all'].sum()} days"
         )
 
 
