@@ -12,22 +12,33 @@ from inundate.leaves.canopy import (
     gap_fraction,
     leaf_area_from_gap,
     leaf_area_from_ndvi,
+    leaf_area_over_ground,
     ndvi_from_leaf_area,
     view_fraction,
 )
-from inundate.leaves.curves import beck, curvature_dates, curvature_rate, elmore, saturating
+from inundate.leaves.curves import (
+    Optics,
+    beck,
+    canopy_greenness,
+    curvature_dates,
+    curvature_rate,
+    elmore,
+    canopy_greenness,
+)
 
 __all__ = [
     "Canopy",
     "LeafCalendar",
+    "Optics",
     "beck",
+    "canopy_greenness",
     "curvature_dates",
     "curvature_rate",
     "elmore",
     "gap_fraction",
     "leaf_area_from_gap",
     "leaf_area_from_ndvi",
+    "leaf_area_over_ground",
     "ndvi_from_leaf_area",
-    "saturating",
     "view_fraction",
 ]

@@ -30,8 +30,9 @@ class LeafCalendar(BaseEstimator):
     views are few (see :mod:`inundate.leaves.pooling`); dates are those at which 10, 50 and 90 % of the leaves are
     out or down. Years without views take their dates from air temperature, or else from the other years.
 
-    Open wetlands carry the landscape's dates (their rims and their plants follow it; what hides their ground is told
-    pixel by pixel by :func:`inundate.leaves.view_fraction`). Evergreen wetlands are always ``leaf_on``.
+    Deciduous wetlands are pooled among themselves, and open ones, whose plants are herbs, among themselves: their leaf
+    share is that of their herbs (how much it hides is told pixel by pixel by :func:`inundate.leaves.view_fraction`).
+    Evergreen wetlands are always ``leaf_on``.
 
     Parameters
     ----------
@@ -47,9 +48,9 @@ class LeafCalendar(BaseEstimator):
     seasons_ : DataFrame
         wetland_id, year, cover, green_up_start, green_up_mid, green_up_end, leaf_fall_start, leaf_fall_mid,
         leaf_fall_end (dates), sd_days, green_up_sd_days, leaf_fall_sd_days, source (``views``, ``pooled``,
-        ``temperature``, ``day_of_year``, ``landscape``, ``fixed``, ``none``), n_views. NaT for evergreen wetlands.
+        ``temperature``, ``day_of_year``, ``fixed``, ``none``), n_views. NaT for evergreen wetlands.
     landscape_ : DataFrame
-        The same columns for the landscape, one row a year.
+        The same columns for the landscape's deciduous woods, one row a year.
     cover_ : dict of str to str
         open, deciduous or evergreen.
     offset_days_ : int
@@ -120,9 +121,12 @@ class LeafCalendar(BaseEstimator):
             )
             raise InputError(message)
         cover = tell_cover(views, scale)
-        pooled = pool(views, cover, scale)
-        limbs = Limbs.from_pooled(pooled, read_warmth(temperature, views.offset_days))
-        self.seasons_, self.landscape_ = build_seasons(views, cover, pooled, limbs, given)
+        warmth = read_warmth(temperature, views.offset_days)
+        kinds = {}
+        for code in (DECIDUOUS, OPEN_COVER):
+            pooled = pool(views, cover == code, scale)
+            kinds[code] = (pooled, Limbs.from_pooled(pooled, warmth))
+        self.seasons_, self.landscape_ = build_seasons(views, cover, kinds, given)
         self.cover_ = {str(k): COVERS[_COVER_PLACE[int(c)]] for k, c in zip(views.ids, cover, strict=True)}
         self.offset_days_ = views.offset_days
         self.scale_ = {"bare": scale.bare, "dense": scale.dense, "top": scale.top}

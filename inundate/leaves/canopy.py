@@ -7,6 +7,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from inundate.common.errors import InputError
+from inundate.leaves.curves import RATE, RATE_BRIGHT, ground_brightness
 
 
 @dataclass(frozen=True, slots=True)
@@ -16,22 +17,21 @@ class Canopy:
     Attributes
     ----------
     top_ndvi : float
-        NDVI of endlessly deep canopy. Default from radiative transfer (PROSPECT-D with 4SAIL, sun at 30 degrees).
+        NDVI of endlessly deep canopy. Default from radiative transfer (PROSPECT-D with 4SAIL, four grounds from water to
+        litter, sun at 30 degrees: 0.942 to 0.955).
     ground_ndvi : float
-        NDVI of ground without leaves, same source.
-    extinction_ndvi : float
-        Rate ``K`` at which NDVI approaches ``top_ndvi`` with leaf area, same source.
+        NDVI of ground without leaves where a pixel's own leaf-off NDVI is not lower.
     extinction : float
         ``k = G Omega``: projection of leaves times clumping; 0.5 for spherical leaves without clumping.
     wood_area : float
-        Area of stems and branches per ground area (m2/m2) under a canopy of full cover; it stays when leaves are off.
+        Area of stems and branches per ground area (m2/m2) under a canopy of full cover; it stays when leaves are off
+        (common practice, no source).
     most_leaf_area : float
         Leaf area beyond which NDVI no longer tells (m2/m2).
     """
 
-    top_ndvi: float = 0.9412
-    ground_ndvi: float = 0.1503
-    extinction_ndvi: float = 0.8915
+    top_ndvi: float = 0.95
+    ground_ndvi: float = 0.15
     extinction: float = 0.5
     wood_area: float = 0.5
     most_leaf_area: float = 8.0
@@ -106,6 +106,38 @@ def leaf_area_from_ndvi(
     return -np.log(np.clip(ratio, least, 1.0)) / rate
 
 
+def leaf_area_over_ground(
+    ndvi: np.ndarray, ground: np.ndarray | float, *, top: float = 0.95, most: float = 8.0
+) -> np.ndarray:
+    """Leaf area of a canopy over ground of known NDVI, dark or bright; NaN gives NaN.
+
+    Inverse of the mixture of :func:`inundate.leaves.canopy_greenness` with green leaves. For ground as bright as the canopy
+    it is the inverse of Baret & Guyot (1991); over dark, wet ground a few leaves already give a high NDVI.
+
+    Parameters
+    ----------
+    ndvi, ground : ndarray
+        NDVI of the view and of its ground.
+    top : float
+        NDVI of endlessly deep canopy.
+    most : float
+        Leaf area returned where NDVI has reached ``top``.
+
+    Returns
+    -------
+    ndarray of float64
+        m2/m2, 0..``most``.
+    """
+    view, under = np.asarray(ndvi, float), np.asarray(ground, float)
+    bright = ground_brightness(under)
+    rate = RATE + RATE_BRIGHT * bright
+    short = np.maximum(top - view, 0.0)
+    with np.errstate(divide="ignore", invalid="ignore"):
+        gap = short / (short + bright * np.maximum(view - under, 0.0))
+        gap = np.where(short + np.maximum(view - under, 0.0) > 0, gap, np.where(np.isnan(view), np.nan, 0.0))
+    return -np.log(np.clip(gap, np.exp(-rate * most), 1.0)) / rate
+
+
 def view_fraction(
     peak_ndvi: np.ndarray,
     bare_ndvi: np.ndarray,
@@ -116,9 +148,9 @@ def view_fraction(
 ) -> np.ndarray:
     """Share of each pixel's ground that can be seen through the canopy on one day.
 
-    Plant area in leaf-off and in full leaf comes from the pixel's own leaf-off and peak-season NDVI (Baret & Guyot 1991);
-    leaves between them come and go with ``leaf_share``; wood, in proportion to how far the full canopy closes, stays.
-    The gap fraction of that plant area (Nilson 1971) is what is seen.
+    Plant area in leaf-off and in full leaf comes from the pixel's own leaf-off and peak-season NDVI
+    (:func:`leaf_area_over_ground`); leaves between them come and go with ``leaf_share``; wood, in proportion to how far
+    the full canopy closes, stays. The gap fraction of that plant area (Nilson 1971) is what is seen.
 
     Parameters
     ----------
@@ -151,9 +183,10 @@ def view_fraction(
     share = np.clip(np.asarray(leaf_share, float), 0.0, 1.0)
     bare = np.asarray(bare_ndvi, float)
     bare = np.where(np.isnan(bare), canopy.ground_ndvi, bare)
-    settings = (canopy.top_ndvi, canopy.ground_ndvi, canopy.extinction_ndvi)
-    full = leaf_area_from_ndvi(peak_ndvi, *settings, most=canopy.most_leaf_area)
-    least = np.minimum(leaf_area_from_ndvi(bare, *settings, most=canopy.most_leaf_area), full)
+    ground = np.minimum(bare, canopy.ground_ndvi)
+    limits = {"top": canopy.top_ndvi, "most": canopy.most_leaf_area}
+    full = leaf_area_over_ground(peak_ndvi, ground, **limits)
+    least = np.minimum(leaf_area_over_ground(bare, ground, **limits), full)
     closure = 1.0 - gap_fraction(full, 0.0, canopy.extinction)
     plant = least + share * (full - least) + closure * canopy.wood_area
     return gap_fraction(plant, view_zenith_deg, canopy.extinction)

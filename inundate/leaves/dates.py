@@ -129,39 +129,79 @@ def _apply_fixed(days: np.ndarray, fixed: dict[str, float]) -> np.ndarray:
 
 
 def build_seasons(
-    views: Views, cover: np.ndarray, pooled: Pooled, limbs: Limbs, fixed: dict[str, float]
+    views: Views, cover: np.ndarray, kinds: dict[int, tuple[Pooled, Limbs]], fixed: dict[str, float]
 ) -> tuple[pd.DataFrame, pd.DataFrame]:
-    """Build the tables of leaf dates of wetlands and of the landscape."""
+    """Build the tables of leaf dates of wetlands and of the landscape.
+
+    Parameters
+    ----------
+    views : Views
+    cover : ndarray of int64, shape (wetland,)
+    kinds : dict
+        Fits and years of deciduous and of open wetlands, by cover code; other covers have no dates.
+    fixed : dict
+        From :func:`check_fixed`.
+
+    Returns
+    -------
+    (seasons, landscape)
+    """
+    pooled, limbs = kinds[DECIDUOUS]
     size, span = views.ids.size, limbs.years.size
+    days, sd = np.full((size, span, 6), np.nan), np.full((size, span, 2), np.nan)
+    source = np.full((size, span), "none", object)
+    for code, (fits, years) in kinds.items():
+        mine = cover == code
+        parameters, spread, told = _of_kind(fits, years, size)
+        days[mine] = _knots(parameters[mine].reshape(-1, 8)).reshape(-1, span, 6)
+        sd[mine], source[mine] = spread[mine], told[mine]
+    count = np.zeros((size, span), np.int64)
+    np.add.at(count, (views.wetland, views.year - limbs.years[0]), 1)
+    table = (np.repeat(views.ids.astype(object), span), np.tile(limbs.years, size), np.repeat(cover, span))
+    seasons = _table(table, days.reshape(-1, 6), sd.reshape(-1, 2), source.ravel(), fixed, views.offset_days)
+    seasons["n_views"] = count.ravel()
+    common = np.tile(pooled.landscape, (span, 1))
+    common[:, _LIMBS] += limbs.shift
+    common_sd = np.sqrt(limbs.sd**2 + pooled.spread[_LIMBS] ** 2 + _conversion_sd(common) ** 2)
+    table = (np.full(span, "", object), limbs.years, np.full(span, DECIDUOUS))
+    landscape = _table(table, _knots(common), common_sd, limbs.told_by, fixed, views.offset_days)
+    landscape["n_views"] = count[cover == DECIDUOUS].sum(axis=0)
+    return seasons, landscape
+
+
+def _of_kind(pooled: Pooled, limbs: Limbs, size: int) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+    """Parameters (wetland, year, 8), sd_days (wetland, year, 2) and source of wetland-years: own fit where it knows more."""
+    span = limbs.years.size
     parameters = np.repeat(pooled.wetland.parameters[:, None, :], span, axis=1)
     parameters[:, :, _LIMBS] += limbs.shift[None]
     sd = np.sqrt(pooled.wetland.sd[:, None, _LIMBS] ** 2 + limbs.sd[None] ** 2 + pooled.residual_sd**2)
     source = np.tile(np.where(limbs.told_by == "views", "pooled", limbs.told_by).astype(object), (size, 1))
     if pooled.key.size:
         who, when = pooled.key[:, 0], pooled.key[:, 1] + pooled.years[0] - limbs.years[0]
-        own = pooled.single.sd[:, _LIMBS]
+        own = _BEYOND_FIT * pooled.single.sd[:, _LIMBS]
         better = own.mean(axis=1) < sd[who, when].mean(axis=1)
-        parameters[who[better], when[better]] = pooled.single.parameters[better]
-        source[who[better], when[better]] = np.where(
-            (own[better] < 0.7 * sd[who[better], when[better]]).all(axis=1), "views", "pooled"
-        )
-        sd[who[better], when[better]] = own[better]
-    common = np.tile(pooled.landscape, (span, 1))
-    common[:, _LIMBS] += limbs.shift
-    common_sd = np.sqrt(limbs.sd**2 + pooled.spread[_LIMBS] ** 2)
-    other = cover != DECIDUOUS
-    parameters[other], sd[other], source[other] = common, common_sd, "landscape"
-    count = np.zeros((size, span), np.int64)
-    if views.wetland.size:
-        np.add.at(count, (views.wetland, views.year - limbs.years[0]), 1)
-    days = _knots(parameters.reshape(-1, 8))
-    table = (np.repeat(views.ids.astype(object), span), np.tile(limbs.years, size), np.repeat(cover, span))
-    seasons = _table(table, days, sd.reshape(-1, 2), source.ravel(), fixed, views.offset_days)
-    seasons["n_views"] = count.ravel()
-    table = (np.full(span, "", object), limbs.years, np.full(span, DECIDUOUS))
-    landscape = _table(table, _knots(common), common_sd, limbs.told_by, fixed, views.offset_days)
-    landscape["n_views"] = count.sum(axis=0)
-    return seasons, landscape
+        who, when, own = who[better], when[better], own[better]
+        parameters[who, when] = pooled.single.parameters[better]
+        source[who, when] = np.where((own < sd[who, when]).all(axis=1), "views", source[who, when])
+        sd[who, when] = own
+    return parameters, np.sqrt(sd**2 + _conversion_sd(parameters) ** 2), source
+
+
+_BEYOND_FIT = 1.4
+"""Real error over the fit's own posterior spread, found by simulation with clouds, snow and changing water."""
+_COLOUR_SD_DAYS = 5.0
+"""How far the days between autumn colour and leaf fall vary (common practice, no source)."""
+
+
+def _conversion_sd(parameters: np.ndarray) -> np.ndarray:
+    """Uncertainty, in days, of what greenness says of leaf area.
+
+    Ground brightness and clumping of young leaves are each known to a factor of two; on a rising logistic that is a shift of
+    ``k ln 2`` each. In autumn the lead of colour over leaf fall comes on top.
+    """
+    scale = np.exp(parameters[..., _SCALES])
+    rise = np.sqrt(2.0) * np.log(2.0) * scale[..., 0]
+    return np.stack([rise, np.full_like(rise, _COLOUR_SD_DAYS)], axis=-1)
 
 
 def _table(

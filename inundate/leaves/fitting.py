@@ -1,4 +1,4 @@
-"""Robust fit of the saturating double logistic to many short series at once.
+"""Robust fit of a canopy's greenness curve to many short series at once.
 
 One code path serves the landscape, a wetland over all years, and a wetland in one year: they differ only in their
 prior. The fit is a maximum a posteriori estimate: least squares with a normal prior on each parameter, solved by
@@ -13,10 +13,10 @@ from dataclasses import dataclass
 import numba as nb
 import numpy as np
 
-from inundate.leaves.curves import GROUND_PASSAGE_DAYS
+from inundate.leaves.curves import BRIGHTEST, DARK, GROUND_PASSAGE_DAYS, RATE, RATE_BRIGHT, TURN, Optics
 
 N_PARAMETERS = 8
-SPRING, AUTUMN, KAPPA, DECLINE, RISE, RISE_SCALE, FALL, FALL_SCALE = range(N_PARAMETERS)
+SPRING, AUTUMN, LEAF_AREA, DECLINE, RISE, RISE_SCALE, FALL, FALL_SCALE = range(N_PARAMETERS)
 LOWER = np.array([-0.6, -0.6, math.log(0.005), -0.5, -90.0, math.log(1.0), -30.0, math.log(1.0)])
 UPPER = np.array([0.98, 0.98, math.log(9.0), 0.5, 400.0, math.log(45.0), 460.0, math.log(45.0)])
 TUKEY = 4.685
@@ -64,42 +64,66 @@ class Fitted:
 
 
 @nb.njit(cache=True, nogil=True)
-def _residuals(day, value, p, top, centre, out):  # type: ignore[no-untyped-def]
-    """Fill ``out`` with value minus curve."""
-    kappa = math.exp(p[2])
+def _state(t, p, optics, out):  # type: ignore[no-untyped-def]
+    """Curve at day ``t`` (returned) and, in ``out``, what its derivatives need."""
+    top, centre, drop, lead, plain = optics
     k1, k2 = math.exp(-p[5]), math.exp(-p[7])
-    for i in range(day.size):
-        t = day[i]
-        share = 0.5 * (math.tanh(0.5 * (t - p[4]) * k1) - math.tanh(0.5 * (t - p[6]) * k2))
-        g = 0.5 * (1.0 + math.tanh(0.5 * (t - centre) / GROUND_PASSAGE_DAYS))
-        ground = p[0] + (p[1] - p[0]) * g
-        out[i] = value[i] - (top - (top - ground) * math.exp(-kappa * share) - p[3] * (t - centre) / 100.0 * share)
+    s1 = 0.5 * (1.0 + math.tanh(0.5 * (t - p[4]) * k1))
+    s2 = 0.5 * (1.0 + math.tanh(0.5 * (t - p[6]) * k2))
+    colour = 0.5 * (1.0 + math.tanh(0.5 * (t - p[6] + lead) * k2))
+    passage = 0.5 * (1.0 + math.tanh(0.5 * (t - centre) / GROUND_PASSAGE_DAYS))
+    ground = p[0] + (p[1] - p[0]) * passage
+    bright, slope, rate = 1.0, 0.0, 1.0
+    if plain < 0.5:
+        bright = DARK / (TURN - min(ground, BRIGHTEST))
+        slope = bright / (TURN - ground) if ground < BRIGHTEST else 0.0
+        rate = RATE + RATE_BRIGHT * bright
+    leaf = math.exp(p[2])
+    share = s1 - s2
+    gap = math.exp(-rate * leaf * share)
+    canopy = top - drop * colour
+    bottom = 1.0 - gap + bright * gap
+    value = ((1.0 - gap) * canopy + bright * gap * ground) / bottom
+    out[0], out[1], out[2], out[3], out[4] = s1, s2, colour, passage, share
+    out[5] = (bright * ground - canopy - value * (bright - 1.0)) / bottom  # by gap
+    by_bright = gap * (ground - value) / bottom - out[5] * RATE_BRIGHT * (1.0 - plain) * leaf * share * gap
+    out[6] = bright * gap / bottom + by_bright * slope  # by ground
+    out[7] = (1.0 - gap) / bottom  # by canopy
+    out[8] = -rate * leaf * gap  # gap by share
+    lag = (t - centre) / 100.0
+    return value - p[3] * lag * share
 
 
 @nb.njit(cache=True, nogil=True)
-def _normal(day, residual, weight, p, top, centre, a, b):  # type: ignore[no-untyped-def]
+def _residuals(day, value, p, optics, out):  # type: ignore[no-untyped-def]
+    """Fill ``out`` with value minus curve."""
+    state = np.empty(9)
+    for i in range(day.size):
+        out[i] = value[i] - _state(day[i], p, optics, state)
+
+
+@nb.njit(cache=True, nogil=True)
+def _normal(day, residual, weight, p, optics, a, b):  # type: ignore[no-untyped-def]
     """Fill the normal matrix ``a`` (8, 8) and right-hand side ``b`` (8,) of the weighted least squares."""
-    kappa = math.exp(p[2])
+    _, centre, drop, lead, _ = optics
     k1, k2 = math.exp(-p[5]), math.exp(-p[7])
-    j = np.empty(8)
+    j, state = np.empty(8), np.empty(9)
     a[:] = 0.0
     b[:] = 0.0
     for i in range(day.size):
         if weight[i] <= 0.0:
             continue
         t = day[i]
-        s1 = 0.5 * (1.0 + math.tanh(0.5 * (t - p[4]) * k1))
-        s2 = 0.5 * (1.0 + math.tanh(0.5 * (t - p[6]) * k2))
-        share = s1 - s2
-        g = 0.5 * (1.0 + math.tanh(0.5 * (t - centre) / GROUND_PASSAGE_DAYS))
+        _state(t, p, optics, state)
+        s1, s2, colour, passage, share = state[0], state[1], state[2], state[3], state[4]
         lag = (t - centre) / 100.0
-        gap = math.exp(-kappa * share)
-        depth = (top - p[0] - (p[1] - p[0]) * g) * gap * kappa
-        by_share = depth - p[3] * lag
+        by_share = state[5] * state[8] - p[3] * lag
         d1, d2 = s1 * (1.0 - s1) * k1, s2 * (1.0 - s2) * k2
-        j[0], j[1], j[2], j[3] = gap * (1.0 - g), gap * g, depth * share, -lag * share
+        fade = state[7] * drop * colour * (1.0 - colour) * k2
+        j[0], j[1] = state[6] * (1.0 - passage), state[6] * passage
+        j[2], j[3] = state[5] * state[8] * share, -lag * share
         j[4], j[5] = -by_share * d1, -by_share * d1 * (t - p[4])
-        j[6], j[7] = by_share * d2, by_share * d2 * (t - p[6])
+        j[6], j[7] = by_share * d2 + fade, by_share * d2 * (t - p[6]) + fade * (t - p[6] + lead)
         for m in range(8):
             wj = weight[i] * j[m]
             b[m] += wj * residual[i]
@@ -149,17 +173,17 @@ def _cost(residual, weight, p, mean, precision):  # type: ignore[no-untyped-def]
 
 
 @nb.njit(cache=True, nogil=True)
-def _descend(day, value, weight, p, mean, precision, top, centre):  # type: ignore[no-untyped-def]
+def _descend(day, value, weight, p, mean, precision, optics):  # type: ignore[no-untyped-def]
     """Levenberg-Marquardt from ``p`` (changed in place); weights already divided by the noise variance."""
     n = day.size
     residual, trial_residual = np.empty(n), np.empty(n)
     a, b, low = np.empty((8, 8)), np.empty(8), np.zeros((8, 8))
     step, trial = np.empty(8), np.empty(8)
     damp = 1e-2
-    _residuals(day, value, p, top, centre, residual)
+    _residuals(day, value, p, optics, residual)
     cost = _cost(residual, weight, p, mean, precision)
     for _ in range(_STEPS):
-        _normal(day, residual, weight, p, top, centre, a, b)
+        _normal(day, residual, weight, p, optics, a, b)
         for m in range(8):
             b[m] += precision[m] * (mean[m] - p[m])
             a[m, m] += precision[m]
@@ -168,7 +192,7 @@ def _descend(day, value, weight, p, mean, precision, top, centre):  # type: igno
         _solve(low, b, step)
         for m in range(8):
             trial[m] = min(max(p[m] + step[m], LOWER[m]), UPPER[m])
-        _residuals(day, value, trial, top, centre, trial_residual)
+        _residuals(day, value, trial, optics, trial_residual)
         new = _cost(trial_residual, weight, trial, mean, precision)
         if new <= cost:
             gain = cost - new
@@ -185,13 +209,13 @@ def _descend(day, value, weight, p, mean, precision, top, centre):  # type: igno
 
 
 @nb.njit(cache=True, nogil=True)
-def _fit_one(day, value, weight, p, mean, precision, setting, sd):  # type: ignore[no-untyped-def]
+def _fit_one(day, value, weight, p, mean, precision, optics, setting, sd):  # type: ignore[no-untyped-def]
     """Robust fit of one series; returns its noise and effective count."""
-    top, centre, common_noise, trust = setting
+    common_noise, trust = setting
     n = day.size
     residual, robust = np.empty(n), np.empty(n)
     noise = common_noise
-    _residuals(day, value, p, top, centre, residual)
+    _residuals(day, value, p, optics, residual)
     for round_ in range(_ROUNDS):
         if round_ > 0 and n > 0:
             mad = 1.4826 * np.median(np.abs(residual))
@@ -202,10 +226,10 @@ def _fit_one(day, value, weight, p, mean, precision, setting, sd):  # type: igno
             robust[i] = weight[i] / (noise * noise) * ((1.0 - u * u) ** 2 if abs(u) < 1.0 else 0.0)
             if round_ == 0:  # the start may be far off: no view is thrown away yet
                 robust[i] = weight[i] / (noise * noise) / (1.0 + u * u)
-        _descend(day, value, robust, p, mean, precision, top, centre)
-        _residuals(day, value, p, top, centre, residual)
+        _descend(day, value, robust, p, mean, precision, optics)
+        _residuals(day, value, p, optics, residual)
     a, b, low, unit, x = np.empty((8, 8)), np.empty(8), np.zeros((8, 8)), np.zeros(8), np.empty(8)
-    _normal(day, residual, robust, p, top, centre, a, b)
+    _normal(day, residual, robust, p, optics, a, b)
     for m in range(8):
         a[m, m] += precision[m]
     _cholesky(a, low)
@@ -218,11 +242,11 @@ def _fit_one(day, value, weight, p, mean, precision, setting, sd):  # type: igno
 
 
 @nb.njit(cache=True, nogil=True, parallel=False)
-def _fit_all(day, value, weight, start, p, mean, precision, setting, sd, noise, count):  # type: ignore[no-untyped-def]
+def _fit_all(day, value, weight, start, p, mean, precision, optics, setting, sd, noise, count):  # type: ignore[no-untyped-def]
     for g in range(start.size - 1):
         lo, hi = start[g], start[g + 1]
         noise[g], count[g] = _fit_one(
-            day[lo:hi], value[lo:hi], weight[lo:hi], p[g], mean[g], precision[g], setting, sd[g]
+            day[lo:hi], value[lo:hi], weight[lo:hi], p[g], mean[g], precision[g], optics, setting, sd[g]
         )
 
 
@@ -231,22 +255,18 @@ def fit_series(
     mean: np.ndarray,
     spread: np.ndarray,
     *,
-    top: float,
-    centre: float,
+    optics: Optics,
     noise: float,
     trust: float = 8.0,
 ) -> Fitted:
-    """Fit the saturating double logistic to every series.
+    """Fit the greenness curve of :func:`inundate.leaves.curves.canopy_greenness` to every series.
 
     Parameters
     ----------
     series : Series
     mean, spread : ndarray of float64, shape (group, 8) or (8,)
-        Normal prior of the parameters (see :func:`inundate.leaves.curves.saturating`); the mean is also the start.
-    top : float
-        Greenness of endlessly deep canopy.
-    centre : float
-        Day at which ground greenness passes from spring to autumn.
+        Normal prior of the parameters; the mean is also the start.
+    optics : Optics
     noise : float
         Expected spread of one view about the curve.
     trust : float
@@ -262,7 +282,6 @@ def fit_series(
     precision = np.ascontiguousarray(np.broadcast_to(1.0 / np.square(np.asarray(spread, float)), shape))
     parameters = np.clip(mean, LOWER, UPPER)
     sd, spread_out, count = np.empty(shape), np.empty(groups), np.empty(groups)
-    setting = (float(top), float(centre), float(noise), float(trust))
     _fit_all(
         series.day,
         series.value,
@@ -271,7 +290,8 @@ def fit_series(
         parameters,
         mean,
         precision,
-        setting,
+        optics.values,
+        (float(noise), float(trust)),
         sd,
         spread_out,
         count,

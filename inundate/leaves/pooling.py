@@ -11,12 +11,13 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from inundate.leaves.curves import LOGIT_10, RATE, RATE_BRIGHT, Optics, ground_brightness
 from inundate.leaves.fitting import (
     AUTUMN,
     DECLINE,
     FALL,
     FALL_SCALE,
-    KAPPA,
+    LEAF_AREA,
     RISE,
     RISE_SCALE,
     SPRING,
@@ -36,7 +37,10 @@ OPEN_COVER, DECIDUOUS, EVERGREEN = 0, 1, 2
 _CLOSED = 0.65
 _DEEP_LEAF_AREA = 5.1
 """Mean leaf area of temperate deciduous broadleaf woods (Asner et al. 2003, Global Ecol. Biogeogr. 12:191; from memory)."""
-_EXTINCTION = 0.8915
+COLOUR_LEAD_DAYS = 8.0
+"""Days by which autumn colour runs ahead of leaf fall (ground observers in temperate deciduous woods; from memory)."""
+COLOURED_NDVI = 0.55
+"""NDVI of deep canopy in autumn colour: PROSPECT-D with 4SAIL, chlorophyll 2-5, brown 0.3-0.5, gives 0.51-0.64."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -49,6 +53,8 @@ class Scale:
         Of leafless ground, of the densest canopies, and of endlessly deep canopy.
     rise, fall : float
         First guess of the days of mid green-up and mid leaf fall.
+    plain : bool
+        Whether greenness is taken not to saturate.
     """
 
     bare: float
@@ -56,6 +62,14 @@ class Scale:
     top: float
     rise: float
     fall: float
+    plain: bool = False
+
+    @property
+    def optics(self) -> Optics:
+        """How leaf area becomes greenness."""
+        if self.plain:
+            return Optics(self.top, self.centre, plain=True)
+        return Optics(self.top, self.centre, max(self.dense - COLOURED_NDVI, 0.0), COLOUR_LEAD_DAYS)
 
     @property
     def centre(self) -> float:
@@ -82,7 +96,7 @@ class Pooled:
     year_shift, year_sd : ndarray, shape (year, 2)
         Departure of green-up and leaf fall from the landscape's mean, days, and how well it is known.
     single : Fitted
-        Every deciduous wetland in every year, with (wetland, year index) in ``key``.
+        Every wetland in every year with views, with (wetland, year index) in ``key``.
     key : ndarray of int64, shape (single, 2)
     residual_sd : ndarray, shape (2,)
         Spread of wetland-years about wetland plus year, days.
@@ -131,9 +145,14 @@ def find_scale(views: Views, bare: float | None, dense: float | None, *, saturat
         floor = grouped_quantile(views.wetland[dormant], views.value[dormant], size, 0.5)
         bare = float(np.nanquantile(floor, 0.1)) if np.isfinite(floor).any() else 0.15
         bare = min(max(bare, 0.0), 0.35)
-    left = np.exp(-_EXTINCTION * _DEEP_LEAF_AREA)
-    top = dense + (dense - bare) * left / (1.0 - left) + 0.005 if saturation else bare + 40.0 * (dense - bare)
-    return Scale(bare, dense, float(top), rise, fall)
+    if saturation:
+        bright = float(ground_brightness(np.array(bare)))
+        left = bright * np.exp(-(RATE + RATE_BRIGHT * bright) * _DEEP_LEAF_AREA)
+        return Scale(bare, dense, float(dense + (dense - bare) * left), rise, fall)
+    return Scale(bare, dense, float(bare + _FAR * (dense - bare)), rise, fall, plain=True)
+
+
+_FAR = 40.0
 
 
 def _rough_season(views: Views, low: np.ndarray, high: np.ndarray) -> tuple[float, float]:
@@ -163,11 +182,13 @@ def _rough_season(views: Views, low: np.ndarray, high: np.ndarray) -> tuple[floa
 
 
 def tell_cover(views: Views, scale: Scale) -> np.ndarray:
-    """Tell open, deciduous and evergreen wetlands apart (codes 0, 1, 2), by amplitude and bare level.
+    """Tell open, deciduous and evergreen wetlands apart (codes 0, 1, 2), by amplitude, bare level and timing.
 
     Snow, water and haze lower greenness in winter, so the bare level is the upper quartile of dormant views: an evergreen
-    canopy is green in every winter view without snow; a leafless one is not in any. A wetland without enough views
-    counts as deciduous: its water is then never taken as seen when leaves may hide it.
+    canopy is green in every winter view without snow; a leafless one is not in any. Woods put their leaves out within
+    two to four weeks, herbs grow over two months and later in the year (common practice, no source): a wetland that
+    greens slowly, or rather slowly and well after the landscape's woods, is open. One without enough views counts as
+    deciduous: its water is then never taken as seen when leaves may hide it.
     """
     size = views.ids.size
     dormant = (views.day < scale.rise - 25) | (views.day > scale.fall + 25)
@@ -177,15 +198,30 @@ def tell_cover(views: Views, scale: Scale) -> np.ndarray:
     cover = np.full(size, DECIDUOUS, np.int64)
     cover[peak < _CLOSED] = OPEN_COVER
     cover[(peak >= _CLOSED) & (bare > _CLOSED) & (peak - bare < 0.3)] = EVERGREEN
+    mean, spread = generic_prior(scale)
+    spread[[RISE_SCALE, FALL_SCALE]] = 0.7
+    series, who, _ = views.series(cover[views.wetland] == DECIDUOUS, by_year=False)
+    if who.size:
+        fitted = fit_series(series, mean, spread, optics=scale.optics, noise=NOISE)
+        days = 2.0 * LOGIT_10 * np.exp(fitted.parameters[:, RISE_SCALE])
+        known = fitted.sd[:, RISE_SCALE] < 0.5
+        quick = fitted.parameters[known & (days < _WOODS_DAYS), RISE]
+        late = fitted.parameters[:, RISE] - (np.median(quick) if quick.size else scale.rise)
+        herbs = known & ((days > _HERB_DAYS) | ((days > _WOODS_DAYS) & (late > _HERB_LATE_DAYS)))
+        cover[who[herbs]] = OPEN_COVER
     return cover
+
+
+_WOODS_DAYS, _HERB_DAYS, _HERB_LATE_DAYS = 30.0, 42.0, 15.0
+"""Ten to ninety percent of greening up in woods at most, in herbs at least, and how much later herbs are."""
 
 
 def generic_prior(scale: Scale) -> tuple[np.ndarray, np.ndarray]:
     """Return mean and spread (8,) of a prior that knows only the rough season and the greenness scale."""
-    kappa = np.log((scale.top - scale.bare) / (scale.top - scale.dense))
+    leaf_area = 1.0 / _FAR if scale.plain else _DEEP_LEAF_AREA
     mean = np.empty(8)
     mean[[SPRING, AUTUMN]] = scale.bare + 0.1 * (scale.dense - scale.bare)
-    mean[KAPPA], mean[DECLINE] = np.log(kappa), 0.0
+    mean[LEAF_AREA], mean[DECLINE] = np.log(leaf_area), 0.0
     mean[[RISE, FALL]] = scale.rise, scale.fall
     mean[[RISE_SCALE, FALL_SCALE]] = np.log(GENERIC_SCALE_DAYS)
     spread = np.array([0.2, 0.2, 0.5, 0.05, 25.0, 0.5, 25.0, 0.5])
@@ -200,26 +236,26 @@ def _robust(values: np.ndarray, own_sd: np.ndarray, least: np.ndarray) -> tuple[
     return middle, between
 
 
-def pool(views: Views, cover: np.ndarray, scale: Scale) -> Pooled:
-    """Fit landscape, wetlands, years and wetland-years.
+def pool(views: Views, member: np.ndarray, scale: Scale) -> Pooled:
+    """Fit landscape, wetlands, years and wetland-years of the wetlands of one kind (``member``, bool (wetland,)).
 
     The wetlands are fitted twice: once as if all years were alike, and again on days from which the year's departure has
     been taken, since mixed years would look like slow ones.
     """
-    keep = cover[views.wetland] == DECIDUOUS
+    keep = member[views.wetland]
     years = np.arange(views.year.min(), views.year.max() + 1) if views.year.size else np.zeros(0, np.int64)
     shift, shift_sd, residual_sd = np.zeros((years.size, 2)), np.full((years.size, 2), 8.0), np.array([5.0, 5.0])
     series, who, when = views.series(keep, by_year=True)
     when = when - (years[0] if years.size else 0)
     landscape, spread, full, noise = _fit_wetlands(views, keep, shift, scale)
     if not who.size:
-        single = fit_series(series, landscape, spread, noise=noise, top=scale.top, centre=scale.centre)
+        single = fit_series(series, landscape, spread, noise=noise, optics=scale.optics)
         return Pooled(landscape, spread, full, years, shift, shift_sd, single, np.zeros((0, 2), np.int64), residual_sd)
     for loose in (True, True, False):
         mean, wide = full.parameters[who], np.tile(_WITHIN, (who.size, 1))
         mean[:, _LIMBS] += shift[when]
         wide[:, _LIMBS] = _LOOSE_DAYS if loose else np.sqrt(residual_sd**2 + shift_sd[when] ** 2)
-        single = fit_series(series, mean, wide, noise=noise, top=scale.top, centre=scale.centre)
+        single = fit_series(series, mean, wide, noise=noise, optics=scale.optics)
         if loose:
             trust = 1.0 - np.minimum(single.sd[:, _LIMBS] ** 2 / _LOOSE_DAYS**2, 0.9)
             departure = shift[when] + (single.parameters - mean)[:, _LIMBS] / trust
@@ -246,14 +282,13 @@ def _fit_wetlands(
     late = np.interp((series.day - scale.rise) / (scale.fall - scale.rise), [0.0, 1.0], [0.0, 1.0])
     day = series.day - (shift[year, 0] * (1.0 - late) + shift[year, 1] * late)
     series = Series(day, series.value, series.weight, series.start)
-    setting = {"top": scale.top, "centre": scale.centre}
-    fitted = fit_series(series, mean, spread, noise=NOISE, **setting)
+    fitted = fit_series(series, mean, spread, noise=NOISE, optics=scale.optics)
     for _ in range(2):
         noise = float(np.median(fitted.noise))
         steady = fitted.count >= min(20.0, float(np.median(fitted.count)))
         mean, between = _robust(fitted.parameters[steady], fitted.sd[steady], _LEAST)
         spread = np.minimum(between, spread) if steady.sum() >= 5 else spread
-        fitted = fit_series(series, mean, spread, noise=noise, **setting)
+        fitted = fit_series(series, mean, spread, noise=noise, optics=scale.optics)
     return mean, spread, _widen(fitted, who, views.ids.size, mean, spread), noise
 
 

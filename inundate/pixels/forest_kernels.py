@@ -30,7 +30,7 @@ def rank_column(x, n, out, at, thresholds, first, setting, steps, missing, code)
     low, scale, most = setting
     for r in range(n):
         v = np.float64(x[r])
-        if v != v:
+        if np.isnan(v):
             if missing == MISSING_NAN:
                 out[at + np.uint64(r)] = code
                 continue
