@@ -23,7 +23,6 @@ from inundate.leaves.curves import (
     curvature_dates,
     curvature_rate,
     elmore,
-    canopy_greenness,
 )
 
 __all__ = [
