@@ -11,18 +11,25 @@ pixels do not err independently.
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import cached_property
 
 import numpy as np
 from numba import njit
 
+from inundate.scenes.kernels import cubic_tap
+
 _BISQUARE = 4.685  # 95 % efficiency under normal errors (Holland and Welsch 1977)
 _MAD_TO_SD = 1.4826
 _ITERATIONS = 8
+FLOOR_SD_PX = 0.03
+"""What no number of cells averages out: the bias of interpolating images sampled near the limit of their blur, which the
+literature on sub-pixel matching puts at some hundredths of a pixel (order of size from memory)."""
 _CONVERGED_PX = 3e-3
 _MIN_POINTS = 8
+_MIN_COARSE = 4
 
 
-@dataclass(frozen=True, slots=True)
+@dataclass(frozen=True)
 class Points:
     """Pixels of a reference that serve for alignment, sorted by group; one group is one cell of one channel.
 
@@ -49,8 +56,10 @@ class Points:
     start: np.ndarray
     cell: np.ndarray
 
-    def coarse(self, every: int = 3) -> Points:
-        """Return every so many points of each group."""
+    @cached_property
+    def coarse(self) -> Points:
+        """Every third point of each group."""
+        every = 3
         group = np.repeat(np.arange(self.start.size - 1), np.diff(self.start))
         keep = (np.arange(group.size) - self.start[group]) % every == 0
         start = np.concatenate([[0], np.cumsum(np.bincount(group[keep], minlength=self.start.size - 1))])
@@ -89,27 +98,16 @@ def _cubic(stack, w, c, y, x):  # type: ignore[no-untyped-def]
     fy, fx = y - r0, x - c0
     total = 0.0
     for i in range(4):
-        wy = _tap(fy, i)
+        wy = cubic_tap(fy, i)
         if wy == 0.0:
             continue
         line = 0.0
         for j in range(4):
-            wx = _tap(fx, j)
+            wx = cubic_tap(fx, j)
             if wx != 0.0:
                 line += wx * stack[w, c, r0 - 1 + i, c0 - 1 + j]
         total += wy * line
     return total
-
-
-@njit(cache=True, nogil=True, inline="always")
-def _tap(f, k):  # type: ignore[no-untyped-def]
-    if k == 0:
-        return ((-0.5 * f + 1.0) * f - 0.5) * f
-    if k == 1:
-        return (1.5 * f - 2.5) * f * f + 1.0
-    if k == 2:
-        return ((-1.5 * f + 2.0) * f + 0.5) * f
-    return (0.5 * f - 0.5) * f * f
 
 
 @njit(cache=True, nogil=True)
@@ -131,7 +129,7 @@ def sample(stack, window, channel, row, col, dy, dx):  # type: ignore[no-untyped
 
 
 @njit(cache=True, nogil=True)
-def _explained(seen, value, weight, start):  # type: ignore[no-untyped-def]
+def _explained(seen, value, weight, start, least):  # type: ignore[no-untyped-def]
     """Return the share of the view's variance within groups that the reference explains, and the groups used."""
     hit = 0.0
     total = 0.0
@@ -148,7 +146,7 @@ def _explained(seen, value, weight, start):  # type: ignore[no-untyped-def]
                 svv += w * seen[p] * seen[p]
                 srr += w * value[p] * value[p]
                 svr += w * seen[p] * value[p]
-        if n >= _MIN_POINTS:
+        if n >= least:
             vv = svv / sw - (sv / sw) ** 2
             rr = srr / sw - (sr / sw) ** 2
             vr = svr / sw - (sv / sw) * (sr / sw)
@@ -261,11 +259,11 @@ def search(points: Points, stack: np.ndarray, *, reach: int) -> Start:
     reach : int
         Pixels to search on each side.
     """
-    few = points.coarse()
+    few = points.coarse
     best, where = 0.0, (0, 0)
     for dy in range(-reach, reach + 1):
         for dx in range(-reach, reach + 1):
-            share = _explained(_at(few, stack, float(dy), float(dx)), few.value, few.weight, few.start)
+            share = _explained(_at(few, stack, float(dy), float(dx)), few.value, few.weight, few.start, _MIN_COARSE)
             if share > best:
                 best, where = share, (dy, dx)
     return Start(where[1], where[0], float(best), max(abs(where[0]), abs(where[1])) == reach)
@@ -294,15 +292,14 @@ def refine(points: Points, stack: np.ndarray, begin: Start) -> Alignment | None:
     dy, dx = float(begin.dy), float(begin.dx)
     robust = np.ones(points.value.size)
     cells = np.zeros((int(points.cell.max()) + 1, 5))
-    for _ in range(_ITERATIONS):
+    gain = np.full(points.start.size - 1, np.nan)
+    offset = np.zeros(points.start.size - 1)
+    for round_ in range(_ITERATIONS):
         seen = _at(points, stack, dy, dx)
-        gain, offset, _unused = _solve_groups(
-            seen, points.value, points.along_col, points.along_row, points.weight, robust, points.start
-        )
+        if round_ == 0:
+            gain, offset, _ = _solve_groups(*_inputs(points, seen, robust))
         variance = _reweight(seen, points.value, gain, offset, points.start, robust)
-        gain, offset, equations = _solve_groups(
-            seen, points.value, points.along_col, points.along_row, points.weight, robust, points.start
-        )
+        gain, offset, equations = _solve_groups(*_inputs(points, seen, robust))
         used = np.isfinite(gain) & np.isfinite(variance)
         if not used.any():
             return None
@@ -315,15 +312,18 @@ def refine(points: Points, stack: np.ndarray, begin: Start) -> Alignment | None:
         size = float(np.hypot(*step))
         if size > 0.7:
             step = step * (0.7 / size)
-        # the view's sampling point moves by what the residual still tells
         dx, dy = dx + float(step[0]), dy + float(step[1])
-        robust[robust == 0.0] = 1e-3  # a point may come back
         if size < _CONVERGED_PX:
             break
-    explained = _explained(_at(points, stack, dy, dx), points.value, points.weight, points.start)
+    explained = _explained(_at(points, stack, dy, dx), points.value, points.weight, points.start, _MIN_POINTS)
     live = cells[:, 0] + cells[:, 2] > 0.0
     strayed = max(abs(dy - begin.dy), abs(dx - begin.dx)) > 1.5
-    return Alignment(dx, dy, _jackknife(cells[live]), int(live.sum()), float(explained), begin.at_border or strayed)
+    sd = float(np.hypot(_jackknife(cells[live]), FLOOR_SD_PX))
+    return Alignment(dx, dy, sd, int(live.sum()), float(explained), begin.at_border or strayed)
+
+
+def _inputs(points: Points, seen: np.ndarray, robust: np.ndarray) -> tuple[np.ndarray, ...]:
+    return seen, points.value, points.along_col, points.along_row, points.weight, robust, points.start
 
 
 def _step(total: np.ndarray) -> np.ndarray | None:

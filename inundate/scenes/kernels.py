@@ -142,3 +142,93 @@ def decode_mask(raw, rows, cols, table, code):  # type: ignore[no-untyped-def]
             clear += value == 0
             seen += value != 255
     return clear, seen
+
+
+@njit(cache=True, nogil=True, inline="always")
+def cubic_tap(f, k):  # type: ignore[no-untyped-def]
+    """Return the weight of tap ``k`` (0..3, the pixels from -1 to 2) of cubic convolution at fraction ``f``.
+
+    Keys 1981 (IEEE Trans. Acoust. Speech Signal Process. 29:1153), a = -0.5.
+    """
+    if k == 0:
+        return ((-0.5 * f + 1.0) * f - 0.5) * f
+    if k == 1:
+        return (1.5 * f - 2.5) * f * f + 1.0
+    if k == 2:
+        return ((-1.5 * f + 2.0) * f + 0.5) * f
+    return (0.5 * f - 0.5) * f * f
+
+
+@njit(cache=True, nogil=True)
+def shift_block(values, code, dy, dx, out, out_code, strict):  # type: ignore[no-untyped-def]  # noqa: PLR0912
+    """Cubic convolution of all bands at (row + dy, column + dx); codes by the worst of the pixels that weigh most."""
+    bands, height, width = values.shape
+    iy, ix = int(np.floor(dy)), int(np.floor(dx))
+    fy, fx = dy - iy, dx - ix
+    ty = np.array([cubic_tap(fy, k) for k in range(4)])
+    tx = np.array([cubic_tap(fx, k) for k in range(4)])
+    least = 0.999 if strict else 0.5
+    for i in range(height):
+        for j in range(width):
+            worst = np.uint8(0)
+            inside = True
+            for a in range(2):
+                for b in range(2):
+                    share = (fy if a else 1.0 - fy) * (fx if b else 1.0 - fx)
+                    if share > 0.05:
+                        r, c = i + iy + a, j + ix + b
+                        if 0 <= r < height and 0 <= c < width:
+                            worst = max(worst, code[r, c])
+                        else:
+                            inside = False
+            out_code[i, j] = worst if inside else _FILL_CODE
+            if not inside:
+                out[:, i, j] = np.nan
+                continue
+            for band in range(bands):
+                total = 0.0
+                weight = 0.0
+                for a in range(4):
+                    if ty[a] != 0.0:
+                        r = min(max(i + iy - 1 + a, 0), height - 1)
+                        for b in range(4):
+                            w = ty[a] * tx[b]
+                            if w != 0.0:
+                                value = values[band, r, min(max(j + ix - 1 + b, 0), width - 1)]
+                                if not np.isnan(value):
+                                    total += w * value
+                                    weight += w
+                out[band, i, j] = np.float32(total / weight) if weight > least else np.nan
+
+
+@njit(cache=True, nogil=True)
+def median_and_spread(stack, need):  # type: ignore[no-untyped-def]
+    """Return median and 1.4826 x median absolute deviation over the first axis, without NaN.
+
+    Parameters
+    ----------
+    stack : ndarray of float32, shape (view, place)
+    need : int
+        The median is NaN where fewer views have a number.
+
+    Returns
+    -------
+    (ndarray, ndarray) of float32, shape (place,)
+    """
+    n, places = stack.shape
+    middle = np.full(places, np.nan, np.float32)
+    spread = np.full(places, np.nan, np.float32)
+    values = np.empty(n, np.float32)
+    for p in range(places):
+        count = 0
+        for k in range(n):
+            if not np.isnan(stack[k, p]):
+                values[count] = stack[k, p]
+                count += 1
+        if count == 0:
+            continue
+        m = np.median(values[:count])
+        spread[p] = np.float32(1.4826) * np.median(np.abs(values[:count] - m))
+        if count >= need:
+            middle[p] = m
+    return middle, spread

@@ -2,16 +2,15 @@
 
 from __future__ import annotations
 
-import warnings
 from collections.abc import Hashable, Iterable, Mapping
 from dataclasses import dataclass, replace
 
 import numpy as np
-from scipy import ndimage
 
 from inundate.common.errors import InputError
 from inundate.common.grid import Window
 from inundate.scenes.alignment import Points, align
+from inundate.scenes.kernels import median_and_spread, shift_block
 from inundate.scenes.normalise import Levels, level_places, take_levels
 from inundate.scenes.structure import pick_points, structure_stack
 from inundate.scenes.view import View
@@ -142,13 +141,9 @@ def build_looks(pools: Pools, options: ShiftOptions) -> tuple[list[Look], float]
 
 def _median(stacks: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
     """Return median and robust standard deviation over views; NaN where fewer than a third (at least one) see it."""
-    need = max(1, len(stacks) // 3)
-    with warnings.catch_warnings():
-        warnings.simplefilter("ignore", RuntimeWarning)
-        middle = np.nanmedian(stacks, axis=0)
-        spread = 1.4826 * np.nanmedian(np.abs(stacks - middle), axis=0)
-    middle[np.isfinite(stacks).sum(axis=0) < need] = np.nan
-    return middle.astype(np.float32), spread.astype(np.float32)
+    flat = np.ascontiguousarray(stacks.reshape(len(stacks), -1))
+    middle, spread = median_and_spread(flat, max(1, len(stacks) // 3))
+    return middle.reshape(stacks.shape[1:]), spread.reshape(stacks.shape[1:])
 
 
 def _settle(stacks: np.ndarray, options: ShiftOptions) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
@@ -175,15 +170,11 @@ def _settle(stacks: np.ndarray, options: ShiftOptions) -> tuple[np.ndarray, np.n
 
 
 def _move(stack: np.ndarray, dx: float, dy: float) -> np.ndarray:
-    """Bring a stack to its place: cubic spline, NaN spread by linear footprint."""
+    """Bring a stack to its place by cubic convolution; NaN wherever a tap is."""
     out = np.empty_like(stack)
+    code = np.zeros(stack.shape[2:], np.uint8)
     for w in range(stack.shape[0]):
-        for c in range(stack.shape[1]):
-            plane = stack[w, c]
-            known = np.isfinite(plane)
-            moved = ndimage.shift(np.where(known, plane, 0.0), (-dy, -dx), order=3, mode="nearest")
-            safe = ndimage.shift(known.astype(np.float32), (-dy, -dx), order=1, mode="constant")
-            out[w, c] = np.where(safe > 0.999, moved, np.nan)
+        shift_block(stack[w], code, dy, dx, out[w], np.empty_like(code), strict=True)
     return out
 
 

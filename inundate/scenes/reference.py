@@ -60,6 +60,7 @@ class Shift:
 
 NO_SHIFT = Shift(0.0, 0.0, float("inf"), False, 0, "unsure", 0.0)
 _MIN_CELLS = 6
+_MIN_CELLS_BEYOND, _EXPLAINED_BEYOND = 16, 0.3  # a scene is not set aside on the word of a few cells
 
 
 class Reference:
@@ -214,8 +215,9 @@ class Reference:
 def _judge(best: Alignment, look: Look, options: ShiftOptions) -> Shift:
     dx, dy = best.dx_px + look.dx_px, best.dy_px + look.dy_px
     sure = best.sd_px <= options.sd_px and best.n_cells >= _MIN_CELLS
-    outcome: Literal["confident", "unsure", "beyond"] = "confident" if sure and not best.at_border else "unsure"
-    if sure and (best.at_border or np.hypot(dx, dy) > options.limit_px):
+    far = best.at_border or float(np.hypot(dx, dy)) > options.limit_px
+    outcome: Literal["confident", "unsure", "beyond"] = "confident" if sure and not far else "unsure"
+    if sure and far and best.n_cells >= _MIN_CELLS_BEYOND and best.explained >= _EXPLAINED_BEYOND:
         outcome = "beyond"
     return Shift(
         float(dx),

@@ -16,9 +16,9 @@ SMOOTH_PX = 11
 """Side of the box whose mean is taken away, pixels: haze, light and season vary more slowly than that."""
 MASK_MARGIN_PX = 2
 """Pixels around each unclear one that are left out: mask edges are often missed."""
-CELL_PX = 24
+CELL_PX = 32
 """Side of a cell with its own gain and offset, pixels."""
-MAX_POINTS = 40_000
+MAX_POINTS = 20_000
 """About how many pixels (of all channels) serve; more cost time and tell little."""
 _MIN_SHARE = 0.3
 
