@@ -135,6 +135,8 @@ class Evidence:
     height_sd_m : tuple of float
         Survey uncertainty of every registry period.
     sensor_sd_m : float
+    odds : ndarray of float64, shape (obs,)
+        Log odds that a zero reading is one (a flat spell of shallow water looks alike); 0 for checks.
     """
 
     time: np.ndarray
@@ -145,6 +147,7 @@ class Evidence:
     start: int
     height_sd_m: tuple[float, ...]
     sensor_sd_m: float
+    odds: np.ndarray
 
     def take(self, keep: np.ndarray) -> Evidence:
         """Return the evidence at ``keep`` (mask or positions)."""
@@ -157,6 +160,7 @@ class Evidence:
             self.start,
             self.height_sd_m,
             self.sensor_sd_m,
+            self.odds[keep],
         )
 
 
@@ -348,10 +352,43 @@ def choose_steps(evidence: Evidence, candidates: list[Step], priors: Priors | No
     return current
 
 
-def doubtful_evidence(offset: Offset, limit: float = 4.5) -> np.ndarray:
-    """Return positions of evidence that the rest contradicts (left-out residual over ``limit`` sd), worst first.
+def false_zeros(offset: Offset, priors: Priors | None = None) -> np.ndarray:
+    """Return positions of zero readings that are likelier shallow water: the rest foretells another zero.
 
-    Never more than a fifth of it (one of four to nine), and none where there are fewer than four. Left-out residuals
+    A true one has the density that the rest gives it, a false one any value within 15 cm alike; weighed by the odds
+    of each.
+
+    Parameters
+    ----------
+    offset : Offset
+    priors : Priors, optional
+
+    Returns
+    -------
+    ndarray of int64
+    """
+    keep = np.arange(offset.evidence.time.size)
+    out: list[int] = []
+    current = offset
+    while current.evidence.zero.any():
+        e = current.evidence
+        scores = np.full(e.time.size, np.inf)
+        for i in np.flatnonzero(e.zero):
+            rest = fit_offset(e.take(np.delete(np.arange(e.time.size), i)), current.steps, priors)
+            scores[i] = current.log_evidence - rest.log_evidence + np.log(0.15) + e.odds[i]
+        worst = int(np.argmin(scores))
+        if scores[worst] >= 0:
+            break
+        out.append(int(keep[worst]))
+        keep = np.delete(keep, worst)
+        current = fit_offset(e.take(np.delete(np.arange(e.time.size), worst)), current.steps, priors)
+    return np.array(out, int)
+
+
+def doubtful_evidence(offset: Offset, limit: float = 4.5) -> np.ndarray:
+    """Return positions of checks that the rest contradicts (left-out residual over ``limit`` sd), worst first.
+
+    Never more than a fifth of the evidence (one of four to nine), and none where there are fewer than four pieces. Left-out residuals
     come from the inverse covariance (Rasmussen & Williams 2006, eq. 5.12).
 
     Parameters
@@ -369,6 +406,7 @@ def doubtful_evidence(offset: Offset, limit: float = 4.5) -> np.ndarray:
         rest = fit_offset(evidence.take(keep), offset.steps) if out else offset
         top = int(np.argmax(rest.weights))
         scores = np.abs(rest.pull[top]) / np.sqrt(np.diagonal(rest.inverse[top]))
+        scores[evidence.zero[keep]] = 0.0
         worst = int(np.argmax(scores))
         if scores[worst] <= limit:
             break

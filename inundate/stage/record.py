@@ -9,13 +9,22 @@ import numpy as np
 import pandas as pd
 
 from inundate.common.errors import InputError, Refusal
-from inundate.stage.datum import Evidence, Offset, Priors, Step, choose_steps, doubtful_evidence, fit_offset
+from inundate.stage.datum import (
+    Evidence,
+    Offset,
+    Priors,
+    Step,
+    choose_steps,
+    doubtful_evidence,
+    false_zeros,
+    fit_offset,
+)
 from inundate.stage.days import Settled, correction_rows, daily_rows, flagged_frame
-from inundate.stage.dry import Dryness, find_dry
+from inundate.stage.dry import Dryness, find_dry, first_zero
 from inundate.stage.options import StageOptions
 from inundate.stage.prepare import Span, prepare_span
 from inundate.stage.readings import Barometer, Readings
-from inundate.stage.signals import HOUR_NS, Hours, interpolate, stamp
+from inundate.stage.signals import DAY_NS, HOUR_NS, Hours, interpolate, stamp
 from inundate.stage.steps import Surroundings, hidden_candidates, jump_candidates, sky_table
 
 
@@ -169,6 +178,7 @@ def _evidence(
         int(made.hours.time[0]),
         tuple(_sd(s.row, "height_sd_m", options.height_sd_m) for s in made.spans),
         _sd(row, "sensor_sd_m", options.sensor_sd_m),
+        np.r_[np.zeros(used.size), [min((b - a) / (5 * DAY_NS) - 1.0, 4.0) for a, b, *_ in spells]],
     ), used
 
 
@@ -229,16 +239,17 @@ def find_datum(
     noise = max(s.noise for s in made.spans)
     matched, refused = _gather_checks(made, checks, options)
     priors = priors or Priors()
-    nothing = Dryness(np.zeros(made.span.size, bool), made.height_m, noise, [])
-    offset = fit_offset(_evidence(made, matched.iloc[:0], nothing, options, priors.zero_sd_m)[0], (), priors)
-    dryness = _dry_by(offset, made, noise)
+    unseen = Dryness(np.zeros(made.span.size, bool), made.height_m, noise, [])
+    prior = fit_offset(_evidence(made, matched.iloc[:0], unseen, options, priors.zero_sd_m)[0], (), priors)
+    zero, zero_sd = prior.at(made.hours.time, made.span, part="zero")
+    dryness = find_dry(made.hours, *first_zero(made.hours, -zero, zero_sd, noise), noise)
     candidates: list[Step] = []
     doubtful: list[int] = []
-    for _ in range(3):
+    for _ in range(4):
         evidence, used = _evidence(made, matched, dryness, options, priors.zero_sd_m)
         candidates = _candidates(made, matched, dryness, around, options)
         offset = choose_steps(evidence, candidates, priors)
-        odd = doubtful_evidence(offset)
+        odd = np.r_[doubtful_evidence(offset), false_zeros(offset, priors)]
         if odd.size:
             offset = choose_steps(evidence.take(np.delete(np.arange(evidence.time.size), odd)), candidates, priors)
         doubtful = [int(used[i]) for i in odd if i < used.size]
