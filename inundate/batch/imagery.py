@@ -15,6 +15,7 @@ from inundate.batch.reading import ReadJob, ReadPlan, read_scene
 from inundate.batch.seasons import ScenePlace, update_greenness
 from inundate.batch.work import Inputs, Work, code_mark, settings_mark, table_mark
 from inundate.common.errors import InputError, Refusal
+from inundate.common.grid import Grid
 from inundate.common.site import Site, make_site
 from inundate.common.writing import write_table, write_text
 
@@ -61,24 +62,28 @@ class LabelPixels:
     """Labels on pixels and scenes: one row a labelled pixel (see pixels.match_scenes)."""
 
     table: pd.DataFrame
+    grid: Grid
 
-    def site(self, scene_id: str, layout: Layout) -> Site | None:
+    def site(self, scene_id: str) -> Site | None:
         """Return the pixels under one scene's labels."""
         rows = self.table[self.table["scene_id"] == scene_id]
         if rows.empty:
             return None
-        return make_site(layout.grid, rows["grid_row"].to_numpy(), rows["grid_col"].to_numpy(), block=32)
+        return make_site(self.grid, rows["grid_row"].to_numpy(), rows["grid_col"].to_numpy(), block=32)
 
 
-def place_labels(work: Work, inputs: Inputs, layout: Layout, scenes: list[Scene]) -> LabelPixels | None:
+def place_labels(work: Work, inputs: Inputs, scenes: list[Scene]) -> LabelPixels | None:
     """Put labels on pixels and scenes; None without labels."""
     from inundate.pixels import check_labels, label_pixels, match_scenes
+    from inundate.scenes import area_grid
 
     if inputs.labels is None:
         return None
+    bounds = tuple(inputs.labels.total_bounds)
+    grid = area_grid(scenes, inputs.profile, work.pipeline.area.crs, bounds, margin_m=10 * inputs.profile.step_m)
     try:
         labels = check_labels(inputs.labels)
-        pixels, off = label_pixels(labels, layout.grid)
+        pixels, off = label_pixels(labels, grid)
         if pixels.empty:
             message = "labels: none lies inside the area of the scenes; check coordinates and reference system"
             raise InputError(message)
@@ -88,7 +93,7 @@ def place_labels(work: Work, inputs: Inputs, layout: Layout, scenes: list[Scene]
         message = f"{work.pipeline.input_files()['labels.examples']}: {err}"
         raise InputError(message) from err
     work.refuse([*off, *late])
-    return LabelPixels(matched)
+    return LabelPixels(matched, grid)
 
 
 def read_new(
@@ -122,8 +127,13 @@ def read_new(
     jobs, parts_of = [], []
     for scene in scenes:
         mine = {**common, "scene": scene_mark(scene)}
-        label_site = labels.site(scene.scene_id, layout) if labels is not None else None
-        sample = {**mine, "labels": "" if label_site is None else array_mark(label_site.rows, label_site.cols)}
+        label_site = labels.site(scene.scene_id) if labels is not None else None
+        sample = {
+            **mine,
+            "labels": ""
+            if label_site is None
+            else array_mark(label_site.rows, label_site.cols, np.array([label_site.grid.west, label_site.grid.north])),
+        }
         stale = ledger.why("view", scene.scene_id, mine, archive.view(scene.scene_id))
         bare = label_site is not None and ledger.why("sample", scene.scene_id, sample, archive.sample(scene.scene_id))
         if stale or bare:

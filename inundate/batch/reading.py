@@ -49,8 +49,7 @@ class ReadPlan:
     @property
     def windows(self) -> tuple[Window, ...]:
         """Windows of the site, with a margin where pixels will be shifted."""
-        grid, margin = self.site.grid, SHIFT_MARGIN_PX if self.reference is not None else 0
-        return tuple(w.grow(margin, grid.height, grid.width) for w in self.site.windows)
+        return grown(self.site, self.reference is not None)
 
 
 @dataclass(frozen=True, slots=True)
@@ -62,7 +61,7 @@ class ReadJob:
     plan : ReadPlan
     scene : Scene
     label_site : Site or None
-        Pixels under the scene's labels.
+        Pixels under the scene's labels; on a grid of its own, since labels may lie outside the area's.
     want_view : bool
         False where only the samples under labels are wanted.
     """
@@ -89,47 +88,56 @@ def read_scene(job: ReadJob) -> dict[str, Any]:
     ------
     SceneError
         When the scene cannot serve.
+    InputError
+        When it lies further off than the limit.
     """
+    from inundate.common.errors import InputError
     from inundate.scenes import read_view
 
-    plan, label_site = job.plan, job.label_site
-    margin = SHIFT_MARGIN_PX if plan.reference is not None else 0
-    grid = plan.site.grid
+    plan, archive, scene = job.plan, Archive(job.plan.out), job.scene
     own = plan.windows if job.want_view else ()
-    under = () if label_site is None else tuple(w.grow(margin, grid.height, grid.width) for w in label_site.windows)
-    view = read_view(job.scene, plan.profile, grid, (*own, *under, *plan.context))
-    count = len(own) + len(under)
-    detail: dict[str, Any] = {"read_bytes": int(sum(b.reflectance.nbytes for b in view.blocks))}
-    if plan.reference is not None:
-        view, registered = _register(plan, view, count)
-        detail |= registered
-    archive = Archive(plan.out)
-    if job.want_view:
-        reflectance, code = _gather(plan.site, view, 0, len(own))
+    view = read_view(scene, plan.profile, plan.site.grid, (*own, *plan.context)) if own or plan.context else None
+    detail: dict[str, Any] = {"read_bytes": 0 if view is None else int(sum(b.reflectance.nbytes for b in view.blocks))}
+    shift = gain = None
+    if plan.reference is not None and view is not None:
+        shift = plan.reference.shift(view)
+        detail["shift"] = shift.as_dict()
+        if shift.outcome == "beyond":
+            message = f"scene {scene.scene_id}: lies {np.hypot(shift.dx_px, shift.dy_px):.1f} pixels off the other scenes, over the limit of {plan.shift_limit_px:g}; it is set aside (key 'extent.shift_limit_px')"
+            raise InputError(message)
+        if plan.normalise:
+            gain = plan.reference.gain(view, shift)
+            detail["gain"] = gain.as_dict()
+    if job.want_view and view is not None:
+        kept = type(view)(view.scene_id, view.bands, view.blocks[: len(own)])
+        kept = _settled(kept, shift, gain)
+        reflectance, code = _gather(plan.site, kept)
         detail["clear"] = float(np.mean(code == ViewCode.CLEAR))
-        detail["bytes"] = write_view(archive.view(job.scene.scene_id), view.bands, reflectance, code)
-    if label_site is not None:
-        reflectance, code = _gather(label_site, view, len(own), count)
-        write_view(archive.sample(job.scene.scene_id), view.bands, reflectance, code)
+        detail["bytes"] = write_view(archive.view(scene.scene_id), kept.bands, reflectance, code)
+    if job.label_site is not None:
+        windows = grown(job.label_site, plan.reference is not None)
+        under = _settled(read_view(scene, plan.profile, job.label_site.grid, windows), shift, gain)
+        reflectance, code = _gather(job.label_site, under)
+        write_view(archive.sample(scene.scene_id), under.bands, reflectance, code)
     return detail
 
 
-def _register(plan: ReadPlan, view: View, count: int) -> tuple[View, dict[str, Any]]:
-    """Shift (and normalise) the first ``count`` blocks of a view against the reference."""
+def grown(site: Site, shifting: bool) -> tuple[Window, ...]:
+    """Return a site's windows, with a margin where pixels will be shifted."""
+    margin = SHIFT_MARGIN_PX if shifting else 0
+    return tuple(w.grow(margin, site.grid.height, site.grid.width) for w in site.windows)
+
+
+def _settled(view: View, shift: Any, gain: Any) -> View:
+    """Return the view at its place and level."""
     from inundate.scenes import apply_gain, apply_shift
 
-    shift = plan.reference.shift(view)
-    detail: dict[str, Any] = {"shift": shift.as_dict()}
-    kept = type(view)(view.scene_id, view.bands, view.blocks[:count])
-    if plan.normalise:
-        gain = plan.reference.gain(view)
-        detail["gain"] = gain.as_dict()
-        kept = apply_gain(kept, gain)
-    return apply_shift(kept, shift), detail
+    if gain is not None:
+        view = apply_gain(view, gain)
+    return view if shift is None else apply_shift(view, shift)
 
 
-def _gather(site: Site, view: View, first: int, last: int) -> tuple[np.ndarray, np.ndarray]:
-    blocks = view.blocks[first:last]
-    reflectance = site.gather(((b.window, b.reflectance) for b in blocks), np.nan, np.dtype(np.float32))
-    code = site.gather(((b.window, b.code) for b in blocks), int(ViewCode.FILL), np.dtype(np.uint8))
+def _gather(site: Site, view: View) -> tuple[np.ndarray, np.ndarray]:
+    reflectance = site.gather(((b.window, b.reflectance) for b in view.blocks), np.nan, np.dtype(np.float32))
+    code = site.gather(((b.window, b.code) for b in view.blocks), int(ViewCode.FILL), np.dtype(np.uint8))
     return reflectance, code

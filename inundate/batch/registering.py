@@ -1,16 +1,26 @@
-"""The co-registration reference of an area: chosen once, kept in the archive, used for every scene."""
+"""The co-registration reference of an area: built from clear views of each season, kept in the archive, used for every scene."""
 
 from __future__ import annotations
 
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
+import numpy as np
+import pandas as pd
+
+from inundate.batch.compute import run_units
 from inundate.batch.layout import Layout
-from inundate.batch.work import Inputs, Work
-from inundate.common.grid import Window
+from inundate.batch.ledger import fingerprint
+from inundate.batch.work import Inputs, Work, code_mark
+from inundate.common.codes import ViewCode
+from inundate.common.grid import Grid, Window
+from inundate.common.writing import replacing
 
 if TYPE_CHECKING:
-    from inundate.scenes import Scene
+    from inundate.scenes import Scene, SensorProfile, View
+
+MOST_VIEWS = 32  # views looked at for the reference, the least cloudy of each quarter of the year
+REGROWTH = 3  # the reference is built again when the archive holds this many times the scenes it was chosen from
 
 
 @dataclass(frozen=True, slots=True)
@@ -22,7 +32,113 @@ class Registrar:
     mark: str = "none"
 
 
+@dataclass(frozen=True, slots=True)
+class ContextJob:
+    """One scene's context windows to read."""
+
+    scene: Scene
+    profile: SensorProfile
+    grid: Grid
+    windows: tuple[Window, ...]
+
+
+def read_context(job: ContextJob) -> View:
+    """Read the context windows of a scene."""
+    from inundate.scenes import read_view
+
+    return read_view(job.scene, job.profile, job.grid, job.windows, all_windows=True)
+
+
 def make_registrar(work: Work, inputs: Inputs, layout: Layout, scenes: list[Scene]) -> Registrar:
-    """Choose or load the reference."""
-    _ = (work, inputs, layout, scenes)
-    return Registrar()
+    """Load the area's reference, or build it where there is none, its scenes changed, or the archive has outgrown it."""
+    from inundate.scenes import Reference, ShiftOptions, context_windows
+    from inundate.scenes import fingerprint as scene_mark
+
+    if not work.pipeline.extent.co_registration:
+        return Registrar()
+    path = work.archive.folder / "reference.npz"
+    marks = {s.scene_id: scene_mark(s) for s in scenes}
+    fixed = {
+        "grid": [
+            layout.grid.crs,
+            layout.grid.west,
+            layout.grid.north,
+            layout.grid.step,
+            layout.grid.height,
+            layout.grid.width,
+        ],
+        "limit": work.pipeline.extent.shift_limit_px,
+        "code": code_mark("scenes"),
+    }
+    unit = work.ledger.get("reference", "all")
+    if unit is not None and path.exists() and {k: unit.parts[k] for k in fixed} == fixed:
+        used = unit.parts["scenes"]
+        if all(marks.get(k) == v for k, v in used.items()) and len(scenes) < REGROWTH * unit.detail["of"]:
+            if unit.state == "set_aside":
+                return Registrar()
+            with np.load(path, allow_pickle=False) as arrays:
+                return Registrar(Reference.from_arrays(arrays), context_windows(layout.grid), unit.fingerprint)
+    windows = context_windows(layout.grid)
+    chosen = choose_scenes(scenes)
+    with work.progress.step("co-registration reference", len(chosen)) as advance:
+        jobs = [ContextJob(s, inputs.profile, layout.grid, windows) for s in chosen]
+        views: list[View] = []
+        for outcome in run_units(read_context, jobs, work.pipeline.compute, work.progress.say):
+            if outcome.error is None:
+                views.append(outcome.result)
+            advance()
+        views.sort(key=lambda v: v.scene_id)
+        reference = _build(work, views, ShiftOptions(limit_px=work.pipeline.extent.shift_limit_px))
+        parts = {**fixed, "scenes": {v.scene_id: marks[v.scene_id] for v in views}}
+        if reference is None:
+            work.ledger.put("reference", "all", parts, state="set_aside", detail={"of": len(scenes)})
+            return Registrar()
+        with replacing(path) as scratch, scratch.open("wb") as stream:
+            np.savez_compressed(stream, **reference.to_arrays())
+        work.ledger.put("reference", "all", parts, detail={"of": len(scenes), "anchor_sd_px": reference.anchor_sd_px})
+    return Registrar(reference, windows, fingerprint(parts))
+
+
+def choose_scenes(scenes: list[Scene], most: int = MOST_VIEWS) -> list[Scene]:
+    """Return the least cloudy scenes of each quarter of the year (by told cloud cover, then time and id)."""
+    quarter: dict[int, list[Scene]] = {}
+    for scene in scenes:
+        quarter.setdefault((pd.Timestamp(scene.datetime).month % 12) // 3, []).append(scene)
+    out = []
+    for group in quarter.values():
+        group.sort(key=lambda s: (s.cloud_cover if np.isfinite(s.cloud_cover) else 50.0, s.datetime, s.scene_id))
+        out += group[: most // max(len(quarter), 1)]
+    return sorted(out, key=lambda s: (s.datetime, s.scene_id))
+
+
+def _build(work: Work, views: list[View], options: Any) -> Any:
+    from inundate.common.errors import InputError
+    from inundate.scenes import Reference
+
+    usable = [v for v in views if v.clear_fraction() > 0.3]
+    if len(usable) < 3:
+        work.notes.append(
+            f"co-registration: only {len(usable)} views are clear enough for a reference; scenes are used as they lie"
+        )
+        return None
+    green = np.array([greenness(v) for v in usable])
+    middle = np.nanmean(np.nanpercentile(green, [10, 90]))
+    groups = {v.scene_id: "green" if g > middle else "bare" for v, g in zip(usable, green, strict=True)}
+    try:
+        return Reference.from_views(usable, groups=groups, options=options)
+    except InputError as err:
+        work.notes.append(f"co-registration: {err}; scenes are used as they lie")
+        return None
+
+
+def greenness(view: View) -> float:
+    """Return the mean NDVI of a view's clear pixels, NaN without any."""
+    red = view.bands.index("red")
+    nir = view.bands.index("nir" if "nir" in view.bands else "nir08")
+    total, count = 0.0, 0
+    for block in view.blocks:
+        n, r = block.reflectance[nir], block.reflectance[red]
+        good = (block.code == ViewCode.CLEAR) & (n + r > 0.01)
+        total += float(((n - r)[good] / (n + r)[good]).sum(dtype=np.float64))
+        count += int(good.sum())
+    return total / count if count else float("nan")

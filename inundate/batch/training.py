@@ -50,7 +50,9 @@ def train(
         }
         if ledger.why("models", "pixels", parts, archive.models / "water.txt") is not None:
             strata = _strata(examples.table, layout)
-            models = train_models(examples, seed=settings.seed, num_threads=2, strata=strata)
+            models = train_models(
+                examples, seed=settings.seed, num_threads=work.pipeline.compute.workers, strata=strata
+            )
             with replacing_folder(archive.models) as scratch:
                 models.classifier.save(scratch)
                 models.fraction.save(scratch)
@@ -89,7 +91,7 @@ def _examples(
     values = np.full((len(BAND_ROLES), len(table)), np.nan, np.float32)
     clear = np.zeros(len(table), bool)
     for scene_id, rows in table.groupby("scene_id"):
-        site = labels.site(str(scene_id), layout)
+        site = labels.site(str(scene_id))
         path = work.archive.sample(str(scene_id))
         if site is None or not path.exists():
             continue
@@ -99,7 +101,7 @@ def _examples(
         for i, band in enumerate(bands):
             values[BAND_ROLES.index(band), where] = reflectance[i, at]
         clear[where] = code[at] == ViewCode.CLEAR
-    owner = _nearest(table, layout)
+    owner = _nearest(table, labels, layout)
     calendar, settled = leaves
     share = settled.to_numpy()[settled.index.get_indexer(table["scene_id"]), owner]
     state, _ = calendar.states(layout.wetlands["wetland_id"].to_numpy()[owner], table["date"].to_numpy())
@@ -115,11 +117,11 @@ def _examples(
     )
 
 
-def _nearest(table: pd.DataFrame, layout: Layout) -> np.ndarray:
+def _nearest(table: pd.DataFrame, labels: LabelPixels, layout: Layout) -> np.ndarray:
     """Return the row of the wetland whose leaf state serves each label: its own, else the nearest."""
     from scipy.spatial import cKDTree
 
     own = pd.Index(layout.wetlands["wetland_id"]).get_indexer(table["wetland_id"])
-    x, y = layout.grid.centres(table["grid_row"].to_numpy(), table["grid_col"].to_numpy())
+    x, y = labels.grid.centres(table["grid_row"].to_numpy(), table["grid_col"].to_numpy())
     _, near = cKDTree(layout.wetlands[["x", "y"]].to_numpy()).query(np.column_stack([x, y]))
     return np.where(own >= 0, own, near)
