@@ -37,7 +37,15 @@ class TableRelations:
         stage, area, sd = self.curves[wetland_id]
         got = np.interp(stage_m, stage, area)
         wide = np.where(np.asarray(stage_m) > 0, sd, 0.0)
-        return pd.DataFrame({"stage_m": stage_m, "area_m2": got, "area_lo_m2": got - 1.645 * wide, "area_hi_m2": got + 1.645 * wide, "area_sd_m2": wide})
+        return pd.DataFrame(
+            {
+                "stage_m": stage_m,
+                "area_m2": got,
+                "area_lo_m2": got - 1.645 * wide,
+                "area_hi_m2": got + 1.645 * wide,
+                "area_sd_m2": wide,
+            }
+        )
 
 
 def weather_table(dates: pd.DatetimeIndex, rng: np.random.Generator) -> pd.DataFrame:
@@ -48,7 +56,9 @@ def weather_table(dates: pd.DatetimeIndex, rng: np.random.Generator) -> pd.DataF
     return pd.DataFrame({"date": dates, "precipitation_mm": rain, "pet_mm": pet})
 
 
-def _balance(weather: pd.DataFrame, own: dict[str, float], rng: np.random.Generator) -> tuple[np.ndarray, np.ndarray]:
+def _balance(
+    weather: pd.DataFrame, own: dict[str, float], rng: np.random.Generator
+) -> tuple[np.ndarray, np.ndarray]:
     rain = weather["precipitation_mm"].to_numpy() / 1000 * rng.gamma(30, 1 / 30, len(weather))
     pet = weather["pet_mm"].to_numpy() / 1000
     depth, shape, area = own["depth"], own["shape"], own["area"]
@@ -61,7 +71,11 @@ def _balance(weather: pd.DataFrame, own: dict[str, float], rng: np.random.Genera
         region += 0.02 * (8.0 * runoff - 0.10 * (region + 0.5))
         wetted = np.clip(stage / depth, 0, 1) ** (2 / shape) if stage > 0 else 0.0
         store = max(wetted, 0.12) * area
-        gain = rain[t] * max(wetted, 0.2) * area + runoff * own["catchment"] * area - own["shade"] * pet[t] * max(wetted, 0.1 if stage > -0.6 else 0) * area
+        gain = (
+            rain[t] * max(wetted, 0.2) * area
+            + runoff * own["catchment"] * area
+            - own["shade"] * pet[t] * max(wetted, 0.1 if stage > -0.6 else 0) * area
+        )
         gain += own["seep"] * (region + own["offset"] - stage) * max(wetted, 0.12) * area
         stage = np.clip(stage + gain / store, -1.2, depth * 1.02)
         out[t] = stage
@@ -85,8 +99,32 @@ def _views(world: dict, rng: np.random.Generator) -> pd.DataFrame:
                 seen *= 0.3
             value = np.clip(seen + claimed * rng.standard_normal(), 0, w.area_max_m2)
             name = ("leaf_off", "green_up", "leaf_on", "leaf_fall")[state]
-            rows.append((w.wetland_id, f"s{t}", dates[t] + pd.Timedelta(hours=10), value, claimed, 0.95, 0.9, name, True, ""))
-    columns = "wetland_id scene_id datetime area_m2 area_sd_m2 clear_fraction view_fraction leaf_state used reason".split()
+            rows.append(
+                (
+                    w.wetland_id,
+                    f"s{t}",
+                    dates[t] + pd.Timedelta(hours=10),
+                    value,
+                    claimed,
+                    0.95,
+                    0.9,
+                    name,
+                    True,
+                    "",
+                )
+            )
+    columns = [
+        "wetland_id",
+        "scene_id",
+        "datetime",
+        "area_m2",
+        "area_sd_m2",
+        "clear_fraction",
+        "view_fraction",
+        "leaf_state",
+        "used",
+        "reason",
+    ]
     return pd.DataFrame(rows, columns=columns)
 
 
@@ -97,7 +135,9 @@ def make_world(seed: int = 0, wetlands: int = 12, years: int = 3, logged: int = 
     weather = weather_table(spin.append(dates), rng)
     area = np.exp(rng.uniform(np.log(600), np.log(40000), wetlands))
     table = pd.DataFrame({"wetland_id": [f"w{i:04d}" for i in range(wetlands)], "area_max_m2": area})
-    table["cover"] = np.array(["deciduous", "deciduous", "deciduous", "open", "evergreen"])[np.arange(wetlands) % 5]
+    table["cover"] = np.array(["deciduous", "deciduous", "deciduous", "open", "evergreen"])[
+        np.arange(wetlands) % 5
+    ]
     share, stage, curves, hyps = np.empty((wetlands, len(dates))), np.empty((wetlands, len(dates))), {}, []
     is_logged = np.zeros(wetlands, bool)
     is_logged[rng.permutation(wetlands)[:logged]] = True
@@ -111,20 +151,50 @@ def make_world(seed: int = 0, wetlands: int = 12, years: int = 3, logged: int = 
         wrong = np.clip(truth * (1 + 0.06 * rng.standard_normal()), 0, area[i])
         if is_logged[i]:
             curves[f"w{i:04d}"] = (grid, wrong, 0.04 * area[i])
-        bent = np.clip(grid / own["depth"], 0, 1) ** (2 / own["shape"] * np.exp(0.15 * rng.standard_normal())) * area[i]
-        hyps.append(pd.DataFrame({"wetland_id": f"w{i:04d}", "stage_m": grid, "area_m2": np.r_[bent[:-1], area[i]]}))
+        bent = (
+            np.clip(grid / own["depth"], 0, 1) ** (2 / own["shape"] * np.exp(0.15 * rng.standard_normal()))
+            * area[i]
+        )
+        hyps.append(
+            pd.DataFrame({"wetland_id": f"w{i:04d}", "stage_m": grid, "area_m2": np.r_[bent[:-1], area[i]]})
+        )
     day = dates.day_of_year.to_numpy()
-    state = np.select([(day >= 95) & (day < 125), (day >= 125) & (day < 285), (day >= 285) & (day < 320)], [1, 2, 3], 0)
+    state = np.select(
+        [(day >= 95) & (day < 125), (day >= 125) & (day < 285), (day >= 285) & (day < 320)], [1, 2, 3], 0
+    )
     leaf = np.repeat(state[None, :], wetlands, axis=0)
     leaf[table["cover"] == "open"] = 0
-    leaf_daily = pd.DataFrame({"wetland_id": np.repeat(table["wetland_id"].to_numpy(), len(dates)), "date": np.tile(dates, wetlands)})
+    leaf_daily = pd.DataFrame(
+        {
+            "wetland_id": np.repeat(table["wetland_id"].to_numpy(), len(dates)),
+            "date": np.tile(dates, wetlands),
+        }
+    )
     leaf_daily["leaf_state"] = np.array(["leaf_off", "green_up", "leaf_on", "leaf_fall"])[leaf.ravel()]
     stage_rows = []
     for i in np.flatnonzero(is_logged):
-        frame = pd.DataFrame({"wetland_id": f"w{i:04d}", "logger_id": f"L{i}", "date": dates, "stage_m": stage[i] + 0.015 * rng.standard_normal(len(dates)), "stage_sd_m": 0.015})
+        frame = pd.DataFrame(
+            {
+                "wetland_id": f"w{i:04d}",
+                "logger_id": f"L{i}",
+                "date": dates,
+                "stage_m": stage[i] + 0.015 * rng.standard_normal(len(dates)),
+                "stage_sd_m": 0.015,
+            }
+        )
         frame["censored"] = frame["stage_m"] < -0.4
         frame.loc[frame["censored"], "stage_m"] = -0.4
         stage_rows.append(frame)
     views = _views({"dates": dates, "share": share, "leaf": leaf, "wetlands": table}, rng)
-    inputs = SeriesInputs(table, views, pd.concat(stage_rows, ignore_index=True) if stage_rows else None, TableRelations(curves), pd.concat(hyps, ignore_index=True), weather, leaf_daily, dates[0], dates[-1])
+    inputs = SeriesInputs(
+        table,
+        views,
+        pd.concat(stage_rows, ignore_index=True) if stage_rows else None,
+        TableRelations(curves),
+        pd.concat(hyps, ignore_index=True),
+        weather,
+        leaf_daily,
+        dates[0],
+        dates[-1],
+    )
     return World(table, dates, share, stage, is_logged, leaf, inputs)

@@ -13,46 +13,70 @@ from numba import njit
 
 from inundate.series.maps import level_at, share_at
 
-BUCKET_NAMES = ("rain_multiplier", "pet_multiplier", "exchange", "base", "pore_space", "sill", "wet_inflow")
-BUCKET_OWN = len(BUCKET_NAMES)
-# Prior of the mass balance before pooling: logs of multipliers near 1.5 and 1, exchange time 40 days, pore space 0.15,
-# sill at the largest extent; wide. Common practice, no source.
-BUCKET_MEAN = (0.4, 0.0, -3.7, 0.2, -1.9, 0.0, 0.2)
-BUCKET_SD = (0.7, 0.4, 1.0, 0.6, 0.4, 0.10, 0.3)
+# The direct balance: rain on the bowl times a multiplier that grows with wetness.
+DIRECT_NAMES = ("rain_multiplier", "pet_multiplier", "exchange", "base", "pore_space", "sill", "wet_inflow")
+DIRECT_MEAN = (0.4, 0.0, -3.7, 0.2, -1.9, 0.0, 0.2)
+DIRECT_SD = (0.7, 0.4, 1.0, 0.6, 0.4, 0.10, 0.3)
+# The catchment balance: rain on connected ground, runoff of a soil store from around it, and a constant seepage.
+CATCHMENT_NAMES = (
+    "catchment_ratio", "pet_multiplier", "exchange", "base", "pore_space", "sill", "soil_depth", "connected", "seepage",
+)  # fmt: skip
+CATCHMENT_MEAN = (0.7, 0.0, -4.0, 0.2, -1.9, 0.0, 0.0, -1.6, -7.0)
+CATCHMENT_SD = (0.8, 0.3, 1.0, 0.6, 0.4, 0.10, 1.0, 0.5, 0.8)
+DIRECT, CATCHMENT = 0, 1
+# Priors before pooling are wide and common practice, no source: logs of ratios, exchange times of one to two months,
+# pore space 0.15, sill at the largest extent, seepage 1 mm a day.
 _DEEPEST_M = -3.0
 _EXTINCTION_M = 0.5
 _HUBER = 2.5
 
 
 @njit(cache=True, nogil=True)
-def bucket_path(theta, rain, pet, base, wet, table, full, path):
-    """Level (m) a day into ``path`` (time,) for parameters ``theta`` (7 own, then one a column of ``base``)."""
-    inflow = np.exp(theta[0])
-    loss = np.exp(theta[1])
-    exchange = min(np.exp(theta[2]), 1.0)
-    pore = min(np.exp(theta[4]), 1.0)
+def bucket_path(
+    form: int,
+    theta: np.ndarray,
+    rain: np.ndarray,
+    pet: np.ndarray,
+    runoff: np.ndarray,
+    base: np.ndarray,
+    wet: np.ndarray,
+    table: np.ndarray,
+    full: float,
+    path: np.ndarray,
+) -> None:
+    """Level (m) a day into ``path`` (time,) for parameters ``theta`` (own ones, then one a column of ``base``)."""
+    own = theta.size - base.shape[1]
+    inflow, loss = np.exp(theta[0]), np.exp(theta[1])
+    exchange, pore = min(np.exp(theta[2]), 1.0), min(np.exp(theta[4]), 1.0)
     sill = full * np.exp(theta[5])
+    deep, connected, seepage = 0.0, 1.0, 0.0
+    if form == 1:
+        deep = 1.0 / (1.0 + np.exp(-theta[6]))
+        connected, seepage = min(np.exp(theta[7]), 1.0), np.exp(theta[8])
     level = full * theta[3]
     for t in range(rain.size):
         target = theta[3]
         for j in range(base.shape[1]):
-            target += theta[BUCKET_OWN + j] * base[t, j]
+            target += theta[own + j] * base[t, j]
         share = share_at(level, table, full)
         store = pore + (1.0 - pore) * share
-        gain = inflow * np.exp(theta[6] * wet[t]) * rain[t]
-        leave = loss * pet[t]
+        leave = loss * pet[t] + seepage
         if level < 0.0:
             leave *= np.exp(level / _EXTINCTION_M)
-        level += (gain - leave) / store + exchange * (full * target - level)
+        if form == 1:
+            part = share + connected * (1.0 - share)
+            gain = part * (rain[t] - leave) + inflow * (runoff[0, t] + deep * (runoff[1, t] - runoff[0, t]))
+        else:
+            gain = inflow * np.exp(theta[6] * wet[t]) * rain[t] - leave
+        level += gain / store + exchange * (full * target - level)
         if level > sill:
-            level = sill + 0.5 * (level - sill) if level - sill < 0.1 * full else sill + 0.05 * full
-        if level < _DEEPEST_M:
-            level = _DEEPEST_M
+            level = sill + min(0.5 * (level - sill), 0.05 * full)
+        level = max(level, _DEEPEST_M)
         path[t] = level
 
 
 @njit(cache=True, nogil=True)
-def linear_path(theta, design, full, path):
+def linear_path(theta: np.ndarray, design: np.ndarray, full: float, path: np.ndarray) -> None:
     """Level (m) a day: ``full`` times ``design`` (time, column) times ``theta``."""
     for t in range(design.shape[0]):
         total = 0.0
@@ -62,7 +86,15 @@ def linear_path(theta, design, full, path):
 
 
 @njit(cache=True, nogil=True)
-def level_targets(value, sd, kind, table, full, level, inv_low, inv_high):
+def level_targets(
+    value: np.ndarray,
+    sd: np.ndarray,
+    table: np.ndarray,
+    full: float,
+    level: np.ndarray,
+    inv_low: np.ndarray,
+    inv_high: np.ndarray,
+) -> None:
     """Turn views into levels with one inverse error below and one above (0 where the side is unbounded)."""
     top = table[-1]
     for n in range(value.size):
@@ -74,7 +106,15 @@ def level_targets(value, sd, kind, table, full, level, inv_low, inv_high):
 
 
 @njit(cache=True, nogil=True)
-def _cost(path, day, level, inv_low, inv_high, resid, weight):
+def _cost(
+    path: np.ndarray,
+    day: np.ndarray,
+    level: np.ndarray,
+    inv_low: np.ndarray,
+    inv_high: np.ndarray,
+    resid: np.ndarray,
+    weight: np.ndarray,
+) -> float:
     """Huber cost of a path; fills residuals (observed minus path, m) and Gauss-Newton weights (1 / m2)."""
     total = 0.0
     for n in range(day.size):
@@ -92,13 +132,21 @@ def _cost(path, day, level, inv_low, inv_high, resid, weight):
 
 
 @njit(cache=True, nogil=True)
-def _prior_cost(theta, mean, precision):
+def _prior_cost(theta: np.ndarray, mean: np.ndarray, precision: np.ndarray) -> float:
     delta = theta - mean
     return 0.5 * delta @ (precision @ delta)
 
 
 @njit(cache=True, nogil=True)
-def _normal_equations(jac, resid, weight, precision, pull, hess, grad):
+def _normal_equations(
+    jac: np.ndarray,
+    resid: np.ndarray,
+    weight: np.ndarray,
+    precision: np.ndarray,
+    pull: np.ndarray,
+    hess: np.ndarray,
+    grad: np.ndarray,
+) -> None:
     size = jac.shape[0]
     for a in range(size):
         for b in range(size):
@@ -113,7 +161,24 @@ def _normal_equations(jac, resid, weight, precision, pull, hess, grad):
 
 
 @njit(cache=True, nogil=True)
-def fit_bucket(theta, mean, precision, rain, pet, base, wet, table, full, day, level, inv_low, inv_high, rounds):
+def fit_bucket(
+    form: int,
+    theta: np.ndarray,
+    mean: np.ndarray,
+    precision: np.ndarray,
+    rain: np.ndarray,
+    pet: np.ndarray,
+    runoff: np.ndarray,
+    base: np.ndarray,
+    wet: np.ndarray,
+    table: np.ndarray,
+    full: float,
+    day: np.ndarray,
+    level: np.ndarray,
+    inv_low: np.ndarray,
+    inv_high: np.ndarray,
+    rounds: int,
+) -> np.ndarray:
     """Fit the mass balance in place; return the Hessian (parameter, parameter) of the cost at the end."""
     size = theta.size
     count = day.size
@@ -123,13 +188,13 @@ def fit_bucket(theta, mean, precision, rain, pet, base, wet, table, full, day, l
     resid2, weight2 = np.empty(count), np.empty(count)
     jac, hess, grad = np.zeros((size, count)), np.zeros((size, size)), np.zeros(size)
     damp = 1e-2
-    bucket_path(theta, rain, pet, base, wet, table, full, path)
+    bucket_path(form, theta, rain, pet, runoff, base, wet, table, full, path)
     cost = _cost(path, day, level, inv_low, inv_high, resid, weight) + _prior_cost(theta, mean, precision)
     for step in range(rounds + 1):
         for a in range(size):
             trial = theta.copy()
             trial[a] += 1e-3
-            bucket_path(trial, rain, pet, base, wet, table, full, moved)
+            bucket_path(form, trial, rain, pet, runoff, base, wet, table, full, moved)
             for n in range(count):
                 jac[a, n] = (moved[day[n]] - path[day[n]]) / 1e-3
         _normal_equations(jac, resid, weight, precision, precision @ (theta - mean), hess, grad)
@@ -141,8 +206,10 @@ def fit_bucket(theta, mean, precision, rain, pet, base, wet, table, full, day, l
             for a in range(size):
                 damped[a, a] *= 1.0 + damp
             trial = theta + np.linalg.solve(damped, grad)
-            bucket_path(trial, rain, pet, base, wet, table, full, moved)
-            new = _cost(moved, day, level, inv_low, inv_high, resid2, weight2) + _prior_cost(trial, mean, precision)
+            bucket_path(form, trial, rain, pet, runoff, base, wet, table, full, moved)
+            new = _cost(moved, day, level, inv_low, inv_high, resid2, weight2) + _prior_cost(
+                trial, mean, precision
+            )
             if new < cost:
                 better = True
                 break
@@ -162,7 +229,18 @@ def fit_bucket(theta, mean, precision, rain, pet, base, wet, table, full, day, l
 
 
 @njit(cache=True, nogil=True)
-def fit_linear(theta, mean, precision, design, full, day, level, inv_low, inv_high, rounds):
+def fit_linear(
+    theta: np.ndarray,
+    mean: np.ndarray,
+    precision: np.ndarray,
+    design: np.ndarray,
+    full: float,
+    day: np.ndarray,
+    level: np.ndarray,
+    inv_low: np.ndarray,
+    inv_high: np.ndarray,
+    rounds: int,
+) -> np.ndarray:
     """Fit the linear predictor in place; return the Hessian (parameter, parameter) of the cost at the end."""
     size = theta.size
     count = day.size

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import itertools
 from dataclasses import dataclass
 
 import numpy as np
@@ -14,7 +15,9 @@ from inundate.series.worth import pair_events
 WIDTH_90 = 1.6448536269514722
 # Weight of the pooled value beside a wetland's or a cell's own, in independent blocks; common practice, no source.
 _SHRINK_BLOCKS = 8.0
-_CANDIDATES = np.linspace(0, 1, 9)
+_STEPS = 4
+# Weight of hidden loggers under leaves beside other hidden values: the gap to be filled is there; common practice.
+_AIM = 3.0
 
 
 @dataclass(frozen=True, slots=True)
@@ -60,17 +63,25 @@ def choose_weights(evidence: Evidence | None, wetlands: int, kinds: int) -> tupl
     for k in range(kinds):
         total = np.bincount(evidence.wetland, weight * square[k], wetlands)
         scores[:, k] = np.where(mass > 0, np.sqrt(total / np.where(mass > 0, mass, 1)), np.nan)
-    if kinds == 1:
-        return np.ones((wetlands, 1)), scores
-    blended = np.array([(w * evidence.share[0] + (1 - w) * evidence.share[1] - evidence.truth) ** 2 for w in _CANDIDATES])
-    aim = weight * np.where(evidence.from_stage & (evidence.leaf != 0), 3.0, 1.0)
+    choices = _simplex(kinds)
+    blended = (choices @ evidence.share - evidence.truth) ** 2
+    aim = weight * np.where(evidence.from_stage & (evidence.leaf != 0), _AIM, 1.0)
     pooled = (blended * aim).sum(axis=1) / aim.sum()
     own = np.array([np.bincount(evidence.wetland, b * weight, wetlands) for b in blended])
-    best = _CANDIDATES[np.argmin((own + _SHRINK_BLOCKS * pooled[:, None]) / (mass + _SHRINK_BLOCKS), axis=0)]
-    return np.column_stack([best, 1 - best]), scores
+    best = np.argmin((own + _SHRINK_BLOCKS * pooled[:, None]) / (mass + _SHRINK_BLOCKS), axis=0)
+    return choices[best], scores
 
 
-def solve_width(gap: np.ndarray, sd: np.ndarray, noise: np.ndarray, weight: np.ndarray, aim: float = 0.9) -> float:
+def _simplex(kinds: int) -> np.ndarray:
+    """Return all weights (choice, kind) in steps of 1 / ``_STEPS`` that sum to 1, even ones first."""
+    grid = np.array(list(itertools.product(range(_STEPS + 1), repeat=kinds)), float) / _STEPS
+    grid = grid[np.isclose(grid.sum(axis=1), 1)]
+    return grid[np.argsort((grid**2).sum(axis=1), kind="stable")]
+
+
+def solve_width(
+    gap: np.ndarray, sd: np.ndarray, noise: np.ndarray, weight: np.ndarray, aim: float = 0.9
+) -> float:
     """Return the factor on ``sd`` at which a share ``aim`` of gaps lies inside; ``noise`` is the hidden value's own error."""
     low, high = 0.2, 6.0
     for _ in range(40):
@@ -97,8 +108,11 @@ def fit_widths(evidence: Evidence | None, weights: np.ndarray, third: np.ndarray
     if evidence is None or evidence.day.size == 0:
         return out
     mean, sd = blended_evidence(evidence, weights)
-    gap = np.where(mean < evidence.low, evidence.low - mean, np.where(mean > evidence.high, evidence.high - mean, 0.0))
-    weight = _clusters(evidence)
+    gap = np.where(
+        mean < evidence.low, evidence.low - mean, np.where(mean > evidence.high, evidence.high - mean, 0.0)
+    )
+    # A row teaches as far as the hidden value is sharper than the prediction.
+    weight = _clusters(evidence) * sd**2 / (sd**2 + evidence.level_sd**2)
     every = solve_width(gap, sd, evidence.level_sd, weight)
     for leaf in range(4):
         in_leaf = evidence.leaf == leaf

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
+from itertools import pairwise
 
 import numpy as np
 import pandas as pd
@@ -22,15 +23,25 @@ def class_names(edges_ha: Sequence[float]) -> list[str]:
         If an edge is not positive or the edges do not rise.
     """
     edges = [float(e) for e in edges_ha]
-    if not edges or edges[0] <= 0 or any(b <= a for a, b in zip(edges, edges[1:], strict=False)):
+    if not edges or edges[0] <= 0 or any(b <= a for a, b in pairwise(edges)):
         msg = f"edges_ha: got {edges}: give positive edges in rising order, in hectares"
         raise InputError(msg)
-    return [f"<{edges[0]:g} ha", *(f"{a:g}-{b:g} ha" for a, b in zip(edges, edges[1:], strict=False)), f">={edges[-1]:g} ha"]
+    return [
+        f"<{edges[0]:g} ha",
+        *(f"{a:g}-{b:g} ha" for a, b in pairwise(edges)),
+        f">={edges[-1]:g} ha",
+    ]
 
 
-def _members(result: SeriesResult, wetlands: pd.DataFrame, edges_ha: Sequence[float]) -> tuple[list[str], np.ndarray, np.ndarray]:
+def _members(
+    result: SeriesResult, wetlands: pd.DataFrame, edges_ha: Sequence[float]
+) -> tuple[list[str], np.ndarray, np.ndarray]:
     names = class_names(edges_ha)
-    size = wetlands.assign(wetland_id=wetlands["wetland_id"].astype(str)).set_index("wetland_id")["area_max_m2"].astype(float)
+    size = (
+        wetlands.assign(wetland_id=wetlands["wetland_id"].astype(str))
+        .set_index("wetland_id")["area_max_m2"]
+        .astype(float)
+    )
     gone = [w for w in result.wetland_ids if w not in size.index]
     if gone:
         msg = f"wetlands: {gone[0]!r} of the series is not in the table: give all wetlands of the series"
@@ -49,7 +60,11 @@ def _class_draws(result: SeriesResult, member: np.ndarray, classes: int, n_draws
 
 
 def size_classes(
-    result: SeriesResult, wetlands: pd.DataFrame, edges_ha: Sequence[float] = DEFAULT_EDGES_HA, *, n_draws: int = 100
+    result: SeriesResult,
+    wetlands: pd.DataFrame,
+    edges_ha: Sequence[float] = DEFAULT_EDGES_HA,
+    *,
+    n_draws: int = 100,
 ) -> pd.DataFrame:
     """Return the inundated area of each size class a day.
 
@@ -93,7 +108,13 @@ def size_classes(
     return pd.concat(rows).sort_values("_order", ignore_index=True).drop(columns="_order")
 
 
-def area_days(result: SeriesResult, wetlands: pd.DataFrame, edges_ha: Sequence[float] = DEFAULT_EDGES_HA, *, n_draws: int = 100) -> pd.DataFrame:
+def area_days(
+    result: SeriesResult,
+    wetlands: pd.DataFrame,
+    edges_ha: Sequence[float] = DEFAULT_EDGES_HA,
+    *,
+    n_draws: int = 100,
+) -> pd.DataFrame:
     """Return the sum of daily inundated area a month by size class, ready to multiply by a daily flux.
 
     Parameters
@@ -123,7 +144,9 @@ def area_days(result: SeriesResult, wetlands: pd.DataFrame, edges_ha: Sequence[f
             continue
         best = np.add.reduceat(area[own].sum(axis=0, dtype=np.float64), start)
         low, high = np.percentile(np.add.reduceat(sums[k], start, axis=1), [5, 95], axis=0)
-        frame = pd.DataFrame({"month": months.astype("datetime64[ns]"), "size_class": name, "area_days_m2d": best})
+        frame = pd.DataFrame(
+            {"month": months.astype("datetime64[ns]"), "size_class": name, "area_days_m2d": best}
+        )
         frame["area_days_lo_m2d"], frame["area_days_hi_m2d"] = np.minimum(low, best), np.maximum(high, best)
         frame["area_days_max_m2d"], frame["n_days"] = largest[own].sum() * length, length
         frame["n_wetlands"] = int(own.sum())

@@ -12,6 +12,8 @@ from inundate.series.inputs import SPIN_UP_DAYS, Panel
 
 # Memory lengths (days) of antecedent rain minus evapotranspiration: weeks to seasons, common practice, no source.
 MEMORIES_DAYS = (5.0, 15.0, 45.0, 120.0, 300.0)
+# Capacity (m) and power of a shallow and a deep soil; within the ranges common for this form, no source.
+SOILS = ((0.05, 1.5), (0.20, 3.0))
 # Degree-day melt, m of water per degree and day; common practice, no source.
 MELT_M = 0.003
 
@@ -24,6 +26,8 @@ class Drivers:
     ----------
     rain_m, pet_m : ndarray, shape (spin + day,)
         Rain and melt, and potential evapotranspiration, m; zeros without weather.
+    runoff_m : ndarray, shape (2, spin + day)
+        Runoff of a shallow and of a deep soil, m.
     wetness : ndarray, shape (spin + day, memory)
         Antecedent rain minus evapotranspiration at each memory length, standardised.
     season : ndarray, shape (spin + day, 4)
@@ -38,6 +42,7 @@ class Drivers:
 
     rain_m: np.ndarray
     pet_m: np.ndarray
+    runoff_m: np.ndarray
     wetness: np.ndarray
     season: np.ndarray
     loggers: np.ndarray
@@ -47,7 +52,7 @@ class Drivers:
 
 
 @njit(cache=True, nogil=True)
-def leaky_sum(x, memory):
+def leaky_sum(x: np.ndarray, memory: float) -> np.ndarray:
     """Exponentially weighted mean with the given memory (days), started at the series' mean."""
     out = np.empty(x.size)
     keep = np.exp(-1.0 / memory)
@@ -59,7 +64,7 @@ def leaky_sum(x, memory):
 
 
 @njit(cache=True, nogil=True)
-def snow_and_melt(rain, temperature, melt_rate):
+def snow_and_melt(rain: np.ndarray, temperature: np.ndarray, melt_rate: float) -> np.ndarray:
     """Rain plus melt (m) of precipitation that is held as snow below 0 degrees Celsius."""
     out = np.empty(rain.size)
     pack = 0.0
@@ -74,18 +79,38 @@ def snow_and_melt(rain, temperature, melt_rate):
     return out
 
 
+@njit(cache=True, nogil=True)
+def soil_runoff(rain: np.ndarray, pet: np.ndarray, capacity: float, power: float) -> np.ndarray:
+    """Runoff (m a day) of a soil store: rain times filled share to a power; evaporation falls with the store.
+
+    Form of the soil routine of Bergstrom, Development and application of a conceptual runoff model for Scandinavian
+    catchments, SMHI RHO 7, 1976.
+    """
+    out = np.empty(rain.size)
+    store = 0.7 * capacity
+    for t in range(rain.size):
+        filled = store / capacity
+        out[t] = rain[t] * filled**power
+        store += rain[t] - out[t] - pet[t] * min(filled / 0.7, 1.0)
+        if store > capacity:
+            out[t] += store - capacity
+            store = capacity
+        store = max(store, 0.0)
+    return out
+
+
 def _full_column(weather: pd.DataFrame, column: str, days: pd.DatetimeIndex) -> np.ndarray:
     """Return a weather column on all days, gaps filled by the mean of that time of year (31-day window)."""
     known = weather[column].astype(float).dropna()
     if known.empty:
         return np.zeros(len(days))
-    by_day = known.groupby(known.index.day_of_year).mean().reindex(range(1, 367))
+    by_day = known.groupby(pd.DatetimeIndex(known.index).day_of_year).mean().reindex(range(1, 367))
     wrapped = pd.concat([by_day, by_day, by_day], ignore_index=True)
     smooth = wrapped.rolling(31, center=True, min_periods=1).mean().interpolate(limit_direction="both")
     typical = smooth.to_numpy()[366 : 2 * 366]
     out = known.reindex(days).to_numpy(float, copy=True)
     gap = ~np.isfinite(out)
-    out[gap] = typical[days.day_of_year.to_numpy()[gap] - 1]
+    out[gap] = typical[np.asarray(days.day_of_year)[gap] - 1]
     return out
 
 
@@ -162,8 +187,10 @@ def build_drivers(panel: Panel) -> Drivers:
     Drivers
     """
     spin = SPIN_UP_DAYS
-    days = pd.date_range(pd.Timestamp(panel.dates[0]) - pd.Timedelta(days=spin), pd.Timestamp(panel.dates[-1]), freq="D")
-    turn = 2 * np.pi * days.day_of_year.to_numpy() / 365.25
+    days = pd.date_range(
+        pd.Timestamp(panel.dates[0]) - pd.Timedelta(days=spin), pd.Timestamp(panel.dates[-1]), freq="D"
+    )
+    turn = 2 * np.pi * np.asarray(days.day_of_year) / 365.25
     season = np.column_stack([np.cos(turn), np.sin(turn), np.cos(2 * turn), np.sin(2 * turn)])
     rain, pet = np.zeros(len(days)), np.zeros(len(days))
     wetness = np.zeros((len(days), 0))
@@ -177,4 +204,5 @@ def build_drivers(panel: Panel) -> Drivers:
     fold = logger_folds(panel)
     guess = np.column_stack([wetness, season])
     loggers = _logger_signals(panel, fold, guess, spin)
-    return Drivers(rain, pet, wetness, season, loggers, fold, panel.weather is not None, spin)
+    runoff = np.array([soil_runoff(rain, pet, *soil) for soil in SOILS])
+    return Drivers(rain, pet, runoff, wetness, season, loggers, fold, panel.weather is not None, spin)

@@ -58,13 +58,20 @@ def fill_series(inputs: SeriesInputs, *, options: FillOptions | None = None, see
     logged = {panel.ids[i] for i in np.flatnonzero(setup.drivers.fold > 0)}
     blind = _blind_maps(setup, inputs, logged)
     views, begun = weigh_views(setup, blind)
-    fits = [fit_kind(setup, k, views, panel.stage, b) for k, b in zip(available_kinds(setup), begun, strict=True)]
-    parts = [hide_loggers(setup, blind, fits, views, panel.stage), hide_blocks(setup, fits, views, panel.stage)]
+    fits = [
+        fit_kind(setup, k, views, panel.stage, b) for k, b in zip(available_kinds(setup), begun, strict=True)
+    ]
+    parts = [
+        hide_loggers(setup, blind, fits, views, panel.stage),
+        hide_blocks(setup, fits, views, panel.stage),
+    ]
     found = [p for p in parts if p is not None and p.day.size]
     evidence = join(found) if found else None
     weights, scores = choose_weights(evidence, len(panel.ids), len(fits))
     everyone = range(len(panel.ids))
-    levels = blend([smooth_levels(setup, f, everyone, views, panel.stage, f.posterior) for f in fits], weights)
+    levels = blend(
+        [smooth_levels(setup, f, everyone, views, panel.stage, f.posterior) for f in fits], weights
+    )
     wide = _widen(setup, levels, evidence, weights, views)
     reasons = _reasons(setup, fits, weights, scores, evidence)
     return _assemble(setup, levels, wide, views, (reasons, _joint(evidence, weights, fits)))
@@ -86,7 +93,7 @@ def weigh_views(setup: Setup, blind: LevelMaps) -> tuple[Events, list[Fitted | N
     """Return views with the errors they proved to have, and the predictor learned from leaf-off views on the way."""
     panel = setup.panel
     kinds = available_kinds(setup)
-    factor = np.where(panel.views.kind == 0, leaf_off_factor(setup, panel.views, panel.stage), 1.0)
+    factor = np.where(panel.views.kind == 0, leaf_off_factor(setup, panel.views, panel.stage.certain()), 1.0)
     views = panel.views.with_sd(panel.views.sd * factor)
     begun: list[Fitted | None] = [None] * len(kinds)
     evidence = None
@@ -95,7 +102,7 @@ def weigh_views(setup: Setup, blind: LevelMaps) -> tuple[Events, list[Fitted | N
         first = learn_kind(setup, kinds[0], bare, panel.stage)
         evidence = hide_loggers(setup, blind, [first], bare, panel.stage)
         begun[0] = first
-    sd = views.sd * worth_of_views(setup, views, evidence)
+    sd = views.sd * worth_of_views(views, evidence)
     views = views.with_sd(sd)
     return views.keep(np.isfinite(sd)), begun
 
@@ -106,14 +113,16 @@ def _stage_days(stage: Events, days: int) -> np.ndarray:
     return out
 
 
-def _widen(setup: Setup, levels: Levels, evidence: Evidence | None, weights: np.ndarray, views: Events) -> np.ndarray:
+def _widen(
+    setup: Setup, levels: Levels, evidence: Evidence | None, weights: np.ndarray, views: Events
+) -> np.ndarray:
     """Return calibrated standard deviations of levels (wetland, day)."""
     panel = setup.panel
     third = size_third(panel.area_max_m2)
     factor = fit_widths(evidence, weights, third)
     sd = levels.sd * factor[panel.leaf, third[:, None]].astype(np.float32)
-    own = _stage_days(panel.stage, len(panel.dates))
-    relation = stage_width(setup, views, panel.stage)
+    own = _stage_days(panel.stage.certain(), len(panel.dates))
+    relation = stage_width(setup, views, panel.stage.certain())
     for i in np.flatnonzero(own.any(axis=1)):
         table, full = setup.maps.share[i], float(setup.maps.full_m[i])
         days = np.flatnonzero(own[i])
@@ -132,8 +141,14 @@ def _joint(evidence: Evidence | None, weights: np.ndarray, fits: Sequence[Fitted
     if evidence is None:
         return Joint(memory, 0.5)
     mean, sd = blended_evidence(evidence, weights)
-    z = np.clip((0.5 * (np.clip(evidence.low, mean, None) + np.clip(evidence.high, None, mean)) - mean) / sd, -3, 3)
-    frame = pd.DataFrame({"w": evidence.wetland, "d": evidence.day // 5, "z": z}).groupby(["w", "d"], as_index=False)["z"].mean()
+    z = np.clip(
+        (0.5 * (np.clip(evidence.low, mean, None) + np.clip(evidence.high, None, mean)) - mean) / sd, -3, 3
+    )
+    frame = (
+        pd.DataFrame({"w": evidence.wetland, "d": evidence.day // 5, "z": z})
+        .groupby(["w", "d"], as_index=False)["z"]
+        .mean()
+    )
     by_day = frame.groupby("d")["z"].agg(["sum", "count", lambda x: (x**2).sum()])
     total, count, square = (by_day.iloc[:, k].to_numpy(float) for k in range(3))
     many = count > 1
@@ -148,18 +163,20 @@ def _joint(evidence: Evidence | None, weights: np.ndarray, fits: Sequence[Fitted
     return Joint(memory, shared)
 
 
-def _basis(setup: Setup, levels: Levels, fits: Sequence[Fitted], views: Events) -> np.ndarray:
-    """Return basis codes (wetland, day): a view counts as observed where it is sharper than the predictor's departure."""
+def _basis(setup: Setup, levels: Levels, views: Events) -> np.ndarray:
+    """Return basis codes (wetland, day): a view whose sd is above 0.15 of the largest extent does not count."""
     panel = setup.panel
     regional = setup.drivers.has_weather or bool((setup.drivers.fold > 0).any())
     out = np.full(levels.mean.shape, NEIGHBOURS if regional else SEASON, np.uint8)
-    stage = _stage_days(panel.stage, len(panel.dates))
+    stage = _stage_days(panel.stage.certain(), len(panel.dates))
     out[stage] = STAGE
     out[views.owner, views.day] = np.where(views.sd <= 0.15, OBSERVED, out[views.owner, views.day])
     return out
 
 
-def _reasons(setup: Setup, fits: Sequence[Fitted], weights: np.ndarray, scores: np.ndarray, evidence: Evidence | None) -> pd.DataFrame:
+def _reasons(
+    setup: Setup, fits: Sequence[Fitted], weights: np.ndarray, scores: np.ndarray, evidence: Evidence | None
+) -> pd.DataFrame:
     panel = setup.panel
     logged = np.diff(panel.stage.start)
     frame = pd.DataFrame({"wetland_id": panel.ids, "area_source": panel.maps.source})
@@ -170,7 +187,9 @@ def _reasons(setup: Setup, fits: Sequence[Fitted], weights: np.ndarray, scores: 
         key = fit.kind.replace(" ", "_")
         frame[f"weight_{key}"] = weights[:, k]
         frame[f"score_{key}"] = scores[:, k]
-    frame["departure_sd_m"] = sum(weights[:, k] * f.departure.sd for k, f in enumerate(fits)) * setup.maps.full_m
+    frame["departure_sd_m"] = (
+        sum(weights[:, k] * f.departure.sd for k, f in enumerate(fits)) * setup.maps.full_m
+    )
     frame["departure_memory_days"] = sum(weights[:, k] * f.departure.memory for k, f in enumerate(fits))
     frame["n_views"] = np.diff(panel.views.start)
     frame["n_stage_days"] = logged
@@ -180,7 +199,11 @@ def _reasons(setup: Setup, fits: Sequence[Fitted], weights: np.ndarray, scores: 
         if evidence is None:
             tail = "nothing could be held out, so predictors count alike"
         elif np.isfinite(scores[i]).any():
-            tail = "held-out RMSE " + ", ".join(f"{names[k]} {scores[i, k]:.3f}" for k in range(len(names))) + " of the largest extent"
+            tail = (
+                "held-out RMSE "
+                + ", ".join(f"{names[k]} {scores[i, k]:.3f}" for k in range(len(names)))
+                + " of the largest extent"
+            )
         else:
             tail = "not scored itself, weights from the other wetlands"
         own = f"own stage on {logged[i]} days; else " if logged[i] else ""
@@ -189,15 +212,37 @@ def _reasons(setup: Setup, fits: Sequence[Fitted], weights: np.ndarray, scores: 
     return frame
 
 
-def _assemble(setup: Setup, levels: Levels, sd: np.ndarray, views: Events, rest: tuple[pd.DataFrame, Joint]) -> SeriesResult:
+def _assemble(
+    setup: Setup, levels: Levels, sd: np.ndarray, views: Events, rest: tuple[pd.DataFrame, Joint]
+) -> SeriesResult:
     panel = setup.panel
     count, days = levels.mean.shape
-    areas = tuple(np.empty((count, days), np.float32) for _ in range(3))
-    one = [np.empty(days) for _ in range(3)]
+    areas = np.empty((3, count, days), np.float32)
+    one = np.empty((3, days))
     for i in range(count):
-        area_moments(levels.mean[i].astype(float), sd[i].astype(float), setup.maps.share[i], float(setup.maps.full_m[i]), *one, WIDTH_90)
-        for k in range(3):
-            areas[k][i] = np.minimum(one[k] * panel.area_max_m2[i], panel.area_max_m2[i])
-    basis = _basis(setup, levels, (), views)
+        area_moments(
+            levels.mean[i].astype(float),
+            sd[i].astype(float),
+            setup.maps.share[i],
+            float(setup.maps.full_m[i]),
+            one[0],
+            one[1],
+            one[2],
+            WIDTH_90,
+        )
+        areas[:, i] = np.minimum(one * panel.area_max_m2[i], panel.area_max_m2[i])
+    basis = _basis(setup, levels, views)
     daily = daily_table(panel.ids, panel.dates, areas, basis, panel.leaf)
-    return SeriesResult(daily, rest[0], panel.lacked, panel.ids, panel.dates, levels.mean, sd, setup.maps, panel.area_max_m2, rest[1], setup.seed)
+    return SeriesResult(
+        daily,
+        rest[0],
+        panel.lacked,
+        panel.ids,
+        panel.dates,
+        levels.mean,
+        sd,
+        setup.maps,
+        panel.area_max_m2,
+        rest[1],
+        setup.seed,
+    )

@@ -10,8 +10,12 @@ import numpy as np
 
 from inundate.common.seeds import rng_for
 from inundate.series.bucket import (
-    BUCKET_MEAN,
-    BUCKET_SD,
+    CATCHMENT,
+    CATCHMENT_MEAN,
+    CATCHMENT_SD,
+    DIRECT,
+    DIRECT_MEAN,
+    DIRECT_SD,
     bucket_path,
     fit_bucket,
     fit_linear,
@@ -24,7 +28,11 @@ from inundate.series.maps import LevelMaps
 
 # Day (spin-up included), level (m), and inverse errors below and above (1 / m) of a wetland's events.
 Aim = tuple[np.ndarray, np.ndarray, np.ndarray, np.ndarray]
-KINDS = ("mass balance", "linear")
+KINDS = ("catchment balance", "direct balance", "linear")
+_BALANCES = {
+    "catchment balance": (CATCHMENT, CATCHMENT_MEAN, CATCHMENT_SD),
+    "direct balance": (DIRECT, DIRECT_MEAN, DIRECT_SD),
+}
 # Days between stage values that enter a fit (the departure between neighbours is nearly the same).
 _STAGE_STEP = 7
 # Weight of the prior covariance and of the prior mean in pooled estimates, in wetlands; common practice, no source.
@@ -112,9 +120,10 @@ def with_maps(setup: Setup, maps: LevelMaps) -> Setup:
 
 def first_prior(setup: Setup, kind: str) -> Prior:
     """Return the wide prior before pooling."""
-    if kind == "mass balance":
+    if kind in _BALANCES:
         more = setup.base[0].shape[1]
-        mean, sd = np.r_[BUCKET_MEAN, np.zeros(more)], np.r_[BUCKET_SD, np.full(more, 0.3)]
+        _, centre, wide = _BALANCES[kind]
+        mean, sd = np.r_[centre, np.zeros(more)], np.r_[wide, np.full(more, 0.3)]
     else:
         more = setup.design[0].shape[1]
         mean, sd = np.zeros(more), np.full(more, 0.25)
@@ -149,7 +158,7 @@ def targets(setup: Setup, i: int, views: Events, stage: Events, departure: Depar
     day_v = views.day[part]
     level = np.empty(day_v.size)
     low, high = np.empty(day_v.size), np.empty(day_v.size)
-    level_targets(views.value[part], views.sd[part], views.kind[part], table, full, level, low, high)
+    level_targets(views.value[part], views.sd[part], table, full, level, low, high)
     own = slice(stage.start[i], stage.start[i + 1])
     thin = stage.day[own] % _STAGE_STEP == 0
     inv = 1 / stage.sd[own][thin]
@@ -164,7 +173,9 @@ def targets(setup: Setup, i: int, views: Events, stage: Events, departure: Depar
     return day + setup.drivers.spin, level, wide[0], wide[1]
 
 
-def fit_one(setup: Setup, kind: str, i: int, aim: Aim, prior: Prior, start: np.ndarray | None, rounds: int) -> tuple[np.ndarray, np.ndarray]:
+def fit_one(
+    setup: Setup, kind: str, i: int, aim: Aim, prior: Prior, start: np.ndarray | None, rounds: int
+) -> tuple[np.ndarray, np.ndarray]:
     """Return the most probable parameters of a wetland and their covariance."""
     mean = setup.group[i] @ prior.coef
     precision = np.linalg.inv(prior.cov)
@@ -173,17 +184,37 @@ def fit_one(setup: Setup, kind: str, i: int, aim: Aim, prior: Prior, start: np.n
     table, full = setup.maps.share[i], float(setup.maps.full_m[i])
     if aim[0].size == 0:
         return mean, prior.cov
-    if kind == "mass balance":
-        d = setup.drivers
-        wet = d.wetness[:, 2]
-        hess = fit_bucket(theta, mean, precision, d.rain_m, d.pet_m, setup.base[fold], np.ascontiguousarray(wet), table, full, *aim, rounds)
+    if kind in _BALANCES:
+        d, form = setup.drivers, _BALANCES[kind][0]
+        wet = np.ascontiguousarray(d.wetness[:, 2])
+        hess = fit_bucket(
+            form,
+            theta,
+            mean,
+            precision,
+            d.rain_m,
+            d.pet_m,
+            d.runoff_m,
+            setup.base[fold],
+            wet,
+            table,
+            full,
+            *aim,
+            rounds,
+        )
     else:
         hess = fit_linear(theta, mean, precision, setup.design[fold], full, *aim, rounds)
     return theta, np.linalg.inv(hess)
 
 
 def fit_many(
-    setup: Setup, kind: str, items: Sequence[int], aims: Mapping[int, Aim], prior: Prior, start: np.ndarray | None, rounds: int
+    setup: Setup,
+    kind: str,
+    items: Sequence[int],
+    aims: Mapping[int, Aim],
+    prior: Prior,
+    start: np.ndarray | None,
+    rounds: int,
 ) -> Posterior:
     """Fit the wetlands in ``items``; rows of the posterior follow ``items``, those of ``start`` all wetlands."""
 
@@ -228,8 +259,19 @@ def member_paths(setup: Setup, kind: str, i: int, theta: np.ndarray, cov: np.nda
     path = np.empty(d.rain_m.size)
     wet = np.ascontiguousarray(d.wetness[:, 2]) if d.has_weather else np.zeros(0)
     for m, one in enumerate(sets):
-        if kind == "mass balance":
-            bucket_path(one, d.rain_m, d.pet_m, setup.base[fold], wet, table, full, path)
+        if kind in _BALANCES:
+            bucket_path(
+                _BALANCES[kind][0],
+                one,
+                d.rain_m,
+                d.pet_m,
+                d.runoff_m,
+                setup.base[fold],
+                wet,
+                table,
+                full,
+                path,
+            )
         else:
             linear_path(one, setup.design[fold], full, path)
         out[m] = path[d.spin :]

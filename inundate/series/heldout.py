@@ -3,15 +3,24 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
 from inundate.common.seeds import rng_for
-from inundate.series.fitting import Setup, fit_many, pool_items, pooled_prior, targets, with_maps
+from inundate.series.fitting import (
+    Departure,
+    Prior,
+    Setup,
+    fit_many,
+    pool_items,
+    pooled_prior,
+    targets,
+    with_maps,
+)
 from inundate.series.inputs import Events
 from inundate.series.maps import LevelMaps, level_at, share_at
-from inundate.series.model import Fitted, Levels, smooth_levels
+from inundate.series.model import Fitted, Levels, choose_departures, departure_logliks, smooth_levels
 
 
 @dataclass(frozen=True, slots=True)
@@ -58,7 +67,9 @@ class Evidence:
 
 def join(parts: Sequence[Evidence]) -> Evidence:
     """Return the rows of several pieces, one after another."""
-    return Evidence(*(np.concatenate([getattr(p, name) for p in parts], axis=-1) for name in Evidence.__slots__))
+    return Evidence(
+        *(np.concatenate([getattr(p, name) for p in parts], axis=-1) for name in Evidence.__slots__)
+    )
 
 
 def season_blocks(setup: Setup) -> np.ndarray:
@@ -78,7 +89,17 @@ def season_blocks(setup: Setup) -> np.ndarray:
     return block
 
 
-def _rows(setup: Setup, items: np.ndarray, row: np.ndarray, day: np.ndarray, truth: np.ndarray, truth_sd: np.ndarray, block: np.ndarray, levels: Sequence[Levels], from_stage: bool) -> Evidence:
+def _rows(
+    setup: Setup,
+    items: np.ndarray,
+    row: np.ndarray,
+    day: np.ndarray,
+    truth: np.ndarray,
+    truth_sd: np.ndarray,
+    block: np.ndarray,
+    levels: Sequence[Levels],
+    from_stage: bool,
+) -> Evidence:
     wetland = items[row]
     count = row.size
     low, high, level_sd = np.empty(count), np.empty(count), np.empty(count)
@@ -90,15 +111,34 @@ def _rows(setup: Setup, items: np.ndarray, row: np.ndarray, day: np.ndarray, tru
         here = level_at(truth[n], table, full)
         low[n] = -np.inf if truth[n] <= 1e-3 else here
         high[n] = np.inf if truth[n] >= table[-1] - 1e-3 else here
-        up, down = level_at(truth[n] + truth_sd[n], table, full), level_at(truth[n] - truth_sd[n], table, full)
+        up, down = (
+            level_at(truth[n] + truth_sd[n], table, full),
+            level_at(truth[n] - truth_sd[n], table, full),
+        )
         level_sd[n] = 0.5 * (up - down)
         for k in range(len(levels)):
             share[k, n] = share_at(mean[k, n], table, full)
     stage = np.full(count, from_stage)
-    return Evidence(wetland, day, block, setup.panel.leaf[wetland, day], truth, truth_sd, low, high, level_sd, mean, sd, share, stage)
+    return Evidence(
+        wetland,
+        day,
+        block,
+        setup.panel.leaf[wetland, day],
+        truth,
+        truth_sd,
+        low,
+        high,
+        level_sd,
+        mean,
+        sd,
+        share,
+        stage,
+    )
 
 
-def hide_loggers(setup: Setup, blind: LevelMaps, fits: Sequence[Fitted], views: Events, stage: Events) -> Evidence | None:
+def hide_loggers(
+    setup: Setup, blind: LevelMaps, fits: Sequence[Fitted], views: Events, stage: Events
+) -> Evidence | None:
     """Hide every logger, fold by fold, and predict its wetland's extent from the views and the other loggers.
 
     Parameters
@@ -119,7 +159,6 @@ def hide_loggers(setup: Setup, blind: LevelMaps, fits: Sequence[Fitted], views: 
         return None
     hidden = with_maps(setup, blind)
     pool = pool_items(setup)
-    none = stage.keep(np.zeros(stage.day.size, bool))
     parts = []
     block_of = season_blocks(setup)
     for f in range(1, int(fold.max()) + 1):
@@ -129,14 +168,27 @@ def hide_loggers(setup: Setup, blind: LevelMaps, fits: Sequence[Fitted], views: 
         for fit in fits:
             post = type(fit.posterior)(fit.posterior.theta[others], fit.posterior.cov[others])
             prior = pooled_prior(setup, fit.kind, others, post)
-            aims = {int(i): targets(hidden, int(i), views, none, fit.departure) for i in items}
-            got = fit_many(hidden, fit.kind, items.tolist(), aims, prior, None, 12)
-            levels.append(smooth_levels(hidden, fit, items.tolist(), views, none, got))
-        wanted = stage.keep(np.isin(stage.owner, items))
+            levels.append(_as_unlogged(hidden, fit, prior, items, views))
+        wanted = stage.keep(np.isin(stage.owner, items)).certain()
         row = np.searchsorted(items, wanted.owner)
         truth, truth_sd = relation_share(setup, wanted)
-        parts.append(_rows(hidden, items, row, wanted.day, truth, truth_sd, block_of[wanted.day], levels, True))
+        parts.append(
+            _rows(hidden, items, row, wanted.day, truth, truth_sd, block_of[wanted.day], levels, True)
+        )
     return join(parts)
+
+
+def _as_unlogged(setup: Setup, fit: Fitted, prior: Prior, items: np.ndarray, views: Events) -> Levels:
+    """Fit and smooth wetlands from views alone, with a departure that views alone support."""
+    none = Events(np.zeros_like(views.start), views.day[:0], views.value[:0], views.sd[:0], views.kind[:0])
+    sd, memory = choose_departures(np.zeros((1, *fit.departure_prior.shape)), fit.departure_prior)
+    count = len(setup.panel.ids)
+    departure = Departure(np.full(count, sd[0]), np.full(count, memory[0]))
+    aims = {int(i): targets(setup, int(i), views, none, departure) for i in items}
+    got = fit_many(setup, fit.kind, items.tolist(), aims, prior, None, 12)
+    own = choose_departures(departure_logliks(setup, fit.kind, items, got, views, none), fit.departure_prior)
+    departure.sd[items], departure.memory[items] = own
+    return smooth_levels(setup, replace(fit, departure=departure), items.tolist(), views, none, got)
 
 
 def relation_share(setup: Setup, stage: Events) -> tuple[np.ndarray, np.ndarray]:
@@ -178,5 +230,7 @@ def hide_blocks(setup: Setup, fits: Sequence[Fitted], views: Events, stage: Even
             levels.append(smooth_levels(setup, fit, items.tolist(), seen, kept, got))
         gone = sample.keep((group[sample.day] == g) & (sample.kind == 0))
         row = np.searchsorted(items, gone.owner)
-        parts.append(_rows(setup, items, row, gone.day, gone.value, gone.sd, block_of[gone.day], levels, False))
+        parts.append(
+            _rows(setup, items, row, gone.day, gone.value, gone.sd, block_of[gone.day], levels, False)
+        )
     return join(parts)

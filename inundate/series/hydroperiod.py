@@ -30,7 +30,13 @@ def water_years(dates: np.ndarray, start_month: int) -> np.ndarray:
     return (stamps.year + ((stamps.month >= start_month) if start_month > 1 else 0)).to_numpy(np.int64)
 
 
-def hydroperiod(result: SeriesResult, water_year_start_month: int = 10, n_draws: int = 100, *, wet_share: float = WET_SHARE) -> pd.DataFrame:
+def hydroperiod(
+    result: SeriesResult,
+    water_year_start_month: int = 10,
+    n_draws: int = 100,
+    *,
+    wet_share: float = WET_SHARE,
+) -> pd.DataFrame:
     """Return measures of the flow regime by wetland and water year, from joint draws.
 
     Parameters
@@ -70,7 +76,9 @@ def hydroperiod(result: SeriesResult, water_year_start_month: int = 10, n_draws:
         for y in range(names.size):
             got = np.empty((n_draws, len(MEASURES)))
             for n in range(n_draws):
-                year_measures(draws[n, start[y] : stop[y]].astype(np.float64), wet_share * largest, largest, one)
+                year_measures(
+                    draws[n, start[y] : stop[y]].astype(np.float64), wet_share * largest, largest, one
+                )
                 got[n] = one
             table[i, y] = _summary(got)
             middle, concentration[i, y] = circular_timing(got[:, place])
@@ -89,7 +97,9 @@ def _summary(got: np.ndarray) -> np.ndarray:
     return out
 
 
-def _frame(result: SeriesResult, names: np.ndarray, days: np.ndarray, table: np.ndarray, concentration: np.ndarray) -> pd.DataFrame:
+def _frame(
+    result: SeriesResult, names: np.ndarray, days: np.ndarray, table: np.ndarray, concentration: np.ndarray
+) -> pd.DataFrame:
     wetlands = len(result.wetland_ids)
     out: dict[str, np.ndarray] = {
         "wetland_id": np.repeat(np.array(result.wetland_ids, dtype=object), names.size),
@@ -114,5 +124,8 @@ def mean_timing(hydro: pd.DataFrame, measure: str = "max_day") -> pd.DataFrame:
     if measure not in _DAY_MEASURES:
         msg = f"measure: got {measure!r}: it must be one of {', '.join(_DAY_MEASURES)}"
         raise InputError(msg)
-    rows = [(w, *circular_timing(g[measure].dropna().to_numpy(), YEAR_DAYS)) for w, g in hydro.groupby("wetland_id")]
+    rows = [
+        (w, *circular_timing(g[measure].dropna().to_numpy(), YEAR_DAYS))
+        for w, g in hydro.groupby("wetland_id")
+    ]
     return pd.DataFrame(rows, columns=["wetland_id", "mean_day", "r"])

@@ -109,6 +109,10 @@ class Events:
         start = np.concatenate([[0], np.cumsum(counts)])
         return Events(start, self.day[wanted], self.value[wanted], self.sd[wanted], self.kind[wanted])
 
+    def certain(self) -> Events:
+        """Return stage events that settle the extent: measured, or dry at or below ground."""
+        return self.keep((self.kind == 0) | (self.value <= 0))
+
     def with_sd(self, sd: np.ndarray) -> Events:
         """Return the same events with other standard deviations."""
         return Events(self.start, self.day, self.value, sd, self.kind)
@@ -157,7 +161,9 @@ def _dates(values: pd.Series) -> pd.Series:
 
 def _wetlands(table: pd.DataFrame) -> pd.DataFrame:
     _need(table, "wetlands", ("wetland_id", "area_max_m2"))
-    out = pd.DataFrame({"wetland_id": table["wetland_id"].astype(str), "area_max_m2": table["area_max_m2"].astype(float)})
+    out = pd.DataFrame(
+        {"wetland_id": table["wetland_id"].astype(str), "area_max_m2": table["area_max_m2"].astype(float)}
+    )
     out["cover"] = table["cover"].astype(str) if "cover" in table else "open"
     out = out.sort_values("wetland_id", ignore_index=True)
     twice = out["wetland_id"][out["wetland_id"].duplicated()]
@@ -184,8 +190,14 @@ def _span(inputs: SeriesInputs) -> tuple[pd.Timestamp, pd.Timestamp]:
     if not days and (inputs.first_date is None or inputs.last_date is None):
         msg = "observed, stage_daily: both are empty and no first_date and last_date given: give views, stage or both dates"
         raise InputError(msg)
-    first = min(d.min() for d in days) if inputs.first_date is None else pd.Timestamp(inputs.first_date).normalize()
-    last = max(d.max() for d in days) if inputs.last_date is None else pd.Timestamp(inputs.last_date).normalize()
+    first = (
+        min(d.min() for d in days)
+        if inputs.first_date is None
+        else pd.Timestamp(inputs.first_date).normalize()
+    )
+    last = (
+        max(d.max() for d in days) if inputs.last_date is None else pd.Timestamp(inputs.last_date).normalize()
+    )
     if last < first:
         msg = f"last_date: {last.date()} lies before first_date {first.date()}: swap or correct them"
         raise InputError(msg)
@@ -216,18 +228,27 @@ def _merge_days(frame: pd.DataFrame) -> pd.DataFrame:
     return out
 
 
-def _views(inputs: SeriesInputs, place: dict[str, int], first: pd.Timestamp, area_max: np.ndarray, least: float) -> pd.DataFrame:
+def _views(
+    inputs: SeriesInputs, place: dict[str, int], first: pd.Timestamp, area_max: np.ndarray, least: float
+) -> pd.DataFrame:
     table = inputs.observed
     _need(table, "observed", ("wetland_id", "datetime", "area_m2", "area_sd_m2", "leaf_state", "used"))
     wetland = table["wetland_id"].astype(str).map(place)
-    good = table["used"].astype(bool) & wetland.notna() & np.isfinite(table["area_m2"]) & np.isfinite(table["area_sd_m2"])
+    good = (
+        table["used"].astype(bool)
+        & wetland.notna()
+        & np.isfinite(table["area_m2"])
+        & np.isfinite(table["area_sd_m2"])
+    )
     table, wetland = table[good], wetland[good].astype(np.int64)
     unknown = set(table["leaf_state"].astype(str)) - set(LEAF_STATES)
     if unknown:
         msg = f"observed: leaf_state {sorted(unknown)[0]!r} is unknown: use one of {', '.join(LEAF_STATES)}"
         raise InputError(msg)
     largest = area_max[wetland.to_numpy()]
-    frame = pd.DataFrame({"wetland": wetland.to_numpy(), "day": (_dates(table["datetime"]) - first).dt.days.to_numpy()})
+    frame = pd.DataFrame(
+        {"wetland": wetland.to_numpy(), "day": (_dates(table["datetime"]) - first).dt.days.to_numpy()}
+    )
     frame["value"] = np.clip(table["area_m2"].to_numpy(float) / largest, 0, 1)
     frame["sd"] = np.maximum(table["area_sd_m2"].to_numpy(float) / largest, least)
     frame["kind"] = table["leaf_state"].astype(str).map({s: k for k, s in enumerate(LEAF_STATES)}).to_numpy()
@@ -236,12 +257,16 @@ def _views(inputs: SeriesInputs, place: dict[str, int], first: pd.Timestamp, are
 
 def _stage(table: pd.DataFrame | None, place: dict[str, int], first: pd.Timestamp) -> pd.DataFrame:
     if table is None or not len(table):
-        return pd.DataFrame({c: [] for c in ("wetland", "day", "value", "sd", "kind")}).astype({"wetland": np.int64, "day": np.int64})
+        return pd.DataFrame({c: [] for c in ("wetland", "day", "value", "sd", "kind")}).astype(
+            {"wetland": np.int64, "day": np.int64}
+        )
     _need(table, "stage_daily", ("wetland_id", "date", "stage_m"))
     wetland = table["wetland_id"].astype(str).map(place)
     good = wetland.notna() & np.isfinite(table["stage_m"].astype(float))
     table, wetland = table[good], wetland[good].astype(np.int64)
-    frame = pd.DataFrame({"wetland": wetland.to_numpy(), "day": (_dates(table["date"]) - first).dt.days.to_numpy()})
+    frame = pd.DataFrame(
+        {"wetland": wetland.to_numpy(), "day": (_dates(table["date"]) - first).dt.days.to_numpy()}
+    )
     frame["value"] = table["stage_m"].to_numpy(float)
     sd = table["stage_sd_m"].to_numpy(float) if "stage_sd_m" in table else np.full(len(table), 0.02)
     frame["sd"] = np.maximum(np.where(np.isfinite(sd), sd, 0.02), 0.002)
@@ -268,7 +293,9 @@ def _leaf(table: pd.DataFrame, place: dict[str, int], first: pd.Timestamp, days:
     return out
 
 
-def _lacked(inputs: SeriesInputs, maps: LevelMaps, views: Events, stage: Events, dates: np.ndarray) -> tuple[str, ...]:
+def _lacked(
+    inputs: SeriesInputs, maps: LevelMaps, views: Events, stage: Events, dates: np.ndarray
+) -> tuple[str, ...]:
     words = []
     if stage.day.size == 0:
         words.append("no logger gave stage: dry-down under leaves rests on weather and season alone")
@@ -280,14 +307,20 @@ def _lacked(inputs: SeriesInputs, maps: LevelMaps, views: Events, stage: Events,
         words.append(f"{dates.size} days of record: one year cannot show how years differ")
     owner = views.owner
     year = dates[views.day].astype("datetime64[D]").astype(object) if views.day.size else []
-    seen = {(d.year + (d.month >= 9)) for d, k in zip(year, views.kind, strict=True) if k == 0} if views.day.size else set()
+    seen = (
+        {(d.year + (d.month >= 9)) for d, k in zip(year, views.kind, strict=True) if k == 0}
+        if views.day.size
+        else set()
+    )
     last = pd.Timestamp(dates[-1])
     for winter in range(pd.Timestamp(dates[0]).year + 1, last.year + 1):
         if winter not in seen and pd.Timestamp(winter, 1, 15) <= last:
             words.append(f"no usable leaf-off view in the winter {winter - 1}/{winter}")
     blind = len(maps.source) - np.unique(np.concatenate([owner, stage.owner])).size
     if blind:
-        words.append(f"{blind} wetland{'s' if blind > 1 else ''} never seen by a view or a logger: the series is that of its like")
+        words.append(
+            f"{blind} wetland{'s' if blind > 1 else ''} never seen by a view or a logger: the series is that of its like"
+        )
     return tuple(words)
 
 
@@ -311,7 +344,12 @@ def build_panel(inputs: SeriesInputs, options: FillOptions) -> Panel:
     weather = None
     if inputs.weather is not None and len(inputs.weather):
         _need(inputs.weather, "weather", ("date", "precipitation_mm", "pet_mm"))
-        weather = inputs.weather.assign(date=_dates(inputs.weather["date"])).drop_duplicates("date").set_index("date").sort_index()
+        weather = (
+            inputs.weather.assign(date=_dates(inputs.weather["date"]))
+            .drop_duplicates("date")
+            .set_index("date")
+            .sort_index()
+        )
     cover = np.array([COVERS.index(c) if c in COVERS else 0 for c in wetlands["cover"]])
     stamps = dates.to_numpy().astype("datetime64[ns]")
     lacked = _lacked(inputs, maps, views, stage, stamps)

@@ -19,7 +19,9 @@ _LOG_2PI = math.log(2.0 * math.pi)
 
 
 @njit(cache=True, nogil=True)
-def filter_one(y, r, phi, q, p0, mean, var):
+def filter_one(
+    y: np.ndarray, r: np.ndarray, phi: float, q: float, p0: float, mean: np.ndarray, var: np.ndarray
+) -> float:
     """Filter one series in place; return the log-likelihood.
 
     ``y`` and ``r`` have shape (time,); a day without observation has a non-finite ``r``. ``mean`` and ``var`` take the
@@ -50,7 +52,9 @@ def filter_one(y, r, phi, q, p0, mean, var):
 
 
 @njit(cache=True, nogil=True)
-def smooth_one(y, r, phi, q, p0, mean, var):
+def smooth_one(
+    y: np.ndarray, r: np.ndarray, phi: float, q: float, p0: float, mean: np.ndarray, var: np.ndarray
+) -> float:
     """Filter and smooth one series in place (backward pass of Rauch, Tung and Striebel); return the log-likelihood."""
     loglik = filter_one(y, r, phi, q, p0, mean, var)
     for t in range(y.size - 2, -1, -1):
@@ -67,7 +71,16 @@ def smooth_one(y, r, phi, q, p0, mean, var):
 
 
 @njit(cache=True, nogil=True)
-def smooth_rows(y, r, phi, q, p0, mean, var, loglik):
+def smooth_rows(
+    y: np.ndarray,
+    r: np.ndarray,
+    phi: np.ndarray,
+    q: np.ndarray,
+    p0: np.ndarray,
+    mean: np.ndarray,
+    var: np.ndarray,
+    loglik: np.ndarray,
+) -> None:
     """Smooth every row of ``y`` (series, time); ``phi``, ``q``, ``p0`` and ``loglik`` have shape (series,)."""
     for i in range(y.shape[0]):
         loglik[i] = smooth_one(y[i], r[i], phi[i], q[i], p0[i], mean[i], var[i])
@@ -123,7 +136,7 @@ def local_level(y: np.ndarray, noise_var: np.ndarray | float, step_var: float) -
         raise InputError(msg)
     r = np.where(np.isfinite(y), noise, np.inf)
     seen = np.where(np.isfinite(y), y, 0.0)
-    out = [np.empty(y.size) for _ in range(4)]
+    out = np.empty((4, y.size))
     filter_one(seen, r, 1.0, float(step_var), np.inf, out[0], out[1])
     loglik = smooth_one(seen, r, 1.0, float(step_var), np.inf, out[2], out[3])
-    return LocalLevel(*out, float(loglik))
+    return LocalLevel(out[0], out[1], out[2], out[3], float(loglik))

@@ -50,7 +50,7 @@ class LevelMaps:
 
 
 @njit(cache=True, nogil=True)
-def share_at(level, table, full):
+def share_at(level: float, table: np.ndarray, full: float) -> float:
     """Share of the largest extent at a level (m), linear between nodes; 0 at or below level 0."""
     if level <= 0.0:
         return 0.0
@@ -63,7 +63,7 @@ def share_at(level, table, full):
 
 
 @njit(cache=True, nogil=True)
-def level_at(share, table, full):
+def level_at(share: float, table: np.ndarray, full: float) -> float:
     """Lowest level (m) at which the share is reached; 0 for a share of 0 or less, ``full`` above the largest."""
     last = table.size - 1
     if share <= 0.0:
@@ -84,7 +84,7 @@ def level_at(share, table, full):
 
 
 @njit(cache=True, nogil=True)
-def slope_at(level, table, full):
+def slope_at(level: float, table: np.ndarray, full: float) -> float:
     """Rise of the share per metre at a level (m), over a window of two nodes; 0 outside the bowl."""
     if level <= 0.0 or level >= full:
         return 0.0
@@ -94,7 +94,9 @@ def slope_at(level, table, full):
     return (share_at(high, table, full) - share_at(low, table, full)) / (high - low)
 
 
-def _tabulate(stage: np.ndarray, share: np.ndarray, sd: np.ndarray) -> tuple[np.ndarray, np.ndarray, float] | None:
+def _tabulate(
+    stage: np.ndarray, share: np.ndarray, sd: np.ndarray
+) -> tuple[np.ndarray, np.ndarray, float] | None:
     """Turn a curve into nodes; None if it holds no bowl."""
     ok = np.isfinite(stage) & np.isfinite(share)
     stage, share, sd = stage[ok], np.maximum.accumulate(np.clip(share[ok], 0, 1)), np.nan_to_num(sd[ok])
@@ -166,7 +168,9 @@ def build_maps(
     full, source = np.full(count, np.nan), ["bowl"] * count
     groups: dict[str, pd.DataFrame] = {}
     if hypsometry is not None and len(hypsometry):
-        groups = {str(k): g for k, g in hypsometry.sort_values(["wetland_id", "stage_m"]).groupby("wetland_id")}
+        groups = {
+            str(k): g for k, g in hypsometry.sort_values(["wetland_id", "stage_m"]).groupby("wetland_id")
+        }
     for i, wetland in enumerate(wetland_ids):
         got = _from_relation(relations, wetland, float(area_max_m2[i]))
         name = "relation"

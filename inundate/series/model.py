@@ -28,17 +28,20 @@ from inundate.series.smooth import find_sites, smooth_members
 # Candidate sizes (share of the full level) and memories (days) of the departure.
 DEPARTURE_SD = (0.02, 0.04, 0.07, 0.12, 0.2, 0.32)
 DEPARTURE_MEMORY = (6.0, 18.0, 50.0)
+# Day, value, sd, kind and whether it is stage, of one wetland's events in order of day.
+Rows = tuple[np.ndarray, np.ndarray, np.ndarray, np.ndarray, np.ndarray]
 _FIRST_SD, _FIRST_MEMORY = 0.12, 18.0
 
 
 @dataclass(frozen=True, slots=True)
 class Fitted:
-    """One predictor kind, fitted to all wetlands."""
+    """One predictor kind, fitted to all wetlands; ``departure_prior`` (sd, memory) is what the pool says of departures."""
 
     kind: str
     prior: Prior
     posterior: Posterior
     departure: Departure
+    departure_prior: np.ndarray
 
 
 @dataclass(frozen=True, slots=True)
@@ -51,11 +54,11 @@ class Levels:
 
 
 def available_kinds(setup: Setup) -> tuple[str, ...]:
-    """Return the predictor kinds that the inputs allow; the mass balance needs weather."""
-    return KINDS if setup.drivers.has_weather else KINDS[1:]
+    """Return the predictor kinds that the inputs allow; mass balances need weather."""
+    return KINDS if setup.drivers.has_weather else KINDS[-1:]
 
 
-def _events_of(views: Events, stage: Events, i: int) -> tuple[np.ndarray, ...]:
+def _events_of(views: Events, stage: Events, i: int) -> Rows:
     v, s = slice(views.start[i], views.start[i + 1]), slice(stage.start[i], stage.start[i + 1])
     day = np.concatenate([views.day[v], stage.day[s]])
     is_stage = np.r_[np.zeros(views.day[v].size, bool), np.ones(stage.day[s].size, bool)]
@@ -69,17 +72,36 @@ def _events_of(views: Events, stage: Events, i: int) -> tuple[np.ndarray, ...]:
     )
 
 
-def _sites(setup: Setup, i: int, paths: np.ndarray, events: tuple[np.ndarray, ...], sd: float, memory: float) -> tuple[np.ndarray, np.ndarray]:
+def _sites(
+    setup: Setup, i: int, paths: np.ndarray, events: Rows, sd: float, memory: float
+) -> tuple[np.ndarray, np.ndarray]:
     path, spread = paths.mean(axis=0), paths.var(axis=0)
     site, site_var = np.empty(path.size), np.empty(path.size)
     phi = float(np.exp(-1 / memory))
     s0 = sd * sd
     table, full = setup.maps.share[i], float(setup.maps.full_m[i])
-    find_sites(path, spread, *events, table, full, phi, s0 * (1 - phi * phi), s0, setup.options.outlier_share, site, site_var)
+    day, value, error, kind, is_stage = events
+    find_sites(
+        path,
+        spread,
+        day,
+        value,
+        error,
+        kind,
+        is_stage,
+        table,
+        full,
+        phi,
+        s0 * (1 - phi * phi),
+        s0,
+        setup.options.outlier_share,
+        site,
+        site_var,
+    )
     return site, site_var
 
 
-def departure_loglik(setup: Setup, i: int, paths: np.ndarray, events: tuple[np.ndarray, ...]) -> np.ndarray:
+def departure_loglik(setup: Setup, i: int, paths: np.ndarray, events: Rows) -> np.ndarray:
     """Return the log-likelihood (sd, memory) of a wetland's events for each candidate departure."""
     full = float(setup.maps.full_m[i])
     out = np.zeros((len(DEPARTURE_SD), len(DEPARTURE_MEMORY)))
@@ -96,8 +118,8 @@ def departure_loglik(setup: Setup, i: int, paths: np.ndarray, events: tuple[np.n
     return out
 
 
-def pooled_departure(logliks: np.ndarray) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
-    """Choose size and memory a wetland under a prior learned from all wetlands (EM over the candidate grid).
+def pool_departures(logliks: np.ndarray) -> np.ndarray:
+    """Return the prior (sd, memory) over candidate departures that all wetlands support (EM).
 
     Parameters
     ----------
@@ -105,9 +127,7 @@ def pooled_departure(logliks: np.ndarray) -> tuple[np.ndarray, np.ndarray, np.nd
 
     Returns
     -------
-    sd, memory : ndarray, shape (wetland,)
-        Posterior mean of the sd, and of the log memory.
-    prior : ndarray, shape (sd, memory)
+    ndarray, shape (sd, memory)
     """
     flat = logliks.reshape(len(logliks), -1)
     like = np.exp(flat - flat.max(axis=1, keepdims=True))
@@ -116,10 +136,16 @@ def pooled_departure(logliks: np.ndarray) -> tuple[np.ndarray, np.ndarray, np.nd
         member = like * weight
         member /= member.sum(axis=1, keepdims=True)
         weight = (member.sum(axis=0) + 1 / flat.shape[1]) / (len(flat) + 1)
-    member = like * weight
+    return weight.reshape(logliks.shape[1:])
+
+
+def choose_departures(logliks: np.ndarray, prior: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+    """Return the root mean square sd and the mean log memory (as days), shape (wetland,), under a prior (sd, memory)."""
+    flat = logliks.reshape(len(logliks), -1)
+    member = np.exp(flat - flat.max(axis=1, keepdims=True)) * prior.ravel()
     member /= member.sum(axis=1, keepdims=True)
     sd, memory = np.meshgrid(DEPARTURE_SD, DEPARTURE_MEMORY, indexing="ij")
-    return np.sqrt(member @ (sd.ravel() ** 2)), np.exp(member @ np.log(memory.ravel())), weight.reshape(sd.shape)
+    return np.sqrt(member @ (sd.ravel() ** 2)), np.exp(member @ np.log(memory.ravel()))
 
 
 def learn_kind(setup: Setup, kind: str, views: Events, stage: Events, begin: Fitted | None = None) -> Fitted:
@@ -140,11 +166,16 @@ def learn_kind(setup: Setup, kind: str, views: Events, stage: Events, begin: Fit
     """
     count, items = len(setup.panel.ids), pool_items(setup)
     prior = first_prior(setup, kind) if begin is None else begin.prior
-    departure = Departure(np.full(count, _FIRST_SD), np.full(count, _FIRST_MEMORY)) if begin is None else begin.departure
+    departure = (
+        Departure(np.full(count, _FIRST_SD), np.full(count, _FIRST_MEMORY))
+        if begin is None
+        else begin.departure
+    )
+    say = np.full((len(DEPARTURE_SD), len(DEPARTURE_MEMORY)), 1 / (len(DEPARTURE_SD) * len(DEPARTURE_MEMORY)))
     theta = setup.group @ prior.coef if begin is None else begin.posterior.theta.copy()
     cov = np.repeat(prior.cov[None], count, axis=0)
     if not items.size:
-        return Fitted(kind, prior, Posterior(theta, cov), departure)
+        return Fitted(kind, prior, Posterior(theta, cov), departure, say)
     rounds = (12, 5, 5, 5) if begin is None else (5, 5)
     for step, most in enumerate(rounds):
         aims = {int(i): targets(setup, int(i), views, stage, departure) for i in items}
@@ -152,8 +183,8 @@ def learn_kind(setup: Setup, kind: str, views: Events, stage: Events, begin: Fit
         theta[items], cov[items] = post.theta, post.cov
         prior = pooled_prior(setup, kind, items, post)
         if step == 1:
-            departure = _fit_departure(setup, kind, items, post, views, stage)
-    return Fitted(kind, prior, Posterior(theta, cov), departure)
+            departure, say = _fit_departure(setup, kind, items, post, views, stage)
+    return Fitted(kind, prior, Posterior(theta, cov), departure, say)
 
 
 def fit_kind(setup: Setup, kind: str, views: Events, stage: Events, begin: Fitted | None = None) -> Fitted:
@@ -165,27 +196,39 @@ def fit_kind(setup: Setup, kind: str, views: Events, stage: Events, begin: Fitte
     items = pool_items(setup)
     theta[items] = learned.posterior.theta[items]
     post = fit_many(setup, kind, list(everyone), aims, learned.prior, theta, 8)
-    departure = _fit_departure(setup, kind, np.arange(theta.shape[0]), post, views, stage)
-    return Fitted(kind, learned.prior, post, departure)
+    departure, say = _fit_departure(setup, kind, np.arange(theta.shape[0]), post, views, stage)
+    return Fitted(kind, learned.prior, post, departure, say)
 
 
-def _fit_departure(setup: Setup, kind: str, items: np.ndarray, post: Posterior, views: Events, stage: Events) -> Departure:
+def departure_logliks(
+    setup: Setup, kind: str, items: np.ndarray, post: Posterior, views: Events, stage: Events
+) -> np.ndarray:
+    """Return log-likelihoods (item, sd, memory) of candidate departures; rows of ``post`` follow ``items``."""
+
     def work(row: int) -> np.ndarray:
         i = int(items[row])
         paths = member_paths(setup, kind, i, post.theta[row], post.cov[row])
         return departure_loglik(setup, i, paths, _events_of(views, stage, i))
 
-    logliks = np.array(in_threads(work, range(len(items)), setup.options.workers))
-    sd, memory, weight = pooled_departure(logliks)
-    grid_sd, grid_memory = np.meshgrid(DEPARTURE_SD, DEPARTURE_MEMORY, indexing="ij")
+    return np.array(in_threads(work, range(len(items)), setup.options.workers))
+
+
+def _fit_departure(
+    setup: Setup, kind: str, items: np.ndarray, post: Posterior, views: Events, stage: Events
+) -> tuple[Departure, np.ndarray]:
+    logliks = departure_logliks(setup, kind, items, post, views, stage)
+    prior = pool_departures(logliks)
     count = len(setup.panel.ids)
-    every_sd = np.full(count, np.sqrt((weight * grid_sd**2).sum()))
-    every_memory = np.full(count, np.exp((weight * np.log(grid_memory)).sum()))
-    every_sd[items], every_memory[items] = sd, memory
-    return Departure(every_sd, every_memory)
+    flat = np.zeros((1, *prior.shape))
+    every = choose_departures(flat, prior)
+    sd, memory = np.repeat(every[0], count), np.repeat(every[1], count)
+    sd[items], memory[items] = choose_departures(logliks, prior)
+    return Departure(sd, memory), prior
 
 
-def smooth_levels(setup: Setup, fit: Fitted, items: Sequence[int], views: Events, stage: Events, posterior: Posterior) -> Levels:
+def smooth_levels(
+    setup: Setup, fit: Fitted, items: Sequence[int], views: Events, stage: Events, posterior: Posterior
+) -> Levels:
     """Smooth levels of wetlands with one predictor; rows follow ``items``, as do those of ``posterior``."""
     days = len(setup.panel.dates)
     out = Levels(*(np.empty((len(items), days), np.float32) for _ in range(3)))
@@ -219,7 +262,11 @@ def blend(levels: Sequence[Levels], weights: np.ndarray) -> Levels:
     if len(levels) == 1:
         return levels[0]
     w = weights.astype(np.float32)
-    mean, var, precision = np.zeros_like(levels[0].mean), np.zeros_like(levels[0].mean), np.zeros_like(levels[0].mean)
+    mean, var, precision = (
+        np.zeros_like(levels[0].mean),
+        np.zeros_like(levels[0].mean),
+        np.zeros_like(levels[0].mean),
+    )
     for k, one in enumerate(levels):
         share = w[:, k : k + 1]
         mean += share * one.mean

@@ -82,7 +82,7 @@ MEASURES = (
 
 
 @njit(cache=True, nogil=True)
-def year_measures(area, threshold, largest, out):
+def year_measures(area: np.ndarray, threshold: float, largest: float, out: np.ndarray) -> None:
     """Fill ``out`` (len(MEASURES),) for one wetland's days (day,) of one water year; days count from 1, NaN where none.
 
     Wet is at or above ``threshold`` (m2). The first dry day is the first dry one after the first wet one. Variability is
@@ -122,8 +122,15 @@ def year_measures(area, threshold, largest, out):
     out[3], out[4], out[5] = wet_days, wet_days / n, events
     out[6] = wet_days / events if events > 0 else 0.0
     out[7], out[8] = longest, longest_dry
+    out[15] = np.sqrt(max(square / n - out[0] * out[0], 0.0)) / largest
+    _rates(area, out)
+
+
+@njit(cache=True, nogil=True)
+def _rates(area: np.ndarray, out: np.ndarray) -> None:
+    """Fill rise, fall, reversals and flashiness."""
     rise, fall, n_rise, n_fall, turns, last, change = 0.0, 0.0, 0, 0, 0, 0, 0.0
-    for t in range(1, n):
+    for t in range(1, area.size):
         step = area[t] - area[t - 1]
         change += abs(step)
         if step > 0.0:
@@ -139,7 +146,6 @@ def year_measures(area, threshold, largest, out):
     out[11] = rise / n_rise if n_rise > 0 else 0.0
     out[12] = fall / n_fall if n_fall > 0 else 0.0
     out[13] = turns
-    rest = total - area[0]
+    rest = area[1:].sum()
     if rest > 0.0:
         out[14] = change / rest
-    out[15] = np.sqrt(max(square / n - out[0] * out[0], 0.0)) / largest

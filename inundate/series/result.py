@@ -16,7 +16,18 @@ from inundate.series.maps import LevelMaps, share_at
 
 
 @njit(cache=True, nogil=True)
-def _areas_of(mean, sd, common, own, phi, shared, table, full, area_max, out):
+def _areas_of(
+    mean: np.ndarray,
+    sd: np.ndarray,
+    common: np.ndarray,
+    own: np.ndarray,
+    phi: float,
+    shared: float,
+    table: np.ndarray,
+    full: float,
+    area_max: float,
+    out: np.ndarray,
+) -> None:
     """Fill ``out`` (draw, day) with areas (m2): levels whose standard scores share part of a regional series."""
     keep = np.sqrt(1.0 - phi * phi)
     a, b = np.sqrt(shared), np.sqrt(1.0 - shared)
@@ -28,7 +39,7 @@ def _areas_of(mean, sd, common, own, phi, shared, table, full, area_max, out):
 
 
 @njit(cache=True, nogil=True)
-def _regional(shocks, phi):
+def _regional(shocks: np.ndarray, phi: float) -> np.ndarray:
     out = np.empty_like(shocks)
     keep = np.sqrt(1.0 - phi * phi)
     for n in range(shocks.shape[0]):
@@ -102,7 +113,10 @@ class SeriesResult:
             raise InputError(msg)
         days = len(self.dates)
         phi = float(np.exp(-1 / max(self.joint.memory_days, 0.5)))
-        common = _regional(rng_for(self.seed, "draws", "region").standard_normal((n, days), dtype=np.float32), np.float32(phi))
+        common = _regional(
+            rng_for(self.seed, "draws", "region").standard_normal((n, days), dtype=np.float32),
+            phi,
+        )
         for i, wetland in enumerate(self.wetland_ids):
             own = rng_for(self.seed, "draws", wetland).standard_normal((n, days), dtype=np.float32)
             out = np.empty((n, days), np.float32)
@@ -126,8 +140,14 @@ class SeriesResult:
         return out
 
 
-def daily_table(ids: tuple[str, ...], dates: np.ndarray, areas: tuple[np.ndarray, np.ndarray, np.ndarray], basis: np.ndarray, leaf: np.ndarray) -> pd.DataFrame:
-    """Build extent_daily from arrays (wetland, day): mean, low and high area (m2), basis and leaf codes."""
+def daily_table(
+    ids: tuple[str, ...],
+    dates: np.ndarray,
+    areas: np.ndarray,
+    basis: np.ndarray,
+    leaf: np.ndarray,
+) -> pd.DataFrame:
+    """Build extent_daily from arrays (wetland, day) of basis and leaf codes, and ``areas`` (mean low high, wetland, day) in m2."""
     days = len(dates)
     return pd.DataFrame(
         {

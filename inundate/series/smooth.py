@@ -13,7 +13,7 @@ import numpy as np
 from numba import njit
 
 from inundate.series.kalman import smooth_one
-from inundate.series.maps import level_at, share_at
+from inundate.series.maps import share_at
 
 _GRID = 121
 _REACH = 5.0
@@ -23,7 +23,17 @@ _W = _W / _W.sum()
 
 
 @njit(cache=True, nogil=True)
-def matched(mean, var, value, sd, kind, is_stage, table, full, outlier):
+def matched(
+    mean: float,
+    var: float,
+    value: float,
+    sd: float,
+    kind: int,
+    is_stage: bool,
+    table: np.ndarray,
+    full: float,
+    outlier: float,
+) -> tuple[float, float]:
     """Mean and variance of the level (m) after one event, by quadrature over the level before it."""
     if is_stage and kind == 0:
         gain = var / (var + sd * sd)
@@ -50,7 +60,7 @@ def matched(mean, var, value, sd, kind, is_stage, table, full, outlier):
 
 
 @njit(cache=True, nogil=True)
-def _site(mean, var, new_mean, new_var):
+def _site(mean: float, var: float, new_mean: float, new_var: float) -> tuple[float, float]:
     """Normal observation (value, variance) that turns one pair of moments into the other; infinite if it says nothing."""
     if new_var >= 0.9999 * var:
         return 0.0, np.inf
@@ -59,7 +69,23 @@ def _site(mean, var, new_mean, new_var):
 
 
 @njit(cache=True, nogil=True)
-def find_sites(path, spread_var, day, value, sd, kind, is_stage, table, full, phi, q, s0, outlier, site, site_var):
+def find_sites(
+    path: np.ndarray,
+    spread_var: np.ndarray,
+    day: np.ndarray,
+    value: np.ndarray,
+    sd: np.ndarray,
+    kind: np.ndarray,
+    is_stage: np.ndarray,
+    table: np.ndarray,
+    full: float,
+    phi: float,
+    q: float,
+    s0: float,
+    outlier: float,
+    site: np.ndarray,
+    site_var: np.ndarray,
+) -> None:
     """Fill ``site`` and ``site_var`` (time,): normal observations of the level; infinite variance where none."""
     site_var[:] = np.inf
     site[:] = 0.0
@@ -70,7 +96,9 @@ def find_sites(path, spread_var, day, value, sd, kind, is_stage, table, full, ph
             p = phi * phi * p + q
         while n < day.size and day[n] == t:
             var = p + spread_var[t]
-            new_mean, new_var = matched(path[t] + a, var, value[n], sd[n], kind[n], is_stage[n], table, full, outlier)
+            new_mean, new_var = matched(
+                path[t] + a, var, value[n], sd[n], kind[n], is_stage[n], table, full, outlier
+            )
             seen, seen_var = _site(path[t] + a, var, new_mean, new_var)
             _add(site, site_var, t, seen, seen_var)
             if math.isfinite(seen_var):
@@ -78,11 +106,13 @@ def find_sites(path, spread_var, day, value, sd, kind, is_stage, table, full, ph
                 a += gain * (seen - path[t] - a)
                 p *= 1.0 - gain
             n += 1
-    _second_pass(path, spread_var, day, value, sd, kind, is_stage, table, full, phi, q, s0, outlier, site, site_var)
+    _second_pass(
+        path, spread_var, day, value, sd, kind, is_stage, table, full, phi, q, s0, outlier, site, site_var
+    )
 
 
 @njit(cache=True, nogil=True)
-def _add(site, site_var, t, seen, seen_var):
+def _add(site: np.ndarray, site_var: np.ndarray, t: int, seen: float, seen_var: float) -> None:
     if not math.isfinite(seen_var):
         return
     if math.isfinite(site_var[t]):
@@ -95,7 +125,23 @@ def _add(site, site_var, t, seen, seen_var):
 
 
 @njit(cache=True, nogil=True)
-def _second_pass(path, spread_var, day, value, sd, kind, is_stage, table, full, phi, q, s0, outlier, site, site_var):
+def _second_pass(
+    path: np.ndarray,
+    spread_var: np.ndarray,
+    day: np.ndarray,
+    value: np.ndarray,
+    sd: np.ndarray,
+    kind: np.ndarray,
+    is_stage: np.ndarray,
+    table: np.ndarray,
+    full: float,
+    phi: float,
+    q: float,
+    s0: float,
+    outlier: float,
+    site: np.ndarray,
+    site_var: np.ndarray,
+) -> None:
     """Match moments again with what all other events say (days with two events keep their first sites)."""
     size = path.size
     mean, var = np.empty(size), np.empty(size)
@@ -118,7 +164,16 @@ def _second_pass(path, spread_var, day, value, sd, kind, is_stage, table, full, 
 
 
 @njit(cache=True, nogil=True)
-def smooth_members(paths, site, site_var, phi, q, s0, mean, var):
+def smooth_members(
+    paths: np.ndarray,
+    site: np.ndarray,
+    site_var: np.ndarray,
+    phi: float,
+    q: float,
+    s0: float,
+    mean: np.ndarray,
+    var: np.ndarray,
+) -> float:
     """Level mean and variance (time,) over members (member, time), each smoothed given the sites; return mean loglik."""
     members, size = paths.shape
     own, own_var = np.empty(size), np.empty(size)
@@ -138,7 +193,16 @@ def smooth_members(paths, site, site_var, phi, q, s0, mean, var):
 
 
 @njit(cache=True, nogil=True)
-def area_moments(mean, sd, table, full, share, low, high, width):
+def area_moments(
+    mean: np.ndarray,
+    sd: np.ndarray,
+    table: np.ndarray,
+    full: float,
+    share: np.ndarray,
+    low: np.ndarray,
+    high: np.ndarray,
+    width: float,
+) -> None:
     """Mean share and interval of shares (time,) of a normal level; ``width`` standard deviations to each side."""
     for t in range(mean.size):
         total = 0.0
@@ -147,14 +211,3 @@ def area_moments(mean, sd, table, full, share, low, high, width):
         low[t] = share_at(mean[t] - width * sd[t], table, full)
         high[t] = share_at(mean[t] + width * sd[t], table, full)
         share[t] = min(max(total, low[t]), high[t])
-
-
-@njit(cache=True, nogil=True)
-def needed_width(mean, sd, truth, table, full):
-    """Standard deviations to the nearest level that gives the share ``truth``; negative side first, sign kept."""
-    low = level_at(truth, table, full)
-    if truth <= 1e-4:
-        return max(mean - 0.0, 0.0) / -sd if mean > 0.0 else 0.0
-    if truth >= table[-1] - 1e-4:
-        return max(full - mean, 0.0) / sd
-    return (low - mean) / sd

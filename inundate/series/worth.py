@@ -52,7 +52,7 @@ def _gain(error: np.ndarray, news: np.ndarray, cluster: np.ndarray) -> tuple[flo
     return (float((weight * error * news).sum() / spread) if spread > 0 else 0.0), float(counts.size)
 
 
-def worth_of_views(setup: Setup, views: Events, evidence: Evidence | None) -> np.ndarray:
+def worth_of_views(views: Events, evidence: Evidence | None) -> np.ndarray:
     """Return the factor on each view's standard deviation, from what it proved worth at loggers hidden for the purpose.
 
     In a group of views (leaf state, claimed sharpness) the gain ``g`` is the regression of the prediction's error on view minus
@@ -62,7 +62,6 @@ def worth_of_views(setup: Setup, views: Events, evidence: Evidence | None) -> np
 
     Parameters
     ----------
-    setup : Setup
     views : Events
     evidence : Evidence or None
         Loggers hidden and predicted without views under leaves; None without loggers.
@@ -99,7 +98,9 @@ def _gains(views: Events, evidence: Evidence) -> np.ndarray:
     for leaf in (1, 2, 3):
         base = variance / (variance + (_UNPROVEN * typical) ** 2)
         in_leaf = kind == leaf
-        whole, blocks = _gain(error[in_leaf], news[in_leaf], cluster[in_leaf]) if in_leaf.any() else (0.0, 0.0)
+        whole, blocks = (
+            _gain(error[in_leaf], news[in_leaf], cluster[in_leaf]) if in_leaf.any() else (0.0, 0.0)
+        )
         for size in range(3):
             cell = in_leaf & (bins == size)
             g = (blocks * whole + _SHRINK * base[size]) / (blocks + _SHRINK)

@@ -54,7 +54,13 @@ def interpolated(inputs: SeriesInputs, dates: np.ndarray, area_max: pd.Series) -
     for i, (w, largest) in enumerate(area_max.items()):
         own = seen[seen["wetland_id"] == w].sort_values("datetime")
         if len(own):
-            at = pd.to_datetime(own["datetime"], utc=True).dt.tz_localize(None).to_numpy().astype("datetime64[D]").astype(float)
+            at = (
+                pd.to_datetime(own["datetime"], utc=True)
+                .dt.tz_localize(None)
+                .to_numpy()
+                .astype("datetime64[D]")
+                .astype(float)
+            )
             out[i] = np.interp(x, at, own["area_m2"].to_numpy() / largest)
     return out
 
@@ -70,7 +76,9 @@ def day_of_year_mean(inputs: SeriesInputs, dates: np.ndarray, area_max: pd.Serie
             at = pd.to_datetime(own["datetime"], utc=True).dt.day_of_year.to_numpy()
             near = np.abs((at[:, None] - np.arange(1, 367)[None, :] + 183) % 366 - 183) <= 15
             total = (near * (own["area_m2"].to_numpy() / largest)[:, None]).sum(axis=0)
-            mean = np.where(near.any(axis=0), total / np.maximum(near.sum(axis=0), 1), (own["area_m2"] / largest).mean())
+            mean = np.where(
+                near.any(axis=0), total / np.maximum(near.sum(axis=0), 1), (own["area_m2"] / largest).mean()
+            )
             out[i] = mean[day - 1]
     return out
 
@@ -86,7 +94,10 @@ def score(case: Case, options: FillOptions) -> dict[str, float]:
     daily = got.daily
     count, days = case.share.shape
     largest = case.inputs.wetlands.set_index("wetland_id")["area_max_m2"].sort_index()
-    wide = {c: daily[c].to_numpy(float).reshape(count, days) / largest.to_numpy()[:, None] for c in ("area_m2", "area_lo_m2", "area_hi_m2")}
+    wide = {
+        c: daily[c].to_numpy(float).reshape(count, days) / largest.to_numpy()[:, None]
+        for c in ("area_m2", "area_lo_m2", "area_hi_m2")
+    }
     leaf = daily["leaf_state"].to_numpy().reshape(count, days)
     on, off = leaf == "leaf_on", leaf == "leaf_off"
     gap = wide["area_m2"] - case.share
@@ -112,7 +123,9 @@ def score(case: Case, options: FillOptions) -> dict[str, float]:
             for size in range(3):
                 cell = (leaf == state) & (log == is_log) & (third == size)
                 if cell.any():
-                    out[f"cover {state} {'logged' if is_log else 'unlogged'} {size}"] = 100 * inside[cell].mean()
+                    out[f"cover {state} {'logged' if is_log else 'unlogged'} {size}"] = (
+                        100 * inside[cell].mean()
+                    )
                     out[f"n {state} {'logged' if is_log else 'unlogged'} {size}"] = int(cell.sum())
     out["_result"] = got  # type: ignore[assignment]
     return out
@@ -124,7 +137,9 @@ def show(rows: dict[str, dict[str, float]]) -> None:
     main = table.drop(index=[r for r in table.index if r.startswith("n ") or r in cells])
     main["mean"] = main.mean(axis=1)
     print(main.round(3).to_string())
-    pooled = {r[6:]: (table.loc[r] * table.loc["n" + r[5:]]).sum() / table.loc["n" + r[5:]].sum() for r in cells}
+    pooled = {
+        r[6:]: (table.loc[r] * table.loc["n" + r[5:]]).sum() / table.loc["n" + r[5:]].sum() for r in cells
+    }
     print("coverage by cell (all seeds):")
     print(pd.Series(pooled).round(1).unstack() if False else pd.Series(pooled).round(1).to_string())
 
