@@ -6,12 +6,12 @@ from collections.abc import Sequence
 
 import numpy as np
 import rasterio
-from rasterio.errors import RasterioError
+from rasterio.errors import CRSError, RasterioError
 
 from inundate.common.errors import InputError
 from inundate.common.grid import Grid, Window
 from inundate.scenes.places import gdal_name
-from inundate.scenes.reading import _parse_crs
+from inundate.scenes.reading import parse_crs
 from inundate.scenes.scene import Scene
 from inundate.scenes.sensors import SensorProfile
 
@@ -50,8 +50,8 @@ def area_grid(
         CRS not known, not projected or not in metres; bounds empty or not finite.
     """
     try:
-        target = _parse_crs(crs)
-    except RasterioError as error:
+        target = parse_crs(crs)
+    except CRSError as error:
         message = f"[area] crs = {crs!r}: not a known reference system; give one such as EPSG:32633"
         raise InputError(message) from error
     if not target.is_projected or abs(target.linear_units_factor[1] - 1.0) > 1e-9:
@@ -83,7 +83,7 @@ def _origin(scenes: Sequence[Scene], profile: SensorProfile, crs: str) -> tuple[
                 break
             opened += 1
             upright = affine.b == 0.0 and affine.d == 0.0 and affine.e < 0.0
-            if told == _parse_crs(crs) and upright and abs(affine.a - profile.step_m) < 1e-6 * profile.step_m:
+            if told == parse_crs(crs) and upright and abs(affine.a - profile.step_m) < 1e-6 * profile.step_m:
                 return float(affine.c), float(affine.f)
     return 0.0, 0.0
 

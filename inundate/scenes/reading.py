@@ -213,14 +213,14 @@ class _Files:
         if self.scene.crs is None:
             return None
         try:
-            return _parse_crs(self.scene.crs)
+            return parse_crs(self.scene.crs)
         except CRSError as error:
             message = f"reference system {self.scene.crs!r} is not known ({_short(error)}); correct the item"
             raise self.broken(message) from error
 
     def _check_overlap(self, data: rasterio.io.DatasetReader) -> None:
         west, south, east, north = data.bounds
-        target = _parse_crs(self.grid.crs)
+        target = parse_crs(self.grid.crs)
         if data.crs != target:
             try:
                 west, south, east, north = transform_bounds(data.crs, target, west, south, east, north)
@@ -240,7 +240,7 @@ class _Files:
     def _place(self, data: rasterio.io.DatasetReader, fill: float | None, nearest: bool) -> _Source:
         affine, grid = data.transform, self.grid
         upright = affine.b == 0.0 and affine.d == 0.0 and affine.a > 0.0 and abs(affine.a + affine.e) < 1e-6 * affine.a
-        if data.crs == _parse_crs(grid.crs) and upright and affine.a >= grid.step * (1 - _SAME):
+        if data.crs == parse_crs(grid.crs) and upright and affine.a >= grid.step * (1 - _SAME):
             ratio = grid.step / affine.a
             ratio = 1.0 if abs(ratio - 1.0) * max(grid.height, grid.width) < _SAME else ratio
             row_shift = (affine.f - grid.north) / affine.a
@@ -254,7 +254,7 @@ class _Files:
         options = {} if fill is None else {"src_nodata": fill, "nodata": fill}
         warped = WarpedVRT(
             data,
-            crs=_parse_crs(grid.crs),
+            crs=parse_crs(grid.crs),
             transform=grid.transform,
             width=grid.width,
             height=grid.height,
@@ -291,7 +291,8 @@ def _snap(shift: float) -> float:
 
 
 @lru_cache(maxsize=64)
-def _parse_crs(text: str) -> CRS:
+def parse_crs(text: str) -> CRS:
+    """Return a reference system, parsed once; raises rasterio's CRSError for one that is not known."""
     return CRS.from_user_input(text)
 
 

@@ -306,8 +306,8 @@ def _variant(table: _Table, roles: tuple[str, ...]) -> Variant:
 
 def _scaling(table: _Table) -> Scaling:
     valid = table.raw.get("valid", [-np.inf, np.inf])
-    number = all(isinstance(one, int | float) and not isinstance(one, bool) for one in valid)
-    if not isinstance(valid, list) or len(valid) != 2 or not number or not valid[0] < valid[1]:
+    pair = isinstance(valid, list) and len(valid) == 2 and all(type(one) in (int, float) for one in valid)
+    if not pair or not valid[0] < valid[1]:
         _fail(f"{table.place}.valid", valid, "must be two numbers, least and greatest")
     pattern = table.text("baseline_in_id") if table.has("baseline_in_id") else None
     if pattern is not None:
