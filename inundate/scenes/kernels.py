@@ -57,6 +57,36 @@ def copy_band(raw, origin, numbers, out, code):  # type: ignore[no-untyped-def]
 
 
 @njit(cache=True, nogil=True)
+def _brackets(position, size):  # type: ignore[no-untyped-def]
+    """Return lower and upper index and the upper's weight for positions (centre of pixel 0 = 0); index -1 for NaN."""
+    lower = np.full(position.size, -1, np.int64)
+    upper = np.full(position.size, -1, np.int64)
+    weight = np.zeros(position.size, np.float32)
+    for k in range(position.size):
+        if not np.isnan(position[k]):
+            base = np.floor(position[k])
+            lower[k] = min(max(int(base), 0), size - 1)
+            upper[k] = min(max(int(base) + 1, 0), size - 1)
+            weight[k] = position[k] - base
+    return lower, upper, weight
+
+
+@njit(cache=True, nogil=True)
+def _patched(a, b, c, d, fy, fx):  # type: ignore[no-untyped-def]
+    """Interpolate between those of four corners (a b above c d) that hold data; NaN where the nearest holds none."""
+    near_a, near_c = (a, c) if fx < 0.5 else (b, d)
+    if np.isnan(near_a if fy < 0.5 else near_c):
+        return np.float32(np.nan)
+    total = np.float32(0.0)
+    weight = np.float32(0.0)
+    for value, w in ((a, (1 - fy) * (1 - fx)), (b, (1 - fy) * fx), (c, fy * (1 - fx)), (d, fy * fx)):
+        if not np.isnan(value) and w > 0.0:
+            total += np.float32(w) * value
+            weight += np.float32(w)
+    return total / weight
+
+
+@njit(cache=True, nogil=True)
 def interpolate_band(raw, rows, cols, numbers, out, code):  # type: ignore[no-untyped-def]
     """Scale a coarser or offset source by bilinear interpolation between the pixel centres that hold data.
 
@@ -76,38 +106,28 @@ def interpolate_band(raw, rows, cols, numbers, out, code):  # type: ignore[no-un
         pixels without data go to the others.
     """
     scale, offset, fill, low, high = numbers
-    height, width = raw.shape
+    ready = np.empty(raw.shape, np.float32)
+    for i in range(raw.shape[0]):
+        for j in range(raw.shape[1]):
+            ready[i, j] = _value(float(raw[i, j]), fill, low, high) * scale + offset
+    r0, r1, fy = _brackets(rows, raw.shape[0])
+    c0, c1, fx = _brackets(cols, raw.shape[1])
     n = 0
     for i in range(out.shape[0]):
-        y = rows[i]
         for j in range(out.shape[1]):
-            x = cols[j]
-            total = 0.0
-            weight = 0.0
-            if not (np.isnan(y) or np.isnan(x)):
-                near_r = min(max(int(np.floor(y + 0.5)), 0), height - 1)
-                near_c = min(max(int(np.floor(x + 0.5)), 0), width - 1)
-                near = _value(float(raw[near_r, near_c]), fill, low, high)
-                if not np.isnan(near):
-                    r0, c0 = int(np.floor(y)), int(np.floor(x))
-                    fy, fx = y - r0, x - c0
-                    for dr in range(2):
-                        r = min(max(r0 + dr, 0), height - 1)
-                        wy = fy if dr else 1.0 - fy
-                        for dc in range(2):
-                            c = min(max(c0 + dc, 0), width - 1)
-                            w = wy * (fx if dc else 1.0 - fx)
-                            if w > 0.0:
-                                value = _value(float(raw[r, c]), fill, low, high)
-                                if not np.isnan(value):
-                                    total += w * value
-                                    weight += w
-            if weight > 0.0:
-                out[i, j] = np.float32(total / weight * scale + offset)
-                n += 1
-            else:
-                out[i, j] = np.nan
+            value = np.float32(np.nan)
+            if r0[i] >= 0 and c0[j] >= 0:
+                a, b = ready[r0[i], c0[j]], ready[r0[i], c1[j]]
+                c, d = ready[r1[i], c0[j]], ready[r1[i], c1[j]]
+                top = a + fx[j] * (b - a)
+                value = top + fy[i] * (c + fx[j] * (d - c) - top)
+                if np.isnan(value):
+                    value = _patched(a, b, c, d, fy[i], fx[j])
+            out[i, j] = value
+            if np.isnan(value):
                 code[i, j] = _FILL_CODE
+            else:
+                n += 1
     return n
 
 

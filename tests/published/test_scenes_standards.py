@@ -11,7 +11,7 @@ from inundate.scenes.scene import band_source
 from inundate.scenes.sensors import parse_profile
 from inundate.scenes.stac import scene_from_item
 
-C, K, S, I, F = (int(c) for c in (ViewCode.CLEAR, ViewCode.CLOUD, ViewCode.SHADOW, ViewCode.SNOW_ICE, ViewCode.FILL))
+C, K, S, ICE, F = (int(c) for c in (ViewCode.CLEAR, ViewCode.CLOUD, ViewCode.SHADOW, ViewCode.SNOW_ICE, ViewCode.FILL))
 
 
 def reflectance(
@@ -74,7 +74,7 @@ QA_PIXEL = {
     21952: ((1, 0, 0, 0, 0), C),  # water
     22280: ((0, 1, 0, 0, 0), K),
     23888: ((1, 0, 1, 0, 0), S),  # trap: the clear bit is set on shadow
-    30048: ((1, 0, 0, 1, 0), I),  # trap: and on snow
+    30048: ((1, 0, 0, 1, 0), ICE),  # trap: and on snow
     54596: ((1, 0, 0, 0, 1), K),  # trap: and on cirrus
     55052: ((0, 1, 0, 0, 1), K),
     21826: ((1, 0, 0, 0, 0), K),  # dilated cloud, bit 1
@@ -106,11 +106,11 @@ def test_scene_classification():
     """SCL classes 0..11: ESA Sentinel-2 Level-2A Algorithm Theoretical Basis Document, scene classification."""
     rules = load_profile("sentinel-2-l2a").mask.rules
     got = rules.decode(np.arange(13, dtype=np.uint8)).tolist()
-    assert got == [F, F, C, S, C, C, C, C, K, K, K, I, F]
+    assert got == [F, F, C, S, C, C, C, C, K, K, K, ICE, F]
 
 
 # Fmask bits 1 cloud, 2 adjacent, 3 shadow, 4 snow/ice, 5 water, 6-7 aerosol; 255 fill: HLS Product User Guide v2.0.
-FMASK = {32: C, 224: C, 64: C, 0: C, 8: S, 4: K, 2: K, 10: K, 16: I, 48: I, 255: F}
+FMASK = {32: C, 224: C, 64: C, 0: C, 8: S, 4: K, 2: K, 10: K, 16: ICE, 48: ICE, 255: F}
 
 
 @pytest.mark.parametrize("value", FMASK)
