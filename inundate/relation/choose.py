@@ -12,8 +12,8 @@ from inundate.relation.pairs import Units
 # Pairs' worth of evidence that the other wetlands' scores bring to a wetland's choice.
 _SHARED_PAIRS = 6.0
 _SCALES = np.exp(np.linspace(np.log(0.5), np.log(5.0), 60))
-# sd of log scale before seeing data: bands are believed within a factor of about two.
-_SCALE_SD = 0.7
+# sd of log scale before seeing data: bands are believed within a third either way.
+_SCALE_SD = 0.3
 
 
 def date_blocks(units: Units, n_blocks: int) -> np.ndarray:
@@ -149,7 +149,9 @@ def mixture_error(
     return chosen
 
 
-def band_scale(gap: np.ndarray, model_sd: np.ndarray, noise_sd: np.ndarray, nu: float) -> float:
+def band_scale(
+    gap: np.ndarray, model_sd: np.ndarray, noise_sd: np.ndarray, nu: float, heft: np.ndarray | None = None
+) -> float:
     """Return the factor on the model's sd under which held-out gaps are likeliest, with a weak prior about 1.
 
     Parameters
@@ -158,18 +160,21 @@ def band_scale(gap: np.ndarray, model_sd: np.ndarray, noise_sd: np.ndarray, nu: 
         Held-out observed minus predicted share; sd of the prediction; sd of the observation. NaN rows are left out.
     nu : float
         Degrees of freedom.
+    heft : ndarray, shape (pair,), optional
+        Worth of each pair: less than 1 where pairs share an error.
 
     Returns
     -------
     float
         Between 0.5 and 5; 1 when there is nothing to learn from.
     """
-    good = np.isfinite(gap) & np.isfinite(model_sd) & np.isfinite(noise_sd)
+    good = np.isfinite(gap) & np.isfinite(model_sd) & np.isfinite(noise_sd) & (model_sd > 1e-4)
     if good.sum() < 10:
         return 1.0
-    gap, model_sd, noise_sd = gap[good], model_sd[good], noise_sd[good]
+    worth = np.ones(gap.size) if heft is None else heft
+    gap, model_sd, noise_sd, worth = gap[good], model_sd[good], noise_sd[good], worth[good]
     best = [
-        float(np.sum(log_density(gap, np.sqrt((c * model_sd) ** 2 + noise_sd**2), nu))) - 0.5 * (np.log(c) / _SCALE_SD) ** 2
+        float(np.sum(worth * log_density(gap, np.sqrt((c * model_sd) ** 2 + noise_sd**2), nu))) - 0.5 * (np.log(c) / _SCALE_SD) ** 2
         for c in _SCALES
     ]
     return float(_SCALES[int(np.argmax(best))])

@@ -82,8 +82,9 @@ class Curves:
     weights : ndarray, shape (unit, 4)
         Weight of each family in the bands; the heaviest is the curve itself.
     datum_sd_m : ndarray, shape (unit,)
-    scale : (float, float)
-        Factor on the bands' half widths inside and outside the stages seen, from held-out pairs.
+    scale : (float, float, float)
+        Factor on the bands' half widths inside and outside the stages seen, and for wetlands without pairs, from held-out
+        pairs.
     seed, n_draws, level
         How curves are drawn and what share of the truth the bands should hold.
     hypsometry : dict
@@ -95,7 +96,7 @@ class Curves:
     cov: dict[int, np.ndarray]
     weights: np.ndarray
     datum_sd_m: np.ndarray
-    scale: tuple[float, float]
+    scale: tuple[float, float, float]
     seed: int
     n_draws: int
     level: float
@@ -168,7 +169,8 @@ class Curves:
 
     def widening(self) -> np.ndarray:
         """Return the factor on half widths (unit, step): the inside one where stages were seen, blending outside."""
-        inside, outside = self.scale
+        inside, beyond, unseen = self.scale
+        outside = np.where(self.table["n_pairs"].to_numpy() > 0, beyond, unseen)[:, None]
         low = self.table["stage_min_m"].to_numpy(float)[:, None]
         high = self.table["stage_max_m"].to_numpy(float)[:, None]
         reach = np.maximum(0.1 * (high - low), 0.02)

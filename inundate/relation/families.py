@@ -9,9 +9,11 @@ above 1. Parameters are unbounded reals in a vector of length ``N_PARAM`` of whi
 - ``power_offset``: log h_full, log b, offset. Share = ((h - offset) / h_full)^b.
 - ``spline``: the same three and four log increments: a monotone cubic (Fritsch & Carlson 1980, SIAM J. Numer. Anal. 17,
   238) through knots at u = 0, 1/4, 1/2, 3/4, 1 of u = ((h - offset) / h_full)^b, each rise exp(increment) / 4.
-- ``elevation``: vertical offset (m) and roughness (m) of the elevation model's hypsometry. Share = H_roughness(h + offset):
-  positive roughness blurs the hypsometry (ground rougher than the model shows), negative sharpens it (model noisier
-  than the ground: elevations drawn together about their mean so that the variance falls by roughness^2).
+- ``elevation``: vertical offset (m), roughness (m) and log b_low of the elevation model's hypsometry. Share =
+  H_roughness(h + offset): positive roughness blurs the hypsometry (ground rougher than the model shows), negative sharpens
+  it (model noisier than the ground: elevations drawn together about their mean so that the variance falls by roughness^2).
+  Below the floor of what the model shows (its lowest 3 %, or the water surface that stood there at the survey) the curve
+  runs to 0 at stage 0 as a power b_low of stage.
 """
 
 from __future__ import annotations
@@ -21,13 +23,15 @@ import numpy as np
 
 FAMILIES = ("power", "power_offset", "spline", "elevation")
 POWER, POWER_OFFSET, SPLINE, ELEVATION = range(4)
-FAMILY_SIZE = np.array([2, 3, 7, 2])
+FAMILY_SIZE = np.array([2, 3, 7, 3])
 N_PARAM = 7
 N_KNOT = 4
 N_WORK = 3 + 2 * (N_KNOT + 1)
 ROUGHNESS_M = np.array([-0.30, -0.20, -0.10, -0.05, 0.0, 0.05, 0.10, 0.20, 0.30])
 N_TABLE = 161
 _DRY_RAMP_M = 0.03
+_FLOOR_SHARE = 0.03
+_WATER_FLAT_M = 0.05
 
 
 @nb.njit(cache=True, nogil=True)
@@ -35,7 +39,8 @@ def prepare(family: int, theta: np.ndarray, work: np.ndarray) -> None:
     """Turn a parameter vector into the numbers that :func:`share_at` needs (written into ``work``, ``(N_WORK,)``)."""
     if family == 3:
         work[0] = theta[0]
-        work[1] = theta[1]
+        work[1] = min(max(theta[1], ROUGHNESS_M[0]), ROUGHNESS_M[-1])
+        work[2] = np.exp(min(max(theta[2], -1.5), 2.0))
         return
     work[0] = np.exp(min(max(theta[0], -6.0), 6.0))
     work[1] = np.exp(min(max(theta[1], -3.0), 3.0))
@@ -73,28 +78,35 @@ def _warp(u: float, work: np.ndarray) -> float:
 
 
 @nb.njit(cache=True, nogil=True)
+def _table_at(table: np.ndarray, span: np.ndarray, rough: float, z: float) -> float:
+    place = min(max((z - span[0]) / span[1], 0.0), table.shape[1] - 1.0)
+    i = min(int(place), table.shape[1] - 2)
+    part = place - i
+    k = 0
+    while k < ROUGHNESS_M.size - 2 and rough > ROUGHNESS_M[k + 1]:
+        k += 1
+    mix = (rough - ROUGHNESS_M[k]) / (ROUGHNESS_M[k + 1] - ROUGHNESS_M[k])
+    low = table[k, i] + part * (table[k, i + 1] - table[k, i])
+    high = table[k + 1, i] + part * (table[k + 1, i + 1] - table[k + 1, i])
+    return min(max(low + mix * (high - low), 0.0), 1.0)
+
+
+@nb.njit(cache=True, nogil=True)
 def share_at(family: int, work: np.ndarray, table: np.ndarray, span: np.ndarray, h: float) -> float:
     """Return the share of the largest extent at stage ``h``.
 
-    ``table`` (roughness level, ``N_TABLE``) and ``span`` (first stage, step) describe the hypsometry; only the elevation
-    family reads them.
+    ``table`` (roughness level, ``N_TABLE``) and ``span`` (first stage, step, stage of the floor) describe the hypsometry;
+    only the elevation family reads them.
     """
     if h <= 0.0:
         return 0.0
     if family == 3:
-        place = (h + work[0] - span[0]) / span[1]
-        place = min(max(place, 0.0), table.shape[1] - 1.0)
-        i = min(int(place), table.shape[1] - 2)
-        part = place - i
-        r = min(max(work[1], ROUGHNESS_M[0]), ROUGHNESS_M[-1])
-        k = 0
-        while k < ROUGHNESS_M.size - 2 and r > ROUGHNESS_M[k + 1]:
-            k += 1
-        mix = (r - ROUGHNESS_M[k]) / (ROUGHNESS_M[k + 1] - ROUGHNESS_M[k])
-        low = table[k, i] + part * (table[k, i + 1] - table[k, i])
-        high = table[k + 1, i] + part * (table[k + 1, i + 1] - table[k + 1, i])
-        value = (low + mix * (high - low)) * min(1.0, h / _DRY_RAMP_M)
-        return min(max(value, 0.0), 1.0)
+        floor = span[2] - work[0]
+        if floor > _DRY_RAMP_M:
+            if h >= floor:
+                return _table_at(table, span, work[1], h + work[0])
+            return _table_at(table, span, work[1], span[2]) * (h / floor) ** work[2]
+        return _table_at(table, span, work[1], h + work[0]) * min(1.0, h / _DRY_RAMP_M)
     x = (h - work[2]) / work[0]
     if x <= 0.0:
         return 0.0
@@ -137,7 +149,45 @@ def full_stage(family: int, theta: np.ndarray, table: np.ndarray, span: np.ndarr
 
 def empty_table() -> tuple[np.ndarray, np.ndarray]:
     """Return a hypsometry table and span of the right shape for curves that do not read them."""
-    return np.zeros((ROUGHNESS_M.size, N_TABLE)), np.array([0.0, 1.0])
+    return np.zeros((ROUGHNESS_M.size, N_TABLE)), np.array([0.0, 1.0, 0.0, 0.0])
+
+
+def water_at_survey(stage_m: np.ndarray, share: np.ndarray) -> tuple[float, float]:
+    """Find the water that stood in a bowl when its elevation was measured.
+
+    A water surface shows as a step: more than 6 % of the area within ``_WATER_FLAT_M`` of the lowest cells, at a slope over
+    twice that of the 15 cm above. The depth below it is where a power law through the ground above runs to zero, with
+    log b held near log 1.3 (sd 0.4; common practice, no source).
+
+    Parameters
+    ----------
+    stage_m, share : ndarray, shape (step,)
+        Stage above the lowest cell, rising, and share of the largest extent below it.
+
+    Returns
+    -------
+    floor_m, depth_m : float
+        Stage of the top of the step (above the lowest cell), and depth of water below the lowest cell; without water the
+        stage at which 3 % of the area is reached, and 0.
+    """
+    low, mid = np.interp([_WATER_FLAT_M, _WATER_FLAT_M + 0.15], stage_m, share)
+    dry = float(np.interp(_FLOOR_SHARE, share + 1e-12 * np.arange(share.size), stage_m))
+    if low < 0.06 or low / _WATER_FLAT_M < 2.0 * (mid - low) / 0.15:
+        return dry, 0.0
+    above = (stage_m > _WATER_FLAT_M) & (share > low) & (share < 0.95)
+    if above.sum() < 4:
+        return _WATER_FLAT_M, 0.0
+    pick = np.linspace(0, above.sum() - 1, min(int(above.sum()), 25)).astype(int)
+    z, y = stage_m[above][pick], np.log(share[above][pick])
+    best, depth = np.inf, 0.0
+    for trial in np.concatenate([[0.01], np.arange(0.03, 3.0, 0.03)]):
+        x = np.log(z + trial)
+        b = float(np.sum((x - x.mean()) * (y - y.mean())) / max(float(np.sum((x - x.mean()) ** 2)), 1e-12))
+        left = y - y.mean() - b * (x - x.mean())
+        cost = 5.0 * float(np.mean(left**2)) / 0.05**2 + ((np.log(max(b, 0.05)) - np.log(1.3)) / 0.4) ** 2
+        if cost < best:
+            best, depth = cost, float(trial)
+    return _WATER_FLAT_M, depth
 
 
 def hypsometry_table(stage_m: np.ndarray, area_m2: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
@@ -152,13 +202,16 @@ def hypsometry_table(stage_m: np.ndarray, area_m2: np.ndarray) -> tuple[np.ndarr
     -------
     table : ndarray, shape (roughness level, ``N_TABLE``)
         Share of the largest extent, rising along the second axis, at the levels ``ROUGHNESS_M``.
-    span : ndarray, shape (2,)
-        Stage of the first column and the step, m.
+    span : ndarray, shape (4,)
+        Stage of the first column, step, stage of the floor, and depth of water at the survey, m; stages count from the
+        lowest ground as far as it is known: the lowest cell less that depth.
     """
     order = np.argsort(stage_m, kind="stable")
     stage = np.asarray(stage_m, float)[order]
     share = np.maximum.accumulate(np.asarray(area_m2, float)[order])
     share = share / max(share[-1], 1e-9)
+    floor, depth = water_at_survey(stage, share)
+    stage = stage + depth
     rise = np.diff(share, prepend=0.0)
     mean = float(np.sum(rise * stage))
     spread = float(np.sqrt(max(np.sum(rise * (stage - mean) ** 2), 1e-12)))
@@ -175,4 +228,4 @@ def hypsometry_table(stage_m: np.ndarray, area_m2: np.ndarray) -> tuple[np.ndarr
             nodes, heft = np.polynomial.hermite_e.hermegauss(15)
             shifted = np.interp(grid[:, None] - rough * nodes[None, :], stage, share, left=0.0, right=1.0)
             table[k] = np.maximum.accumulate(shifted @ (heft / heft.sum()))
-    return np.clip(table, 0.0, 1.0), np.array([grid[0], grid[1] - grid[0]])
+    return np.clip(table, 0.0, 1.0), np.array([grid[0], grid[1] - grid[0], floor + depth, depth])

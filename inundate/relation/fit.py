@@ -192,15 +192,46 @@ def _scales(
     date = mixture_error(by_date, weights, unit, best)
     stage = mixture_error(by_stage, weights, unit, best)
     y = units.pairs[:, 2]
-    inside = date[:, 3] == 0
-    outside = date[:, 3] == 1
-    scale_in = band_scale((y - date[:, 0])[inside], date[inside, 1], date[inside, 2], nu)
-    far = stage[:, 3] == 1
-    gap = np.concatenate([(y - date[:, 0])[outside], (y - stage[:, 0])[far]])
-    scale_out = band_scale(
-        gap, np.concatenate([date[outside, 1], stage[far, 1]]), np.concatenate([date[outside, 2], stage[far, 2]]), nu
-    )
-    return scale_in, scale_out
+    scales = []
+    for rows in (_judging(date, 0.0), _judging(stage, 1.0) | _judging(date, 1.0)):
+        use = np.where((_judging(stage, 1.0) & rows)[:, None], stage, date)[rows]
+        scales.append(band_scale(y[rows] - use[:, 0], use[:, 1], use[:, 2], nu))
+    return max(1.0, scales[0]), max(1.0, *scales)
+
+
+def _judging(held: np.ndarray, outside: float) -> np.ndarray:
+    """Say which held-out pairs judge the bands: of that side of the stages fitted to, and not cut off at empty or full."""
+    with np.errstate(invalid="ignore"):
+        return (held[:, 3] == outside) & (np.minimum(held[:, 0], 1.0 - held[:, 0]) > held[:, 2])
+
+
+def unseen_scale(units: Units, prior: Prior, fit: Fit, nu: float) -> float:
+    """Return the band factor of wetlands without pairs, from wetlands with pairs each predicted from elevation alone.
+
+    At most 40 wetlands are left out in turn (evenly picked by name); the pairs of one count together as four, for they share
+    its error. Never below 1; 1 with fewer than five wetlands.
+    """
+    table = units.table
+    able = (table["hypsometry"].to_numpy() >= 0) & (table["n_pairs"].to_numpy() >= 6)
+    names = table.loc[able, "wetland_id"].unique()
+    if names.size < 5:
+        return 1.0
+    size = int(FAMILY_SIZE[ELEVATION])
+    rows = []
+    for name in names[np.unique(np.linspace(0, names.size - 1, 40).astype(int))]:
+        mine = (table["wetland_id"] == name).to_numpy()
+        blind = learn_prior(ELEVATION, units, prior, fit.theta, fit.info, without=mine)
+        for u in np.flatnonzero(mine & able):
+            pairs = units.pairs[units.first[u] : units.first[u + 1]]
+            place = int(table["hypsometry"].iloc[u])
+            got = solve.predict_from(
+                ELEVATION, size, blind.mean[u], blind.cov[u], pairs, (units.tables[place], units.spans[place])
+            )
+            rows.append(np.column_stack([pairs[:, 2] - got[:, 0], got[:, 1], fit.phi[u] * got[:, 2], got[:, 0]]))
+            rows[-1] = np.column_stack([rows[-1], np.full(len(pairs), min(1.0, 4.0 / len(pairs)))])
+    gap, spread, noise, share, heft = np.concatenate(rows).T
+    use = np.minimum(share, 1.0 - share) > noise
+    return max(1.0, band_scale(gap[use], spread[use], noise[use], nu, heft[use]))
 
 
 def datum_sd(units: Units) -> np.ndarray:
@@ -209,6 +240,15 @@ def datum_sd(units: Units) -> np.ndarray:
     for u in range(out.size):
         mine = units.pairs[units.first[u] : units.first[u + 1], 1]
         out[u] = min(float(mine.min()), 0.05) if mine.size else 0.0
+    return out
+
+
+def _with_shifts(datum: np.ndarray, units: Units, shifts: pd.DataFrame) -> np.ndarray:
+    """Widen the datum error of wetlands with an unconfirmed stage shift: which side of it is right is not known."""
+    out = datum.copy()
+    for row in shifts.loc[shifts["kind"] == "stage"].itertuples():
+        mine = ((units.table["wetland_id"] == row.wetland_id) & (units.table["period"] == row.period)).to_numpy()
+        out[mine] = np.hypot(out[mine], 0.5 * abs(float(row.size_m)))
     return out
 
 
@@ -224,14 +264,18 @@ def _assemble(
     by_stage = _hold_out(units, codes, priors, fits, stage_blocks(units), options.nu)
     choices, weights = choose(units, by_date, options.nu)
     scale_in, scale_out = _scales(units, by_date, by_stage, weights, options.nu)
+    unseen = scale_out
+    if ELEVATION in codes and options.pool:
+        unseen = unseen_scale(units, priors[ELEVATION], fits[ELEVATION], options.nu)
     known = _serving(units)
+    shifts = find_shifts(units, fits, priors, weights, options)
     curves = Curves(
         units.table.loc[known].assign(unit=np.arange(int(known.sum()))).reset_index(drop=True),
         {c: fits[c].theta[known] for c in codes},
         {c: fits[c].cov[known] for c in codes},
         weights[known],
-        datum_sd(units)[known],
-        (scale_in, scale_out),
+        _with_shifts(datum_sd(units), units, shifts)[known],
+        (scale_in, scale_out, unseen),
         seed,
         options.n_draws,
         options.level,
@@ -240,7 +284,7 @@ def _assemble(
     tables = {
         "relations": _relations_table(units, fits, weights, choices).loc[known].reset_index(drop=True),
         "choices": choices,
-        "shifts": find_shifts(units, fits, priors, weights, options),
+        "shifts": shifts,
         "hysteresis": find_hysteresis(units, fits, priors, weights, options),
     }
     return RelationSet(curves, tables, units.refused)

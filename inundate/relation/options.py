@@ -50,7 +50,7 @@ class RelationOptions:
     area_sd_share: float = 0.05
     stage_sd_m: float = 0.02
     stage_limit_m: float = 15.0
-    shift_alpha: float = 0.0005
+    shift_alpha: float = 0.002
     shift_least_m: float = 0.03
     shift_least_share: float = 0.10
 

@@ -21,7 +21,7 @@ DEFAULT_SD = {
     POWER: np.array([0.8, 0.5]),
     POWER_OFFSET: np.array([0.8, 0.5, 0.08]),
     SPLINE: np.array([0.8, 0.5, 0.08, 0.4, 0.4, 0.4, 0.4]),
-    ELEVATION: np.array([0.15, 0.08]),
+    ELEVATION: np.array([0.15, 0.08, 0.5]),
 }
 _SHRINK = {
     POWER: 0.4,
@@ -69,15 +69,30 @@ def base_means(units: Units) -> dict[int, np.ndarray]:
     size = table["area_max_m2"].to_numpy(float)
     log_full = np.log(0.7) + 0.15 * np.log(size / 2000.0)
     log_b = np.full(size.size, np.log(2.0 / 1.72))
-    for key, (stage, share) in units.hypsometry.items():
+    for i, (key, (stage, share)) in enumerate(units.hypsometry.items()):
         mine = (table["wetland_id"] == key).to_numpy()
-        log_full[mine], log_b[mine] = shape_of_hypsometry(stage, share)
+        log_full[mine], log_b[mine] = shape_of_hypsometry(stage + units.spans[i, 3], share)
     out = {}
     for family in (POWER, POWER_OFFSET, SPLINE):
         mean = np.zeros((size.size, int(FAMILY_SIZE[family])))
         mean[:, 0], mean[:, 1] = log_full, log_b
         out[family] = mean
-    out[ELEVATION] = np.zeros((size.size, 2))
+    out[ELEVATION] = np.zeros((size.size, 3))
+    out[ELEVATION][:, 2] = np.log(1.6)
+    return out
+
+
+def survey_depth(units: Units) -> np.ndarray:
+    """Return the depth of water (m, (unit,)) that hid each bowl's lowest ground when its elevation was measured."""
+    which = units.table["hypsometry"].to_numpy()
+    return np.where(which >= 0, units.spans[np.maximum(which, 0), 3], 0.0)
+
+
+def _hidden(family: int, units: Units, d: int) -> np.ndarray:
+    """Return the extra prior variance (unit, d, d) where water hid the lowest ground: half the depth found, on the offset."""
+    out = np.zeros((units.table.shape[0], d, d))
+    if family == ELEVATION:
+        out[:, 0, 0] = (0.5 * survey_depth(units)) ** 2
     return out
 
 
@@ -88,7 +103,8 @@ def default_prior(family: int, units: Units) -> Prior:
     known = units.table["hypsometry"].to_numpy() >= 0
     if family != ELEVATION:
         sd[known, 0] *= 0.6
-    return _pack(family, mean, sd[:, :, None] * sd[:, None, :] * np.eye(mean.shape[1]))
+    d = mean.shape[1]
+    return _pack(family, mean, sd[:, :, None] * sd[:, None, :] * np.eye(d) + _hidden(family, units, d))
 
 
 def features(units: Units) -> np.ndarray:
@@ -107,11 +123,13 @@ def features(units: Units) -> np.ndarray:
 
 def _columns(family: int, parameter: int) -> np.ndarray:
     if family == ELEVATION:
-        return np.array([0, 1, 2, 3])
+        return np.array([0, 1, 2, 3]) if parameter < 2 else np.array([0])
     return np.array([0, 1, 2, 3, 4, 5]) if parameter < 2 else np.array([0])
 
 
-def learn_prior(family: int, units: Units, prior: Prior, theta: np.ndarray, info: np.ndarray) -> Prior:
+def learn_prior(
+    family: int, units: Units, prior: Prior, theta: np.ndarray, info: np.ndarray, without: np.ndarray | None = None
+) -> Prior:
     """Learn the prior of a family from the fits of all units.
 
     Parameters
@@ -122,6 +140,8 @@ def learn_prior(family: int, units: Units, prior: Prior, theta: np.ndarray, info
         The prior under which ``theta`` was fitted.
     theta : ndarray, shape (unit, N_PARAM); info : ndarray, shape (unit, N_PARAM, N_PARAM)
         Fitted parameters and the information of the pairs alone.
+    without : ndarray of bool, shape (unit,), optional
+        Units to leave out of the learning.
 
     Returns
     -------
@@ -132,8 +152,10 @@ def learn_prior(family: int, units: Units, prior: Prior, theta: np.ndarray, info
     base = base_means(units)[family]
     x = features(units)
     told = units.table["n_pairs"].to_numpy() >= LEAST_PAIRS
+    if without is not None:
+        told &= ~without
     if family == ELEVATION:
-        told &= units.table["hypsometry"].to_numpy() >= 0
+        told &= (units.table["hypsometry"].to_numpy() >= 0) & (survey_depth(units) < 0.1)
     scatter = np.diag((DEFAULT_SD[family] * _SHRINK[family]) ** 2)
     own = info[told][:, :d, :d]
     before = prior.precision[told][:, :d, :d]
@@ -147,6 +169,7 @@ def learn_prior(family: int, units: Units, prior: Prior, theta: np.ndarray, info
     for j in range(d):
         use = _columns(family, j)
         cov[:, j, j] += np.einsum("ua,ab,ub->u", x[:, use], spread[j], x[:, use])
+    cov += _hidden(family, units, d)
     return _pack(family, mean, cov)
 
 

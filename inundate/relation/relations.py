@@ -35,7 +35,12 @@ RELATION_COLUMNS = (
 def named_parameters(family: int, theta: np.ndarray, area_max_m2: float) -> dict[str, float | list[float]]:
     """Return a curve's parameters under published names: s_m2 and p of the power law, offsets and knots in plain units."""
     if family == ELEVATION:
-        return {"vertical_offset_m": float(theta[0]), "roughness_m": float(theta[1]), "area_max_m2": area_max_m2}
+        return {
+            "vertical_offset_m": float(theta[0]),
+            "roughness_m": float(theta[1]),
+            "floor_power": float(np.exp(theta[2])),
+            "area_max_m2": area_max_m2,
+        }
     full, b = float(np.exp(theta[0])), float(np.exp(theta[1]))
     out: dict[str, float | list[float]] = {
         "s_m2": area_max_m2 / full**b,
@@ -87,8 +92,8 @@ class RelationSet:
         return sorted(self._rows)
 
     @property
-    def band_scale(self) -> tuple[float, float]:
-        """Factor by which held-out pairs widened the bands inside and outside the stages seen."""
+    def band_scale(self) -> tuple[float, float, float]:
+        """Factor by which held-out pairs widened the bands inside and outside the stages seen, and without pairs."""
         return self._curves.scale
 
     def predict(
@@ -266,7 +271,7 @@ class RelationSet:
             cov,
             np.array(kept["weights"]).reshape(n, len(FAMILIES)),
             np.array(kept["datum_sd_m"]),
-            (kept["scale"][0], kept["scale"][1]),
+            (kept["scale"][0], kept["scale"][1], kept["scale"][2]),
             kept["seed"],
             kept["n_draws"],
             kept["level"],

@@ -1,9 +1,9 @@
 """Shifts: dates from which the same extent goes with another stage, and differences between rising and falling water.
 
 Each wetland's residuals are regressed, weighted, on what its curve could still do (the curve's parameters under their prior),
-on leaf states, and on a step at each date in turn. The step is either one of stage (a moved sensor, a wrong datum, another
-outlet) or one of extent (filled in, overgrown, drained). The largest F of all dates and both kinds is judged against its
-chance among that many trials (Bonferroni), after widening for the serial correlation of residuals.
+on leaf states, and on a step at each date in turn, under Student-t errors. The step is either one of stage (a moved sensor,
+a wrong datum, another outlet) or one of extent (filled in, overgrown, drained). The largest likelihood ratio of all dates and
+both kinds is judged against its chance among that many trials (Bonferroni), less the serial correlation of residuals.
 """
 
 from __future__ import annotations
@@ -39,9 +39,14 @@ SHIFT_COLUMNS = (
     "words",
 )
 HYSTERESIS_COLUMNS = ("wetland_id", "period", "size_m", "confidence", "words")
-_LEAST_SIDE = 4
+_LEAST_SIDE = 5
 _LEAST_PAIRS = 12
 _MOST_SHIFTS = 3
+_NU = 4.0
+# Steps that gain less than this chi-square of 1 degree cannot pass any sensible chance and are not looked at closer.
+_SCREEN = 8.0
+# An extent shift must beat a stage shift by this chi-square: moved sensors are some 20 times as common (common practice).
+_STAGE_FIRST = 6.0
 
 
 @dataclass(slots=True)
@@ -54,8 +59,6 @@ class Scene:
         Observed minus fitted share.
     sd : ndarray, shape (row,)
         Standard deviation of each row.
-    heft : ndarray, shape (row,)
-        Weight of each row: 1 / variance, less for outliers.
     nuisance : ndarray, shape (row, column); hold : ndarray, shape (column,)
         What may explain residuals without a shift, and the ridge on each.
     slope, share : ndarray, shape (row,)
@@ -65,19 +68,49 @@ class Scene:
 
     gap: np.ndarray
     sd: np.ndarray
-    heft: np.ndarray
     nuisance: np.ndarray
     hold: np.ndarray
     slope: np.ndarray
     share: np.ndarray
     date: np.ndarray
 
-    def cleaner(self, extra: list[np.ndarray]) -> np.ndarray:
-        """Return the matrix that takes the nuisance (and ``extra`` columns) out of weighted products."""
-        x = np.column_stack([self.nuisance, *extra])
-        hold = np.concatenate([self.hold, np.full(len(extra), 1e-9)])
-        wx = self.heft[:, None] * x
-        return np.diag(self.heft) - wx @ np.linalg.solve(x.T @ wx + np.diag(hold), wx.T)
+    def design(self, extra: list[np.ndarray]) -> tuple[np.ndarray, np.ndarray]:
+        """Return the nuisance columns with ``extra`` ones beside them, and the ridge on each."""
+        return np.column_stack([self.nuisance, *extra]), np.concatenate([self.hold, np.full(len(extra), 1e-9)])
+
+
+@dataclass(slots=True)
+class Account:
+    """A Student-t regression of residuals: its log posterior, coefficients, what is left, and the weights."""
+
+    score: float
+    coef: np.ndarray
+    left: np.ndarray
+    heft: np.ndarray
+
+
+def _account(scene: Scene, extra: list[np.ndarray]) -> Account:
+    """Regress residuals on nuisance and ``extra`` columns under a Student-t of own scale (Lange, Little & Taylor 1989)."""
+    x, hold = scene.design(extra)
+    spread, heft = 1.0, 1.0 / scene.sd**2
+    coef = np.zeros(x.shape[1])
+    left = scene.gap
+    for step in range(40):
+        wx = heft[:, None] * x
+        new = np.linalg.solve(x.T @ wx + np.diag(hold), wx.T @ scene.gap)
+        left = scene.gap - x @ new
+        z2 = (left / scene.sd) ** 2
+        if step == 0:
+            spread = max(float(np.median(np.sqrt(z2))) / 0.6745, 0.2)
+        else:
+            spread = max(float(np.sqrt(np.mean(z2 * (_NU + 1) / (_NU + z2 / spread**2)))), 0.2)
+        heft = (_NU + 1) / (_NU + z2 / spread**2) / (spread * scene.sd) ** 2
+        still = float(np.max(np.abs(new - coef))) < 1e-6
+        coef = new
+        if still and step > 3:
+            break
+    density = -0.5 * (_NU + 1) * np.log1p(z2 / spread**2 / _NU) - np.log(spread)
+    return Account(float(density.sum() - 0.5 * np.sum(hold * coef**2)), coef, left, heft)
 
 
 def _scene(units: Units, u: int, code: int, fit: Fit, prior: Prior) -> Scene | None:
@@ -110,9 +143,7 @@ def _scene(units: Units, u: int, code: int, fit: Fit, prior: Prior) -> Scene | N
     fitted = share(stage)
     gap = pairs[:, solve.SHARE] - fitted
     sd = np.sqrt(pairs[:, solve.SHARE_SD] ** 2 + (slope * pairs[:, solve.STAGE_SD]) ** 2) * fit.phi[u]
-    scene = Scene(gap, sd, 1.0 / sd**2, nuisance, hold, slope, fitted, units.date[rows][free])
-    _reweigh(scene, gap)
-    return scene
+    return Scene(gap, sd, nuisance, hold, slope, fitted, units.date[rows][free])
 
 
 def _steps(scene: Scene) -> tuple[np.ndarray, np.ndarray]:
@@ -122,47 +153,32 @@ def _steps(scene: Scene) -> tuple[np.ndarray, np.ndarray]:
     return rows, (np.arange(scene.date.size)[:, None] >= rows[None, :]).astype(float)
 
 
-def _gains(scene: Scene, clean: np.ndarray, columns: np.ndarray) -> np.ndarray:
+def _gains(scene: Scene, base: Account, before: list[np.ndarray], columns: np.ndarray) -> np.ndarray:
     """Return the drop of the weighted sum of squares by each column; 0 where it says nothing."""
-    along = columns.T @ (clean @ scene.gap)
-    size = np.einsum("ik,ij,jk->k", columns, clean, columns)
-    bare = np.einsum("ik,i,ik->k", columns, scene.heft, columns)
-    told = size > 1e-3 * np.maximum(bare, 1e-12)
-    safe = np.where(told, size, 1.0)
-    return np.where(told, along**2 / safe, 0.0)
+    x, hold = scene.design(before)
+    wx = base.heft[:, None] * x
+    rest = columns - x @ np.linalg.solve(x.T @ wx + np.diag(hold), wx.T @ columns)
+    size = np.einsum("ik,i,ik->k", rest, base.heft, columns)
+    bare = np.einsum("ik,i,ik->k", columns, base.heft, columns)
+    told = size > 0.02 * np.maximum(bare, 1e-12)
+    along = columns.T @ (base.heft * base.left)
+    return np.where(told, along**2 / np.where(told, size, 1.0), 0.0)
 
 
-def _left(scene: Scene, clean: np.ndarray, column: np.ndarray) -> tuple[float, np.ndarray]:
-    """Return the coefficient of one column and what is left of the residuals (share), nuisance taken out."""
-    along = clean @ scene.gap
-    coef = float(column @ along) / max(float(column @ clean @ column), 1e-12)
-    return coef, (along - coef * (clean @ column)) / scene.heft
+def _ratio(scene: Scene, base: Account, other: Account) -> float:
+    """Return the likelihood ratio of two accounts as a chi-square of 1 degree, less where residuals run on in time.
 
-
-def _f_ratio(scene: Scene, clean: np.ndarray, column: np.ndarray) -> tuple[float, float]:
-    """Return the F of one column and its degrees of freedom.
-
-    The variance is the sandwich of the weighted scores (White 1980, Econometrica 48, 817), which outliers that keep little
-    weight do not inflate, widened for serial correlation of residuals at most 40 days apart.
+    Shrunk by the parameters spent, and by (1 + r) / (1 - r) with r the correlation of residuals at most 40 days apart beyond
+    its own noise.
     """
-    coef, left = _left(scene, clean, column)
-    lean = clean @ column
-    dof = max(float(np.trace(clean / scene.heft[:, None])) - 1.0, 1.0)
-    variance = float(np.sum((lean * left) ** 2)) / max(float(column @ lean), 1e-12) ** 2 * scene.date.size / dof
+    even = other.left * np.sqrt(other.heft)
     near = np.diff(scene.date) <= np.timedelta64(40, "D")
-    even = left * np.sqrt(scene.heft)
     serial = 0.0
     if near.any():
         serial = float(np.sum(even[1:][near] * even[:-1][near]) / max(np.sum(even[1:][near] ** 2), 1e-12))
         serial = min(max(serial - 1.0 / np.sqrt(near.sum()), 0.0), 0.8)
-    return coef**2 / max(variance, 1e-12) / ((1 + serial) / (1 - serial)), dof
-
-
-def _reweigh(scene: Scene, left: np.ndarray) -> None:
-    """Renew the weights: Student-t of 4 degrees of freedom about the residuals left, at their own median scale."""
-    z = np.abs(left) / scene.sd
-    z /= max(float(np.median(z)) / 0.6745, 1e-3)
-    scene.heft = 5.0 / (4.0 + z**2) / scene.sd**2
+    spent = 1.0 - min(other.coef.size / scene.date.size, 0.8)
+    return max(2.0 * (other.score - base.score), 0.0) * spent * (1 - serial) / (1 + serial)
 
 
 @dataclass(slots=True)
@@ -178,40 +194,43 @@ class Found:
     column: np.ndarray
 
 
-def _best_step(
-    scene: Scene, clean: np.ndarray, columns: np.ndarray
-) -> tuple[int, float, float, np.ndarray]:
-    """Return the candidate of largest gain, its F, degrees of freedom, and the gains of all."""
-    gains = _gains(scene, clean, columns)
-    k = int(gains.argmax())
-    ratio, dof = _f_ratio(scene, clean, columns[:, k])
-    return k, ratio, dof, gains
-
-
 def _search(scene: Scene, before: list[np.ndarray], options: RelationOptions) -> Found | None:
     rows, steps = _steps(scene)
     if rows.size == 0:
         return None
+    base = _account(scene, before)
     best: Found | None = None
     top = 0.0
     for kind, shape in (("stage", -scene.slope), ("extent", scene.share)):
         columns = steps * shape[:, None]
-        trial = replace(scene)
-        for _ in range(3):
-            clean = trial.cleaner(before)
-            k, ratio, dof, gains = _best_step(trial, clean, columns)
-            coef, left = _left(trial, clean, columns[:, k])
-            _reweigh(trial, left)
-        if ratio <= top:
-            continue
-        top = ratio
-        chance = min(float(stats.f.sf(ratio, 1, dof)) * 2 * rows.size, 1.0)
-        near = np.flatnonzero(gains >= gains[k] * (1.0 - min(stats.chi2.ppf(0.95, 1) / max(ratio, 1e-9), 1.0)))
-        best = Found(int(rows[k]), kind, coef, chance, int(rows[near[0]]), int(rows[near[-1]]), columns[:, k])
+        gains = _gains(scene, base, before, columns)
+        tried: set[int] = set()
+        k = int(gains.argmax())
+        while gains[k] > _SCREEN and k not in tried and len(tried) < 4:
+            tried.add(k)
+            other = _account(scene, [*before, columns[:, k]])
+            ratio = _ratio(scene, base, other)
+            again = _gains(scene, replace(base, heft=other.heft, left=_left_without(scene, other, before)), before, columns)
+            ratio_kind = ratio - (_STAGE_FIRST if kind == "extent" else 0.0)
+            if ratio_kind > top:
+                top = ratio_kind
+                chance = min(float(stats.chi2.sf(ratio, 1)) * 2 * rows.size, 1.0)
+                near = np.flatnonzero(again >= again.max() - stats.chi2.ppf(0.95, 1))
+                best = Found(
+                    int(rows[k]), kind, float(other.coef[-1]), chance, int(rows[near[0]]), int(rows[near[-1]]), columns[:, k]
+                )
+            k = int(again.argmax())
     if best is None or best.chance >= options.shift_alpha:
         return None
     least = options.shift_least_m if best.kind == "stage" else options.shift_least_share
     return best if abs(best.size) >= least else None
+
+
+def _left_without(scene: Scene, other: Account, before: list[np.ndarray]) -> np.ndarray:
+    """Return residuals after the nuisance alone, under the weights of another account."""
+    x, hold = scene.design(before)
+    wx = other.heft[:, None] * x
+    return scene.gap - x @ np.linalg.solve(x.T @ wx + np.diag(hold), wx.T @ scene.gap)
 
 
 def _day(stamp: np.datetime64) -> str:
@@ -310,10 +329,9 @@ def find_hysteresis(
         if min((way > 0).sum(), (way < 0).sum()) < _LEAST_SIDE:
             continue
         column = -0.5 * way * scene.slope
-        clean = scene.cleaner([])
-        coef = _left(scene, clean, column)[0]
-        ratio, dof = _f_ratio(scene, clean, column)
-        chance = float(stats.f.sf(ratio, 1, dof))
+        base, other = _account(scene, []), _account(scene, [column])
+        coef = float(other.coef[-1])
+        chance = float(stats.chi2.sf(_ratio(scene, base, other), 1))
         if chance < 0.001 and abs(coef) >= 0.02:
             less = "less" if coef > 0 else "more"
             words = (

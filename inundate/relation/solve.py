@@ -243,10 +243,12 @@ def fit_one(family: int, size: int, theta: np.ndarray, phi: float, one: One, inf
 
 @nb.njit(cache=True, nogil=True)
 def _spread_of_residuals(phi: float, one: One, space: Space) -> tuple[float, float]:
+    """Sum weighted squares of raw residuals and count them; near empty and full, where extents are cut off, none counts."""
     total, count = 0.0, 0.0
     for i in range(one.use.size):
         gap = _residual(one.pairs[i, SHARE], space.value[i], one.pairs[i, CENSORED])
-        if one.use[i] and not (one.pairs[i, CENSORED] > 0.5 and gap == 0.0):
+        edge = min(space.value[i], 1.0 - space.value[i]) < space.raw[i]
+        if one.use[i] and not edge and not (one.pairs[i, CENSORED] > 0.5 and gap == 0.0):
             z = gap / space.raw[i]
             total += (one.nu + 1.0) / (one.nu + (z / phi) ** 2) * z * z
             count += 1.0
@@ -378,23 +380,34 @@ def _predict_left_out(
     family: int, size: int, theta: np.ndarray, phi: float, one: One, info: np.ndarray, out: np.ndarray
 ) -> None:
     cov = np.zeros((N_PARAM, N_PARAM))
-    slope, work = np.zeros(N_PARAM), np.zeros(N_WORK)
     posterior(size, info, one.precision, cov)
     low, high = np.inf, -np.inf
     for i in range(one.use.size):
         if one.use[i]:
             low, high = min(low, one.pairs[i, STAGE]), max(high, one.pairs[i, STAGE])
-    prepare(family, theta, work)
+    got = predict_from(family, size, theta, cov, one.pairs, (one.table, one.span))
     for i in range(one.use.size):
-        if one.use[i]:
-            continue
-        h = one.pairs[i, STAGE]
-        gradient(family, size, theta, (one.table, one.span), h, slope)
+        if not one.use[i]:
+            out[i, 0], out[i, 1], out[i, 2] = got[i, 0], got[i, 1], phi * got[i, 2]
+            out[i, 3] = 1.0 if one.pairs[i, STAGE] < low or one.pairs[i, STAGE] > high else 0.0
+
+
+@nb.njit(cache=True, nogil=True)
+def predict_from(
+    family: int, size: int, theta: np.ndarray, cov: np.ndarray, pairs: np.ndarray, ground: tuple[np.ndarray, np.ndarray]
+) -> np.ndarray:
+    """Return share, its sd under ``cov``, and the raw noise sd at each pair, (pair, 3); ``ground`` is (table, span)."""
+    out = np.zeros((pairs.shape[0], 3))
+    slope, work = np.zeros(N_PARAM), np.zeros(N_WORK)
+    table, span = ground
+    prepare(family, theta, work)
+    for i in range(pairs.shape[0]):
+        gradient(family, size, theta, ground, pairs[i, STAGE], slope)
         spread = 0.0
         for a in range(size):
             for b in range(size):
                 spread += slope[a] * cov[a, b] * slope[b]
-        out[i, 0] = share_at(family, work, one.table, one.span, h)
+        out[i, 0] = share_at(family, work, table, span, pairs[i, STAGE])
         out[i, 1] = np.sqrt(max(spread, 0.0))
-        out[i, 2] = phi * raw_sigma(family, work, one.table, one.span, one.pairs[i])
-        out[i, 3] = 1.0 if h < low or h > high else 0.0
+        out[i, 2] = raw_sigma(family, work, table, span, pairs[i])
+    return out
