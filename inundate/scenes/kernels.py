@@ -74,16 +74,19 @@ def _brackets(position, size):  # type: ignore[no-untyped-def]
 @njit(cache=True, nogil=True)
 def _patched(a, b, c, d, fy, fx):  # type: ignore[no-untyped-def]
     """Interpolate between those of four corners (a b above c d) that hold data; NaN where the nearest holds none."""
-    near_a, near_c = (a, c) if fx < 0.5 else (b, d)
-    if np.isnan(near_a if fy < 0.5 else near_c):
+    left, lower = fx < 0.5, fy >= 0.5
+    near = (c if left else d) if lower else (a if left else b)
+    if np.isnan(near):
         return np.float32(np.nan)
-    total = np.float32(0.0)
-    weight = np.float32(0.0)
-    for value, w in ((a, (1 - fy) * (1 - fx)), (b, (1 - fy) * fx), (c, fy * (1 - fx)), (d, fy * fx)):
+    total = 0.0
+    weight = 0.0
+    for k in range(4):
+        value = a if k == 0 else b if k == 1 else c if k == 2 else d
+        w = (fy if k > 1 else 1.0 - fy) * (fx if k % 2 else 1.0 - fx)
         if not np.isnan(value) and w > 0.0:
-            total += np.float32(w) * value
-            weight += np.float32(w)
-    return total / weight
+            total += w * value
+            weight += w
+    return np.float32(total / weight)
 
 
 @njit(cache=True, nogil=True)
