@@ -38,8 +38,8 @@ class Priors:
 
     def log_weights(self) -> np.ndarray:
         """Return log weights of all models, shape (model,)."""
-        parts = product(self.slope, self.wander, self.survey, self.checks)
-        return np.array([float(np.log(np.prod(p))) for p in parts])
+        parts = [np.log(np.array(p)) for p in (self.slope, self.wander, self.survey, self.checks)]
+        return np.add.outer(np.add.outer(np.add.outer(parts[0], parts[1]), parts[2]), parts[3]).ravel()
 
     def learn(self, offsets: list[Offset], strength: float = 2.0) -> Priors:
         """Return the weights that the loggers of an area show, the present ones counting as ``strength`` loggers.
@@ -71,7 +71,8 @@ class Priors:
                 strength * np.array(own) + share.sum(axis=tuple(i for i in range(4) if i != axis))
                 for axis, own in enumerate(axes)
             ]
-            new = Priors(*(tuple(float(c) for c in count / count.sum()) for count in counts), self.zero_sd_m)
+            slope, wander, survey, checks = (tuple((count / count.sum()).tolist()) for count in counts)
+            new = Priors(slope, wander, survey, checks, self.zero_sd_m)
         return replace(new, zero_sd_m=self._learn_zero(offsets))
 
     def _learn_zero(self, offsets: list[Offset]) -> float:
@@ -176,6 +177,8 @@ class Offset:
         Log likelihood of the evidence, averaged over the models.
     weights : ndarray of float64, shape (model,)
         Posterior weights of the models.
+    log_terms : ndarray of float64, shape (model,)
+        Log of prior weight times likelihood of every model.
     inverse, pull : ndarray of float64, shapes (model, obs, obs) and (model, obs)
         Inverse covariance of the evidence, and that times its residual.
     """
@@ -184,6 +187,7 @@ class Offset:
     steps: tuple[Step, ...]
     log_evidence: float
     weights: np.ndarray = field(default_factory=lambda: np.empty(0))
+    log_terms: np.ndarray = field(default_factory=lambda: np.empty(0))
     inverse: np.ndarray = field(default_factory=lambda: np.empty((0, 0, 0)))
     pull: np.ndarray = field(default_factory=lambda: np.empty((0, 0)))
 
@@ -223,7 +227,7 @@ class Offset:
                 cross += model[1] ** 2 * np.minimum(years[:, None], seen_years[None, :])
                 own += model[1] ** 2 * years
             m = basis @ prior_mean + cross @ pull
-            v = np.maximum(own - np.einsum("ij,jk,ik->i", cross, inverse, cross, optimize=True), 0.0)
+            v = np.maximum(own - ((cross @ inverse) * cross).sum(axis=1), 0.0)
             mean += weight * m
             second += weight * (v + m**2)
         return mean, np.sqrt(np.maximum(second - mean**2, 0.0))
@@ -317,8 +321,25 @@ def fit_offset(evidence: Evidence, steps: tuple[Step, ...] = (), priors: Priors 
     log = -0.5 * (pull @ residual + np.linalg.slogdet(cov)[1] + e.time.size * np.log(2 * np.pi))
     log += (priors or Priors()).log_weights()
     weights = np.exp(log - log.max())
-    total = float(weights.sum())
-    return Offset(e, steps, float(log.max() + np.log(total)), weights / total, inverse, pull)
+    return Offset(e, steps, _log_sum(log), weights / weights.sum(), log, inverse, pull)
+
+
+def _log_sum(log: np.ndarray) -> float:
+    top = float(log.max())
+    return top + float(np.log(np.exp(log - top).sum()))
+
+
+def _evidence_with(current: Offset, step: Step) -> float:
+    """Log evidence with one more step, by a rank-one update of every model (matrix determinant lemma)."""
+    e = current.evidence
+    column = (~e.zero & (e.time >= step.time)).astype(float)
+    q = (current.inverse @ column) @ column
+    pulled = current.pull @ column
+    grown = 1.0 + step.sd_m**2 * q
+    # the step's expected size moves the residual along the column, its sd widens the covariance
+    quad = 2.0 * step.size_m * pulled + step.size_m**2 * q
+    quad -= step.sd_m**2 * (pulled + step.size_m * q) ** 2 / grown
+    return _log_sum(current.log_terms - 0.5 * (quad + np.log(grown)))
 
 
 def choose_steps(evidence: Evidence, candidates: list[Step], priors: Priors | None = None, most: int = 6) -> Offset:
@@ -338,17 +359,14 @@ def choose_steps(evidence: Evidence, candidates: list[Step], priors: Priors | No
     """
     current = fit_offset(evidence, (), priors)
     left = list(candidates)
-    for _ in range(most):
-        best: tuple[float, Offset, Step] | None = None
-        for step in left:
-            tried = fit_offset(evidence, tuple(sorted((*current.steps, step), key=lambda s: s.time)), priors)
-            gain = tried.log_evidence - current.log_evidence + step.log_odds
-            if gain > 0 and (best is None or gain > best[0]):
-                best = (gain, tried, step)
-        if best is None:
+    while left and len(current.steps) < most:
+        gains = [_evidence_with(current, s) - current.log_evidence + s.log_odds for s in left]
+        best = int(np.argmax(gains))
+        if gains[best] <= 0:
             break
-        current = best[1]
-        left = [s for s in left if abs(s.time - best[2].time) > 86400e9 / 2]
+        taken = left[best]
+        current = fit_offset(evidence, tuple(sorted((*current.steps, taken), key=lambda s: s.time)), priors)
+        left = [s for s in left if abs(s.time - taken.time) > 86400e9 / 2]
     return current
 
 
@@ -372,10 +390,13 @@ def false_zeros(offset: Offset, priors: Priors | None = None) -> np.ndarray:
     current = offset
     while current.evidence.zero.any():
         e = current.evidence
+        # what is lost without a piece of evidence, from the inverse covariance (Rasmussen & Williams 2006, eq. 5.12)
+        own = np.diagonal(current.inverse, axis1=1, axis2=2)
+        told = 0.5 * (np.log(own / (2 * np.pi)) - current.pull**2 / own)
         scores = np.full(e.time.size, np.inf)
         for i in np.flatnonzero(e.zero):
-            rest = fit_offset(e.take(np.delete(np.arange(e.time.size), i)), current.steps, priors)
-            scores[i] = current.log_evidence - rest.log_evidence + np.log(0.15) + e.odds[i]
+            without = _log_sum(current.log_terms - told[:, i])
+            scores[i] = current.log_evidence - without + np.log(0.15) + e.odds[i]
         worst = int(np.argmin(scores))
         if scores[worst] >= 0:
             break
@@ -400,7 +421,8 @@ def doubtful_evidence(offset: Offset, limit: float = 4.5) -> np.ndarray:
     -------
     ndarray of int64
     """
-    evidence, out = offset.evidence, []
+    evidence = offset.evidence
+    out: list[int] = []
     keep = np.arange(evidence.time.size)
     while evidence.time.size >= 4 and len(out) < max(evidence.time.size // 5, 1):
         rest = fit_offset(evidence.take(keep), offset.steps) if out else offset

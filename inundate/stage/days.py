@@ -280,7 +280,7 @@ def flagged_frame(settled: Settled) -> pd.DataFrame:
             hour = time // HOUR_NS
             flag[np.isin(hour, dry_hours) & (flag == FLAG["good"])] = FLAG["at_or_below_sensor"]
         height = np.float32(span.row["height_m"])
-        stage = span.depth.astype(np.float32) + height + shift
+        stage = span.depth + height + shift
         dry = flag == FLAG["at_or_below_sensor"]
         stage[dry] = (tall + height)[dry]
         stage[~dry & (flag != FLAG["good"])] = np.nan
@@ -289,9 +289,9 @@ def flagged_frame(settled: Settled) -> pd.DataFrame:
                 {
                     "time": time.view("datetime64[ns]"),
                     "raw_value": span.raw,
-                    "depth_m": span.depth.astype(np.float32),
+                    "depth_m": span.depth,
                     "stage_m": stage,
-                    "flag": pd.Categorical.from_codes(flag.astype(np.int8), dtype=pd.CategoricalDtype(list(FLAGS))),
+                    "flag": pd.Categorical.from_codes(flag.view(np.int8), dtype=pd.CategoricalDtype(list(FLAGS))),
                 },
                 copy=False,
             )

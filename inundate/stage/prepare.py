@@ -31,8 +31,10 @@ class Span:
         The registry's row.
     time : ndarray of int64, shape (reading,)
         ns UTC, clock corrected, rising.
-    raw, depth : ndarray of float64, shape (reading,)
-        Raw value (registry's unit) and depth above the sensor, m.
+    raw : ndarray of float64, shape (reading,)
+        Raw value, in the registry's unit.
+    depth : ndarray of float32, shape (reading,)
+        Depth above the sensor, m.
     flag : ndarray of uint8, shape (reading,)
         Codes of ``options.FLAGS``.
     hours : Hours
@@ -199,7 +201,7 @@ def prepare_span(
     flag = np.zeros(time.size, np.uint8)
     hours, noise = _flag_all(row, (time, raw, warmth), (depth, air), flag, frost)
     warm = row["kind"] == "level" or (warmth is not None and bool(np.isfinite(warmth).mean() > 0.5))
-    span = Span(row, time, raw, depth, flag, hours, noise, warm, spells)
+    span = Span(row, time, raw, depth.astype(np.float32), flag, hours, noise, warm, spells)
     _remark(span, readings, place)
     return span
 

@@ -354,6 +354,9 @@ class LoggerFiles(Mapping[str, Readings]):
         parts = [read_readings(row["file"], row) for _, row in rows.iterrows()]
         return parts[0] if len(parts) == 1 else _join(parts)
 
+    def __contains__(self, logger_id: object) -> bool:
+        return logger_id in self._ids
+
     def __iter__(self) -> Iterator[str]:
         return iter(self._ids)
 

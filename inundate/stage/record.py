@@ -111,7 +111,7 @@ def prepare_logger(
             raise InputError(message)
         spans.append(prepare_span(row, readings, barometer, latitudes[row["wetland_id"]], options, frost=frost))
         if not options.keep_flagged:
-            spans[-1].raw = spans[-1].depth = np.empty(0)
+            _forget_good(spans[-1])
     parts = [s.hours for s in spans]
     hours = Hours(
         *(np.concatenate([getattr(p, k) for p in parts]) for k in ("hour", "time", "n", "mean", "low", "high"))
@@ -119,6 +119,13 @@ def prepare_logger(
     size = [p.hour.size for p in parts]
     height = np.repeat([float(s.row["height_m"]) for s in spans], size)
     return Prepared(str(rows["logger_id"].iloc[0]), spans, hours, np.repeat(np.arange(len(spans)), size), height)
+
+
+def _forget_good(span: Span) -> None:
+    """Keep the time and flag of refused readings only: hours hold what is needed of the good ones."""
+    odd = np.flatnonzero(span.flag)
+    span.time, span.flag = span.time[odd], span.flag[odd]
+    span.raw = span.depth = np.empty(0)
 
 
 def _sd(row: Mapping, name: str, default: float) -> float:
@@ -183,8 +190,15 @@ def _evidence(
 
 
 def _dry_by(offset: Offset, made: Prepared, noise: float) -> Dryness:
-    zero, sd = offset.at(made.hours.time, made.span, part="zero")
-    return find_dry(made.hours, -zero, sd, noise)
+    return find_dry(made.hours, *_zero_by(offset, made), noise)
+
+
+def _zero_by(offset: Offset, made: Prepared) -> tuple[np.ndarray, np.ndarray]:
+    """Expected reading of a dry sensor and its sd at every hour, drawn through five-day knots."""
+    time = made.hours.time
+    knots = np.r_[np.arange(time[0], time[-1], 5 * DAY_NS), time[-1]]
+    zero, sd = offset.at(knots, np.zeros(knots.size, np.int64), part="zero")
+    return np.interp(time, knots, -zero), np.interp(time, knots, sd)
 
 
 @dataclass(slots=True)
@@ -241,8 +255,7 @@ def find_datum(
     priors = priors or Priors()
     unseen = Dryness(np.zeros(made.span.size, bool), made.height_m, noise, [])
     prior = fit_offset(_evidence(made, matched.iloc[:0], unseen, options, priors.zero_sd_m)[0], (), priors)
-    zero, zero_sd = prior.at(made.hours.time, made.span, part="zero")
-    dryness = find_dry(made.hours, *first_zero(made.hours, -zero, zero_sd, noise), noise)
+    dryness = find_dry(made.hours, *first_zero(made.hours, *_zero_by(prior, made), noise), noise)
     candidates: list[Step] = []
     doubtful: list[int] = []
     for _ in range(4):

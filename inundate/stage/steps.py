@@ -65,7 +65,8 @@ class Surroundings:
         day = pd.Timestamp(time // DAY_NS * DAY_NS)
         if self.weather is None or day not in self.weather.index:
             return float("nan"), False
-        return float(self.weather.at[day, "rain_mm"]), bool(self.weather.at[day, "melt"])
+        at = self.weather.index.get_loc(day)
+        return float(self.weather["rain_mm"].to_numpy()[at]), bool(self.weather["melt"].to_numpy()[at])
 
 
 def sky_table(weather: pd.DataFrame | None) -> pd.DataFrame | None:
