@@ -1,10 +1,11 @@
 """Exact, fast scoring of trained LightGBM forests over many pixels.
 
 Feature values become ranks among the forest's own thresholds (small integers), so that every test of a tree is a compare
-of bytes. Pixels come in blocks of neighbours: a block's lowest and highest rank settle most tests of a tree at once, and
-a tree settled whole costs nothing a pixel. What stays undecided is evaluated for 64 pixels at a time, children before
-parents, each test one compare and one choice of leaf numbers. Leaf values are summed as 64-bit fixed point, so results do
-not depend on how pixels are cut into chunks.
+of bytes. Like pixels are put side by side (a counting sort by a coarse key of the features most used), in blocks: a
+block's lowest and highest rank settle most tests of a tree at once, and a tree settled whole costs nothing a pixel. What
+stays undecided is evaluated for 64 pixels at a time, children before parents, each test one compare and one choice of
+leaf numbers. Leaf values are summed as fixed point, so results do not depend on how pixels are ordered or cut into
+chunks.
 
 The idea of ranked thresholds and row-parallel tests is that of bit-vector traversal (Lucchese et al. 2015, SIGIR, and its
 vectorised form, 2016).
@@ -16,14 +17,14 @@ import math
 import warnings
 from collections.abc import Sequence
 from concurrent.futures import ThreadPoolExecutor
-from dataclasses import dataclass, field
+from dataclasses import dataclass
 from typing import Any
 
 import lightgbm as lgb
 import numpy as np
 
 from inundate.common.errors import InputError
-from inundate.pixels.forest_kernels import MISSING_NONE, MOST_LEAVES, ROWS, bucket_of, score_rows
+from inundate.pixels.forest_kernels import CHUNK, MISSING_NONE, MOST_LEAVES, bucket_of, score_rows
 
 
 class ForestFallbackWarning(UserWarning):
@@ -118,6 +119,12 @@ def _tree(body: dict[str, str]) -> Tree:
     )
 
 
+_VALUE_BITS = 51
+"""Bits of the sum of all trees' largest leaf values; with rounding, sums of high halves stay within 31 bits."""
+_LIKE_FEATURES = 6
+"""Features by which rows are put in order of likeness."""
+
+
 class _Columns:
     """Columns of ranks: one for each feature and way with missing values that occurs in the trees."""
 
@@ -139,6 +146,16 @@ class _Columns:
         left = np.where(missing == MISSING_NONE, 0, (tree.decision >> 1) & 1)
         return list(zip(tree.feature.tolist(), missing.tolist(), left.tolist(), strict=True))
 
+    def likeness(self, trees: Sequence[Tree]) -> tuple[np.ndarray, np.ndarray]:
+        """Return the features most used by the trees, and the quartiles of their thresholds."""
+        feature = np.concatenate([t.feature for t in trees] or [np.zeros(0, np.int64)])
+        threshold = np.concatenate([t.threshold for t in trees] or [np.zeros(0)])
+        count = np.bincount(feature, minlength=1)
+        most = np.argsort(-count, kind="stable")[:_LIKE_FEATURES]
+        most = most[count[most] > 0]
+        cuts = [np.quantile(threshold[feature == f], [0.25, 0.5, 0.75], method="nearest") for f in most]
+        return most.astype(np.int64), np.array(cuts, np.float64).reshape(-1, 3)
+
     def tables(self) -> tuple[np.ndarray, ...]:
         """Return the arrays that ``score_rows`` takes."""
         first, setting, steps = [], [], []
@@ -155,7 +172,7 @@ class _Columns:
             np.array(code, self.dtype),
             np.concatenate(padded) if padded else np.zeros(0),
             np.concatenate([[0], np.cumsum([p.size for p in padded])]).astype(np.int64),
-            np.concatenate(first) if first else np.zeros(0, np.uint16),
+            np.concatenate(first).astype(self.dtype) if first else np.zeros(0, self.dtype),
             np.concatenate([[0], np.cumsum([f.size for f in first])]).astype(np.int64),
             np.array(setting, np.float64).reshape(-1, 3),
             np.array(steps, np.int64),
@@ -164,7 +181,7 @@ class _Columns:
 
 def _buckets(thresholds: np.ndarray) -> tuple[np.ndarray, tuple[float, float, float], int]:
     """Even buckets over the bulk of the thresholds: where ranks start in each, and the most steps to walk from there."""
-    size = 1 << max(6, math.ceil(math.log2(8 * max(thresholds.size, 1))))
+    size = 1 << max(6, math.ceil(math.log2(16 * max(thresholds.size, 1))))
     trim = thresholds.size // 50
     low, high = float(thresholds[trim]), float(thresholds[thresholds.size - 1 - trim])
     with np.errstate(all="ignore"):
@@ -175,7 +192,7 @@ def _buckets(thresholds: np.ndarray) -> tuple[np.ndarray, tuple[float, float, fl
     most = float(size - 1)
     bucket = np.array([int(bucket_of(t, low, scale, most)) for t in thresholds], np.int64)
     count = np.bincount(bucket, minlength=size)
-    first = np.concatenate([[0], np.cumsum(count)[:-1]]).astype(np.uint16)
+    first = np.concatenate([[0], np.cumsum(count)[:-1]])
     return first, (low, scale, most), int(max(count.max(), 1))
 
 
@@ -184,11 +201,11 @@ class _Packed:
     """Arrays for the kernel, for one or more forests."""
 
     columns: tuple[np.ndarray, ...]
+    likeness: tuple[np.ndarray, np.ndarray]
     nodes: tuple[np.ndarray, ...]
     trees: tuple[np.ndarray, ...]
+    output_at: np.ndarray
     unit: float
-    outputs: int
-    features: int = field(default=0)
 
 
 def _pack(forests: Sequence[ForestText]) -> _Packed:
@@ -209,7 +226,7 @@ def _pack(forests: Sequence[ForestText]) -> _Packed:
         leaves.append(tree.leaf)
         at += n
     reach = max(sum(float(np.abs(leaf).max()) for leaf in leaves), 1e-300) if leaves else 1.0
-    unit = 2.0 ** (math.ceil(math.log2(reach)) - 60)
+    unit = 2.0 ** (math.ceil(math.log2(reach)) - _VALUE_BITS)
     whole = [np.rint(leaf / unit).astype(np.int64) for leaf in leaves]
     outputs = np.concatenate([[0], np.cumsum([len(f.trees) for f in forests])]).astype(np.int64)
     empty: list[np.ndarray] = [np.zeros(0, np.int64)]
@@ -220,9 +237,8 @@ def _pack(forests: Sequence[ForestText]) -> _Packed:
         np.concatenate([*empty, *right]).astype(np.int64),
     )
     leaf_at = np.concatenate([[0], np.cumsum([w.size for w in whole])]).astype(np.int64)
-    packed_trees = (np.array(root, np.int64), leaf_at, np.concatenate([*empty, *whole]).astype(np.int64), outputs)
-    features = max(int(f.header.get("max_feature_idx", "-1")) + 1 for f in forests)
-    return _Packed(columns.tables(), nodes, packed_trees, unit, len(forests), features)
+    packed_trees = (np.array(root, np.int64), leaf_at, np.concatenate([*empty, *whole]).astype(np.int64))
+    return _Packed(columns.tables(), columns.likeness(trees), nodes, packed_trees, outputs, unit)
 
 
 def _rows(x: object, features: int) -> np.ndarray:
@@ -242,12 +258,12 @@ def _score(packed: _Packed, x: np.ndarray, threads: int) -> np.ndarray:
     if threads < 1:
         message = f"threads: {threads} is below 1; give the number of threads to use"
         raise InputError(message)
-    out = np.empty((packed.outputs, x.shape[0]), np.int64)
-    share = -(-x.shape[0] // (threads * ROWS)) * ROWS
+    out = np.empty((packed.output_at.size - 1, x.shape[0]), np.int64)
+    share = -(-x.shape[0] // (threads * CHUNK)) * CHUNK
     spans = [slice(i, min(i + share, x.shape[0])) for i in range(0, x.shape[0], share)] if share else []
 
     def work(span: slice) -> None:
-        score_rows(x[span], packed.columns, packed.nodes, packed.trees, out[:, span])
+        score_rows(x[span], packed.columns, packed.likeness, packed.nodes, packed.trees, packed.output_at, out[:, span])
 
     if len(spans) > 1:
         with ThreadPoolExecutor(threads) as pool:

@@ -1,14 +1,16 @@
 """Sixty-four rows at once: one compare-and-choose step, written so that the compiler uses whole vector registers.
 
 The step is generic LLVM code: it is right on every processor, and quick where one register (or two, or four) holds 64
-bytes.
+bytes. Looking leaf values up has a plain form, and a quick one for processors that can look up 32 numbers held in two
+registers (AVX-512).
 """
 
 from __future__ import annotations
 
 from typing import Any
 
-from llvmlite import ir
+import numba as nb
+from llvmlite import binding, ir
 from numba.core import types
 from numba.extending import intrinsic
 
@@ -32,7 +34,14 @@ def _pointer(builder: ir.IRBuilder, data: ir.Value, offset: ir.Value, vector: ir
 
 @intrinsic  # type: ignore[untyped-decorator]
 def choose(  # type: ignore[no-untyped-def]
-    _typing, codes, code_at, threshold, bytes_, left_at, right_at, out_at  # noqa: ARG001
+    _typing,
+    codes,
+    code_at,
+    threshold,
+    bytes_,
+    left_at,
+    right_at,
+    out_at,  # noqa: ARG001
 ):
     """``bytes_[out_at + r] = bytes_[(right_at if codes[code_at + r] > threshold else left_at) + r]`` for 64 ``r``.
 
@@ -54,6 +63,42 @@ def choose(  # type: ignore[no-untyped-def]
         above = builder.icmp_unsigned(">", load[0], _splat(builder, threshold_, lanes))
         chosen = builder.select(above, load[2], load[1])
         builder.store(chosen, _pointer(builder, data, out_, _BYTES), align=1)
+        return context.get_dummy_value()
+
+    return signature, generate
+
+
+TABLE = 32
+"""Leaf values in one look-up table."""
+WIDE = bool(binding.get_host_cpu_features().get("avx512f", False)) and not nb.config.CPU_NAME
+"""Whether this processor looks up 32 numbers in two registers."""
+
+_PART = 16
+_INTS = ir.VectorType(_INT, _PART)
+
+
+@intrinsic  # type: ignore[untyped-decorator]
+def add_looked_up(_typing, slots, at, table, table_at, total, total_at):  # type: ignore[no-untyped-def]  # noqa: ANN201, ARG001
+    """``total[total_at + r] += table[table_at + slots[at + r]]`` for 64 ``r``; only where ``WIDE``.
+
+    ``slots`` is contiguous uint8 with values below 32, ``table`` and ``total`` are contiguous int32. Nothing is checked.
+    """
+    signature = types.void(slots, types.uint64, table, types.uint64, total, types.uint64)
+
+    def generate(context: Any, builder: Any, sig: Any, args: Any) -> Any:  # noqa: ANN401
+        data = [context.make_array(sig.args[k])(context, builder, args[k]).data for k in (0, 2, 4)]
+        kind = ir.FunctionType(_INTS, [_INTS, _INTS, _INTS])
+        permute = builder.module.declare_intrinsic("llvm.x86.avx512.vpermi2var.d.512", (), kind)
+
+        def place(base: ir.Value, start: ir.Value, step: int, vector: ir.VectorType) -> ir.Value:
+            return _pointer(builder, base, builder.add(start, ir.Constant(ir.IntType(64), step)), vector)
+
+        low, high = (builder.load(place(data[1], args[3], k, _INTS), align=1) for k in (0, _PART))
+        for part in range(0, LANES, _PART):
+            number = builder.load(place(data[0], args[1], part, ir.VectorType(_BYTE, _PART)), align=1)
+            found = builder.call(permute, [low, builder.zext(number, _INTS), high])
+            where = place(data[2], args[5], part, _INTS)
+            builder.store(builder.add(builder.load(where, align=1), found), where, align=1)
         return context.get_dummy_value()
 
     return signature, generate
