@@ -246,9 +246,9 @@ def datum_sd(units: Units) -> np.ndarray:
 def _with_shifts(datum: np.ndarray, units: Units, shifts: pd.DataFrame) -> np.ndarray:
     """Widen the datum error of wetlands with an unconfirmed stage shift: which side of it is right is not known."""
     out = datum.copy()
-    for row in shifts.loc[shifts["kind"] == "stage"].itertuples():
-        mine = ((units.table["wetland_id"] == row.wetland_id) & (units.table["period"] == row.period)).to_numpy()
-        out[mine] = np.hypot(out[mine], 0.5 * abs(float(row.size_m)))
+    for row in shifts.loc[shifts["kind"] == "stage"].to_dict("records"):
+        mine = (units.table["wetland_id"] == row["wetland_id"]) & (units.table["period"] == row["period"])
+        out[mine.to_numpy()] = np.hypot(out[mine.to_numpy()], 0.5 * abs(row["size_m"]))
     return out
 
 

@@ -134,7 +134,7 @@ def three_pairs(
     """
     truth = pd.read_parquet(folder / "truth/relations.parquet")
     sizes = sites.set_index("wetland_id")["area_max_m2"]
-    few = pairs.groupby("wetland_id", group_keys=False).apply(lambda t: t.sample(min(3, len(t)), random_state=5))
+    few = pairs.groupby("wetland_id").sample(3, random_state=5)
     whole = fit_relations(few, sites, heights, seed=1) if everywhere else None
     errors = []
     for key, mine in few.groupby("wetland_id"):
