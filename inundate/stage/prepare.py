@@ -263,8 +263,7 @@ def _flag_all(
     flag_flat(time, raw, air, depth, flag)
     noise = noise_of(depth[good], resolution(depth[good][:2000]))
     flag_spikes(time, depth, flag, noise)
-    good = flag == FLAG["good"]
-    flag_ice(time, warmth, hourly(time[good], depth[good]), flag, frost)
+    flag_ice(time, warmth, depth, flag, frost)
     noise = flag_noise(time, depth, flag)
     good = flag == FLAG["good"]
     return hourly(time[good], depth[good]), noise

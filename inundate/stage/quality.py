@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 
 from inundate.stage.options import FLAG
-from inundate.stage.signals import DAY_NS, HOUR_NS, Hours, hourly, interpolate, noise_of, outliers, resolution, spread
+from inundate.stage.signals import DAY_NS, HOUR_NS, hourly, interpolate, noise_of, outliers, resolution, spread
 
 _REACH = 5
 
@@ -98,11 +98,16 @@ def _set(flag: np.ndarray, start: int, stop: int, name: str) -> None:
 
 
 def flag_ice(
-    time: np.ndarray, warmth_c: np.ndarray | None, hours: Hours, flag: np.ndarray, frost: np.ndarray | None
+    time: np.ndarray,
+    warmth_c: np.ndarray | None,
+    depth: np.ndarray,
+    flag: np.ndarray,
+    frost: np.ndarray | None,
 ) -> None:
     """Flag readings of a frozen sensor; changes ``flag`` in place.
 
-    Water is never colder than 0, so a sensor under -0.3 is in ice or in air. In a cold spell (within 0.3 of freezing,
+    Water is never colder than 0, so a sensor under -0.3 is in ice, or in air (then it reads no more than 5 cm and
+    falls under ``dry``). In a cold spell (within 0.3 of freezing,
     or ``frost`` where the logger has no temperature) everything from the first to the last sudden change of level is
     flagged: ice presses and lifts.
 
@@ -111,15 +116,15 @@ def flag_ice(
     time : ndarray of int64, shape (reading,)
     warmth_c : ndarray of float, shape (reading,), or None
         Temperature at the sensor.
-    hours : Hours
-        Depth by hours.
+    depth : ndarray of float64, shape (reading,)
+        m.
     flag : ndarray of uint8, shape (reading,)
     frost : ndarray of int64, or None
         Days since 1970 whose mean air temperature, and that of the two days before, were under -2.
     """
     if warmth_c is not None and np.isfinite(warmth_c).any():
         with np.errstate(invalid="ignore"):
-            frozen = warmth_c < -0.3
+            frozen = (warmth_c < -0.3) & (depth > 0.05)
             cold = warmth_c <= 0.3
     elif frost is not None and frost.size:
         frozen = np.zeros(time.size, bool)
@@ -127,6 +132,8 @@ def flag_ice(
     else:
         return
     flag[frozen & (flag == FLAG["good"])] = FLAG["ice"]
+    good = flag == FLAG["good"]
+    hours = hourly(time[good], depth[good])
     if not cold.any() or hours.hour.size < 48:
         return
     change = np.diff(hours.mean)
