@@ -5,46 +5,61 @@ from __future__ import annotations
 import numpy as np
 from numba import njit
 
+SCALE = 40.0
+"""Factor that keeps products of variances within float32; a constant of the evidence."""
 OUTLIER = 9.0
 """Squared standardised residual at which a pixel's pull starts to fade (three standard deviations, common practice)."""
 
 
-@njit(cache=True, nogil=True, fastmath=True)
-def _add_pixel(
-    sums: np.ndarray, f: float, row: np.ndarray, wide: float, e: np.ndarray, gx: np.ndarray, gy: np.ndarray
-) -> None:
-    """Add one pixel to the sums (11, step): square, variance product, pull, and what shared errors need."""
-    offset, slope, pure, mixed = row[0], row[1], row[2] * wide, row[3] * wide * 4.0
-    for k in range(e.size):
-        water = np.float64(e[k])
-        v = pure + mixed * water * (1.0 - water)
-        inverse = 1.0 / v
-        r = f - offset - slope * water
-        z = r * r * inverse
-        w = 1.0 / (1.0 + z * (1.0 / OUTLIER))
-        root = np.sqrt(inverse)
-        x, y = slope * gx[k] * root, slope * gy[k] * root
-        u = r * root
-        sums[0, k] += z * w
-        sums[1, k] *= v
-        sums[2, k] += w
-        sums[3, k] += w * u
-        sums[4, k] += w * u * x
-        sums[5, k] += w * u * y
-        sums[6, k] += w * x
-        sums[7, k] += w * y
-        sums[8, k] += w * x * x
-        sums[9, k] += w * x * y
-        sums[10, k] += w * y * y
+@njit(cache=True, nogil=True, fastmath=True, error_model="numpy")
+def _step_sums(
+    pixel: np.ndarray, e: np.ndarray, gx: np.ndarray, gy: np.ndarray, scratch: np.ndarray, out: np.ndarray
+) -> float:
+    """Sums over pixels at one step, into ``out`` (10,): square, pull, and what shared errors need; returns sum of log v.
+
+    ``pixel`` is (6, pixel): fraction, offset, slope, pure variance, mixed variance, 1 where seen (else 0).
+    """
+    one, tail, scale = np.float32(1.0), np.float32(1.0 / OUTLIER), np.float32(SCALE)
+    s0 = s1 = s2 = s3 = s4 = s5 = s6 = s7 = s8 = s9 = np.float32(0.0)
+    for p in range(e.size):
+        water, slope, seen = e[p], pixel[2, p], pixel[5, p]
+        v = pixel[3, p] + pixel[4, p] * water * (one - water)
+        scratch[p] = one + seen * (v * scale - one)
+        root = one / np.sqrt(v)
+        u = (pixel[0, p] - pixel[1, p] - slope * water) * root
+        z = u * u
+        w = seen / (one + z * tail)
+        x, y = slope * gx[p] * root, slope * gy[p] * root
+        wx, wy, wu = w * x, w * y, w * u
+        s0 += z * w
+        s1 += w
+        s2 += wu
+        s3 += wu * x
+        s4 += wu * y
+        s5 += wx
+        s6 += wy
+        s7 += wx * x
+        s8 += wx * y
+        s9 += wy * y
+    logs, product = 0.0, 1.0
+    for p in range(e.size):
+        product *= np.float64(scratch[p])
+        if p & 63 == 63:
+            logs += np.log(product)
+            product = 1.0
+    logs += np.log(product)
+    out[0], out[1], out[2], out[3], out[4] = s0, s1, s2, s3, s4
+    out[5], out[6], out[7], out[8], out[9] = s5, s6, s7, s8, s9
+    return logs
 
 
-@njit(cache=True, nogil=True, fastmath=True)
+@njit(cache=True, nogil=True, fastmath=True, error_model="numpy")
 def _settle_step(s: np.ndarray, logs: float, rho: float, per_shift: float) -> tuple[float, float, float]:
     """Log-likelihood of one step with its shared errors integrated out, and the most likely shift."""
     left = 1.0 - rho
-    a, b, c = s[8] / left + per_shift, s[10] / left + per_shift, s[2] / left + 1.0 / max(rho, 1e-6)
-    ab, ac, bc = s[9] / left, s[6] / left, s[7] / left
-    ya, yb, yc = s[4] / left, s[5] / left, s[3] / left
+    a, b, c = s[7] / left + per_shift, s[9] / left + per_shift, s[1] / left + 1.0 / max(rho, 1e-6)
+    ab, ac, bc = s[8] / left, s[5] / left, s[6] / left
+    ya, yb, yc = s[3] / left, s[4] / left, s[2] / left
     # Cholesky factor of the 3 x 3 precision of (shift x, shift y, common error)
     l11 = np.sqrt(a)
     l21, l31 = ab / l11, ac / l11
@@ -59,10 +74,10 @@ def _settle_step(s: np.ndarray, logs: float, rho: float, per_shift: float) -> tu
     x2 = (q2 - l32 * x3) / l22
     x1 = (q1 - l21 * x2 - l31 * x3) / l11
     spread = 2.0 * np.log(l11 * l22 * l33) - 2.0 * np.log(per_shift) + np.log(max(rho, 1e-6))
-    return -0.5 * (s[0] / left - gain + logs + s[2] * np.log(left) + spread), x1, x2
+    return -0.5 * (s[0] / left - gain + logs + s[1] * np.log(left) + spread), x1, x2
 
 
-@njit(cache=True, nogil=True, fastmath=True)
+@njit(cache=True, nogil=True, fastmath=True, error_model="numpy")
 def posteriors(
     fraction: np.ndarray,
     kind: np.ndarray,
@@ -85,7 +100,7 @@ def posteriors(
         Row of ``noise``; -1 where not seen.
     widen : ndarray of float32, shape (scene, pixel)
         Factor on the variance.
-    expected : ndarray of float32, shape (3, pixel, step)
+    expected : ndarray of float32, shape (3, step, pixel)
         Water fraction of the whole pixel at each step of wetland area, and its change for a shift of one pixel along
         columns and rows.
     noise : ndarray of float64, shape (kind, 4)
@@ -103,38 +118,36 @@ def posteriors(
         prior, up to a constant), shift along columns and along rows, pixels. 0 where nothing is seen.
     """
     scenes, pixels = fraction.shape
-    steps = expected.shape[2]
+    steps = expected.shape[1]
     per_shift = 1.0 / shared[2] ** 2
     post, rest = np.empty((scenes, steps)), np.zeros((scenes, 4))
-    sums, logs, ll, shift = np.empty((11, steps)), np.empty(steps), np.empty(steps), np.empty((2, steps))
+    pixel, sums = np.zeros((6, pixels), np.float32), np.empty(10)
+    scratch = np.empty(pixels, np.float32)
+    square, ll, shift = np.zeros(steps), np.empty(steps), np.empty((2, steps))
     for t in range(scenes):
-        sums[:] = 0.0
-        sums[1] = 1.0
-        logs[:] = 0.0
         n = 0
         for p in range(pixels):
-            if kind[t, p] < 0:
-                continue
-            n += 1
-            _add_pixel(
-                sums, fraction[t, p], noise[kind[t, p]], widen[t, p], expected[0, p], expected[1, p], expected[2, p]
-            )
-            if n % 32 == 0:
-                logs += np.log(sums[1])
-                sums[1] = 1.0
+            k = kind[t, p]
+            pixel[3, p], pixel[5, p] = 1.0, 0.0
+            if k >= 0:
+                n += 1
+                pixel[0, p], pixel[1, p], pixel[2, p] = fraction[t, p], noise[k, 0], noise[k, 1]
+                pixel[3, p], pixel[4, p] = noise[k, 2] * widen[t, p], 4.0 * noise[k, 3] * widen[t, p]
+                pixel[5, p] = 1.0
         if n == 0:
             ll[:] = log_prior
         else:
             for k in range(steps):
-                total = logs[k] + np.log(sums[1, k])
-                value, shift[0, k], shift[1, k] = _settle_step(sums[:, k], total, shared[0], per_shift)
+                logs = _step_sums(pixel, expected[0, k], expected[1, k], expected[2, k], scratch, sums)
+                value, shift[0, k], shift[1, k] = _settle_step(sums, logs, shared[0], per_shift)
+                square[k] = sums[0]
                 ll[k] = value / shared[1] + log_prior[k]
         top = int(np.argmax(ll))
         post[t] = np.exp(ll - ll[top])
         whole = post[t].sum()
         post[t] /= whole
         if n > 0:
-            rest[t, 0], rest[t, 1] = sums[0, top] / n, ll[top] + np.log(whole)
+            rest[t, 0], rest[t, 1] = square[top] / n, ll[top] + np.log(whole)
             rest[t, 2], rest[t, 3] = shift[0, top], shift[1, top]
     return post, rest
 
