@@ -193,16 +193,12 @@ def _sum_trees(first, last, blocks, codes, nodes, trees, ranges, work, room, tot
 
 
 @nb.njit(nogil=True, cache=True, error_model="numpy")
-def score_rows(x, columns, likeness, nodes, trees, output_at, out):  # type: ignore[no-untyped-def]
-    """Fill ``out`` (output, row; int64 fixed point) with the sum of leaf values of each output's trees."""
-    feature, missing, code, thresholds, thr_at, first, first_at, setting, steps = columns
-    width, like, small = feature.size, nodes[1], np.zeros(1, np.int32)
-    codes = _aligned(width * ROWS, like)
-    ranges = (np.zeros(width, like.dtype), np.zeros(width, like.dtype))
+def _make_room(width, like):  # type: ignore[no-untyped-def]
+    """Scratch space: value ranges, the list of undecided nodes with its stacks, and leaf numbers with their sums."""
+    small = np.zeros(1, np.int32)
     slots = _aligned(2 * _SLOT * LANES, np.zeros(1, np.uint8))
     for leaf in range(_SLOT):
         slots[leaf * LANES : (leaf + 1) * LANES] = leaf
-    room = (slots, _aligned(2 * _SLOT, small), _aligned(2 * ROWS, small))
     work = (
         np.zeros(MOST_LEAVES, np.uint64),
         np.zeros(MOST_LEAVES, like.dtype),
@@ -211,6 +207,38 @@ def score_rows(x, columns, likeness, nodes, trees, output_at, out):  # type: ign
         np.zeros(2 * MOST_LEAVES, np.int64),
         np.zeros(_SLOT, np.int64),
     )
+    ranges = (np.zeros(width, like.dtype), np.zeros(width, like.dtype))
+    return ranges, work, (slots, _aligned(2 * _SLOT, small), _aligned(2 * ROWS, small))
+
+
+@nb.njit(nogil=True, cache=True, error_model="numpy")
+def _rank_block(x, rows, columns, codes, ranges):  # type: ignore[no-untyped-def]
+    """Rank all columns of one block and note their lowest and highest ranks."""
+    feature, missing, code, thresholds, thr_at, first, first_at, setting, steps = columns
+    for c in range(feature.size):
+        rank_column(
+            x,
+            feature[c],
+            rows,
+            codes,
+            np.uint64(c * ROWS),
+            thresholds[thr_at[c] : thr_at[c + 1]],
+            first[first_at[c] : first_at[c + 1]],
+            (setting[c, 0], setting[c, 1], setting[c, 2]),
+            steps[c],
+            missing[c],
+            code[c],
+        )
+        mine = codes[c * ROWS : c * ROWS + rows.size]
+        ranges[0][c], ranges[1][c] = mine.min(), mine.max()
+
+
+@nb.njit(nogil=True, cache=True, error_model="numpy")
+def score_rows(x, columns, likeness, nodes, trees, output_at, out):  # type: ignore[no-untyped-def]
+    """Fill ``out`` (output, row; int64 fixed point) with the sum of leaf values of each output's trees."""
+    width, like = columns[0].size, nodes[1]
+    codes = _aligned(width * ROWS, like)
+    ranges, work, room = _make_room(width, like)
     total = np.zeros(ROWS, np.int64)
     order, keys = np.empty(CHUNK, np.int64), np.empty(CHUNK, np.uint16)
     heads = np.zeros((1 << (2 * likeness[0].size)) + 1, np.int64)
@@ -220,22 +248,7 @@ def score_rows(x, columns, likeness, nodes, trees, output_at, out):  # type: ign
         for start in range(0, chunk, ROWS):
             n = min(ROWS, chunk - start)
             rows = order[start : start + n]
-            for c in range(width):
-                rank_column(
-                    x,
-                    feature[c],
-                    rows,
-                    codes,
-                    np.uint64(c * ROWS),
-                    thresholds[thr_at[c] : thr_at[c + 1]],
-                    first[first_at[c] : first_at[c + 1]],
-                    (setting[c, 0], setting[c, 1], setting[c, 2]),
-                    steps[c],
-                    missing[c],
-                    code[c],
-                )
-                mine = codes[c * ROWS : c * ROWS + n]
-                ranges[0][c], ranges[1][c] = mine.min(), mine.max()
+            _rank_block(x, rows, columns, codes, ranges)
             blocks = (n + LANES - 1) // LANES
             for o in range(output_at.size - 1):
                 total[:] = 0

@@ -5,6 +5,8 @@ bytes. Looking leaf values up has a plain form, and a quick one for processors t
 registers (AVX-512).
 """
 
+# ruff: noqa: ARG001 - the arguments of an intrinsic are the types of its call
+
 from __future__ import annotations
 
 from typing import Any
@@ -41,7 +43,7 @@ def choose(  # type: ignore[no-untyped-def]
     bytes_,
     left_at,
     right_at,
-    out_at,  # noqa: ARG001
+    out_at,
 ):
     """``bytes_[out_at + r] = bytes_[(right_at if codes[code_at + r] > threshold else left_at) + r]`` for 64 ``r``.
 
@@ -70,7 +72,7 @@ def choose(  # type: ignore[no-untyped-def]
 
 TABLE = 32
 """Leaf values in one look-up table."""
-WIDE = bool(binding.get_host_cpu_features().get("avx512f", False)) and not nb.config.CPU_NAME
+WIDE = bool(binding.get_host_cpu_features().get("avx512f", False)) and not getattr(nb.config, "CPU_NAME", None)
 """Whether this processor looks up 32 numbers in two registers."""
 
 _PART = 16
@@ -78,14 +80,14 @@ _INTS = ir.VectorType(_INT, _PART)
 
 
 @intrinsic  # type: ignore[untyped-decorator]
-def add_looked_up(_typing, slots, at, table, table_at, total, total_at):  # type: ignore[no-untyped-def]  # noqa: ANN201, ARG001
+def add_looked_up(_typing, slots, at, table, table_at, total, total_at):  # type: ignore[no-untyped-def]
     """``total[total_at + r] += table[table_at + slots[at + r]]`` for 64 ``r``; only where ``WIDE``.
 
     ``slots`` is contiguous uint8 with values below 32, ``table`` and ``total`` are contiguous int32. Nothing is checked.
     """
     signature = types.void(slots, types.uint64, table, types.uint64, total, types.uint64)
 
-    def generate(context: Any, builder: Any, sig: Any, args: Any) -> Any:  # noqa: ANN401
+    def generate(context: Any, builder: Any, sig: Any, args: Any) -> Any:
         data = [context.make_array(sig.args[k])(context, builder, args[k]).data for k in (0, 2, 4)]
         kind = ir.FunctionType(_INTS, [_INTS, _INTS, _INTS])
         permute = builder.module.declare_intrinsic("llvm.x86.avx512.vpermi2var.d.512", (), kind)
