@@ -165,10 +165,12 @@ def _learn(
     """Zero and scatter by what the dry spells show, drawn to what was expected; and spells too unsteady to be dry."""
     zero, zero_sd = expected[0].copy(), expected[1]
     runs = _runs(path)
-    floors = [_floor(level[a:b]) for a, b in runs]
+    # what is expected may drift within a spell, so only the difference is learnt
+    above = level - expected[0]
+    floors = [_floor(above[a:b]) for a, b in runs]
     limit = _limit(small)
     steady_runs = [(r, f) for r, f in zip(runs, floors, strict=True) if r[1] - r[0] >= _SURE and f[1] <= limit]
-    rest = [level[a:b] - f[0] for (a, b), f in steady_runs]
+    rest = [above[a:b] - f[0] for (a, b), f in steady_runs]
     steady = float(np.clip(spread(np.concatenate(rest)), small, limit)) if rest else small
     scatter = np.hypot(zero_sd, steady)
     unsteady = unsteady.copy()
@@ -179,10 +181,11 @@ def _learn(
         # neighbouring six-hour means share slow errors: count one independent value in four
         own = steady / np.sqrt(max((b - a) / 4.0, 0.25))
         gain = zero_sd[a:b] ** 2 / (zero_sd[a:b] ** 2 + own**2)
-        fitted = zero[a:b] + gain * (floor - zero[a:b])
+        shift = gain * floor
         lo, hi = max(a - 40, 0), min(b + 40, level.size)
-        zero[lo:a], zero[b:hi] = fitted[0], fitted[-1]
-        zero[a:b] = fitted
+        zero[lo:a] = expected[0][lo:a] + shift[0]
+        zero[b:hi] = expected[0][b:hi] + shift[-1]
+        zero[a:b] = expected[0][a:b] + shift
         scatter[lo:hi] = np.hypot(steady, np.sqrt(gain[0]) * own)
     return zero, scatter, steady, unsteady
 
