@@ -296,7 +296,11 @@ def read_columns(
     layout = find_layout(raw, required, place)
     places = {ours: _match(layout.names, theirs) for ours, theirs in columns.items()}
     places = {ours: at for ours, at in places.items() if at >= 0}
+    if not raw[layout.start :].strip():
+        message = f"{place}: none of its 0 rows can be read (nothing stands under the header line)"
+        raise InputError(message)
     out = _quick(raw, layout, places, zone) if time_format is None else None
+    pa.default_memory_pool().release_unused()
     if out is None:
         out = _careful(raw, layout, places, zone, time_format)
     usable = [v for k, v in out.values.items() if k != "temperature_c"]

@@ -166,7 +166,11 @@ def read_registry(path: str | Path) -> pd.DataFrame:
         message = f"logger registry {path.name}: it has no rows; list at least one logger"
         raise InputError(message)
     rows = [_registry_row(row, i + 2, path) for i, row in enumerate(table.to_dict("records"))]
-    out = pd.DataFrame(rows).sort_values(["logger_id", "valid_from"], na_position="first", ignore_index=True)
+    out = (
+        pd.DataFrame(rows)
+        .astype({"valid_from": "datetime64[ns]", "valid_to": "datetime64[ns]"})
+        .sort_values(["logger_id", "valid_from"], na_position="first", ignore_index=True)
+    )
     _check_periods(out, path)
     return out
 
@@ -207,8 +211,8 @@ def _registry_row(row: dict, line: int, path: Path) -> dict:
 
 def _check_periods(table: pd.DataFrame, path: Path) -> None:
     for logger_id, rows in table.groupby("logger_id"):
-        starts = rows["valid_from"].fillna(pd.Timestamp.min).to_numpy()
-        stops = rows["valid_to"].fillna(pd.Timestamp.max).to_numpy()
+        starts = rows["valid_from"].fillna(pd.Timestamp("1700-01-01")).to_numpy()
+        stops = rows["valid_to"].fillna(pd.Timestamp("2250-01-01")).to_numpy()
         clash = np.flatnonzero(starts[1:] < stops[:-1])
         if clash.size:
             message = (
