@@ -1,9 +1,7 @@
-"""Two compiled predictors of a wetland's level, fitted to views and stage: a mass balance, and a linear one.
+"""Fits of the predictors of level to views and stage.
 
-Both give a level in m above lowest ground (below 0: water under ground). The mass balance of a depression takes rain on
-the bowl and its surroundings, evapotranspiration, exchange with a regional water level and spill over a sill; storage
-per metre is the flooded share, and the drainable pore space elsewhere. Observations are one-sided where the bowl is dry
-or full. Fits maximise the posterior under a normal prior by damped Gauss-Newton steps with Huber weights.
+Observations are one-sided where the bowl is dry or full. Fits maximise the posterior under a normal prior by damped
+Gauss-Newton steps with Huber weights.
 """
 
 from __future__ import annotations
@@ -11,68 +9,12 @@ from __future__ import annotations
 import numpy as np
 from numba import njit
 
-from inundate.series.maps import level_at, share_at
+from inundate.series.balance import bucket_path, bucket_slopes
+from inundate.series.maps import level_at
 
-# The direct balance: rain on the bowl times a multiplier that grows with wetness.
-DIRECT_NAMES = ("rain_multiplier", "pet_multiplier", "exchange", "base", "pore_space", "sill", "wet_inflow")
-DIRECT_MEAN = (0.4, 0.0, -3.7, 0.2, -1.9, 0.0, 0.2)
-DIRECT_SD = (0.7, 0.4, 1.0, 0.6, 0.4, 0.10, 0.3)
-# The catchment balance: rain on connected ground, runoff of a soil store from around it, and a constant seepage.
-CATCHMENT_NAMES = (
-    "catchment_ratio", "pet_multiplier", "exchange", "base", "pore_space", "sill", "soil_depth", "connected", "seepage",
-)  # fmt: skip
-CATCHMENT_MEAN = (0.7, 0.0, -4.0, 0.2, -1.9, 0.0, 0.0, -1.6, -7.0)
-CATCHMENT_SD = (0.8, 0.3, 1.0, 0.6, 0.4, 0.10, 1.0, 0.5, 0.8)
-DIRECT, CATCHMENT = 0, 1
-# Priors before pooling are wide and common practice, no source: logs of ratios, exchange times of one to two months,
-# pore space 0.15, sill at the largest extent, seepage 1 mm a day.
-_DEEPEST_M = -3.0
-_EXTINCTION_M = 0.5
 _HUBER = 2.5
-
-
-@njit(cache=True, nogil=True)
-def bucket_path(
-    form: int,
-    theta: np.ndarray,
-    rain: np.ndarray,
-    pet: np.ndarray,
-    runoff: np.ndarray,
-    base: np.ndarray,
-    wet: np.ndarray,
-    table: np.ndarray,
-    full: float,
-    path: np.ndarray,
-) -> None:
-    """Level (m) a day into ``path`` (time,) for parameters ``theta`` (own ones, then one a column of ``base``)."""
-    own = theta.size - base.shape[1]
-    inflow, loss = np.exp(theta[0]), np.exp(theta[1])
-    exchange, pore = min(np.exp(theta[2]), 1.0), min(np.exp(theta[4]), 1.0)
-    sill = full * np.exp(theta[5])
-    deep, connected, seepage = 0.0, 1.0, 0.0
-    if form == 1:
-        deep = 1.0 / (1.0 + np.exp(-theta[6]))
-        connected, seepage = min(np.exp(theta[7]), 1.0), np.exp(theta[8])
-    level = full * theta[3]
-    for t in range(rain.size):
-        target = theta[3]
-        for j in range(base.shape[1]):
-            target += theta[own + j] * base[t, j]
-        share = share_at(level, table, full)
-        store = pore + (1.0 - pore) * share
-        leave = loss * pet[t] + seepage
-        if level < 0.0:
-            leave *= np.exp(level / _EXTINCTION_M)
-        if form == 1:
-            part = share + connected * (1.0 - share)
-            gain = part * (rain[t] - leave) + inflow * (runoff[0, t] + deep * (runoff[1, t] - runoff[0, t]))
-        else:
-            gain = inflow * np.exp(theta[6] * wet[t]) * rain[t] - leave
-        level += gain / store + exchange * (full * target - level)
-        if level > sill:
-            level = sill + min(0.5 * (level - sill), 0.05 * full)
-        level = max(level, _DEEPEST_M)
-        path[t] = level
+# Gain in half a squared standardised residual below which a fit ends.
+_ENOUGH = 0.01
 
 
 @njit(cache=True, nogil=True)
@@ -191,12 +133,7 @@ def fit_bucket(
     bucket_path(form, theta, rain, pet, runoff, base, wet, table, full, path)
     cost = _cost(path, day, level, inv_low, inv_high, resid, weight) + _prior_cost(theta, mean, precision)
     for step in range(rounds + 1):
-        for a in range(size):
-            trial = theta.copy()
-            trial[a] += 1e-3
-            bucket_path(form, trial, rain, pet, runoff, base, wet, table, full, moved)
-            for n in range(count):
-                jac[a, n] = (moved[day[n]] - path[day[n]]) / 1e-3
+        bucket_slopes(form, theta, rain, pet, runoff, base, wet, table, full, day, jac)
         _normal_equations(jac, resid, weight, precision, precision @ (theta - mean), hess, grad)
         if step == rounds:
             break
@@ -223,7 +160,7 @@ def fit_bucket(
         weight[:] = weight2
         cost = new
         damp = max(damp * 0.2, 1e-4)
-        if gained < 1e-3:
+        if gained < _ENOUGH:
             rounds = step + 1
     return hess
 

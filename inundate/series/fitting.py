@@ -7,9 +7,10 @@ from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass, replace
 
 import numpy as np
+from numba import njit
 
 from inundate.common.seeds import rng_for
-from inundate.series.bucket import (
+from inundate.series.balance import (
     CATCHMENT,
     CATCHMENT_MEAN,
     CATCHMENT_SD,
@@ -17,11 +18,8 @@ from inundate.series.bucket import (
     DIRECT_MEAN,
     DIRECT_SD,
     bucket_path,
-    fit_bucket,
-    fit_linear,
-    level_targets,
-    linear_path,
 )
+from inundate.series.bucket import fit_bucket, fit_linear, level_targets, linear_path
 from inundate.series.drivers import Drivers
 from inundate.series.inputs import Events, FillOptions, Panel
 from inundate.series.maps import LevelMaps
@@ -141,6 +139,7 @@ def in_threads(work: Callable[[int], object], items: Sequence[int], workers: int
         return list(pool.map(work, items, chunksize=1))
 
 
+@njit(cache=True, nogil=True)
 def _crowding(day: np.ndarray, memory: float) -> np.ndarray:
     """Return 1 plus the summed correlation with the other events, by which correlated errors count less (two passes)."""
     ahead, behind = np.zeros(day.size), np.zeros(day.size)
@@ -246,9 +245,11 @@ def pool_items(setup: Setup) -> np.ndarray:
     return np.sort(np.concatenate([np.flatnonzero(logged)[:_POOL_WETLANDS], others]))
 
 
-def member_paths(setup: Setup, kind: str, i: int, theta: np.ndarray, cov: np.ndarray) -> np.ndarray:
+def member_paths(
+    setup: Setup, kind: str, i: int, theta: np.ndarray, cov: np.ndarray, members: int | None = None
+) -> np.ndarray:
     """Return levels (member, day) of a wetland for parameter sets drawn from its posterior, in antithetic pairs."""
-    half = max(setup.options.members // 2, 1)
+    half = max((setup.options.members if members is None else members) // 2, 1)
     draw = rng_for(setup.seed, "members", kind, setup.panel.ids[i]).standard_normal((half, theta.size))
     values, vectors = np.linalg.eigh(cov)
     step = draw @ (vectors * np.sqrt(np.maximum(values, 0))).T

@@ -6,6 +6,7 @@ from collections.abc import Sequence
 from dataclasses import dataclass, replace
 
 import numpy as np
+from numba import njit
 
 from inundate.common.seeds import rng_for
 from inundate.series.fitting import (
@@ -106,18 +107,7 @@ def _rows(
     share = np.empty((len(levels), count))
     mean = np.array([one.mean[row, day] for one in levels], float).reshape(len(levels), count)
     sd = np.array([one.sd[row, day] for one in levels], float).reshape(len(levels), count)
-    for n in range(count):
-        table, full = setup.maps.share[wetland[n]], setup.maps.full_m[wetland[n]]
-        here = level_at(truth[n], table, full)
-        low[n] = -np.inf if truth[n] <= 1e-3 else here
-        high[n] = np.inf if truth[n] >= table[-1] - 1e-3 else here
-        up, down = (
-            level_at(truth[n] + truth_sd[n], table, full),
-            level_at(truth[n] - truth_sd[n], table, full),
-        )
-        level_sd[n] = 0.5 * (up - down)
-        for k in range(len(levels)):
-            share[k, n] = share_at(mean[k, n], table, full)
+    _place(setup.maps.share, setup.maps.full_m, wetland, truth, truth_sd, mean, low, high, level_sd, share)
     stage = np.full(count, from_stage)
     return Evidence(
         wetland,
@@ -193,14 +183,53 @@ def _as_unlogged(setup: Setup, fit: Fitted, prior: Prior, items: np.ndarray, vie
 
 def relation_share(setup: Setup, stage: Events) -> tuple[np.ndarray, np.ndarray]:
     """Return the share of the largest extent at each stage event, and its standard deviation."""
-    share, sd = np.empty(stage.day.size), np.empty(stage.day.size)
-    for n, i in enumerate(stage.owner):
-        table, full = setup.maps.share[i], setup.maps.full_m[i]
-        value = stage.value[n]
-        share[n] = share_at(value, table, full)
-        rise = share_at(value + stage.sd[n], table, full) - share_at(value - stage.sd[n], table, full)
-        sd[n] = np.hypot(0.5 * rise, share_at(value, setup.maps.sd[i], full))
-    return share, sd
+    return _shares(setup.maps.share, setup.maps.sd, setup.maps.full_m, stage.owner, stage.value, stage.sd)
+
+
+@njit(cache=True, nogil=True)
+def _shares(
+    tables: np.ndarray,
+    errors: np.ndarray,
+    full: np.ndarray,
+    owner: np.ndarray,
+    value: np.ndarray,
+    sd: np.ndarray,
+) -> tuple[np.ndarray, np.ndarray]:
+    share, error = np.empty(value.size), np.empty(value.size)
+    for n in range(value.size):
+        table, top = tables[owner[n]], full[owner[n]]
+        share[n] = share_at(value[n], table, top)
+        rise = share_at(value[n] + sd[n], table, top) - share_at(value[n] - sd[n], table, top)
+        error[n] = np.hypot(0.5 * rise, share_at(value[n], errors[owner[n]], top))
+    return share, error
+
+
+@njit(cache=True, nogil=True)
+def _place(
+    tables: np.ndarray,
+    tops: np.ndarray,
+    owner: np.ndarray,
+    truth: np.ndarray,
+    truth_sd: np.ndarray,
+    mean: np.ndarray,
+    low: np.ndarray,
+    high: np.ndarray,
+    level_sd: np.ndarray,
+    share: np.ndarray,
+) -> None:
+    """Fill levels that agree with hidden shares, their error in m, and predicted shares (kind, row)."""
+    for n in range(owner.size):
+        table, full = tables[owner[n]], tops[owner[n]]
+        here = level_at(truth[n], table, full)
+        low[n] = -np.inf if truth[n] <= 1e-3 else here
+        high[n] = np.inf if truth[n] >= table[-1] - 1e-3 else here
+        up, down = (
+            level_at(truth[n] + truth_sd[n], table, full),
+            level_at(truth[n] - truth_sd[n], table, full),
+        )
+        level_sd[n] = 0.5 * (up - down)
+        for k in range(mean.shape[0]):
+            share[k, n] = share_at(mean[k, n], table, full)
 
 
 def hide_blocks(setup: Setup, fits: Sequence[Fitted], views: Events, stage: Events) -> Evidence | None:

@@ -30,6 +30,8 @@ DEPARTURE_SD = (0.02, 0.04, 0.07, 0.12, 0.2, 0.32)
 DEPARTURE_MEMORY = (6.0, 18.0, 50.0)
 # Day, value, sd, kind and whether it is stage, of one wetland's events in order of day.
 Rows = tuple[np.ndarray, np.ndarray, np.ndarray, np.ndarray, np.ndarray]
+# Members carried where only the spread of the predictor is wanted.
+_FEW = 8
 _FIRST_SD, _FIRST_MEMORY = 0.12, 18.0
 
 
@@ -207,7 +209,7 @@ def departure_logliks(
 
     def work(row: int) -> np.ndarray:
         i = int(items[row])
-        paths = member_paths(setup, kind, i, post.theta[row], post.cov[row])
+        paths = member_paths(setup, kind, i, post.theta[row], post.cov[row], _FEW)
         return departure_loglik(setup, i, paths, _events_of(views, stage, i))
 
     return np.array(in_threads(work, range(len(items)), setup.options.workers))

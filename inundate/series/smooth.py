@@ -15,7 +15,7 @@ from numba import njit
 from inundate.series.kalman import smooth_one
 from inundate.series.maps import share_at
 
-_GRID = 121
+_GRID = 81
 _REACH = 5.0
 # Gauss-Hermite nodes and weights for a standard normal, 11 points.
 _X, _W = np.polynomial.hermite_e.hermegauss(11)
