@@ -27,6 +27,8 @@ literature on sub-pixel matching puts at some hundredths of a pixel (order of si
 _CONVERGED_PX = 3e-3
 _MIN_POINTS = 8
 _MIN_COARSE = 4
+PARTS = 3
+"""The search is done in so many parts of the ground on their own as well; chance matches do not agree."""
 
 
 @dataclass(frozen=True)
@@ -79,7 +81,10 @@ class Points:
 
 @dataclass(frozen=True, slots=True)
 class Alignment:
-    """Result of :func:`align`: shift along columns and rows, its standard deviation, cells used, explained share."""
+    """Result of :func:`align`: shift along columns and rows, its standard deviation, cells used, share explained.
+
+    ``agree`` as in :class:`Start`.
+    """
 
     dx_px: float
     dy_px: float
@@ -87,6 +92,7 @@ class Alignment:
     n_cells: int
     explained: float
     at_border: bool
+    agree: bool
 
 
 @njit(cache=True, nogil=True)
@@ -129,10 +135,10 @@ def sample(stack, window, channel, row, col, dy, dx):  # type: ignore[no-untyped
 
 
 @njit(cache=True, nogil=True)
-def _explained(seen, value, weight, start, least):  # type: ignore[no-untyped-def]
-    """Return the share of the view's variance within groups that the reference explains, and the groups used."""
-    hit = 0.0
-    total = 0.0
+def _explained(seen, value, weight, start, cell, least):  # type: ignore[no-untyped-def]
+    """Return the share of the view's variance within groups that the reference explains: in all, and in thirds of the cells."""
+    hit = np.zeros(PARTS + 1)
+    total = np.zeros(PARTS + 1)
     for g in range(start.size - 1):
         n = 0
         sw = sv = sr = svv = srr = svr = 0.0
@@ -151,9 +157,12 @@ def _explained(seen, value, weight, start, least):  # type: ignore[no-untyped-de
             rr = srr / sw - (sr / sw) ** 2
             vr = svr / sw - (sv / sw) * (sr / sw)
             if vv > 0.0 and rr > 0.0:
-                hit += n * vr * vr / (vv * rr)
-                total += n
-    return hit / total if total > 0.0 else 0.0
+                part = 1 + cell[g] % PARTS
+                hit[0] += n * vr * vr / (vv * rr)
+                hit[part] += n * vr * vr / (vv * rr)
+                total[0] += n
+                total[part] += n
+    return hit / np.maximum(total, 1.0)
 
 
 @njit(cache=True, nogil=True)
@@ -240,12 +249,16 @@ def _reweight(seen, value, gain, offset, start, robust):  # type: ignore[no-unty
 
 @dataclass(frozen=True, slots=True)
 class Start:
-    """Best whole-pixel shift, the share of variance that it explains, and whether it lies at the end of the search."""
+    """Best whole-pixel shift, the share of variance that it explains, and whether it lies at the end of the search.
+
+    ``agree`` tells whether all thirds of the ground, searched on their own, have their best shift within a pixel of it.
+    """
 
     dx: int
     dy: int
     explained: float
     at_border: bool
+    agree: bool
 
 
 def search(points: Points, stack: np.ndarray, *, reach: int) -> Start:
@@ -260,13 +273,17 @@ def search(points: Points, stack: np.ndarray, *, reach: int) -> Start:
         Pixels to search on each side.
     """
     few = points.coarse
-    best, where = 0.0, (0, 0)
-    for dy in range(-reach, reach + 1):
-        for dx in range(-reach, reach + 1):
-            share = _explained(_at(few, stack, float(dy), float(dx)), few.value, few.weight, few.start, _MIN_COARSE)
-            if share > best:
-                best, where = share, (dy, dx)
-    return Start(where[1], where[0], float(best), max(abs(where[0]), abs(where[1])) == reach)
+    moves = [(dy, dx) for dy in range(-reach, reach + 1) for dx in range(-reach, reach + 1)]
+    shares = np.array(
+        [
+            _explained(_at(few, stack, float(dy), float(dx)), few.value, few.weight, few.start, few.cell, _MIN_COARSE)
+            for dy, dx in moves
+        ]
+    )
+    peaks = [moves[k] for k in shares.argmax(axis=0)]
+    dy, dx = peaks[0]
+    agree = all(max(abs(p[0] - dy), abs(p[1] - dx)) <= 1 for p in peaks[1:])
+    return Start(dx, dy, float(shares[:, 0].max()), max(abs(dy), abs(dx)) == reach, agree)
 
 
 def align(points: Points, stack: np.ndarray, *, reach: int) -> Alignment | None:
@@ -315,11 +332,12 @@ def refine(points: Points, stack: np.ndarray, begin: Start) -> Alignment | None:
         dx, dy = dx + float(step[0]), dy + float(step[1])
         if size < _CONVERGED_PX:
             break
-    explained = _explained(_at(points, stack, dy, dx), points.value, points.weight, points.start, _MIN_POINTS)
+    seen = _at(points, stack, dy, dx)
+    explained = _explained(seen, points.value, points.weight, points.start, points.cell, _MIN_POINTS)[0]
     live = cells[:, 0] + cells[:, 2] > 0.0
     strayed = max(abs(dy - begin.dy), abs(dx - begin.dx)) > 1.5
     sd = float(np.hypot(_jackknife(cells[live]), FLOOR_SD_PX))
-    return Alignment(dx, dy, sd, int(live.sum()), float(explained), begin.at_border or strayed)
+    return Alignment(dx, dy, sd, int(live.sum()), float(explained), begin.at_border or strayed, begin.agree)
 
 
 def _inputs(points: Points, seen: np.ndarray, robust: np.ndarray) -> tuple[np.ndarray, ...]:

@@ -29,7 +29,8 @@ class ShiftOptions:
         Whole pixels searched on each side; a shift beyond ``limit_px`` (or at the end of the search) is refused.
     limit_px : float
     sd_px : float
-        Greatest standard deviation of a shift that is corrected.
+        Greatest standard deviation of a shift that is corrected; half of it where the thirds of the ground, searched on
+        their own, do not agree.
     max_views : int
         Views taken into one look of the reference, the clearest.
     rounds : int
@@ -38,7 +39,7 @@ class ShiftOptions:
 
     reach_px: int = 4
     limit_px: float = 3.0
-    sd_px: float = 0.2
+    sd_px: float = 0.15
     max_views: int = 20
     rounds: int = 3
 
@@ -133,7 +134,7 @@ def build_looks(pools: Pools, options: ShiftOptions) -> tuple[list[Look], float]
         members = sorted(pools.taken[name], key=lambda one: one.scene_id)
         image, spread, variance = _settle(np.stack([one.stack for one in members]), options)
         value, calm = _median(np.stack([one.levels for one in members]))
-        levels = Levels(pools.bands, value, calm, *level_places(pools.windows))
+        levels = Levels(pools.bands, value, calm, *level_places(pools.windows), len(members))
         built.append((Look(name, image, spread, levels, pick_points(image, spread), len(members)), variance))
     built.sort(key=lambda pair: (-pair[0].n_views, pair[0].name))
     return _tie(built, options)
@@ -157,7 +158,7 @@ def _settle(stacks: np.ndarray, options: ShiftOptions) -> tuple[np.ndarray, np.n
         sure = np.zeros(len(stacks), bool)
         for number, stack in enumerate(stacks):
             found = align(points, stack, reach=options.reach_px)
-            if found is not None and not found.at_border and found.sd_px <= 2 * options.sd_px:
+            if found is not None and not found.at_border and found.sd_px <= options.sd_px:
                 places[number] = found.dx_px, found.dy_px
                 sure[number] = True
         if not sure.any():

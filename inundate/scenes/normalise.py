@@ -2,7 +2,8 @@
 
 A robust straight line of the view on the reference's median over its steady pixels, band by band; pixels count by their
 steadiness in time within the same season (pseudo-invariant ones lead), so that water, clouds missed by the mask and
-cutting do not tell. Standard deviations are a jackknife over cells of ground.
+cutting do not tell. The reference's own error is taken out of its variance, since it would flatten the line (method of
+moments for errors in variables: Fuller 1987, Measurement Error Models). Standard deviations are a jackknife over cells of ground.
 """
 
 from __future__ import annotations
@@ -23,6 +24,7 @@ _CELL_PX = 32
 _BISQUARE = 4.685
 _MARGIN_PX = 2
 _ROUNDS = 10
+_MEDIAN_ERROR = 1.2533  # standard error of a median over that of a mean, normal errors
 
 
 @dataclass(frozen=True, slots=True)
@@ -36,6 +38,8 @@ class Levels:
         Median in time and its robust standard deviation.
     window, row, col : ndarray of int32, shape (point,)
         Place in the reference's windows.
+    n_views : int
+        Views that the median is taken over.
     """
 
     bands: tuple[str, ...]
@@ -44,6 +48,7 @@ class Levels:
     window: np.ndarray
     row: np.ndarray
     col: np.ndarray
+    n_views: int
 
 
 @dataclass(frozen=True, slots=True)
@@ -145,7 +150,7 @@ def estimate_gain(view: View, windows: Sequence[Window], levels: Levels, *, look
     across = max((window.shape[1] for window in windows), default=1) // _CELL_PX + 1
     down = max((window.shape[0] for window in windows), default=1) // _CELL_PX + 1
     cell = (levels.window.astype(np.int64) * down + levels.row // _CELL_PX) * across + levels.col // _CELL_PX
-    fits = [_line(seen[k], levels.value[i], levels.spread[i], cell) for k, i in enumerate(index)]
+    fits = [_line(seen[k], levels.value[i], levels.spread[i], levels.n_views, cell) for k, i in enumerate(index)]
     n = min((fit[5] for fit in fits), default=0)
     sure = bool(fits) and n >= 6 and all(fit[4] <= 0.02 * max(abs(fit[6]), 0.05) for fit in fits)
     return Gain(
@@ -161,7 +166,7 @@ def estimate_gain(view: View, windows: Sequence[Window], levels: Levels, *, look
 
 
 def _line(
-    seen: np.ndarray, value: np.ndarray, spread: np.ndarray, cell: np.ndarray
+    seen: np.ndarray, value: np.ndarray, spread: np.ndarray, n_views: int, cell: np.ndarray
 ) -> tuple[float, float, float, float, float, int, float]:
     """Return gain, offset, their sd, the sd of the line at its middle, cells, and the middle."""
     known = np.isfinite(seen) & np.isfinite(value) & np.isfinite(spread)
@@ -173,12 +178,13 @@ def _line(
     typical = max(float(np.median(calm)), 1e-4)
     base = 1.0 / (calm**2 + (0.5 * typical) ** 2)
     base /= base.max()
+    own = np.square(_MEDIAN_ERROR * calm) / n_views
     robust = np.ones(y.size)
     gain, offset = 1.0, 0.0
     for _ in range(_ROUNDS):
         w = base * robust
         mx, my = np.average(x, weights=w), np.average(y, weights=w)
-        vx = np.average((x - mx) ** 2, weights=w)
+        vx = np.average((x - mx) ** 2, weights=w) - np.average(own, weights=w)
         if vx <= 0.0:
             return blank
         before = gain
@@ -191,14 +197,14 @@ def _line(
         robust = np.square(np.clip(1.0 - np.square(rest / (_BISQUARE * scale)), 0.0, None))
         if abs(gain - before) < 1e-4:
             break
-    return _with_errors(x, y, base * robust, cell[known], (gain, offset))
+    return _with_errors(x, y, base * robust, own, cell[known], (gain, offset))
 
 
 def _with_errors(
-    x: np.ndarray, y: np.ndarray, w: np.ndarray, cell: np.ndarray, line: tuple[float, float]
+    x: np.ndarray, y: np.ndarray, w: np.ndarray, own: np.ndarray, cell: np.ndarray, line: tuple[float, float]
 ) -> tuple[float, float, float, float, float, int, float]:
     _, number = np.unique(cell, return_inverse=True)
-    sums = np.stack([np.bincount(number, weights=w * one) for one in (np.ones(x.size), x, y, x * x, x * y)])
+    sums = np.stack([np.bincount(number, weights=w * one) for one in (np.ones(x.size), x, y, x * x - own, x * y)])
     n = sums.shape[1]
     rest = sums.sum(axis=1, keepdims=True) - sums
     middle = float(sums[1].sum() / sums[0].sum())

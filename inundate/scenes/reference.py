@@ -205,8 +205,8 @@ class Reference:
             spread = np.asarray(arrays[f"spread_{number}"], np.float32)
             value = np.asarray(arrays[f"level_{number}"], np.float32)
             calm = np.asarray(arrays[f"level_spread_{number}"], np.float32)
-            levels = Levels(bands, value, calm, *level_places(windows))
             dx, dy, n = (float(one) for one in np.asarray(arrays["places"], float)[number])
+            levels = Levels(bands, value, calm, *level_places(windows), int(n))
             looks.append(Look(str(name), image, spread, levels, pick_points(image, spread), int(n), dx, dy))
         channels = [str(one) for one in np.asarray(arrays["channels"])]
         return cls(windows, channels, looks, anchor_sd_px=float(arrays["anchor_sd_px"]), options=options)
@@ -214,10 +214,11 @@ class Reference:
 
 def _judge(best: Alignment, look: Look, options: ShiftOptions) -> Shift:
     dx, dy = best.dx_px + look.dx_px, best.dy_px + look.dy_px
-    sure = best.sd_px <= options.sd_px and best.n_cells >= _MIN_CELLS
+    least = options.sd_px if best.agree else options.sd_px / 2  # thirds that disagree must be outweighed
+    sure = best.sd_px <= least and best.n_cells >= _MIN_CELLS
     far = best.at_border or float(np.hypot(dx, dy)) > options.limit_px
     outcome: Literal["confident", "unsure", "beyond"] = "confident" if sure and not far else "unsure"
-    if sure and far and best.n_cells >= _MIN_CELLS_BEYOND and best.explained >= _EXPLAINED_BEYOND:
+    if sure and far and best.agree and best.n_cells >= _MIN_CELLS_BEYOND and best.explained >= _EXPLAINED_BEYOND:
         outcome = "beyond"
     return Shift(
         float(dx),

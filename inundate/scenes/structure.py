@@ -17,7 +17,8 @@ SMOOTH_PX = 11
 MASK_MARGIN_PX = 2
 """Pixels around each unclear one that are left out: mask edges are often missed."""
 CELL_PX = 32
-"""Side of a cell with its own gain and offset, pixels."""
+"""Side of a cell with its own gain and offset, pixels; half of it where there would be fewer than ``FEW_CELLS``."""
+FEW_CELLS = 36
 MAX_POINTS = 20_000
 """About how many pixels (of all channels) serve; more cost time and tell little."""
 _MIN_SHARE = 0.3
@@ -95,14 +96,15 @@ def pick_points(image: np.ndarray, spread: np.ndarray) -> Points:
     parts, start, cells = [], [0], []
     n_windows, n_channels, height, width = image.shape
     number = 0
+    side = CELL_PX if n_windows * height * width >= FEW_CELLS * CELL_PX**2 else CELL_PX // 2
     for w in range(n_windows):
-        for r0 in range(0, height, CELL_PX):
-            for c0 in range(0, width, CELL_PX):
+        for r0 in range(0, height, side):
+            for c0 in range(0, width, side):
                 added = False
                 for c in range(n_channels):
-                    part = power[w, c, r0 : r0 + CELL_PX, c0 : c0 + CELL_PX]
+                    part = power[w, c, r0 : r0 + side, c0 : c0 + side]
                     known = np.isfinite(part)
-                    if known.sum() < _MIN_SHARE * CELL_PX * CELL_PX:
+                    if known.sum() < _MIN_SHARE * side * side:
                         continue
                     rows, cols = np.nonzero(known & (part >= np.quantile(part[known], share)))
                     parts.append(np.stack([np.full(rows.size, w), np.full(rows.size, c), rows + r0, cols + c0]))
