@@ -75,8 +75,13 @@ def make(
     n: int = 4,
     faults: dict[str, tuple[str, ...]] | None = None,
     noise_m: float = 0.003,
+    survey_sd_m: float = 0.0,
+    zero_sd_m: float = 0.0,
 ) -> Made:
-    """Make ``n`` loggers L1..Ln; ``faults`` gives each any of drift, move, spikes, gap, offset."""
+    """Make ``n`` loggers L1..Ln; ``faults`` gives each any of drift, move, spikes, gap, offset.
+
+    ``survey_sd_m`` and ``zero_sd_m``: errors of the registry's heights and of the sensors' zeros.
+    """
     rng = np.random.default_rng(seed)
     faults = faults or {}
     hours = int(years * 8766)
@@ -113,7 +118,11 @@ def make(
         if "gap" in bad:
             at = int(hours * 0.4)
             keep[at : at + 24 * 19] = False
-        registry.append(row(name, h))
+        # drawn from another stream, so that the same seed makes the same water with and without these errors
+        error = np.random.default_rng([seed, k, 1])
+        told = h + error.normal(0, survey_sd_m) if survey_sd_m else h
+        total += error.normal(0, zero_sd_m) * 9.8 if zero_sd_m else 0.0
+        registry.append(row(name, told))
         readings[name] = Readings(
             f"{name}.csv", time[keep], total[keep], np.round(warmth, 1).astype(np.float32)[keep], n_rows=int(keep.sum())
         )

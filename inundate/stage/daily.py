@@ -23,7 +23,7 @@ from inundate.stage.record import (
     own_checks,
     prepare_logger,
 )
-from inundate.stage.signals import Hours
+from inundate.stage.signals import Hours, day_noise
 from inundate.stage.steps import Surroundings, sky_table
 
 
@@ -135,12 +135,16 @@ def _wet(hours: Hours, wet: np.ndarray) -> Hours:
 
 
 def _share_slow_errors(found: dict[str, Found]) -> None:
-    """Give each logger the scatter that it shows when dry, or the middle one of the others."""
+    """Give each logger the scatter that it shows when dry, or the middle one of the others.
+
+    No logger's is more than the scatter of its own daily means about a smooth course.
+    """
     seen = [f.settled.dryness.day_spread_m for f in found.values()]
     known = [s for s in seen if np.isfinite(s)]
     usual = float(np.median(known)) if known else SLOW_SD_M
     for one, own in zip(found.values(), seen, strict=True):
-        one.settled.slow_m = max(own if np.isfinite(own) else usual, 5e-4)
+        most = day_noise(one.settled.hours)
+        one.settled.slow_m = max(own if np.isfinite(own) else min(usual, most), 5e-4)
 
 
 def _shared_clock(ready: dict[str, Prepared]) -> list[str]:

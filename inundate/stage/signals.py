@@ -174,6 +174,24 @@ def noise_of(x: np.ndarray, step: float = 0.0) -> float:
     return max(spread(second[:200_000]) / np.sqrt(6.0), step / np.sqrt(12.0))
 
 
+def day_noise(hours: Hours) -> float:
+    """Return the scatter (sd) of daily means about a smooth course in the quietest quarter of fortnights.
+
+    From second differences; infinite where there are too few days.
+    """
+    day = hours.hour // 24
+    start = np.flatnonzero(np.r_[True, day[1:] != day[:-1]]) if day.size else np.empty(0, np.int64)
+    if start.size < 10:
+        return float("inf")
+    mean = np.add.reduceat(hours.mean, start) / np.diff(np.r_[start, day.size])
+    row = (day[start][2:] - day[start][:-2]) == 2
+    second = (mean[2:] - 2.0 * mean[1:-1] + mean[:-2])[row]
+    if second.size < 60:
+        return float("inf")
+    parts = second[: second.size // 15 * 15].reshape(-1, 15)
+    return float(np.quantile([spread(p) for p in parts], 0.25) / np.sqrt(6.0))
+
+
 @dataclass(slots=True)
 class Hours:
     """A record in hours that hold at least one good reading.
