@@ -32,7 +32,7 @@ class Priors:
 
     slope: tuple[float, ...] = (0.60, 0.25, 0.15)
     wander: tuple[float, ...] = (0.70, 0.20, 0.10)
-    survey: tuple[float, ...] = (0.10, 0.20, 0.50, 0.12, 0.08)
+    survey: tuple[float, ...] = (0.10, 0.20, 0.60, 0.08, 0.02)
     checks: tuple[float, ...] = (0.60, 0.25, 0.15)
     zero_sd_m: float = 0.003
 

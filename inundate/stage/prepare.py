@@ -119,6 +119,22 @@ def _check_middle(row: Mapping, name: str, raw: np.ndarray, depth: np.ndarray, a
         raise _implausible(row, name, what, float(np.nanmedian(raw)), air_pa)
 
 
+def _follows_air(time: np.ndarray, value: np.ndarray, barometer: Barometer) -> bool:
+    """Whether a gauge pressure is really a total one: tens of kPa, and its hourly changes are the air's."""
+    good = np.isfinite(value)
+    if not good.any() or not 45e3 <= np.median(value[good]) <= 150e3:
+        return False
+    hours = hourly(time[good], value[good])
+    air = interpolate(
+        hours.time, barometer.time.astype("datetime64[ns]").view(np.int64), barometer.pressure_kpa, 3 * HOUR_NS
+    )
+    mine, theirs = np.diff(hours.mean), np.diff(air) * 1000.0
+    both = np.isfinite(theirs)
+    if both.sum() < 24 or theirs[both].std() == 0:
+        return False
+    return float((mine[both] @ theirs[both]) / (theirs[both] @ theirs[both])) > 0.5
+
+
 def _window(row: Mapping, time: np.ndarray) -> slice:
     lo, hi = 0, time.size
     if row.get("valid_from") is not None and not pd.isna(row["valid_from"]):
@@ -242,6 +258,9 @@ def _depth(
             known = (warmth > -5) & (warmth < 45)
         warm = warmth if known.all() else np.where(known, warmth, np.float32(options.water_temperature_c))
     depth = depth_of_pressure(value, warm, gravity(latitude_deg))
+    if row["kind"] == "vented" and barometer is not None and _follows_air(time, value, barometer):
+        what = f"a gauge pressure of {float(np.nanmedian(value)) / 1000:.4g} kPa that follows the air's"
+        raise _implausible(row, name, what, float(np.nanmedian(raw)), float(np.median(barometer.pressure_kpa)) * 1e3)
     _check_middle(row, name, raw, depth, air_pa)
     return depth, air
 
