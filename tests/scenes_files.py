@@ -35,6 +35,7 @@ def write_tif(
     path.parent.mkdir(parents=True, exist_ok=True)
     data = data[None] if data.ndim == 2 else data
     names = options.pop("descriptions", None)
+    options = {"blockxsize": 64, "blockysize": 64} | options
     place = {} if crs is None else {"crs": crs, "transform": from_origin(west, north, step, step)}
     with rasterio.open(
         path,
@@ -45,8 +46,6 @@ def write_tif(
         count=data.shape[0],
         dtype=data.dtype,
         tiled=True,
-        blockxsize=64,
-        blockysize=64,
         compress="deflate",
         **place,
         **options,

@@ -180,7 +180,7 @@ def products_case(reserve: Path, products: Path) -> Case:
     from inundate.relation import fit_relations, make_pairs
 
     observed = pd.read_parquet(products / "extent_observed.parquet")
-    stage = pd.read_parquet(products / "stage_daily.parquet")
+    stage = pd.read_parquet(products / "stage_full.parquet")
     hyps = (
         pd.read_parquet(products / "hypsometry.parquet")
         if (products / "hypsometry.parquet").exists()
