@@ -7,7 +7,8 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
-from inundate.stage.datum import YEAR_NS, Evidence, Step, _evidence_with, choose_steps, fit_offset
+from inundate.stage.choosing import choose_steps, evidence_with
+from inundate.stage.datum import YEAR_NS, Evidence, Step, fit_offset
 from inundate.stage.signals import HOUR_NS, best_path, hourly, interpolate, noise_of, outliers
 
 floats = st.floats(-5, 5, allow_nan=False)
@@ -142,7 +143,7 @@ def test_the_quick_step_search_equals_the_full_fit():
     """The rank-one update gives the log evidence of a full refit."""
     told = evidence(ERRORS + np.where(YEARS > 1.3, 0.05, 0.0), YEARS)
     step = Step(int(1.3 * YEAR_NS), -0.045, 0.01, 0.0, "jump")
-    quick = _evidence_with(fit_offset(told), step)
+    quick = evidence_with(fit_offset(told), step)
     assert quick == pytest.approx(fit_offset(told, (step,)).log_evidence, abs=1e-6)
 
 

@@ -8,13 +8,11 @@ from pathlib import Path
 
 import numpy as np
 import pandas as pd
-from pandas.api.typing import NaTType
 
 from inundate.common.errors import InputError, Refusal
-from inundate.stage._columns import Columns, Zone, parse_zone, read_columns, to_utc
-from inundate.stage.physics import METRE, UNITS
+from inundate.stage._columns import Columns, Zone, parse_zone, read_columns
+from inundate.stage.registry import check_periods, moment, number, registry_row
 
-KINDS = ("absolute", "vented", "level")
 _REQUIRED = ("logger_id", "wetland_id", "file", "kind", "unit", "height_m")
 _TEXT = ("time_column", "value_column", "temperature_column", "time_format", "utc_offset")
 _CLOCK_BACK = (np.timedelta64(25, "m"), np.timedelta64(190, "m"))
@@ -110,30 +108,6 @@ def _table(path: Path, what: str, required: tuple[str, ...]) -> pd.DataFrame:
     return table.apply(lambda c: c.str.strip())
 
 
-def _moment(text: str, zone: Zone, place: str) -> pd.Timestamp | NaTType:
-    if not text:
-        return pd.NaT
-    try:
-        stamp = pd.Timestamp(text)
-    except ValueError as fault:
-        message = f"{place} {text!r} is not an ISO 8601 time; write it as 2024-05-31T12:00"
-        raise InputError(message) from fault
-    if stamp.tzinfo is not None:
-        return stamp.tz_convert("UTC").tz_localize(None)
-    return pd.Timestamp(to_utc(np.array([stamp.to_datetime64()], "datetime64[ns]"), zone)[0])
-
-
-def _number(text: str, place: str, rule: str) -> float:
-    try:
-        value = float(text.replace(",", "."))
-    except ValueError:
-        value = np.nan
-    if not np.isfinite(value):
-        message = f"{place} {text!r} is not a number; {rule}"
-        raise InputError(message)
-    return value
-
-
 def read_registry(path: str | Path) -> pd.DataFrame:
     """Read and check ``loggers.csv``.
 
@@ -165,62 +139,14 @@ def read_registry(path: str | Path) -> pd.DataFrame:
     if table.empty:
         message = f"logger registry {path.name}: it has no rows; list at least one logger"
         raise InputError(message)
-    rows = [_registry_row(row, i + 2, path) for i, row in enumerate(table.to_dict("records"))]
+    rows = [registry_row(row, i + 2, path) for i, row in enumerate(table.to_dict("records"))]
     out = (
         pd.DataFrame(rows)
         .astype({"valid_from": "datetime64[ns]", "valid_to": "datetime64[ns]"})
         .sort_values(["logger_id", "valid_from"], na_position="first", ignore_index=True)
     )
-    _check_periods(out, path)
+    check_periods(out, path)
     return out
-
-
-def _registry_row(row: dict, line: int, path: Path) -> dict:
-    place = f"logger registry {path.name}, line {line}:"
-    for name in ("logger_id", "wetland_id", "file"):
-        if not row[name]:
-            message = f"{place} {name} is empty; every row needs one"
-            raise InputError(message)
-    out = dict(row)
-    if row["kind"] not in KINDS:
-        message = f"{place} kind {row['kind']!r} is not known; use one of {', '.join(KINDS)}"
-        raise InputError(message)
-    if row["unit"] not in UNITS:
-        message = f"{place} unit {row['unit']!r} is not known; use one of {', '.join(UNITS)}"
-        raise InputError(message)
-    if row["kind"] == "level" and row["unit"] not in METRE:
-        message = f"{place} kind level with the pressure unit {row['unit']!r}; use m, cm or ft, or kind vented"
-        raise InputError(message)
-    out["height_m"] = _number(row["height_m"], f"{place} height_m", "give the sensor's height in metres")
-    for name in ("height_sd_m", "sensor_sd_m", "elevation_m"):
-        out[name] = _number(row[name], f"{place} {name}", "give metres or leave it empty") if row[name] else np.nan
-    for name in ("height_sd_m", "sensor_sd_m"):
-        if out[name] <= 0:
-            message = f"{place} {name} {row[name]} is not above 0; give metres or leave it empty"
-            raise InputError(message)
-    zone = parse_zone(row["utc_offset"], place)
-    out["valid_from"] = _moment(row["valid_from"], zone, f"{place} valid_from")
-    out["valid_to"] = _moment(row["valid_to"], zone, f"{place} valid_to")
-    if out["valid_to"] <= out["valid_from"]:
-        message = f"{place} valid_to {row['valid_to']} is not after valid_from {row['valid_from']}; correct one of them"
-        raise InputError(message)
-    paths = [p.strip() for p in row["file"].split(";") if p.strip()]
-    out["file"] = ";".join(str((path.parent / p).absolute()) for p in paths)
-    return out
-
-
-def _check_periods(table: pd.DataFrame, path: Path) -> None:
-    for logger_id, rows in table.groupby("logger_id"):
-        starts = rows["valid_from"].fillna(pd.Timestamp("1700-01-01")).to_numpy()
-        stops = rows["valid_to"].fillna(pd.Timestamp("2250-01-01")).to_numpy()
-        clash = np.flatnonzero(starts[1:] < stops[:-1])
-        if clash.size:
-            message = (
-                f"logger registry {path.name}: periods of logger {logger_id!r} overlap "
-                f"(to {pd.Timestamp(stops[clash[0]])}, from {pd.Timestamp(starts[clash[0] + 1])}); "
-                "end one before the next begins"
-            )
-            raise InputError(message)
 
 
 def _paths(path: str | Path) -> list[Path]:
@@ -456,12 +382,12 @@ def read_checks(path: str | Path, registry: pd.DataFrame | None = None) -> tuple
             if registry is not None and row["logger_id"] not in zones:
                 message = f"{place} logger_id {row['logger_id']!r} is not in the registry; correct it or add the logger"
                 raise InputError(message)
-            stamp = _moment(row["time"], zones.get(row["logger_id"], 0.0), f"{place} time")
+            stamp = moment(row["time"], zones.get(row["logger_id"], 0.0), f"{place} time")
             if stamp is pd.NaT:
                 message = f"{place} time is empty; every check needs one"
                 raise InputError(message)
-            stage = _number(row["stage_m"], f"{place} stage_m", "give metres above the wetland's lowest ground")
-            sd = _number(row["sd_m"], f"{place} sd_m", "give metres") if row.get("sd_m") else np.nan
+            stage = number(row["stage_m"], f"{place} stage_m", "give metres above the wetland's lowest ground")
+            sd = number(row["sd_m"], f"{place} sd_m", "give metres") if row.get("sd_m") else np.nan
             if sd <= 0:
                 message = f"{place} sd_m {row['sd_m']} is not above 0; give metres or leave it empty"
                 raise InputError(message)

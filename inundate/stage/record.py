@@ -9,16 +9,8 @@ import numpy as np
 import pandas as pd
 
 from inundate.common.errors import InputError, Refusal
-from inundate.stage.datum import (
-    Evidence,
-    Offset,
-    Priors,
-    Step,
-    choose_steps,
-    doubtful_evidence,
-    false_zeros,
-    fit_offset,
-)
+from inundate.stage.choosing import choose_steps, doubtful_evidence, false_zeros
+from inundate.stage.datum import Evidence, Offset, Priors, Step, fit_offset
 from inundate.stage.days import Settled, correction_rows, daily_rows, flagged_frame
 from inundate.stage.dry import Dryness, find_dry, first_zero
 from inundate.stage.options import StageOptions
