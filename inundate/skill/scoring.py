@@ -159,17 +159,18 @@ def _walked(inputs: SkillInputs) -> dict[str, Any] | None:
 
 def _by_wetland(inputs: SkillInputs, filled: dict[str, Any], rank: dict[str, Any]) -> dict[str, Any]:
     """Collect each wetland's own scores."""
-    relation = inputs.relations.drop_duplicates("wetland_id", keep="last").set_index("wetland_id")
+    last = inputs.relations.drop_duplicates("wetland_id", keep="last")
+    family = dict(zip(last["wetland_id"], last["family"].astype(str), strict=True))
+    rmse = dict(zip(last["wetland_id"], last["rmse_m2"].astype(float), strict=True))
     used = inputs.observed[inputs.observed["used"].astype(bool)].groupby("wetland_id").size()
     out = {}
     for row in inputs.wetlands.itertuples():
         key = str(row.wetland_id)
-        fit = relation.loc[key] if key in relation.index else None
         out[key] = {
             "views_used": int(used.get(key, 0)),
             "rank_correlation": rank["by_wetland"].get(key, {}).get("rho") if rank else None,
-            "relation_family": None if fit is None else str(fit["family"]),
-            "relation_rmse_share": None if fit is None else float(fit["rmse_m2"] / row.area_max_m2),
+            "relation_family": family.get(key),
+            "relation_rmse_share": rmse.get(key, np.nan) / float(str(row.area_max_m2)),
             "filled_rmse_share": filled["views"].get("by_wetland", {}).get(key, {}).get("rmse"),
             "filled_coverage": filled["views"].get("by_wetland", {}).get(key, {}).get("coverage"),
         }
@@ -210,7 +211,7 @@ def score_all(inputs: SkillInputs) -> dict[str, Any]:
 
 def headline(skill: dict[str, Any]) -> dict[str, float]:
     """Return the few numbers that are followed from month to month; only those that are defined."""
-    leaf_off = next(
+    leaf_off: dict[str, Any] = next(
         (
             r
             for r in skill["classifier"].get("error_rates", [])
