@@ -34,6 +34,7 @@ _GDAL = {
     "GDAL_HTTP_MAX_RETRY": "3",
     "GDAL_HTTP_RETRY_DELAY": "0.5",
     "VSI_CACHE": "TRUE",
+    "GDAL_CACHEMAX": 64_000_000,
 }
 
 
@@ -355,9 +356,11 @@ def _read_band(files: _Files, band: BandSource, outs: list[tuple[Window, np.ndar
                     )
                     count += copy_band(values, origin, numbers, out, code)
                 else:
-                    rows = _between(source.rows(window), source.data.height, box[0])
-                    cols = _between(source.cols(window), source.data.width, box[2])
-                    count += interpolate_band(values, rows, cols, numbers, out, code)
+                    mine = boxes[live[member]]
+                    part = values[mine[0] - box[0] : mine[1] - box[0], mine[2] - box[2] : mine[3] - box[2]]
+                    rows = _between(source.rows(window), source.data.height, mine[0])
+                    cols = _between(source.cols(window), source.data.width, mine[2])
+                    count += interpolate_band(np.ascontiguousarray(part), rows, cols, numbers, out, code)
     return count
 
 
