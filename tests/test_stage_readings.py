@@ -7,7 +7,7 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from inundate.common.errors import InputError
-from inundate.stage import LoggerFiles, read_barometer, read_checks, read_readings, read_registry
+from inundate.stage import LoggerFiles, logger_paths, read_barometer, read_checks, read_readings, read_registry
 
 REGISTRY = "logger_id,wetland_id,file,kind,unit,height_m,valid_from,valid_to,utc_offset\n"
 
@@ -218,6 +218,15 @@ def test_logger_files_read_each_logger_once_when_asked(tmp_path):
     np.testing.assert_array_equal(files["A"].value, [1, 2])
     with pytest.raises(InputError, match=r"gone\.csv"):
         files["B"]
+
+
+def test_every_file_of_a_registry_is_listed(tmp_path):
+    """Lists and patterns are resolved, a file that two rows share is there once."""
+    for name in ("a1.csv", "a2.csv", "b.csv"):
+        put(tmp_path, name, "time,value\n")
+    text = REGISTRY + "A,W,a*.csv;b.csv,level,m,0,,,\nB,W,b.csv,level,m,0,,,\n"
+    registry = read_registry(put(tmp_path, "loggers.csv", text))
+    assert [p.name for p in logger_paths(registry)] == ["a1.csv", "a2.csv", "b.csv"]
 
 
 def test_barometer_in_the_wrong_unit(tmp_path):

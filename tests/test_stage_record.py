@@ -224,6 +224,30 @@ def test_out_of_water_for_download_is_flagged_by_name():
     np.testing.assert_allclose(got.daily["stage_m"], 0.7, atol=0.003)
 
 
+def test_a_long_visit_in_dense_readings_is_flagged_whole():
+    """Forty minutes in air among readings a minute: longer than the running median reaches, found by hours."""
+    rng = np.random.default_rng(4)
+    time = np.datetime64("2024-01-01", "ns") + np.arange(5 * 1440) * np.timedelta64(60, "s")
+    depth = np.full(time.size, 0.6)
+    depth[3000:3040] = 0.0
+    value = depth * 9.81 + rng.normal(0, 0.02, time.size)
+    got = one(Readings("L1.csv", time, value), None, kind="vented")
+    flags = got.flagged["flag"].to_numpy().astype(str)
+    assert (flags[3000:3040] == "out_of_water").all()
+    assert (flags != "good").sum() <= 45
+
+
+def test_a_day_of_wild_scatter_is_refused_as_noise():
+    """Five centimetres of scatter for a day where 2 mm are usual."""
+    readings, barometer = still(0.6, noise=0.002)
+    value = readings.value.copy()
+    value[480:504] += np.random.default_rng(8).normal(0, 0.5, 24)
+    got = one(dataclasses.replace(readings, value=value), barometer)
+    flags = got.flagged["flag"].to_numpy().astype(str)
+    assert np.isin(flags[480:504], ["noise", "spike"]).mean() > 0.8
+    assert np.abs(got.daily["stage_m"] - 0.7).max() < 0.02
+
+
 def test_stuck_sensor_is_flagged_flat():
     """Total pressure that stays while the air moves can't be."""
     readings, barometer = still(0.6, noise=0.002)

@@ -3,6 +3,7 @@
 ``read_registry``, ``LoggerFiles`` (or ``read_readings``), ``read_barometer`` and ``read_checks`` open files; all else
 takes and returns tables. ``daily_stage`` makes the record of all loggers, ``build_record`` that of one,
 ``wetland_daily`` one row a wetland and date; each change and each refused reading is in ``corrections`` and ``flagged``.
+A record made after the event from small loggers is no basis for flood warning, dam safety or a legal boundary.
 """
 
 from inundate.stage.daily import StageResult, daily_stage, wetland_daily
@@ -11,6 +12,7 @@ from inundate.stage.readings import (
     Barometer,
     LoggerFiles,
     Readings,
+    logger_paths,
     read_barometer,
     read_checks,
     read_readings,
@@ -29,6 +31,7 @@ __all__ = [
     "StageResult",
     "build_record",
     "daily_stage",
+    "logger_paths",
     "read_barometer",
     "read_checks",
     "read_readings",

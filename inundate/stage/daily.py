@@ -125,6 +125,7 @@ def daily_stage(
             except InputError as fault:
                 del ready[logger_id]
                 refused.append(Refusal("logger", logger_id, str(fault)))
+    around.levels = {}
     _share_slow_errors(found)
     made = {k: make_record(f, options) for k, f in found.items()}
     return _gather(made, refused, _shared_clock(ready))

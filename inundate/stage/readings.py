@@ -167,6 +167,27 @@ def _paths(path: str | Path) -> list[Path]:
     return found
 
 
+def logger_paths(registry: pd.DataFrame) -> list[Path]:
+    """Return every readings file that a registry names (lists and patterns resolved), sorted, each once.
+
+    Parameters
+    ----------
+    registry : DataFrame
+        From :func:`read_registry`.
+
+    Returns
+    -------
+    list of Path
+        Files named one by one are listed also where they do not exist.
+
+    Raises
+    ------
+    InputError
+        When a pattern matches no file.
+    """
+    return sorted({path for entry in registry["file"] for path in _paths(entry)})
+
+
 def _tidy(parts: list[tuple[str, Columns]], value: str) -> dict:
     """Join the files of one sensor, sort by time, and keep one row a time."""
     time = np.concatenate([c.time for _, c in parts])

@@ -157,7 +157,7 @@ def _odds(logger_id: str, time: int, size: float, around: Surroundings) -> tuple
     if size < 0:
         return (4.0 if quiet else 2.0), f"a sudden fall that draining can't give; {calm}"
     if not np.isfinite(rain):
-        return (1.0 if quiet else -2.0), f"a sudden rise, rain not known; {calm}"
+        return (-1.0 if quiet else -3.0), f"a sudden rise, rain not known; {calm}"
     if melt:
         return (-2.0 if quiet else -4.0), f"a sudden rise while snow may be melting; {calm}"
     if rain < 0.5:

@@ -7,7 +7,6 @@ plain way beside it: pandas' default reader and a running median by ``rolling`` 
 from __future__ import annotations
 
 import os
-import resource
 import subprocess
 import sys
 import tempfile
@@ -66,7 +65,9 @@ def work(folder: Path, keep: bool) -> None:
     latitudes = dict.fromkeys(registry["wetland_id"], LATITUDE)
     result = daily_stage(registry, files, barometer, checks, latitudes, StageOptions(keep_flagged=keep))
     took = time.perf_counter() - began
-    peak = resource.getrusage(resource.RUSAGE_SELF).ru_maxrss / 1024
+    # not ru_maxrss: that of a child starts at its parent's
+    status = Path("/proc/self/status").read_text(encoding="ascii")
+    peak = int(status.split("VmHWM:")[1].split()[0]) / 1024
     print(
         f"keep_flagged={keep}: {len(registry)} loggers, {len(result.daily)} days, {took:.1f} s "
         f"({time.process_time() - worked:.1f} s of processor), peak {peak:.0f} MB, {len(result.refused)} refused"
