@@ -21,7 +21,7 @@ from inundate.scenes.kernels import cubic_tap
 _BISQUARE = 4.685  # 95 % efficiency under normal errors (Holland and Welsch 1977)
 _MAD_TO_SD = 1.4826
 _ITERATIONS = 8
-FLOOR_SD_PX = 0.03
+FLOOR_SD_PX = 0.04
 """What no number of cells averages out: the bias of interpolating images sampled near the limit of their blur, which the
 literature on sub-pixel matching puts at some hundredths of a pixel (order of size from memory)."""
 _CONVERGED_PX = 3e-3

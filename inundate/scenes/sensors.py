@@ -158,6 +158,23 @@ def load_profile(name_or_path: str | Path) -> SensorProfile:
     name_or_path : str or Path
         One of ``SHIPPED_PROFILES``, or the path of a TOML file.
 
+    Notes
+    -----
+    Keys of a profile; the shipped files are examples of each:
+
+    ``name``; ``step_m``, side of the finest pixels.
+    ``[scaling]``: ``scale`` and ``offset`` (reflectance = scale x raw number + offset), ``fill`` (raw number, tested before
+    scaling), ``valid = [least, greatest]`` (raw numbers), ``baselines = [{from = "04.00", since = 2022-01-25, offset = -0.1}]``
+    (by processing baseline; by acquisition date from ``since`` where a scene tells none), ``baseline_properties`` (item
+    properties that tell it), ``baseline_in_id`` (regular expression with two groups).
+    ``[bands.<role>]``: ``assets`` (keys, in order of preference), ``common_names``, ``band_names`` (inside an asset of
+    several bands), ``required`` (default true), own ``scale`` and ``offset``.
+    ``[variants.<name>]``: ``matches`` (texts in id, collection or platform) or ``has`` (asset keys), and ``names`` (role =
+    keys that count for this instrument alone).
+    ``[mask]``: ``assets``, ``band_names``, ``rules`` and ``otherwise``. A rule gives ``code`` (clear, cloud, shadow, snow_ice
+    or fill) and ``values`` (whole values), ``bit`` (one bit) or ``bits`` with ``at_least`` (a field of neighbouring bits).
+    The first rule that holds decides.
+
     Returns
     -------
     SensorProfile
