@@ -189,6 +189,10 @@ def test_fingerprint_follows_files_and_scaling(tmp_path):
     assert fingerprint(scene) != first
     os.utime(band, ns=(state.st_atime_ns, state.st_mtime_ns))
     assert fingerprint(scene) == first
+    (tmp_path / "elsewhere").mkdir()
+    (tmp_path / "A").rename(tmp_path / "elsewhere" / "A")  # an archive that was moved is the same
+    assert fingerprint(open_catalog(tmp_path / "elsewhere" / "A" / "A.json", S2).scenes[0]) == first
+    (tmp_path / "elsewhere" / "A").rename(tmp_path / "A")
     write_item_again = json.loads(path.read_text())
     write_item_again["properties"]["s2:processing_baseline"] = "05.00"
     path.write_text(json.dumps(write_item_again))

@@ -12,7 +12,7 @@ import numpy as np
 
 from inundate.common.errors import InputError
 from inundate.scenes.masks import MaskRules
-from inundate.scenes.places import file_stamp
+from inundate.scenes.places import file_stamp, is_remote
 from inundate.scenes.sensors import SensorProfile, baseline_key
 
 
@@ -109,10 +109,17 @@ class Scene:
 def fingerprint(scene: Scene) -> str:
     """Return a short text that changes when a scene's files, scaling or mask rules change.
 
-    Local files count by size and modification time, remote ones by address and the stamp that the item tells.
+    Local files count by name, size and modification time, not by folder, so that an archive can be moved; remote ones by
+    address and the stamp that the item tells.
     """
-    parts = [scene.scene_id, str(scene.datetime), scene.stamp, repr(sorted(scene.bands.items())), repr(scene.mask)]
-    parts += [f"{href}={file_stamp(href)}" for href in scene.files]
+    parts = [scene.scene_id, str(scene.datetime), scene.stamp, repr(scene.mask.rules)]
+    sources = {"mask": (scene.mask.href, scene.mask.band)}
+    for role, one in sorted(scene.bands.items()):
+        sources[role] = (one.href, one.band)
+        parts.append(f"{role}:{one.scale}:{one.offset}:{one.fill}:{one.valid}")
+    for role, (href, band) in sources.items():
+        name = href if is_remote(href) else href.rsplit("/", 1)[-1]
+        parts.append(f"{role}={name}:{band}:{file_stamp(href)}")
     return hashlib.blake2b("\n".join(parts).encode(), digest_size=16).hexdigest()
 
 
