@@ -6,6 +6,7 @@ catalog turns a STAC catalog or a table into scenes, ``read_view`` gives blocks 
 
 from inundate.scenes.areas import area_grid, context_windows
 from inundate.scenes.catalog import Catalog, open_catalog, scene_times
+from inundate.scenes.detail import Detail, add_detail, fit_detail
 from inundate.scenes.elevation import read_elevation
 from inundate.scenes.looks import ShiftOptions
 from inundate.scenes.masks import MaskRule, MaskRules
@@ -24,6 +25,7 @@ __all__ = [
     "BandSource",
     "Block",
     "Catalog",
+    "Detail",
     "Gain",
     "MaskRule",
     "MaskRules",
@@ -36,11 +38,13 @@ __all__ = [
     "ShiftOptions",
     "SiteGather",
     "View",
+    "add_detail",
     "apply_gain",
     "apply_shift",
     "area_grid",
     "context_windows",
     "fingerprint",
+    "fit_detail",
     "load_profile",
     "open_catalog",
     "read_elevation",
