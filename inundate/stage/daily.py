@@ -121,7 +121,14 @@ def daily_stage(
             priors = priors.learn([f.settled.offset for f in found.values()])
         for logger_id in list(ready):
             try:
-                found[logger_id] = find_datum(ready[logger_id], own_checks(checks, logger_id), around, options, priors)
+                found[logger_id] = find_datum(
+                    ready[logger_id],
+                    own_checks(checks, logger_id),
+                    around,
+                    options,
+                    priors,
+                    start=found[logger_id].settled.dryness if again else None,
+                )
             except InputError as fault:
                 del ready[logger_id]
                 refused.append(Refusal("logger", logger_id, str(fault)))

@@ -217,6 +217,8 @@ def find_datum(
     around: Surroundings,
     options: StageOptions,
     priors: Priors | None = None,
+    *,
+    start: Dryness | None = None,
 ) -> Found:
     """Find a prepared logger's offset, drift and steps, and its dry times, each by the help of the other.
 
@@ -229,6 +231,8 @@ def find_datum(
         Rain and the other loggers.
     options : StageOptions
     priors : Priors, optional
+    start : Dryness, optional
+        Dry times to start from (of an earlier round); found from the record alone where None.
 
     Returns
     -------
@@ -245,9 +249,7 @@ def find_datum(
     noise = max(s.noise for s in made.spans)
     matched, refused = _gather_checks(made, checks, options)
     priors = priors or Priors()
-    unseen = Dryness(np.zeros(made.span.size, bool), made.height_m, noise, [])
-    prior = fit_offset(_evidence(made, matched.iloc[:0], unseen, options, priors.zero_sd_m)[0], (), priors)
-    dryness = find_dry(made.hours, *first_zero(made.hours, *_zero_by(prior, made), noise), noise)
+    dryness = start or _first_dry(made, matched, options, priors)
     candidates: list[Step] = []
     doubtful: list[int] = []
     for _ in range(4):
@@ -264,6 +266,14 @@ def find_datum(
     refused += [_doubt(made.logger_id, matched.iloc[i]) for i in doubtful]
     settled = Settled(made.logger_id, made.spans, made.hours, made.span, made.height_m, offset, dryness, noise)
     return Found(settled, candidates, refused)
+
+
+def _first_dry(made: Prepared, checks: pd.DataFrame, options: StageOptions, priors: Priors) -> Dryness:
+    """Dry times by the record alone, before checks are weighed."""
+    noise = max(s.noise for s in made.spans)
+    unseen = Dryness(np.zeros(made.span.size, bool), made.height_m, noise, [])
+    prior = fit_offset(_evidence(made, checks.iloc[:0], unseen, options, priors.zero_sd_m)[0], (), priors)
+    return find_dry(made.hours, *first_zero(made.hours, *_zero_by(prior, made), noise), noise)
 
 
 def make_record(found: Found, options: StageOptions) -> LoggerRecord:

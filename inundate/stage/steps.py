@@ -150,7 +150,7 @@ def _odds(logger_id: str, time: int, size: float, around: Surroundings) -> tuple
     same = others * np.sign(size)
     if others.size and np.median(same) > max(0.25 * abs(size), 0.004):
         return -7.0, f"{others.size} other loggers change alike (median {np.median(others) * 100:+.1f} cm)"
-    if others.size and (same > 0.003).mean() >= 0.5:
+    if size > 0 and others.size and (same > 0.003).mean() >= 0.5:
         return -4.0, f"{(same > 0.003).sum()} of {others.size} other loggers change a little in the same hours"
     quiet = others.size >= 2 and bool((np.abs(others) < 0.25 * abs(size)).mean() > 0.7)
     calm = f"{others.size} other loggers stay" if quiet else "no other logger to compare"
