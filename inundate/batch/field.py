@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 from dataclasses import replace
-from pathlib import Path
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -65,14 +64,10 @@ def stage_record(work: Work, inputs: Inputs, layout: Layout, month: str | None =
 
 def logger_marks(pipeline: Pipeline) -> dict[str, str]:
     """Return marks (size and time of change) of every logger file that the registry names."""
-    from inundate.stage import read_registry
+    from inundate.stage import logger_paths, read_registry
 
     files = pipeline.input_files()
     if "loggers.registry" not in files:
         return {}
     registry = read_registry(files["loggers.registry"])
-    return {
-        f"logger file {path}": stat_mark(str(path))
-        for path in sorted(set(map(str, registry["file"])))
-        if Path(path).is_file()
-    }
+    return {f"logger file {path}": stat_mark(str(path)) for path in logger_paths(registry) if path.is_file()}
