@@ -10,6 +10,7 @@ import shapely
 from rasterio import features
 from scipy import ndimage
 from scipy.spatial import cKDTree
+from scipy.special import ndtr
 
 from inundate.common.seeds import rng_for
 from inundate.reserve.fields import rough_field, smooth_field
@@ -109,15 +110,17 @@ def herb_state(kind: int, day: pd.Timestamp, up_doy: float) -> tuple[float, floa
     name = HERB_KINDS[kind]
     if name == "understorey":
         early = 1 / (1 + np.exp(-(doy - up_doy + 8) / 6.0))
-        return float(0.12 + 0.88 * early * fade), float(0.1 + 0.9 * early * fade)
+        return float(0.05 + 0.95 * early * fade), float(0.1 + 0.9 * early * fade)
     if name == "emergent":
         late = 1 / (1 + np.exp(-(doy - up_doy - 25) / 10.0))
-        return float(0.22 + 0.78 * late * (0.4 + 0.6 * fade)), float(0.03 + 0.97 * late * fade)
+        return float(0.06 + 0.94 * late * (0.4 + 0.6 * fade)), float(0.03 + 0.97 * late * fade)
     if name == "meadow":
         mown = min(abs(doy - 172), abs(doy - 238))
         return float(0.35 + 0.65 * rise * fade * np.clip(mown / 25.0, 0.35, 1)), float(0.45 + 0.5 * rise * fade)
     if name == "winter_crop":
-        grown = np.interp(doy, [1, 70, 130, 175, 200, 205, 270, 300, 366], [0.15, 0.2, 0.9, 1, 0.8, 0.1, 0.02, 0.1, 0.15])
+        grown = np.interp(
+            doy, [1, 70, 130, 175, 200, 205, 270, 300, 366], [0.15, 0.2, 0.9, 1, 0.8, 0.1, 0.02, 0.1, 0.15]
+        )
         return float(grown), float(np.interp(doy, [1, 160, 195, 205, 280, 300, 366], [1, 1, 0.15, 0.1, 0.3, 1, 1]))
     if name == "summer_crop":
         grown = np.interp(doy, [1, 130, 195, 240, 270, 280, 366], [0.02, 0.02, 0.8, 1, 0.8, 0.08, 0.02])
@@ -133,7 +136,7 @@ _STANDS = {  # name: trees, closure, leaf area, herb kind, herb LAI, ground kind
     "winter_crop": (NO_TREES, 0.0, 0.0, 3, 4.0, 2),
     "summer_crop": (NO_TREES, 0.0, 0.0, 4, 4.0, 2),
 }
-_STAND_WEIGHTS = (0.46, 0.13, 0.12, 0.13, 0.09, 0.07)
+_STAND_WEIGHTS = (0.52, 0.11, 0.08, 0.13, 0.09, 0.07)
 
 
 def _stands(plan: Plan, rng: np.random.Generator) -> tuple[np.ndarray, np.ndarray]:
@@ -176,19 +179,17 @@ def _wetland_fields(bowls: list[Bowl], plan: Plan) -> dict[str, np.ndarray]:
         rng = rng_for(plan.seed, "plants", bowl.wetland_id)
         out["closure"][i] = bowl.closure
         out["trees"][i] = {"open": DECIDUOUS, "deciduous": DECIDUOUS, "evergreen": EVERGREEN}[bowl.cover]
-        out["lai"][i] = rng.uniform(3.6, 5.8) if bowl.cover != "evergreen" else rng.uniform(3.0, 4.6)
-        out["wai"][i] = rng.uniform(0.5, 1.0)
+        out["lai"][i] = rng.uniform(3.6, 5.8) if bowl.cover != "evergreen" else rng.uniform(2.6, 4.0)
+        out["wai"][i] = rng.uniform(0.4, 0.8)
         out["herb"][i] = rng.uniform(0.6, 2.6) if bowl.cover == "open" else rng.uniform(0.1, 0.9)
         out["herb_kind"][i] = 1 if bowl.cover == "open" else 0
-        out["mix"][i] = rng.uniform(0.45, 1.0) if bowl.cover == "open" else rng.uniform(0.15, 0.85)
+        out["mix"][i] = rng.uniform(0.45, 1.0) if bowl.cover == "open" else rng.uniform(0.15, 0.75)
     return out
 
 
 def _crowns(rng: np.random.Generator, shape: tuple[int, int], closure: np.ndarray) -> np.ndarray:
     """Where the crowns stand: clumped, with openings; a cell is crown where a rank field lies below the closure."""
-    field = rough_field(rng, shape, (2.2, 5.0, 13.0), 0.75)
-    from scipy.special import ndtr
-
+    field = rough_field(rng, shape, (2.2, 5.0, 13.0), 0.55)
     return ndtr(field) < closure
 
 
@@ -231,12 +232,10 @@ def make_cover(plan: Plan, bowls: list[Bowl], ground: Ground, years: LeafYears) 
     herb_lai = np.where(track, 0.1, herb_lai)
     closure = np.where(track, 0.25 * closure, closure)
     crown = _crowns(rng, shape, closure)
-    return _finish(plan, rng, crown, (trees, lai, plants["wai"][near], herb, herb_lai, kind, mix), ground, years)
+    return _finish(rng, crown, (trees, lai, plants["wai"][near], herb, herb_lai, kind, mix), ground, years)
 
 
-def _finish(
-    plan: Plan, rng: np.random.Generator, crown: np.ndarray, parts: tuple, ground: Ground, years: LeafYears
-) -> Cover:
+def _finish(rng: np.random.Generator, crown: np.ndarray, parts: tuple, ground: Ground, years: LeafYears) -> Cover:
     """Vary within crowns and pack into small integers."""
     trees, lai, wai, herb, herb_lai, kind, mix = parts
     shape = crown.shape
@@ -248,9 +247,8 @@ def _finish(
     lai = np.where(~crown & (trees == EVERGREEN), 0.0, lai)
     wai = np.where(crown, wai * np.clip(1.0 + 0.25 * smooth_field(rng, shape, 2.5), 0.3, 1.8), 0.12 * forest)
     trees = np.where(lai + wai > 0, trees, np.uint8(NO_TREES))
-    height = np.where(crown, np.clip(17.0 + 3.0 * smooth_field(rng, shape, 20.0), 8, 26), 0.0)
+    height = np.where(crown, np.clip(15.0 + 2.5 * smooth_field(rng, shape, 20.0), 8, 26), 0.0)
     offset = np.clip(np.round(2.5 * smooth_field(rng, shape, 60.0)), -8, 8)
-    offset = offset + np.where(ground.distance_m < 22.0, years.offset[ground.nearest], 0)
     at_wetland = ground.distance_m < 22.0
     small = np.clip(np.round(1.2 * smooth_field(rng, shape, 4.0)), -3, 3)
     offset = np.where(at_wetland, years.offset[ground.nearest], offset) + small

@@ -55,9 +55,7 @@ def _upsample(values: np.ndarray, n: int) -> np.ndarray:
     return np.asarray((weights @ (weights @ values[:need, :need]).T).T, dtype=np.float32)
 
 
-def draw_sky(
-    rng: np.random.Generator, n: int, cloudiness: float, sun: tuple[float, float], *, swath_edge: bool
-) -> Sky:
+def draw_sky(rng: np.random.Generator, n: int, cloudiness: float, sun: tuple[float, float], *, swath_edge: bool) -> Sky:
     """Draw clouds (on a wider field than the view, so that shadows fall in from outside), shadows and haze."""
     half = n // 2 + 4
     height_m = rng.uniform(500.0, 1900.0)

@@ -11,9 +11,7 @@ def spline_matrix(n: int, scale: float) -> sparse.csr_matrix:
     place = (np.arange(n) + 0.5) / scale
     left = np.floor(place).astype(np.int64)
     t = place - left
-    weights = np.stack(
-        [(1 - t) ** 3, 3 * t**3 - 6 * t**2 + 4, -3 * t**3 + 3 * t**2 + 3 * t + 1, t**3], axis=1
-    ) / 6.0
+    weights = np.stack([(1 - t) ** 3, 3 * t**3 - 6 * t**2 + 4, -3 * t**3 + 3 * t**2 + 3 * t + 1, t**3], axis=1) / 6.0
     cols = left[:, None] + np.arange(4)[None, :]
     rows = np.repeat(np.arange(n), 4)
     shape = (n, int(left.max()) + 4)

@@ -7,6 +7,7 @@ from dataclasses import dataclass
 import numba
 import numpy as np
 import pandas as pd
+from scipy.signal import lfilter
 
 from inundate.common.seeds import rng_for
 from inundate.reserve.plan import Plan
@@ -62,24 +63,26 @@ def _region(rain: np.ndarray, pet: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
     """Soil bucket and regional water table, hourly: lateral inflow (mm per unit catchment) and table (m)."""
     n = rain.size
     inflow, table = np.empty(n), np.empty(n)
-    soil, quick, level = 110.0, 0.0, 0.0
-    capacity = 150.0
+    soil, quick, level = 80.0, 0.0, 0.0
+    capacity = 105.0
     for i in range(n):
         storm = 0.025 * rain[i]
-        soil += rain[i] - storm
+        full = rain[i] * (0.9 * soil / capacity) ** 2.5
+        soil += rain[i] - storm - full
         excess = max(soil - capacity, 0.0)
         soil -= excess
-        soil -= pet[i] * min(1.0, soil / 75.0)
+        excess += full
+        soil -= pet[i] * min(1.0, soil / 70.0)
         soil = max(soil, 0.0)
         leak = 0.0
-        if soil > 105.0:
-            leak = 0.0012 * (soil - 105.0)
+        if soil > 75.0:
+            leak = 0.0012 * (soil - 75.0)
             soil -= leak
         quick += 0.6 * excess + storm
         out = quick / 96.0
         quick -= out
         inflow[i] = out
-        level += (0.4 * excess + leak) / 1000.0 / 0.11 - level / (120.0 * 24.0)
+        level += (0.4 * excess + leak) / 1000.0 / 0.14 - level / (120.0 * 24.0)
         table[i] = level
     return inflow, table
 
@@ -117,7 +120,7 @@ def _balance(
         catch = max(wet, ground)
         gain_rain = rain[i] / 1000.0 * catch
         gain_in = inflow[i] / 1000.0 * catchment * full
-        damp = 1.0 if level > -0.10 else np.exp((level + 0.10) / 0.30)
+        damp = 1.0 if level > -0.10 else np.exp((level + 0.10) / 0.22)
         lose_et = factor * pet[i] / 1000.0 * catch * damp
         lose_seep = seep * catch * (1.0 if level > -0.3 else max(0.0, 1.0 + (level + 0.3) / 0.5))
         swap = pull * (head[i] - level) * catch
@@ -138,26 +141,35 @@ def _balance(
     return stage, total
 
 
-def wetland_parameters(plan: Plan, wetland_id: str, area_m2: float, sill_m: float) -> dict[str, float]:
-    """Draw the parameters of one wetland's balance."""
+def wetland_parameters(plan: Plan, wetland_id: str, area_m2: float, sill_m: float, place: float) -> dict[str, float]:
+    """Draw the parameters of one wetland's balance; ``place`` (0..1) ranks it from perched to fed by groundwater."""
     rng = rng_for(plan.seed, "balance", wetland_id)
     ha = area_m2 / 1e4
     return {
-        "catchment_ratio": float(rng.uniform(1.0, 3.0) * ha**-0.22),
-        "seepage_mm_d": float(np.exp(rng.normal(np.log(1.6), 0.5)) * ha**-0.15),
-        "exchange_per_d": float(np.exp(rng.normal(np.log(0.006), 0.7)) * ha**-0.15),
-        "head_offset_m": float(rng.uniform(-1.0, 0.05)) * float(np.clip(sill_m, 0.4, 1.0)),
-        "head_lag_d": float(rng.uniform(5, 40)),
+        "catchment_ratio": float(np.exp(rng.normal(np.log(1.9), 0.4)) * ha**-0.22),
+        "seepage_mm_d": float(np.exp(rng.normal(np.log(1.4), 0.65)) * ha**-0.15),
+        "exchange_per_d": float(np.exp(rng.normal(np.log(0.006), 0.9)) * ha**-0.15),
+        "head_offset_m": (-1.1 + 1.35 * place) * float(np.clip(sill_m, 0.4, 1.0)),
+        "head_lag_d": float(rng.uniform(5, 70)),
         "stored_share": float(rng.uniform(0.25, 0.5)),
         "et_factor": float(rng.uniform(0.8, 1.1)),
     }
 
 
 def _lagged(head: np.ndarray, lag_hours: float) -> np.ndarray:
-    from scipy.signal import lfilter
-
     keep = np.exp(-1.0 / lag_hours)
     return lfilter([1 - keep], [1, -keep], head, zi=[keep * head[0]])[0]
+
+
+def _rain_factors(plan: Plan, doy: np.ndarray, places: np.ndarray) -> np.ndarray:
+    """Local rain over the gauge's, by wetland and hour: each day tilts across the area (lognormal, mean near 1)."""
+    rng = rng_for(plan.seed, "rain tilt", plan.size)
+    spread = 0.45 - 0.30 * np.cos(2 * np.pi * (doy - 15) / 365.25)
+    tilt = rng.standard_normal((2, doy.size)) * spread
+    side = plan.side_px * 10.0
+    middle = np.array([plan.grid.west + side / 2, plan.grid.north - side / 2])
+    away = (places - middle) / side
+    return np.repeat(np.exp(away @ tilt), 24, axis=1)
 
 
 def _daylight(days: int, doy: np.ndarray) -> np.ndarray:
@@ -166,12 +178,26 @@ def _daylight(days: int, doy: np.ndarray) -> np.ndarray:
     hour = np.arange(24) + 0.5
     light = np.maximum(np.cos(np.pi / 2 * (hour[None, :] - 11.5) / half[:, None]), 0.0)
     light *= np.abs(hour[None, :] - 11.5) < half[:, None]
-    assert_rows = light.sum(axis=1, keepdims=True)
-    return light.reshape(days, 24) / assert_rows
+    return light.reshape(days, 24) / light.sum(axis=1, keepdims=True)
+
+
+def _antecedent(weather: pd.DataFrame) -> np.ndarray:
+    """Rain and melt of the last days less evaporation, decaying by 28 % a day, mm; lead-in days dropped."""
+    wet = np.empty(weather.shape[0])
+    last = 0.0
+    for i, (water_mm, pet_mm) in enumerate(zip(weather["liquid_mm"], weather["pet_mm"], strict=True)):
+        last = max(0.72 * last + water_mm - 0.5 * pet_mm, 0.0)
+        wet[i] = last
+    return wet[LEAD_DAYS:]
 
 
 def run_water(
-    plan: Plan, weather: pd.DataFrame, ids: list[str], tables: list[np.ndarray], sill_m: np.ndarray
+    plan: Plan,
+    weather: pd.DataFrame,
+    ids: list[str],
+    tables: list[np.ndarray],
+    sill_m: np.ndarray,
+    places: np.ndarray | None = None,
 ) -> tuple[Water, pd.DataFrame]:
     """Run the balance of all wetlands.
 
@@ -185,6 +211,8 @@ def run_water(
         Hypsometry, 1 cm steps from stage 0.
     sill_m : ndarray, shape (wetland,)
         Height of each sill above the lowest ground.
+    places : ndarray, shape (wetland, 2), optional
+        Centres, m; rain then varies across the landscape, in summer more than in winter.
 
     Returns
     -------
@@ -196,23 +224,17 @@ def run_water(
     inflow, head = _region(rain, pet)
     head = head - head[LEAD_DAYS * 24 :].mean()
     skip = LEAD_DAYS * 24
+    local = np.ones((len(ids), 1)) if places is None else _rain_factors(plan, doy, places)
     hourly = np.empty((len(ids), plan.n_days * 24))
+    draw = rng_for(plan.seed, "groundwater", plan.size)
+    place = (draw.permutation(len(ids)) + draw.random(len(ids))) / len(ids)
     rows, parameters = [], []
     for i, name in enumerate(ids):
-        p = wetland_parameters(plan, name, float(tables[i][-1]), float(sill_m[i]))
+        p = wetland_parameters(plan, name, float(tables[i][-1]), float(sill_m[i]), float(place[i]))
         own = _lagged(head, 24 * p["head_lag_d"]) + 0.55 * sill_m[i] + p["head_offset_m"]
-        par = np.array(
-            [
-                p["catchment_ratio"],
-                p["seepage_mm_d"] / 24000.0,
-                p["exchange_per_d"] / 24.0,
-                sill_m[i],
-                0.6 * sill_m[i],
-                p["stored_share"],
-                p["et_factor"],
-            ]
-        )
-        stage, total = _balance(tables[i], rain, pet, inflow, own, par)
+        flows = (p["catchment_ratio"], p["seepage_mm_d"] / 24000.0, p["exchange_per_d"] / 24.0)
+        par = np.array([*flows, sill_m[i], 0.6 * sill_m[i], p["stored_share"], p["et_factor"]])
+        stage, total = _balance(tables[i], rain * local[i], pet, inflow * local[i], own, par)
         hourly[i] = stage[skip:]
         names = ("rain", "inflow", "et", "seepage", "exchange", "spill", "storage_change")
         one = {"wetland_id": name, **{f"{k}_m3": v for k, v in zip(names, total, strict=True)}}
@@ -221,9 +243,4 @@ def run_water(
         parameters.append({"wetland_id": name, **p})
     daily = hourly.reshape(len(ids), plan.n_days, 24).mean(axis=2)
     area = np.stack([area_at(t, d) for t, d in zip(tables, daily, strict=True)])
-    wet = np.empty(weather.shape[0])
-    last = 0.0
-    for i, (p_mm, e_mm) in enumerate(zip(weather["liquid_mm"], weather["pet_mm"], strict=True)):
-        last = max(0.72 * last + p_mm - 0.5 * e_mm, 0.0)
-        wet[i] = last
-    return Water(hourly, daily, area, pd.DataFrame(rows), wet[LEAD_DAYS:]), pd.DataFrame(parameters)
+    return Water(hourly, daily, area, pd.DataFrame(rows), _antecedent(weather)), pd.DataFrame(parameters)

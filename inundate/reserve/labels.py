@@ -9,6 +9,7 @@ import numpy as np
 import pandas as pd
 
 from inundate.common.codes import ViewCode
+from inundate.common.grid import Grid
 from inundate.common.seeds import rng_for
 from inundate.reserve.canopy import leaf_share
 from inundate.reserve.plan import CRS
@@ -16,6 +17,15 @@ from inundate.reserve.scenes import Landscape, ViewPlan
 
 WRONG_SHARE = 0.03
 SEASON_SHARES = {"off": 0.60, "up": 0.12, "on": 0.18, "fall": 0.10}
+
+
+@dataclass(frozen=True, slots=True)
+class _Scope:
+    """Where labels may lie: wetland and share of each pixel, the labelled wetlands, the truth of the views."""
+
+    own: tuple[np.ndarray, np.ndarray]
+    allowed: np.ndarray
+    truths: dict[str, np.ndarray]
 
 
 @dataclass(frozen=True, slots=True)
@@ -49,7 +59,7 @@ def _candidates(
     rng: np.random.Generator, truth: np.ndarray, own: tuple[np.ndarray, np.ndarray], allowed: np.ndarray, n: int
 ) -> tuple[np.ndarray, np.ndarray]:
     """Pick pixels of one view: wet and dry in labelled wetlands, some just outside, some anywhere."""
-    water, seen, code = truth
+    water, _, code = truth
     wetland, inside = own
     mine = (wetland >= 0) & np.isin(wetland, allowed) & (inside > 0.5) & (code == ViewCode.CLEAR)
     wet, dry = mine & (water > 50), mine & (water <= 50)
@@ -85,7 +95,7 @@ def make_labels(land: Landscape, views: list[ViewPlan], truths: dict[str, np.nda
     rng = rng_for(plan.seed, "labels", plan.size)
     n_wetlands = len(land.bowls)
     allowed = np.sort(rng.choice(n_wetlands, max(2, round(0.67 * n_wetlands)), replace=False))
-    own = _pixel_wetland(land)
+    scope = _Scope(_pixel_wetland(land), allowed, truths)
     seasons = np.array([season_of(land, v) for v in views])
     clear = np.array([float((truths[v.scene_id][2] == ViewCode.CLEAR).mean()) for v in views])
     rows: list[dict] = []
@@ -96,25 +106,18 @@ def make_labels(land: Landscape, views: list[ViewPlan], truths: dict[str, np.nda
         total = round(share * plan.n_labels)
         chosen = np.sort(rng.choice(usable, min(usable.size, max(3, total // 22)), replace=False))
         for place in chosen:
-            rows.extend(_label_view(land, rng, views[place], truths, own, allowed, season, -(-total // chosen.size)))
+            rows.extend(_label_view(land, rng, views[place], scope, season, -(-total // chosen.size)))
     frame = pd.DataFrame(rows).drop_duplicates(["scene_id", "row", "col"])
     frame = frame.sort_values(["date", "scene_id", "wetland_id", "row", "col"], ignore_index=True)
-    return _finish(plan, rng, frame)
+    return _finish(plan.grid, rng, frame)
 
 
 def _label_view(
-    land: Landscape,
-    rng: np.random.Generator,
-    view: ViewPlan,
-    truths: dict[str, np.ndarray],
-    own: tuple[np.ndarray, np.ndarray],
-    allowed: np.ndarray,
-    season: str,
-    n: int,
+    land: Landscape, rng: np.random.Generator, view: ViewPlan, scope: _Scope, season: str, n: int
 ) -> list[dict]:
     """Labels of one view; under full leaf only what shows through openings, or what a visitor saw on the ground."""
-    truth = truths[view.scene_id]
-    rows, cols = _candidates(rng, truth, own, allowed, n)
+    truth, own = scope.truths[view.scene_id], scope.own
+    rows, cols = _candidates(rng, truth, own, scope.allowed, n)
     out = []
     for r, c in zip(rows, cols, strict=True):
         visible = truth[1, r, c] / 100.0
@@ -137,11 +140,10 @@ def _label_view(
     return out
 
 
-def _finish(plan: object, rng: np.random.Generator, frame: pd.DataFrame) -> LabelSet:
+def _finish(grid: Grid, rng: np.random.Generator, frame: pd.DataFrame) -> LabelSet:
     """Turn pixels into points, and some labels wrong."""
     wrong = rng.random(len(frame)) < WRONG_SHARE
     said = frame["water"].to_numpy() ^ wrong
-    grid = plan.grid  # type: ignore[attr-defined]
     x, y = grid.centres(frame["row"].to_numpy(), frame["col"].to_numpy())
     x = np.round(x + rng.uniform(-2.5, 2.5, len(frame)), 2)
     y = np.round(y + rng.uniform(-2.5, 2.5, len(frame)), 2)

@@ -17,7 +17,7 @@ def _waters(plan: Plan, bowls: list[terrain.Bowl]) -> np.ndarray:
     for i, bowl in enumerate(bowls):
         rng = rng_for(plan.seed, "water colour", bowl.wetland_id)
         stain = np.exp(rng.normal(np.log(4.0), 0.7))
-        out[i] = np.clip(stain, 0.8, 16.0), np.exp(rng.normal(np.log(0.03), 0.6)), rng.uniform(0.2, 0.9)
+        out[i] = np.clip(stain, 0.8, 16.0), np.exp(rng.normal(np.log(0.016), 0.5)), rng.uniform(0.6, 1.0)
     return out
 
 
@@ -28,7 +28,8 @@ def make_landscape(plan: Plan) -> tuple[Landscape, list[np.ndarray], pd.DataFram
     tables = terrain.hypsometry(plan, bowls, ground)
     sky = weather.make_weather(plan, hydrology.LEAD_DAYS)
     ids = [b.wetland_id for b in bowls]
-    water, parameters = hydrology.run_water(plan, sky, ids, tables, ground.sill_m - ground.lowest_m)
+    places = np.array([[b.x, b.y] for b in bowls])
+    water, parameters = hydrology.run_water(plan, sky, ids, tables, ground.sill_m - ground.lowest_m, places)
     years = canopy.make_leaf_years(plan, len(bowls))
     cover = canopy.make_cover(plan, bowls, ground, years)
     grain = rng_for(plan.seed, "grain", plan.size).random(cover.lai.shape, dtype=np.float32)

@@ -8,8 +8,11 @@ import pandas as pd
 
 from inundate.reserve.plan import FINE_STEP_M, LATITUDE_DEG
 
+SCATTERED = 0.16
+"""Share of the beam that crowns and trunks around scatter into full shade (common practice, no source)."""
 
-def sun_position(day: pd.Timestamp, local_hour: float = 10.6) -> tuple[float, float]:
+
+def sun_position(day: pd.Timestamp, local_hour: float = 10.9) -> tuple[float, float]:
     """Return sun elevation and azimuth (degrees, from north over east) at a local solar hour.
 
     Declination by Cooper 1969 (Solar Energy 12:333); the spherical triangle is textbook astronomy.
@@ -52,7 +55,7 @@ def beam_map(
     length = step * FINE_STEP_M / np.cos(elevation)
     d_row, d_col = -step * np.cos(azimuth), step * np.sin(azimuth)
     n_steps = int(min(26.0 / climb, 28.0)) + 1
-    uneven = 0.55 * (1.0 - np.sin(elevation))
+    uneven = 0.35 * (1.0 - np.sin(elevation))
     for i in range(rows):
         for j in range(cols):
             if height[i, j] > 4.0:
@@ -72,5 +75,5 @@ def beam_map(
                         depth += 0.03
                     if depth > 4.0:
                         break
-            out[i, j] = np.exp(-depth)
+            out[i, j] = SCATTERED + (1.0 - SCATTERED) * np.exp(-depth)
     return out

@@ -170,6 +170,16 @@ def _plant(log: _Log, faults: tuple[str, ...], rng: np.random.Generator, visits:
         log.rows.append({"fault": "download", "start": hour, "end": hour, "size_m": np.nan})
 
 
+def _checks(plan: Plan, rng: np.random.Generator, name: str, stage: np.ndarray, hours: list[int]) -> pd.DataFrame:
+    """Field readings of stage, 40 minutes before the sensor is lifted for download, standard deviation 1 cm."""
+    rows = []
+    for hour in hours:
+        when = plan.days[0] + pd.Timedelta(hours=hour - 1, minutes=20)
+        seen = 0.5 * (stage[max(hour - 1, 0)] + stage[hour]) + rng.normal(0, 0.01)
+        rows.append({"logger_id": name, "time": f"{when:%Y-%m-%dT%H:%M:%SZ}", "stage_m": round(seen, 3), "sd_m": 0.01})
+    return pd.DataFrame(rows)
+
+
 def _one_logger(
     land: Landscape, place: int, name: str, faults: tuple[str, ...], pressure: np.ndarray
 ) -> tuple[dict, pd.DataFrame, pd.DataFrame, pd.DataFrame]:
@@ -202,13 +212,8 @@ def _one_logger(
             "temperature_c": np.round(temperature, 1),
         }
     )[~log.lost]
-    checks = []
-    for hour in visits:
-        if stage[hour] < 0.0 and height > -0.5:
-            continue
-        when = plan.days[0] + pd.Timedelta(hours=hour - 1, minutes=20)
-        seen = 0.5 * (stage[max(hour - 1, 0)] + stage[hour]) + rng.normal(0, 0.01)
-        checks.append({"logger_id": name, "time": f"{when:%Y-%m-%dT%H:%M:%SZ}", "stage_m": round(seen, 3), "sd_m": 0.01})
+    # a visitor reads the staff; below ground only a well tells
+    checks = _checks(plan, rng, name, stage, [h for h in visits if stage[h] >= 0.0 or height < -0.5])
     for a, b in _spells(dry & ~out, 6):
         log.rows.append({"fault": "dry", "start": a, "end": b - 1, "size_m": np.nan})
     real = [r for r in log.rows if r["fault"] not in ("download", "dry")]
@@ -229,7 +234,7 @@ def _one_logger(
         "valid_to": "",
         "utc_offset": f"+0{shift_h}:00",
     }
-    return registry, readings, pd.DataFrame(checks), truth
+    return registry, readings, checks, truth
 
 
 def _walked(land: Landscape) -> pd.DataFrame:

@@ -13,7 +13,7 @@ from inundate.common.grid import Grid
 FINE_STEP_M = 2.5
 CELLS_PER_PIXEL = 4
 CRS = "EPSG:32633"
-LATITUDE_DEG = 49.0
+LATITUDE_DEG = 43.2
 
 
 @dataclass(frozen=True, slots=True)
@@ -53,7 +53,7 @@ class Plan:
     @property
     def grid(self) -> Grid:
         """The 10 m grid of the scenes."""
-        return Grid(CRS, 431_200.0, 5_427_600.0, 10.0, self.side_px, self.side_px)
+        return Grid(CRS, 431_200.0, 4_783_600.0, 10.0, self.side_px, self.side_px)
 
     @property
     def fine(self) -> Grid:

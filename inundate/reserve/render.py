@@ -89,18 +89,9 @@ def _layer(value: np.ndarray, table: np.ndarray) -> None:
 
 
 @numba.njit(cache=True, nogil=True)
-def _floor(
-    value: np.ndarray,
-    ground: np.ndarray,
-    water: np.ndarray,
-    wet: float,
-    frozen: float,
-    snowy: float,
-    texture: float,
-    white: tuple,
-) -> None:
+def _floor(value: np.ndarray, ground: np.ndarray, water: np.ndarray, wet: float, texture: float, white: tuple) -> None:
     """Reflectance of water, ground, ice and snow of one cell, into ``value``."""
-    snow, ice, opaque = white
+    snow, ice, opaque, frozen, snowy = white
     cover_dry, cover_ice = snowy, snowy * frozen * 0.8
     for b in range(10):
         dry = ground[b] * texture
@@ -113,10 +104,10 @@ def _floor(
 
 
 @numba.njit(cache=True, nogil=True)
-def _draw_row(r: int, cells: tuple, ground: tuple, state: tuple, tables: tuple, out: tuple) -> None:  # noqa: PLR0915
+def _draw_row(r: int, cells: tuple, ground: tuple, state: tuple, tables: tuple, out: tuple) -> None:
     """Draw one row of cells: reflectance into out[0] (10, column), water share, visible share and whiteness into out[1]."""
     trees, lai, wai, offset, herb, herb_lai, kind, mix, texture, patch = cells
-    elevation, wetland, lowest = ground
+    elevation, wetland, inside, lowest = ground
     stage, wetness, snow_mm, ice_m, beam, sky, share, herb_share = state
     water, leaves, needles, bark, herbs, floors, snow, ice, k_leaf, k_needle, k_bark, k_herb = tables
     row, facts = out
@@ -127,7 +118,7 @@ def _draw_row(r: int, cells: tuple, ground: tuple, state: tuple, tables: tuple, 
         wet, damp, depth = 0.0, wetness, 0.0
         if w >= 0:
             above = stage[w] - (elevation[r, c] - lowest[w])
-            wet = min(max(0.5 + above / ROUGH_M, 0.0), 1.0)
+            wet = min(max(0.5 + above / ROUGH_M, 0.0), 1.0) * inside[r, c]
             damp = max(damp, min(max(1.0 + above / 0.28, 0.0), 1.0))
             depth = max(above, 0.0)
         bumpy = patch[r, c]
@@ -136,7 +127,7 @@ def _draw_row(r: int, cells: tuple, ground: tuple, state: tuple, tables: tuple, 
         opaque = min(max(0.06 + 3.5 * ice_m + 0.05 * bumpy, 0.02), 0.6)
         aqua = water[w, min(int(depth / 0.02 + 0.5), 90)] if wet > 0 else blank
         lie = floors[kind[r, c], mix[r, c], int(damp * 10 + 0.5)]
-        _floor(value, lie, aqua, wet, frozen, snowy, texture[r, c], (snow, ice, opaque))
+        _floor(value, lie, aqua, wet, texture[r, c], (snow, ice, opaque, frozen, snowy))
         h = herb[r, c]
         reach = herb_lai[r, c] * herb_share[h]
         if h == 0:
@@ -166,12 +157,25 @@ def _draw_row(r: int, cells: tuple, ground: tuple, state: tuple, tables: tuple, 
 
 
 @numba.njit(cache=True, nogil=True)
+def _across(sums: np.ndarray, indptr: np.ndarray, indices: np.ndarray, data: np.ndarray) -> np.ndarray:
+    """Gather cells of each row into pixels: (band, row, cell) to (band, row, pixel)."""
+    bands, rows, n = sums.shape[0], sums.shape[1], indptr.size - 1
+    out = np.zeros((bands, rows, n), np.float32)
+    for k in range(bands):
+        for i in range(rows):
+            for j in range(n):
+                for p in range(indptr[j], indptr[j + 1]):
+                    out[k, i, j] += np.float32(data[p]) * sums[k, i, indices[p]]
+    return out
+
+
+@numba.njit(cache=True, nogil=True)
 def _draw(
     cells: tuple, ground: tuple, state: tuple, tables: tuple, tall: tuple, wide: tuple
 ) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
     """Draw all rows and gather them into pixels; tall and wide hold (indptr, indices, data) for 10 m, then 20 m."""
     n_fine = ground[0].shape[0]
-    n10, n20 = wide[0].size - 1, wide[3].size - 1
+    n10, n20 = n_fine // 4, n_fine // 8
     sum10 = np.zeros((4, n10, n_fine), np.float32)
     sum20 = np.zeros((6, n20, n_fine), np.float32)
     facts10 = np.zeros((3, n10, n10), np.float32)
@@ -189,18 +193,8 @@ def _draw(
         for f in range(3):
             for c in range(n_fine):
                 facts10[f, r // 4, c // 4] += facts[f, c] / np.float32(16.0)
-    out10 = np.zeros((4, n10, n10), np.float32)
-    out20 = np.zeros((6, n20, n20), np.float32)
-    for k in range(4):
-        for i in range(n10):
-            for j in range(n10):
-                for p in range(wide[0][j], wide[0][j + 1]):
-                    out10[k, i, j] += np.float32(wide[2][p]) * sum10[k, i, wide[1][p]]
-    for k in range(6):
-        for i in range(n20):
-            for j in range(n20):
-                for p in range(wide[3][j], wide[3][j + 1]):
-                    out20[k, i, j] += np.float32(wide[5][p]) * sum20[k, i, wide[4][p]]
+    out10 = _across(sum10, wide[0], wide[1], wide[2])
+    out20 = _across(sum20, wide[3], wide[4], wide[5])
     return out10, out20, facts10
 
 
@@ -238,4 +232,4 @@ def draw_surface(
     snow, ice = spectra.cover_spectra()
     k = [spectra.view_extinction(name) for name in ("green", "needle", "bark", "herb")]
     tables = (s.water, s.leaves, s.needles, s.bark, s.herbs, spectra.ground_table(), snow, ice, *k)
-    return _draw(cells, (ground.elevation, ground.wetland, ground.lowest_m), state, tables, tall, wide)
+    return _draw(cells, (ground.elevation, ground.wetland, ground.share, ground.lowest_m), state, tables, tall, wide)

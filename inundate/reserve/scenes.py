@@ -80,7 +80,7 @@ def plan_views(plan: Plan) -> list[ViewPlan]:
         elevation, azimuth = light.sun_position(day)
         early = (day - plan.days[0]).days < 0.3 * plan.n_days
         gain = float(1 + 0.03 * np.clip(rng.standard_normal(), -2.5, 2.5))
-        shift = 3.5 * np.clip(rng.standard_normal(2), -2.8, 2.8)
+        shift = 3.5 * np.clip(rng.standard_normal(2), -2.0, 2.0)
         views.append(
             ViewPlan(
                 scene_id=f"SR_{day:%Y%m%d}",
@@ -94,7 +94,7 @@ def plan_views(plan: Plan) -> list[ViewPlan]:
                 dy_m=float(shift[1]),
                 gain=gain,
                 band_gain=gain * (1 + 0.008 * rng.standard_normal(spectra.N_BANDS)),
-                haze=float(np.clip(rng.normal(0.002, 0.004), -0.006, 0.012)),
+                haze=float(np.clip(rng.normal(0.002, 0.003), -0.005, 0.010)),
                 baseline="03.01" if early else "05.10",
             )
         )
@@ -136,7 +136,7 @@ def make_surface(land: Landscape, view: ViewPlan) -> Surface:
         herb_share=np.array([s for s, _ in state], np.float32),
         beam=beam,
         sky=spectra.sky_share(zenith).astype(np.float32),
-        wetness=float(np.clip(land.water.antecedent_mm[day] / 18.0, 0.05, 0.95)),
+        wetness=float(np.clip(land.water.antecedent_mm[day] / 25.0, 0.05, 0.9)),
         snow_mm=float(weather["snow_mm"]),
         ice_m=float(weather["ice_m"]),
     )

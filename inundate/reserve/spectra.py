@@ -171,9 +171,9 @@ def ground_table() -> np.ndarray:
     soils = prosail.spectral_lib.soil
     bright, dark = band_mean(np.asarray(soils.rsoil1)), band_mean(np.asarray(soils.rsoil2))
     rho, tau = leaf_optics("dead")
-    litter = np.asarray(
-        foursail(rho, tau, 22.0, 0.0, 2, 3.5, 0.05, 45.0, 3.0, 90.0, 0.6 * dark)[17], dtype=float
-    ) * 0.72
+    litter = (
+        np.asarray(foursail(rho, tau, 22.0, 0.0, 2, 3.5, 0.05, 45.0, 3.0, 90.0, 0.6 * dark)[17], dtype=float) * 0.72
+    )
     pairs = {
         "floor": (litter, _typed("organic")),
         "meadow": (0.7 * dark + 0.02, 0.5 * bright),
@@ -185,7 +185,7 @@ def ground_table() -> np.ndarray:
         first, last = pairs[kind]
         for m, mix in enumerate(np.linspace(0, 1, N_MIX)):
             dry = (1 - mix) * first + mix * last
-            wet = through_water(dry, 0.0004, 0.0, 0.0) * 1.08
+            wet = through_water(dry, 0.00022, 0.0, 0.0) * 1.10
             for w, wetness in enumerate(np.linspace(0, 1, N_WET)):
                 out[k, m, w] = (1 - wetness) * dry + wetness * wet
     return out.astype(np.float32)

@@ -7,6 +7,7 @@ from dataclasses import dataclass
 import geopandas as gpd
 import numpy as np
 import shapely
+from affine import Affine
 from rasterio import features
 from scipy import ndimage
 
@@ -130,7 +131,7 @@ def make_bowls(plan: Plan) -> list[Bowl]:
     bowls = []
     for rank, place in enumerate(order):
         x, y, _, ring = placed[place]
-        polygon = shapely.Polygon(np.round(ring + [x, y], 3))
+        polygon = shapely.Polygon(np.round(ring + np.array([x, y]), 3))
         ha = polygon.area / 1e4
         depth = float(np.clip(0.62 * ha**0.16 * np.exp(rng.normal(0, 0.28)), 0.28, 1.5))
         power = float(np.clip(np.exp(rng.normal(0.45, 0.40)), 0.7, 4.0))
@@ -138,7 +139,7 @@ def make_bowls(plan: Plan) -> list[Bowl]:
         closure = {
             "open": rng.uniform(0.0, 0.15),
             "deciduous": 1.0 - 0.5 * rng.beta(1.2, 2.2),
-            "evergreen": rng.uniform(0.72, 0.93),
+            "evergreen": rng.uniform(0.55, 0.85),
         }[cover]
         bowls.append(Bowl(f"SR{rank + 1:03d}", cover, x, y, polygon, depth, power, float(closure)))
     return bowls
@@ -149,8 +150,6 @@ def _share_of_cells(polygon: shapely.Polygon, fine: Grid, box: tuple[slice, slic
     rows, cols = box
     parts = 8
     step = fine.step / parts
-    from affine import Affine
-
     transform = Affine(step, 0, fine.west + cols.start * fine.step, 0, -step, fine.north - rows.start * fine.step)
     shape = ((rows.stop - rows.start) * parts, (cols.stop - cols.start) * parts)
     hit = features.rasterize([(polygon, 1)], out_shape=shape, transform=transform, dtype="uint8")
@@ -168,7 +167,7 @@ def _box(polygon: shapely.Polygon, fine: Grid, margin: int = 2) -> tuple[slice, 
 
 def _relative_radius(bowl: Bowl, x: np.ndarray, y: np.ndarray) -> np.ndarray:
     """Distance from the bowl's centre over the distance to its outline in the same direction (star-shaped)."""
-    ring = shapely.get_coordinates(bowl.polygon)[:-1] - [bowl.x, bowl.y]
+    ring = shapely.get_coordinates(bowl.polygon)[:-1] - np.array([bowl.x, bowl.y])
     angle = np.arctan2(ring[:, 1], ring[:, 0])
     order = np.argsort(angle)
     radius = np.hypot(ring[:, 0], ring[:, 1])[order]

@@ -53,6 +53,7 @@ def leaves_table(land: Landscape) -> pd.DataFrame:
     """Return leaf dates by wetland and year; NaT where the wetland's trees keep no deciduous calendar."""
     rows = []
     wetlands = wetlands_table(land, pd.DataFrame({"wetland_id": [b.wetland_id for b in land.bowls]}))
+    peak_lai = wetlands["peak_lai"].to_numpy(float)
     first, last = land.plan.days[0], land.plan.days[-1]
     for i, bowl in enumerate(land.bowls):
         for year in range(first.year, last.year + 1):
@@ -66,7 +67,7 @@ def leaves_table(land: Landscape) -> pd.DataFrame:
                     # day-of-year values count from 1 January = 1 and refer to the overpass, 0.45 d into the day
                     date = pd.Timestamp(year, 1, 1) + pd.Timedelta(days=round(middle + away - 0.45) - 1)
                     row[f"{name}_{percent}"] = date if bowl.cover == "deciduous" else pd.NaT
-            row["peak_lai"] = float(wetlands.loc[i, "peak_lai"])
+            row["peak_lai"] = peak_lai[i]
             rows.append(row)
     table = pd.DataFrame(rows)
     for name in table.columns:

@@ -46,7 +46,7 @@ def _rain(rng: np.random.Generator, doy: np.ndarray) -> np.ndarray:
     chance_after_dry = np.clip(0.27 + 0.09 * winter + 0.07 * wetness, 0.05, 0.8)
     chance_after_wet = np.clip(0.60 + 0.06 * winter + 0.07 * wetness, 0.1, 0.95)
     draw, amount = rng.random(doy.size), rng.gamma(0.75, 1.0, doy.size)
-    mean_mm = 6.3 - 0.6 * winter
+    mean_mm = 6.9 - 0.3 * winter
     rain = np.zeros(doy.size)
     wet = False
     for i in range(doy.size):
