@@ -6,14 +6,14 @@ import numpy as np
 import pandas as pd
 from scipy import stats
 
-from inundate.relation.families import ELEVATION, FAMILIES
+from inundate.relation.families import ELEVATION, FAMILIES, SPLINE
 from inundate.relation.pairs import Units
 
 # Pairs' worth of evidence that the other wetlands' scores bring to a wetland's choice.
 _SHARED_PAIRS = 6.0
 _SCALES = np.exp(np.linspace(np.log(0.5), np.log(5.0), 60))
-# sd of log scale before seeing data: bands are believed within a third either way.
-_SCALE_SD = 0.3
+# sd of log scale before seeing data: bands are widened readily and narrowed on strong evidence only.
+_WIDER_SD, _NARROWER_SD = 0.3, 0.07
 
 
 def date_blocks(units: Units, n_blocks: int) -> np.ndarray:
@@ -129,6 +129,26 @@ def _choice_table(
     return table.drop(columns=["order", "unit"]).reset_index(drop=True)
 
 
+def band_weights(weights: np.ndarray, able: np.ndarray) -> np.ndarray:
+    """Return the weights of families in the bands: half by score, half to the spline, which holds the power laws as cases.
+
+    Where elevation has the score, which knows the bowl outside the stages seen, the spline gets a quarter.
+
+    Scores cannot tell families apart where no stage was seen; the spline's free knots say how far the curve may bend there.
+
+    Parameters
+    ----------
+    weights : ndarray, shape (unit, family)
+    able : ndarray of bool, shape (unit,)
+        Units with pairs; the others keep their weights.
+    """
+    out = weights.copy()
+    part = 0.5 - 0.25 * weights[able, ELEVATION]
+    out[able] *= 1.0 - part[:, None]
+    out[able, SPLINE] += part
+    return out
+
+
 def mixture_error(
     held: dict[int, np.ndarray], weights: np.ndarray, unit: np.ndarray, best: np.ndarray
 ) -> np.ndarray:
@@ -174,7 +194,7 @@ def band_scale(
     worth = np.ones(gap.size) if heft is None else heft
     gap, model_sd, noise_sd, worth = gap[good], model_sd[good], noise_sd[good], worth[good]
     best = [
-        float(np.sum(worth * log_density(gap, np.sqrt((c * model_sd) ** 2 + noise_sd**2), nu))) - 0.5 * (np.log(c) / _SCALE_SD) ** 2
+        float(np.sum(worth * log_density(gap, np.sqrt((c * model_sd) ** 2 + noise_sd**2), nu))) - 0.5 * (np.log(c) / (_WIDER_SD if c > 1 else _NARROWER_SD)) ** 2
         for c in _SCALES
     ]
     return float(_SCALES[int(np.argmax(best))])

@@ -9,7 +9,7 @@ import pandas as pd
 
 from inundate.common.seeds import rng_for
 from inundate.relation import reading
-from inundate.relation.families import FAMILY_SIZE, N_PARAM, full_stage
+from inundate.relation.families import ELEVATION, FAMILY_SIZE, N_PARAM, full_stage
 from inundate.relation.pairs import stack_tables
 from inundate.relation.reading import Drawn, Ground
 
@@ -19,34 +19,40 @@ AREA_LO, AREA_HI, AREA_SD, VOLUME, VOLUME_LO, VOLUME_HI = range(6)
 
 def draw_curves(
     keys: list[tuple[str, str]],
-    theta: dict[int, np.ndarray],
-    cov: dict[int, np.ndarray],
+    fits: tuple[dict[int, np.ndarray], dict[int, np.ndarray]],
     weights: np.ndarray,
-    datum: np.ndarray,
+    stages: tuple[np.ndarray, np.ndarray],
     random: tuple[int, int],
 ) -> Drawn:
     """Draw curves of every unit: families by their weights, parameters about their fits, one datum error each.
+
+    The power-like families are drawn in log share at a stage that was seen, not in log full stage: pairs at one stage fix that
+    share and leave the shape free, which is a straight ridge there and a bent one in the other.
 
     Parameters
     ----------
     keys : list of (wetland_id, period)
         Each unit's generator is seeded by its key.
-    theta, cov : dict
-        Family -> (unit, N_PARAM) and (unit, N_PARAM, N_PARAM).
+    fits : (theta, cov)
+        Family -> (unit, N_PARAM), and family -> (unit, N_PARAM, N_PARAM).
     weights : ndarray, shape (unit, family)
-    datum : ndarray, shape (unit,)
-        sd of the shared stage error, m.
+    stages : (datum, reference)
+        sd of the shared stage error and the middle of the stages seen, m, each (unit,).
     random : (seed, number of draws)
 
     Returns
     -------
-    family (unit, draw) int64, theta (unit, draw, N_PARAM), shift (unit, draw) m
+    Drawn
     """
     seed, n = random
+    datum, reference = stages
     family = np.zeros((len(keys), n), np.int64)
     drawn = np.zeros((len(keys), n, N_PARAM))
     shift = np.zeros((len(keys), n))
-    roots = {code: _roots(cov[code], int(FAMILY_SIZE[code])) for code in cov}
+    centres, roots = {}, {}
+    for code in fits[0]:
+        centres[code], turn = _to_share(code, fits[0][code], reference)
+        roots[code] = _roots(turn @ fits[1][code] @ turn.transpose(0, 2, 1), int(FAMILY_SIZE[code]))
     for u, key in enumerate(keys):
         z = rng_for(seed, "curves", *key).standard_normal((n, N_PARAM + 1))
         shift[u] = z[:, N_PARAM] * datum[u]
@@ -56,9 +62,32 @@ def draw_curves(
             if code in roots and cut[code] > begin:
                 rows = slice(begin, cut[code])
                 family[u, rows] = code
-                drawn[u, rows] = theta[code][u] + z[rows, :N_PARAM] @ roots[code][u].T
+                drawn[u, rows] = _from_share(code, centres[code][u] + z[rows, :N_PARAM] @ roots[code][u].T, reference[u])
             begin = cut[code]
     return Drawn(family, drawn, shift)
+
+
+def _to_share(code: int, theta: np.ndarray, reference: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+    """Return parameters (unit, N_PARAM) with log share at the reference stage first, and the Jacobian of that change."""
+    turn = np.repeat(np.eye(N_PARAM)[None], theta.shape[0], axis=0)
+    if code == ELEVATION:
+        return theta, turn
+    b = np.exp(theta[:, 1])
+    depth = np.maximum(reference - theta[:, 2], 0.02)
+    out = theta.copy()
+    out[:, 0] = b * (np.log(depth) - theta[:, 0])
+    turn[:, 0, 0], turn[:, 0, 1], turn[:, 0, 2] = -b, out[:, 0], -b / depth
+    return out, turn
+
+
+def _from_share(code: int, values: np.ndarray, reference: float) -> np.ndarray:
+    """Undo :func:`_to_share` for draws (draw, N_PARAM) of one unit."""
+    if code == ELEVATION:
+        return values
+    out = values.copy()
+    depth = np.maximum(reference - values[:, 2], 0.02)
+    out[:, 0] = np.log(depth) - values[:, 0] / np.exp(np.clip(values[:, 1], -3.0, 3.0))
+    return out
 
 
 def _roots(cov: np.ndarray, size: int) -> np.ndarray:
@@ -79,9 +108,12 @@ class Curves:
         hypsometry, note.
     theta, cov : dict
         Family code -> parameters (unit, N_PARAM) and their covariance.
+    family : ndarray of int, shape (unit,)
+        Family of the curve itself.
     weights : ndarray, shape (unit, 4)
-        Weight of each family in the bands; the heaviest is the curve itself.
-    datum_sd_m : ndarray, shape (unit,)
+        Weight of each family in the bands.
+    datum_sd_m, reference_m : ndarray, shape (unit,)
+        sd of the stage error that all pairs share, and the middle of the stages seen.
     scale : (float, float, float)
         Factor on the bands' half widths inside and outside the stages seen, and for wetlands without pairs, from held-out
         pairs.
@@ -94,14 +126,15 @@ class Curves:
     table: pd.DataFrame
     theta: dict[int, np.ndarray]
     cov: dict[int, np.ndarray]
+    family: np.ndarray
     weights: np.ndarray
     datum_sd_m: np.ndarray
+    reference_m: np.ndarray
     scale: tuple[float, float, float]
     seed: int
     n_draws: int
     level: float
     hypsometry: dict[str, tuple[np.ndarray, np.ndarray]]
-    family: np.ndarray = field(init=False)
     best: np.ndarray = field(init=False)
     ground: Ground = field(init=False)
     grid: np.ndarray = field(init=False)
@@ -110,14 +143,15 @@ class Curves:
 
     def __post_init__(self) -> None:
         """Draw curves and lay the bands out on each unit's grid of stages."""
-        self.family = self.weights.argmax(axis=1)
-        self.best = np.stack([self.theta[int(f)][u] for u, f in enumerate(self.family)]).reshape(-1, N_PARAM)
+        self.best = np.zeros((self.family.size, N_PARAM))
+        for code in self.theta:
+            self.best[self.family == code] = self.theta[code][self.family == code]
         place = {key: i for i, key in enumerate(self.hypsometry)}
         which = self.table["wetland_id"].map(place).fillna(-1).to_numpy(np.int64)
         self.ground = Ground(*stack_tables(self.hypsometry), which)
         keys = list(zip(self.table["wetland_id"], self.table["period"], strict=True))
         self.drawn = draw_curves(
-            keys, self.theta, self.cov, self.weights, self.datum_sd_m, (self.seed, self.n_draws)
+            keys, (self.theta, self.cov), self.weights, (self.datum_sd_m, self.reference_m), (self.seed, self.n_draws)
         )
         self.grid = self._grid()
         self.values = self._bands()
@@ -158,8 +192,9 @@ class Curves:
             (AREA_LO, AREA_HI, centre, 1.0),
             (VOLUME_LO, VOLUME_HI, out[:, VOLUME], np.inf),
         ):
-            lo = mid - factor * np.maximum(mid - out[:, low], 0.0)
-            hi = mid + factor * np.maximum(out[:, high] - mid, 0.0)
+            # bounds that reach empty or full stay there, however the scale narrows
+            lo = np.where(out[:, low] <= 0.0, 0.0, mid - factor * np.maximum(mid - out[:, low], 0.0))
+            hi = np.where(out[:, high] >= cap, cap, mid + factor * np.maximum(out[:, high] - mid, 0.0))
             lo = np.minimum.accumulate(lo[:, ::-1], axis=1)[:, ::-1]
             hi = np.maximum.accumulate(hi, axis=1)
             out[:, low], out[:, high] = np.clip(lo, 0.0, cap), np.clip(hi, 0.0, cap)

@@ -11,7 +11,8 @@ above 1. Parameters are unbounded reals in a vector of length ``N_PARAM`` of whi
   238) through knots at u = 0, 1/4, 1/2, 3/4, 1 of u = ((h - offset) / h_full)^b, each rise exp(increment) / 4.
 - ``elevation``: vertical offset (m), roughness (m) and log b_low of the elevation model's hypsometry. Share =
   H_roughness(h + offset): positive roughness blurs the hypsometry (ground rougher than the model shows), negative sharpens
-  it (model noisier than the ground: elevations drawn together about their mean so that the variance falls by roughness^2).
+  it (model noisier than the ground: Richardson-Lucy deconvolution; Richardson 1972, J. Opt. Soc. Am. 62, 55; Lucy 1974,
+  Astron. J. 79, 745).
   Below the floor of what the model shows (its lowest 3 %, or the water surface that stood there at the survey) the curve
   runs to 0 at stage 0 as a power b_low of stage.
 """
@@ -27,7 +28,8 @@ FAMILY_SIZE = np.array([2, 3, 7, 3])
 N_PARAM = 7
 N_KNOT = 4
 N_WORK = 3 + 2 * (N_KNOT + 1)
-ROUGHNESS_M = np.array([-0.30, -0.20, -0.10, -0.05, 0.0, 0.05, 0.10, 0.20, 0.30])
+ROUGHNESS_M = np.array([-0.15, -0.10, -0.06, -0.03, 0.0, 0.03, 0.06, 0.10, 0.15])
+_SHARPEN_STEPS = 30
 N_TABLE = 161
 _DRY_RAMP_M = 0.03
 _FLOOR_SHARE = 0.03
@@ -190,6 +192,14 @@ def water_at_survey(stage_m: np.ndarray, share: np.ndarray) -> tuple[float, floa
     return _WATER_FLAT_M, depth
 
 
+def _sharpen(mass: np.ndarray, kernel: np.ndarray) -> np.ndarray:
+    """Return the area by elevation whose blur under ``kernel`` is ``mass`` (Richardson-Lucy from the blurred one)."""
+    found = kernel @ mass
+    for _ in range(_SHARPEN_STEPS):
+        found = found * (kernel.T @ (mass / np.maximum(kernel @ found, 1e-12)))
+    return found
+
+
 def hypsometry_table(stage_m: np.ndarray, area_m2: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
     """Lay a hypsometry out for the elevation family.
 
@@ -212,20 +222,18 @@ def hypsometry_table(stage_m: np.ndarray, area_m2: np.ndarray) -> tuple[np.ndarr
     share = share / max(share[-1], 1e-9)
     floor, depth = water_at_survey(stage, share)
     stage = stage + depth
-    rise = np.diff(share, prepend=0.0)
-    mean = float(np.sum(rise * stage))
-    spread = float(np.sqrt(max(np.sum(rise * (stage - mean) ** 2), 1e-12)))
-    top = float(stage[-1])
     pad = 2.0 * float(ROUGHNESS_M[-1])
-    grid = np.linspace(-pad, top + pad, N_TABLE)
+    grid = np.linspace(-pad, float(stage[-1]) + pad, N_TABLE)
+    step = grid[1] - grid[0]
+    mass = np.diff(np.interp(grid, stage, share, left=0.0, right=1.0), prepend=0.0)
+    away = (grid[:, None] - grid[None, :]) / step
     table = np.empty((ROUGHNESS_M.size, N_TABLE))
     for k, rough in enumerate(ROUGHNESS_M):
-        if rough <= 0:
-            shrink = np.sqrt(max(1.0 - (rough / spread) ** 2, 0.15))
-            place = mean + (stage - mean) * shrink
-            table[k] = np.interp(grid, place, share, left=0.0, right=1.0)
-        else:
-            nodes, heft = np.polynomial.hermite_e.hermegauss(15)
-            shifted = np.interp(grid[:, None] - rough * nodes[None, :], stage, share, left=0.0, right=1.0)
-            table[k] = np.maximum.accumulate(shifted @ (heft / heft.sum()))
-    return np.clip(table, 0.0, 1.0), np.array([grid[0], grid[1] - grid[0], floor + depth, depth])
+        if rough == 0:
+            table[k] = np.cumsum(mass)
+            continue
+        kernel = np.exp(-0.5 * (away * step / abs(rough)) ** 2)
+        kernel /= kernel.sum(axis=0)
+        found = kernel @ mass if rough > 0 else _sharpen(mass, kernel)
+        table[k] = np.cumsum(found) / found.sum()
+    return np.clip(table, 0.0, 1.0), np.array([grid[0], step, floor + depth, depth])

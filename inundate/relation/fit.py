@@ -11,7 +11,7 @@ import pandas as pd
 from inundate.common.codes import LeafCode
 from inundate.common.errors import Refusal
 from inundate.relation import reading, solve
-from inundate.relation.choose import band_scale, choose, date_blocks, mixture_error, stage_blocks
+from inundate.relation.choose import band_scale, band_weights, choose, date_blocks, mixture_error, stage_blocks
 from inundate.relation.curves import Curves
 from inundate.relation.families import (
     ELEVATION,
@@ -19,6 +19,7 @@ from inundate.relation.families import (
     FAMILY_SIZE,
     POWER,
     POWER_OFFSET,
+    SPLINE,
 )
 from inundate.relation.options import RelationOptions
 from inundate.relation.pairs import Units, lay_out
@@ -196,7 +197,7 @@ def _scales(
     for rows in (_judging(date, 0.0), _judging(stage, 1.0) | _judging(date, 1.0)):
         use = np.where((_judging(stage, 1.0) & rows)[:, None], stage, date)[rows]
         scales.append(band_scale(y[rows] - use[:, 0], use[:, 1], use[:, 2], nu))
-    return max(1.0, scales[0]), max(1.0, *scales)
+    return scales[0], max(1.0, *scales)
 
 
 def _judging(held: np.ndarray, outside: float) -> np.ndarray:
@@ -235,11 +236,24 @@ def unseen_scale(units: Units, prior: Prior, fit: Fit, nu: float) -> float:
 
 
 def datum_sd(units: Units) -> np.ndarray:
-    """Return the sd (m) of the stage error that all pairs of a unit share: it cannot exceed the smallest stated sd."""
+    """Return the sd (m) of the stage error that all pairs of a unit share.
+
+    How much of the smallest stated variance is shared is not known: half of it is taken (common practice, no source).
+    """
     out = np.zeros(units.first.size - 1)
     for u in range(out.size):
         mine = units.pairs[units.first[u] : units.first[u + 1], 1]
-        out[u] = min(float(mine.min()), 0.05) if mine.size else 0.0
+        out[u] = np.sqrt(0.5) * min(float(mine.min()), 0.05) if mine.size else 0.0
+    return out
+
+
+def middle_stage(units: Units) -> np.ndarray:
+    """Return the median of the stages above 0 of each unit's pairs, m; 0.3 where there is none."""
+    out = np.full(units.first.size - 1, 0.3)
+    for u in range(out.size):
+        mine = units.pairs[units.first[u] : units.first[u + 1], 0]
+        if (mine > 0.02).any():
+            out[u] = float(np.median(mine[mine > 0.02]))
     return out
 
 
@@ -263,6 +277,9 @@ def _assemble(
     by_date = _hold_out(units, codes, priors, fits, date_blocks(units, options.n_blocks), options.nu)
     by_stage = _hold_out(units, codes, priors, fits, stage_blocks(units), options.nu)
     choices, weights = choose(units, by_date, options.nu)
+    wide = weights
+    if SPLINE in codes:
+        wide = band_weights(weights, units.table["n_pairs"].to_numpy() > 0)
     scale_in, scale_out = _scales(units, by_date, by_stage, weights, options.nu)
     unseen = scale_out
     if ELEVATION in codes and options.pool:
@@ -273,8 +290,10 @@ def _assemble(
         units.table.loc[known].assign(unit=np.arange(int(known.sum()))).reset_index(drop=True),
         {c: fits[c].theta[known] for c in codes},
         {c: fits[c].cov[known] for c in codes},
-        weights[known],
+        weights[known].argmax(axis=1),
+        wide[known],
         _with_shifts(datum_sd(units), units, shifts)[known],
+        middle_stage(units)[known],
         (scale_in, scale_out, unseen),
         seed,
         options.n_draws,

@@ -250,7 +250,7 @@ def _clean(
         if column not in clean:
             clean[column] = value
     clean["censored"] = clean["censored"].fillna(False).astype(bool)
-    size = clean["wetland_id"].map(sites.set_index("wetland_id")["area_max_m2"])
+    size = clean["wetland_id"].map(sites.set_index("wetland_id")["area_max_m2"]).astype(float)
     for column in ("stage_sd_m", "area_sd_m2"):
         if column not in clean:
             clean[column] = np.nan

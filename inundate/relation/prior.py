@@ -21,13 +21,14 @@ DEFAULT_SD = {
     POWER: np.array([0.8, 0.5]),
     POWER_OFFSET: np.array([0.8, 0.5, 0.08]),
     SPLINE: np.array([0.8, 0.5, 0.08, 0.4, 0.4, 0.4, 0.4]),
-    ELEVATION: np.array([0.15, 0.08, 0.5]),
+    ELEVATION: np.array([0.15, 0.06, 0.5]),
 }
+# Spread that the learnt prior is drawn towards, as a share of the default's: wetlands of one landscape are more alike.
 _SHRINK = {
-    POWER: 0.4,
-    POWER_OFFSET: 0.4,
-    SPLINE: 0.4,
-    ELEVATION: 0.4,
+    POWER: np.array([0.4, 0.4]),
+    POWER_OFFSET: np.array([0.4, 0.4, 0.5]),
+    SPLINE: np.array([0.4, 0.4, 0.5, 0.7, 0.7, 0.7, 0.7]),
+    ELEVATION: np.array([0.4, 0.4, 0.6]),
 }
 LEAST_PAIRS = 4
 

@@ -218,11 +218,13 @@ class RelationSet:
         c = self._curves
         kept = {
             "format": "inundate relations 1",
-            "units": json.loads(c.table.to_json(orient="records", date_format="iso", double_precision=15)),
+            "units": _records(c.table),
             "theta": {FAMILIES[f]: v[:, : FAMILY_SIZE[f]].tolist() for f, v in c.theta.items()},
             "cov": {FAMILIES[f]: v[:, : FAMILY_SIZE[f], : FAMILY_SIZE[f]].tolist() for f, v in c.cov.items()},
+            "family": c.family.tolist(),
             "weights": c.weights.tolist(),
             "datum_sd_m": c.datum_sd_m.tolist(),
+            "reference_m": c.reference_m.tolist(),
             "scale": list(c.scale),
             "seed": c.seed,
             "n_draws": c.n_draws,
@@ -251,11 +253,7 @@ class RelationSet:
         if not isinstance(kept, dict) or kept.get("format") != "inundate relations 1":
             message = "relations file: no 'format': 'inundate relations 1'; it must be what `to_json` wrote; fit again"
             raise InputError(message)
-        table = _frame(kept["units"])
-        for column in ("valid_from", "valid_to"):
-            table[column] = pd.to_datetime(table[column]).astype("datetime64[ns]")
-        for column in ("stage_min_m", "stage_max_m", "area_max_m2"):
-            table[column] = table[column].astype(float)
+        table = _table(kept["units"])
         n = len(table)
         theta, cov = {}, {}
         for name, rows in kept["theta"].items():
@@ -269,8 +267,10 @@ class RelationSet:
             table,
             theta,
             cov,
+            np.array(kept["family"], np.int64),
             np.array(kept["weights"]).reshape(n, len(FAMILIES)),
-            np.array(kept["datum_sd_m"]),
+            np.array(kept["datum_sd_m"], float),
+            np.array(kept["reference_m"], float),
             (kept["scale"][0], kept["scale"][1], kept["scale"][2]),
             kept["seed"],
             kept["n_draws"],
@@ -297,7 +297,3 @@ def _table(kept: dict[str, Any]) -> pd.DataFrame:
             for name, kind in kept["columns"].items()
         }
     )
-
-
-def _frame(rows: list[dict[str, Any]]) -> pd.DataFrame:
-    return pd.DataFrame(rows)
