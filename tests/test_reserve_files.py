@@ -110,7 +110,7 @@ def test_catalog_is_valid_stac_and_the_table_says_the_same(small_reserve):
     del raw["properties"]["datetime"]
     with pytest.raises(pystac.errors.STACValidationError):
         core.validate_core(raw, pystac.STACObjectType.ITEM, "1.1.0")
-    assert set(table.processing_baseline.astype(str)) == {"3.01", "5.1"}
+    assert set(table.baseline.astype(str)) == {"3.01", "5.1"}
 
 
 def test_bands_lie_on_one_grid_and_keep_zero_for_fill(small_reserve):

@@ -228,8 +228,8 @@ def write_catalog(folder: Path, plan: Plan, views: list[ViewPlan]) -> None:
         for role, asset in zip(BAND_ROLES, ASSETS, strict=True):
             row[role] = f"scenes/{view.scene_id}/{asset}.tif"
         row["mask"] = f"scenes/{view.scene_id}/SCL.tif"
-        row["processing_baseline"] = view.baseline
-        row["sun_elevation_deg"] = f"{view.sun_elevation:.3f}"
-        row["sun_azimuth_deg"] = f"{view.sun_azimuth:.3f}"
+        row["baseline"] = view.baseline
+        row["sun_elevation"] = f"{view.sun_elevation:.3f}"
+        row["sun_azimuth"] = f"{view.sun_azimuth:.3f}"
         rows.append(row)
     write_csv(folder / "scenes.csv", pd.DataFrame(rows))
