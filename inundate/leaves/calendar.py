@@ -241,9 +241,7 @@ class LeafCalendar(BaseEstimator):
                 table[column] = table[column].astype(float)
             table["year"] = table["year"].astype(np.int64)
             table["n_views"] = table["n_views"].astype(np.int64)
-            for column in ("wetland_id", "cover", "source"):
-                table[column] = table[column].astype(object)
-        out.seasons_, out.landscape_ = tables
+        out.seasons_, out.landscape_ = (table[list(_COLUMNS)] for table in tables)
         out.cover_, out.scale_ = dict(body["cover"]), dict(body["scale"])
         out.offset_days_ = int(body["offset_days"])
         out._index()
@@ -269,6 +267,17 @@ class LeafCalendar(BaseEstimator):
         self._evergreen = np.array([self.cover_[i] == "evergreen" for i in ids] + [False])
 
 
+_COLUMNS = (
+    "wetland_id",
+    "year",
+    "cover",
+    *KNOTS,
+    "sd_days",
+    "green_up_sd_days",
+    "leaf_fall_sd_days",
+    "source",
+    "n_views",
+)
 _COVER_PLACE = {OPEN_COVER: 0, DECIDUOUS: 1, EVERGREEN: 2}
 
 

@@ -19,19 +19,24 @@ from inundate.leaves.views import Views, season_date, season_time
 KNOTS = ("green_up_start", "green_up_mid", "green_up_end", "leaf_fall_start", "leaf_fall_mid", "leaf_fall_end")
 FIXED_KEYS = ("green_up", "leaf_on", "leaf_fall", "leaf_off")
 _COVER_NAMES = ("open", "deciduous", "evergreen")
+_YEAR_SD_DAYS, _UNKNOWN_SD_DAYS = 8.0, 25.0
+"""Uncertainty of a year without views, where other years tell and where nothing does (common practice, no source)."""
+_BETWEEN_SD_DAYS = 5.0
+"""Spread between wetlands of one landscape where no views tell (common practice, no source)."""
 _LIMBS, _SCALES = [RISE, FALL], [RISE_SCALE, FALL_SCALE]
 
 
-def check_fixed(fixed: dict[str, str] | None, offset_days: int) -> dict[str, float]:
-    """Return fixed dates as days of the season year.
+def check_fixed(fixed: dict[str, str] | None, offset_days: int) -> dict[str, str]:
+    """Return fixed dates (``MM-DD`` by key), checked.
 
     Raises
     ------
     InputError
         On an unknown key, a date that is none, or dates out of order.
     """
+    fixed = dict(fixed or {})
     out: dict[str, float] = {}
-    for key, value in (fixed or {}).items():
+    for key, value in fixed.items():
         if key not in FIXED_KEYS:
             message = f"fixed leaf dates: key {key!r} is unknown; use {', '.join(FIXED_KEYS)}"
             raise InputError(message)
@@ -46,8 +51,21 @@ def check_fixed(fixed: dict[str, str] | None, offset_days: int) -> dict[str, flo
     given = [(k, out[k]) for k in FIXED_KEYS if k in out]
     for (one, a), (two, b) in itertools.pairwise(given):
         if a >= b:
-            message = f"fixed leaf dates: {one} = {fixed[one]} is not before {two} = {fixed[two]}"  # type: ignore[index]
+            message = f"fixed leaf dates: {one} = {fixed[one]} is not before {two} = {fixed[two]}"
             raise InputError(message + "; order them green_up, leaf_on, leaf_fall, leaf_off")
+    return fixed
+
+
+def _fixed_days(fixed: dict[str, str], years: np.ndarray, offset_days: int) -> dict[str, np.ndarray]:
+    """Return fixed dates as days of each season year, shape (n,) a key."""
+    out = {}
+    for key, value in fixed.items():
+        day = np.full(years.shape, np.nan)
+        for ahead in (0, 1):  # a season that spans New Year ends in the next calendar year
+            dates = np.array([f"{y + ahead:04d}-{value}" for y in years.tolist()], "datetime64[D]")
+            year, place = season_time(dates, offset_days)
+            day = np.where(year == years, place, day)
+        out[key] = day
     return out
 
 
@@ -76,9 +94,10 @@ class Limbs:
         low = min((int(s[0]) for s in spans), default=2000)
         high = max((int(s[-1]) for s in spans), default=2000)
         years = np.arange(low, high + 1)
-        shift, sd = np.zeros((years.size, 2)), np.full((years.size, 2), 8.0)
+        unseen = _YEAR_SD_DAYS if pooled.key.size else _UNKNOWN_SD_DAYS
+        shift, sd = np.zeros((years.size, 2)), np.full((years.size, 2), unseen)
         seen = np.zeros(years.size, bool)
-        if pooled.years.size:
+        if pooled.key.size:
             at = pooled.years - low
             shift[at], sd[at] = pooled.year_shift, pooled.year_sd
             seen[at[np.unique(pooled.key[:, 1])]] = True
@@ -87,14 +106,6 @@ class Limbs:
             known = np.where(seen[:, None] & (sd < 4.0), pooled.landscape[_LIMBS] + shift, np.nan)
             days, miss = warmth_dates(warmth, years, known)
             at = warmth.years - low
-            if not np.isfinite(known).any():  # nothing else tells the landscape's own dates
-                pooled.landscape[_LIMBS] = np.where(
-                    np.isfinite(days).any(axis=0),
-                    np.nanmedian(np.where(np.isfinite(days), days, np.nan), axis=0)
-                    if np.isfinite(days).any()
-                    else pooled.landscape[_LIMBS],
-                    pooled.landscape[_LIMBS],
-                )
             depart = days - pooled.landscape[_LIMBS]
             ok = np.isfinite(depart)
             weight = np.where(ok, 1.0 / miss**2, 0.0)
@@ -115,12 +126,13 @@ def _knots(parameters: np.ndarray) -> np.ndarray:
     return days
 
 
-def _apply_fixed(days: np.ndarray, fixed: dict[str, float]) -> np.ndarray:
-    """Put fixed dates in; a limb with one fixed end keeps its length; nothing else may pass a fixed date."""
+def _apply_fixed(days: np.ndarray, fixed: dict[str, np.ndarray]) -> np.ndarray:
+    """Put fixed days in, each shape (n,); a limb with one fixed end keeps its length; dates stay in order."""
     days = days.copy()
     for first, (start, end) in ((0, ("green_up", "leaf_on")), (3, ("leaf_fall", "leaf_off"))):
         if start in fixed and end in fixed:
-            days[:, first : first + 3] = fixed[start], 0.5 * (fixed[start] + fixed[end]), fixed[end]
+            middle = 0.5 * (fixed[start] + fixed[end])
+            days[:, first : first + 3] = np.column_stack([fixed[start], middle, fixed[end]])
         elif start in fixed:
             days[:, first : first + 3] += (fixed[start] - days[:, first])[:, None]
         elif end in fixed:
@@ -129,7 +141,7 @@ def _apply_fixed(days: np.ndarray, fixed: dict[str, float]) -> np.ndarray:
 
 
 def build_seasons(
-    views: Views, cover: np.ndarray, kinds: dict[int, tuple[Pooled, Limbs]], fixed: dict[str, float]
+    views: Views, cover: np.ndarray, kinds: dict[int, tuple[Pooled, Limbs]], fixed: dict[str, str]
 ) -> tuple[pd.DataFrame, pd.DataFrame]:
     """Build the tables of leaf dates of wetlands and of the landscape.
 
@@ -162,7 +174,8 @@ def build_seasons(
     seasons["n_views"] = count.ravel()
     common = np.tile(pooled.landscape, (span, 1))
     common[:, _LIMBS] += limbs.shift
-    common_sd = np.sqrt(limbs.sd**2 + pooled.spread[_LIMBS] ** 2 + _conversion_sd(common) ** 2)
+    between = pooled.spread[_LIMBS] if pooled.key.size else _BETWEEN_SD_DAYS
+    common_sd = np.sqrt(limbs.sd**2 + between**2 + _conversion_sd(common) ** 2)
     table = (np.full(span, "", object), limbs.years, np.full(span, DECIDUOUS))
     landscape = _table(table, _knots(common), common_sd, limbs.told_by, fixed, views.offset_days)
     landscape["n_views"] = count[cover == DECIDUOUS].sum(axis=0)
@@ -209,14 +222,17 @@ def _table(
     days: np.ndarray,
     sd: np.ndarray,
     source: np.ndarray,
-    fixed: dict[str, float],
+    fixed: dict[str, str],
     offset_days: int,
 ) -> pd.DataFrame:
     names, years, cover = who
     evergreen = cover == EVERGREEN
     source = source.astype(object).copy()
     if fixed:
-        days, source = _apply_fixed(days, fixed), np.full(source.shape, "fixed", object)
+        days, source = (
+            _apply_fixed(days, _fixed_days(fixed, years, offset_days)),
+            np.full(source.shape, "fixed", object),
+        )
         sd = sd.copy()
         for limb, keys in enumerate((("green_up", "leaf_on"), ("leaf_fall", "leaf_off"))):
             if any(k in fixed for k in keys):
