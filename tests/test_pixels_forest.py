@@ -2,7 +2,11 @@
 
 from __future__ import annotations
 
+import os
+import subprocess
+import sys
 import warnings
+from pathlib import Path
 
 import lightgbm as lgb
 import numpy as np
@@ -205,3 +209,21 @@ def test_joint_forest_refuses_other_features(forest: tuple) -> None:
     x, y = table(np.random.default_rng(0), 200, 3)
     with pytest.raises(InputError, match=r"forests with \[6, 3\] features"):
         JointForest([forest[1], FastForest.from_booster(train(x, y, 2))])
+
+
+def test_processor_without_wide_registers_gives_the_same(forest: tuple, tmp_path: Path) -> None:
+    """Compiled for a plain processor, in a process of its own: the same bits."""
+    booster, quick, x = forest
+    booster.save_model(tmp_path / "model.txt")
+    np.save(tmp_path / "x.npy", x)
+    code = (
+        "import sys, numpy as np, lightgbm as lgb\n"
+        "from inundate.pixels.forest import FastForest\n"
+        "from inundate.pixels.lanes import WIDE\n"
+        "assert not WIDE\n"
+        "quick = FastForest.from_booster(lgb.Booster(model_file=sys.argv[1] + '/model.txt'))\n"
+        "np.save(sys.argv[1] + '/out.npy', quick.predict_raw(np.load(sys.argv[1] + '/x.npy')))\n"
+    )
+    plain = {**os.environ, "NUMBA_CPU_NAME": "generic", "NUMBA_CACHE_DIR": str(tmp_path)}
+    subprocess.run([sys.executable, "-c", code, str(tmp_path)], env=plain, check=True)
+    np.testing.assert_array_equal(np.load(tmp_path / "out.npy"), quick.predict_raw(x))
