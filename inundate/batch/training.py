@@ -50,8 +50,9 @@ def train(
         }
         if ledger.why("models", "pixels", parts, archive.models / "water.txt") is not None:
             strata = _strata(examples.table, layout)
+            # one thread: the tables are small, and threads that wait for each other cost more than they give
             models = train_models(
-                examples, seed=settings.seed, num_threads=work.pipeline.compute.workers, strata=strata
+                examples, seed=settings.seed, num_threads=1, strata=strata
             )
             with replacing_folder(archive.models) as scratch:
                 models.classifier.save(scratch)
