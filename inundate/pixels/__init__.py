@@ -6,19 +6,11 @@ Arrays and tables in and out, no files but the model folder (LightGBM text and a
 """
 
 from inundate.pixels.classifier import WaterClassifier
-from inundate.pixels.examples import (
-    ExampleSet,
-    ViewState,
-    check_labels,
-    join_starter,
-    label_pixels,
-    make_examples,
-    match_scenes,
-    starter_examples,
-)
-from inundate.pixels.features import FEATURES, features
+from inundate.pixels.examples import ExampleSet, ViewState, join_starter, make_examples, starter_examples
+from inundate.pixels.features import FEATURES, features, scene_context
 from inundate.pixels.forest import FastForest, ForestFallbackWarning, JointForest
 from inundate.pixels.fraction import FractionModel
+from inundate.pixels.labels import check_labels, label_pixels, match_scenes
 from inundate.pixels.mixing import MixOptions, mix_examples
 from inundate.pixels.training import PixelModels, train_models
 
@@ -40,6 +32,7 @@ __all__ = [
     "make_examples",
     "match_scenes",
     "mix_examples",
+    "scene_context",
     "starter_examples",
     "train_models",
 ]

@@ -5,11 +5,18 @@ from __future__ import annotations
 import numpy as np
 from numba import njit
 
-from inundate.common.codes import BAND_ROLES
+from inundate.common.codes import BAND_ROLES, ViewCode
 from inundate.common.errors import InputError
 
 INDEX_NAMES = ("ndvi", "ndwi", "mndwi", "ndmi", "awei_nsh", "awei_sh")
-FEATURES: tuple[str, ...] = (*BAND_ROLES, *INDEX_NAMES, "leaf_share", "sun_elevation_deg")
+CONTEXT_ROLES = ("blue", "green", "red", "nir", "swir16", "swir22")
+FEATURES: tuple[str, ...] = (
+    *BAND_ROLES,
+    *INDEX_NAMES,
+    "leaf_share",
+    "sun_elevation_deg",
+    *(f"{role}_to_ground" for role in CONTEXT_ROLES),
+)
 """Names of the columns of :func:`features`, in order."""
 
 RATIO_FLOOR = 1e-4
@@ -18,6 +25,8 @@ RATIO_FLOOR = 1e-4
 _N_BANDS = len(BAND_ROLES)
 _BLUE, _GREEN, _RED = (BAND_ROLES.index(role) for role in ("blue", "green", "red"))
 _NIR, _NIR08, _SWIR16, _SWIR22 = (BAND_ROLES.index(role) for role in ("nir", "nir08", "swir16", "swir22"))
+_CONTEXT = np.array([BAND_ROLES.index(role) for role in CONTEXT_ROLES], dtype=np.int64)
+_LOG_LIMIT = np.float32(4.0)
 _FLOOR = np.float32(RATIO_FLOOR)
 _NAN = np.float32(np.nan)
 
@@ -30,7 +39,9 @@ def _ratio(a: np.float32, b: np.float32) -> np.float32:
 
 
 @njit(cache=True, nogil=True)
-def _fill(values: np.ndarray, place: np.ndarray, leaf: np.ndarray, sun: np.ndarray, out: np.ndarray) -> None:
+def _fill(
+    values: np.ndarray, place: np.ndarray, leaf: np.ndarray, sun: np.ndarray, ground: np.ndarray, out: np.ndarray
+) -> None:
     blue_i, green_i, red_i = place[_BLUE], place[_GREEN], place[_RED]
     s1_i, s2_i = place[_SWIR16], place[_SWIR22]
     nan = _NAN
@@ -54,6 +65,16 @@ def _fill(values: np.ndarray, place: np.ndarray, leaf: np.ndarray, sun: np.ndarr
         out[i, k + 5] = blue + 2.5 * green - 1.5 * (nir + s1) - 0.25 * s2
         out[i, k + 6] = leaf[i]
         out[i, k + 7] = sun[i]
+        column = i if ground.shape[1] > 1 else 0
+        for j in range(_CONTEXT.size):
+            base = ground[_CONTEXT[j], column]
+            here = out[i, _CONTEXT[j]]
+            if np.isnan(base) or np.isnan(here):
+                out[i, k + 8 + j] = nan
+                continue
+            top = _FLOOR if here < _FLOOR else here
+            low = _FLOOR if base < _FLOOR else base
+            out[i, k + 8 + j] = min(max(np.log(top / low), -_LOG_LIMIT), _LOG_LIMIT)
 
 
 def features(
@@ -61,6 +82,7 @@ def features(
     bands: tuple[str, ...],
     leaf_share: np.ndarray | float,
     sun_elevation_deg: np.ndarray | float,
+    context: np.ndarray | None = None,
 ) -> np.ndarray:
     """Return the features of pixels.
 
@@ -75,6 +97,10 @@ def features(
         0 bare .. 1 full leaf; NaN where unknown.
     sun_elevation_deg : float or ndarray, shape (pixel,)
         Elevation of the sun above the horizon, degrees; NaN where unknown.
+    context : ndarray, shape (10,) or (10, pixel), optional
+        Reflectance of the scene's dry ground in each of ``BAND_ROLES``, from :func:`scene_context`; unknown where not
+        given. Low sun, wet weather, haze and gain change a scene as a whole: a pixel is compared with its own scene's
+        ground (last columns, natural logarithm of the ratio).
 
     Returns
     -------
@@ -114,8 +140,56 @@ def features(
     leaf = _per_pixel(leaf_share, n, "leaf_share")
     sun = _per_pixel(sun_elevation_deg, n, "sun_elevation_deg")
     out = np.empty((n, len(FEATURES)), dtype=np.float32)
-    _fill(values, place, leaf, sun, out)
+    _fill(values, place, leaf, sun, _ground(context, n), out)
     return out
+
+
+def scene_context(
+    reflectance: np.ndarray, bands: tuple[str, ...], code: np.ndarray, ground: np.ndarray, *, least: int = 50
+) -> np.ndarray:
+    """Return the reflectance of a scene's dry ground, for :func:`features`.
+
+    Parameters
+    ----------
+    reflectance : ndarray, shape (band, pixel)
+        Site pixels of one scene.
+    bands : tuple of str, length band
+    code : ndarray of uint8, shape (pixel,)
+        View codes.
+    ground : ndarray of bool, shape (pixel,)
+        Pixels that lie outside every wetland.
+    least : int
+        Fewer clear ground pixels than this tell nothing (common practice, no source).
+
+    Returns
+    -------
+    ndarray of float32, shape (10,)
+        Median of the clear ground pixels in each of ``BAND_ROLES``; NaN where unknown (``nir`` falls back on ``nir08``).
+    """
+    out = np.full(_N_BANDS, np.nan, dtype=np.float32)
+    usable = np.flatnonzero(np.asarray(ground, bool) & (np.asarray(code) == ViewCode.CLEAR))
+    if usable.size < least:
+        return out
+    for role, values in zip(bands, np.asarray(reflectance)[:, usable], strict=True):
+        known = values[np.isfinite(values)]
+        if known.size >= least:
+            out[BAND_ROLES.index(role)] = np.median(known)
+    if np.isnan(out[_NIR]):
+        out[_NIR] = out[_NIR08]
+    return out
+
+
+def _ground(context: np.ndarray | None, n: int) -> np.ndarray:
+    if context is None:
+        return np.full((_N_BANDS, 1), np.nan, dtype=np.float32)
+    given = np.asarray(context, dtype=np.float32)
+    given = given[:, None] if given.ndim == 1 else given
+    if given.ndim != 2 or given.shape[0] != _N_BANDS or given.shape[1] not in {1, n}:
+        message = (
+            f"context: shape {np.shape(context)} for {n} pixels; give (10,) or (10, pixel) in the order of BAND_ROLES"
+        )
+        raise InputError(message)
+    return np.ascontiguousarray(given)
 
 
 def band_places(bands: tuple[str, ...]) -> np.ndarray:

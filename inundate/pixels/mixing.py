@@ -140,6 +140,6 @@ def mix_examples(
     table["partner_id"] = examples.table["wetland_id"].to_numpy()[two]
     table["source"] = "mixed"
     joined = pd.concat([base.table, table], ignore_index=True)
-    return ExampleSet(
-        joined, np.concatenate([base.reflectance, values.astype(np.float32)], axis=1), examples.notes, examples.refused
-    )
+    reflectance = np.concatenate([base.reflectance, values.astype(np.float32)], axis=1)
+    context = np.concatenate([base.context, examples.context[:, one]], axis=1)
+    return ExampleSet(joined, reflectance, context, examples.notes, examples.refused)

@@ -17,7 +17,15 @@ from inundate.common.codes import BAND_ROLES, ViewCode
 from inundate.common.site import Site, make_site
 from inundate.extent import pixel_weights
 from inundate.leaves import LeafCalendar
-from inundate.pixels import ExampleSet, ViewState, check_labels, label_pixels, make_examples, match_scenes
+from inundate.pixels import (
+    ExampleSet,
+    ViewState,
+    check_labels,
+    label_pixels,
+    make_examples,
+    match_scenes,
+    scene_context,
+)
 from inundate.scenes import Reference, apply_gain, apply_shift, area_grid, load_profile, open_catalog, read_view
 
 MARGIN_PX = 2
@@ -42,6 +50,7 @@ class World:
     state: np.ndarray
     examples: ExampleSet
     label_truth: pd.DataFrame
+    context: np.ndarray  # (scene, band)
     cells: pd.DataFrame | None = None
 
 
@@ -57,12 +66,17 @@ def load_world(folder: Path, *, register: bool = True, normalise: bool = False, 
     labels = gpd.read_file(inputs / "labels.gpkg")
     placed, _ = label_pixels(gpd.GeoDataFrame(check_labels(labels)), grid)
     scenes = pd.DataFrame(
-        {"scene_id": [s.scene_id for s in catalog.scenes], "datetime": [s.datetime for s in catalog.scenes],
-         "sun": [s.sun_elevation_deg for s in catalog.scenes]}
+        {
+            "scene_id": [s.scene_id for s in catalog.scenes],
+            "datetime": [s.datetime for s in catalog.scenes],
+            "sun": [s.sun_elevation_deg for s in catalog.scenes],
+        }
     )
     placed, _ = match_scenes(placed, scenes)
     core = make_site(grid, weights["row"].to_numpy(), weights["col"].to_numpy(), margin=MARGIN_PX)
-    site = make_site(grid, np.concatenate([core.rows, placed["grid_row"]]), np.concatenate([core.cols, placed["grid_col"]]))
+    site = make_site(
+        grid, np.concatenate([core.rows, placed["grid_row"]]), np.concatenate([core.cols, placed["grid_col"]])
+    )
     name = f"{folder.name}_{int(register)}{int(normalise)}.npz"
     if cache is not None and (cache / name).exists():
         stacks = dict(np.load(cache / name))
@@ -73,13 +87,33 @@ def load_world(folder: Path, *, register: bool = True, normalise: bool = False, 
     owner, inside = _owners(site, weights, shapes)
     share, state = _leaves(stacks, scenes, shapes, owner, inside)
     wetlands = shapes[["wetland_id", "area_max_m2"]].assign(
-        cover=pd.read_parquet(folder / "truth" / "wetlands.parquet").set_index("wetland_id")["cover"].reindex(shapes["wetland_id"]).to_numpy()
+        cover=pd.read_parquet(folder / "truth" / "wetlands.parquet")
+        .set_index("wetland_id")["cover"]
+        .reindex(shapes["wetland_id"])
+        .to_numpy()
     )
-    examples = _examples(placed, scenes, stacks, site, owner, share, state)
+    ground = inside == 0
+    context = np.array(
+        [scene_context(r, BAND_ROLES, c, ground) for r, c in zip(stacks["reflectance"], stacks["code"], strict=True)]
+    )
+    examples = _examples(placed, scenes, stacks, site, (share, state, context))
     truth = pd.read_parquet(folder / "truth" / "labels.parquet")
     return World(
-        site, scenes, wetlands, stacks["reflectance"], stacks["code"], stacks["water"], stacks["seen"],
-        stacks["true_code"], owner, inside, share, state, examples, truth,
+        site,
+        scenes,
+        wetlands,
+        stacks["reflectance"],
+        stacks["code"],
+        stacks["water"],
+        stacks["seen"],
+        stacks["true_code"],
+        owner,
+        inside,
+        share,
+        state,
+        examples,
+        truth,
+        context,
     )
 
 
@@ -93,8 +127,11 @@ def _read_all(scenes, profile, grid, site, truth, register, normalise):
         reference = Reference.from_views((read_view(s, profile, grid, whole) for s in scenes), groups=month)
     n, m = len(scenes), site.size
     out = {
-        "reflectance": np.full((n, len(BAND_ROLES), m), np.nan, "f4"), "code": np.full((n, m), 255, "u1"),
-        "water": np.full((n, m), 255, "u1"), "seen": np.full((n, m), 255, "u1"), "true_code": np.full((n, m), 255, "u1"),
+        "reflectance": np.full((n, len(BAND_ROLES), m), np.nan, "f4"),
+        "code": np.full((n, m), 255, "u1"),
+        "water": np.full((n, m), 255, "u1"),
+        "seen": np.full((n, m), 255, "u1"),
+        "true_code": np.full((n, m), 255, "u1"),
         "shift": np.full((n, 2), np.nan),
     }
     for i, scene in enumerate(scenes):
@@ -151,10 +188,11 @@ def _leaves(stacks, scenes, shapes, owner, inside):
     return share.reshape(n, m)[:, owner].astype("f4"), state.reshape(n, m)[:, owner].astype("i1")
 
 
-def _examples(placed, scenes, stacks, site, owner, share, state):
+def _examples(placed, scenes, stacks, site, views):
+    share, state, context = views
     i = pd.Index(scenes["scene_id"]).get_indexer(placed["scene_id"])
     p = site.positions(placed["grid_row"].to_numpy(), placed["grid_col"].to_numpy())
     values = stacks["reflectance"][i, :, p].T
-    view = ViewState(share[i, p], state[i, p], scenes["sun"].to_numpy("f4")[i])
+    view = ViewState(share[i, p], state[i, p], scenes["sun"].to_numpy("f4")[i], context[i].T)
     clear = stacks["code"][i, p] == ViewCode.CLEAR
     return make_examples(placed, values, BAND_ROLES, view, clear=clear, starter="never")
