@@ -112,6 +112,7 @@ def read_new(
         archive.out,
         context=registrar.context,
         reference=registrar.reference,
+        detail=registrar.detail,
         normalise=work.pipeline.extent.normalisation,
         shift_limit_px=work.pipeline.extent.shift_limit_px,
     )

@@ -16,7 +16,7 @@ from inundate.common.site import Site
 if TYPE_CHECKING:
     from inundate.scenes import Scene, SensorProfile, View
 
-SHIFT_MARGIN_PX = 4
+MARGIN_PX = 6  # pixels around windows that shifting and lending detail need
 
 
 @dataclass(frozen=True, slots=True)
@@ -33,6 +33,8 @@ class ReadPlan:
         Extra windows for co-registration; empty without.
     reference : scenes.Reference or None
         What scenes are registered against.
+    detail : scenes.Detail or None
+        Lends the fine bands' detail to coarse ones.
     normalise : bool
         Bring scenes to the reference's gain too.
     shift_limit_px : float
@@ -43,6 +45,7 @@ class ReadPlan:
     out: Path
     context: tuple[Window, ...] = ()
     reference: Any = None
+    detail: Any = None
     normalise: bool = False
     shift_limit_px: float = 2.0
 
@@ -110,13 +113,13 @@ def read_scene(job: ReadJob) -> dict[str, Any]:
             detail["gain"] = gain.as_dict()
     if job.want_view and view is not None:
         kept = type(view)(view.scene_id, view.bands, view.blocks[: len(own)])
-        kept = _settled(kept, shift, gain)
+        kept = _settled(kept, plan.detail, shift, gain)
         reflectance, code = _gather(plan.site, kept)
         detail["clear"] = float(np.mean(code == ViewCode.CLEAR))
         detail["bytes"] = write_view(archive.view(scene.scene_id), kept.bands, reflectance, code)
     if job.label_site is not None:
         windows = grown(job.label_site, plan.reference is not None)
-        under = _settled(read_view(scene, plan.profile, job.label_site.grid, windows), shift, gain)
+        under = _settled(read_view(scene, plan.profile, job.label_site.grid, windows), plan.detail, shift, gain)
         reflectance, code = _gather(job.label_site, under)
         write_view(archive.sample(scene.scene_id), under.bands, reflectance, code)
     return detail
@@ -124,14 +127,16 @@ def read_scene(job: ReadJob) -> dict[str, Any]:
 
 def grown(site: Site, shifting: bool) -> tuple[Window, ...]:
     """Return a site's windows, with a margin where pixels will be shifted."""
-    margin = SHIFT_MARGIN_PX if shifting else 0
+    margin = MARGIN_PX if shifting else 0
     return tuple(w.grow(margin, site.grid.height, site.grid.width) for w in site.windows)
 
 
-def _settled(view: View, shift: Any, gain: Any) -> View:
-    """Return the view at its place and level."""
-    from inundate.scenes import apply_gain, apply_shift
+def _settled(view: View, detail: Any, shift: Any, gain: Any) -> View:
+    """Return the view sharp, at its level and place."""
+    from inundate.scenes import add_detail, apply_gain, apply_shift
 
+    if detail is not None:
+        view = add_detail(view, detail)
     if gain is not None:
         view = apply_gain(view, gain)
     return view if shift is None else apply_shift(view, shift)

@@ -25,11 +25,15 @@ REGROWTH = 3  # the reference is built again when the archive holds this many ti
 
 @dataclass(frozen=True, slots=True)
 class Registrar:
-    """The reference (None without co-registration), its context windows and its fingerprint."""
+    """The reference (None without co-registration), its context windows and its fingerprint.
+
+    ``detail`` (None without) lends the fine bands' detail to coarser ones.
+    """
 
     reference: Any = None
     context: tuple[Window, ...] = ()
     mark: str = "none"
+    detail: Any = None
 
 
 @dataclass(frozen=True, slots=True)
@@ -51,7 +55,7 @@ def read_context(job: ContextJob) -> View:
 
 def make_registrar(work: Work, inputs: Inputs, layout: Layout, scenes: list[Scene]) -> Registrar:
     """Load the area's reference, or build it where there is none, its scenes changed, or the archive has outgrown it."""
-    from inundate.scenes import Reference, ShiftOptions, context_windows
+    from inundate.scenes import Detail, Reference, ShiftOptions, context_windows
     from inundate.scenes import fingerprint as scene_mark
 
     if not work.pipeline.extent.co_registration:
@@ -77,7 +81,8 @@ def make_registrar(work: Work, inputs: Inputs, layout: Layout, scenes: list[Scen
             if unit.state == "set_aside":
                 return Registrar()
             with np.load(path, allow_pickle=False) as arrays:
-                return Registrar(Reference.from_arrays(arrays), context_windows(layout.grid), unit.fingerprint)
+                detail = Detail.from_arrays(arrays) if "slopes" in arrays else None
+                return Registrar(Reference.from_arrays(arrays), context_windows(layout.grid), unit.fingerprint, detail)
     windows = context_windows(layout.grid)
     chosen = choose_scenes(scenes)
     with work.progress.step("co-registration reference", len(chosen)) as advance:
@@ -88,15 +93,41 @@ def make_registrar(work: Work, inputs: Inputs, layout: Layout, scenes: list[Scen
                 views.append(outcome.result)
             advance()
         views.sort(key=lambda v: v.scene_id)
-        reference = _build(work, views, ShiftOptions(limit_px=work.pipeline.extent.shift_limit_px))
+        reference, bare = _build(work, views, ShiftOptions(limit_px=work.pipeline.extent.shift_limit_px))
+        detail = lend_detail(chosen, bare, layout.grid)
         parts = {**fixed, "scenes": {v.scene_id: marks[v.scene_id] for v in views}}
         if reference is None:
             work.ledger.put("reference", "all", parts, state="set_aside", detail={"of": len(scenes)})
             return Registrar()
         with replacing(path) as scratch, scratch.open("wb") as stream:
-            np.savez_compressed(stream, **reference.to_arrays())
+            np.savez_compressed(stream, **reference.to_arrays(), **({} if detail is None else detail.to_arrays()))
         work.ledger.put("reference", "all", parts, detail={"of": len(scenes), "anchor_sd_px": reference.anchor_sd_px})
-    return Registrar(reference, windows, fingerprint(parts))
+    return Registrar(reference, windows, fingerprint(parts), detail)
+
+
+def lend_detail(scenes: list[Scene], bare: list[View], grid: Grid) -> Any:
+    """Fit how coarse bands follow fine ones, on leafless views; None where no band is coarser than the grid.
+
+    Parameters
+    ----------
+    scenes : list of Scene
+        The first that opens tells the bands' pixel sizes.
+    bare : list of View
+        Context windows of leafless views.
+    grid : Grid
+    """
+    from inundate.common.errors import InputError
+    from inundate.scenes import band_steps, fit_detail
+
+    steps = band_steps(scenes)
+    fine = tuple(b for b in ("blue", "green", "red", "nir") if steps.get(b, np.inf) <= 1.01 * grid.step)
+    coarse = tuple(b for b in ("swir16", "swir22") if 1.5 * grid.step <= steps.get(b, 0.0) <= 4.0 * grid.step)
+    if len(fine) < 3 or not coarse or not bare:
+        return None
+    try:
+        return fit_detail(bare, fine=fine, coarse=coarse)
+    except InputError:
+        return None
 
 
 def choose_scenes(scenes: list[Scene], most: int = MOST_VIEWS) -> list[Scene]:
@@ -111,7 +142,8 @@ def choose_scenes(scenes: list[Scene], most: int = MOST_VIEWS) -> list[Scene]:
     return sorted(out, key=lambda s: (s.datetime, s.scene_id))
 
 
-def _build(work: Work, views: list[View], options: Any) -> Any:
+def _build(work: Work, views: list[View], options: Any) -> tuple[Any, list[View]]:
+    """Return the reference (None where there cannot be one) and the leafless views."""
     from inundate.common.errors import InputError
     from inundate.scenes import Reference
 
@@ -120,15 +152,16 @@ def _build(work: Work, views: list[View], options: Any) -> Any:
         work.notes.append(
             f"co-registration: only {len(usable)} views are clear enough for a reference; scenes are used as they lie"
         )
-        return None
+        return None, []
     green = np.array([greenness(v) for v in usable])
     middle = np.nanmean(np.nanpercentile(green, [10, 90]))
     groups = {v.scene_id: "green" if g > middle else "bare" for v, g in zip(usable, green, strict=True)}
+    bare = [v for v in usable if groups[v.scene_id] == "bare"]
     try:
-        return Reference.from_views(usable, groups=groups, options=options)
+        return Reference.from_views(usable, groups=groups, options=options), bare
     except InputError as err:
         work.notes.append(f"co-registration: {err}; scenes are used as they lie")
-        return None
+        return None, bare
 
 
 def greenness(view: View) -> float:

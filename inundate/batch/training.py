@@ -122,7 +122,7 @@ def _nearest(table: pd.DataFrame, labels: LabelPixels, layout: Layout) -> np.nda
     """Return the row of the wetland whose leaf state serves each label: its own, else the nearest."""
     from scipy.spatial import cKDTree
 
-    own = pd.Index(layout.wetlands["wetland_id"]).get_indexer(table["wetland_id"])
+    own = pd.Index(layout.wetlands["wetland_id"]).get_indexer(table["wetland_id"].to_numpy())
     x, y = labels.grid.centres(table["grid_row"].to_numpy(), table["grid_col"].to_numpy())
     _, near = cKDTree(layout.wetlands[["x", "y"]].to_numpy()).query(np.column_stack([x, y]))
     return np.where(own >= 0, own, near)

@@ -4,7 +4,7 @@ Everything that opens scene files lives here. A profile says how a sensor's band
 catalog turns a STAC catalog or a table into scenes, ``read_view`` gives blocks on the area's grid.
 """
 
-from inundate.scenes.areas import area_grid, context_windows
+from inundate.scenes.areas import area_grid, band_steps, context_windows
 from inundate.scenes.catalog import Catalog, open_catalog, scene_times
 from inundate.scenes.detail import Detail, add_detail, fit_detail
 from inundate.scenes.elevation import read_elevation
@@ -42,6 +42,7 @@ __all__ = [
     "apply_gain",
     "apply_shift",
     "area_grid",
+    "band_steps",
     "context_windows",
     "fingerprint",
     "fit_detail",

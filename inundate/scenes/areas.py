@@ -118,3 +118,27 @@ def context_windows(grid: Grid, *, count: int = 9, side: int = 96) -> tuple[Wind
             col0 = round((j + 0.5) * grid.width / across - cols / 2)
             out.append(Window(row0, row0 + rows, col0, col0 + cols))
     return tuple(out)
+
+
+def band_steps(scenes: Sequence[Scene]) -> dict[str, float]:
+    """Return the pixel side of each band, metres (or the file's own unit), of the first scene whose files all open.
+
+    Parameters
+    ----------
+    scenes : sequence of Scene
+
+    Returns
+    -------
+    dict of role to float
+        Empty where none of the first few opens.
+    """
+    for scene in list(scenes)[:_OPEN_AT_MOST]:
+        steps = {}
+        try:
+            for role, source in scene.bands.items():
+                with rasterio.open(gdal_name(source.href)) as data:
+                    steps[role] = abs(float(data.transform.a))
+        except RasterioError:
+            continue
+        return steps
+    return {}
