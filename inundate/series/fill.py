@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
+from dataclasses import replace
 
 import numpy as np
 import pandas as pd
@@ -16,14 +17,14 @@ from inundate.series.calibrate import (
     stage_width,
 )
 from inundate.series.drivers import build_drivers
-from inundate.series.fitting import Setup, make_setup
+from inundate.series.fitting import Setup, make_setup, pool_items
 from inundate.series.heldout import Evidence, hide_blocks, hide_loggers, join
 from inundate.series.inputs import Events, FillOptions, SeriesInputs, build_panel
 from inundate.series.maps import LevelMaps, build_maps, slope_at
-from inundate.series.model import Fitted, Levels, available_kinds, blend, fit_kind, learn_kind, smooth_levels
+from inundate.series.model import Fitted, Levels, available_kinds, blend, fit_kind, learn_kind, left_out_scores, smooth_levels
 from inundate.series.result import Joint, SeriesResult, daily_table
 from inundate.series.smooth import area_moments
-from inundate.series.worth import leaf_off_factor, worth_of_views
+from inundate.series.worth import scene_factors, worth_of_views
 
 OBSERVED, STAGE, NEIGHBOURS, SEASON = range(4)
 
@@ -57,7 +58,7 @@ def fill_series(inputs: SeriesInputs, *, options: FillOptions | None = None, see
     setup = make_setup(panel, build_drivers(panel), options, seed)
     logged = {panel.ids[i] for i in np.flatnonzero(setup.drivers.fold > 0)}
     blind = _blind_maps(setup, inputs, logged)
-    views, begun = weigh_views(setup, blind)
+    setup, views, begun = weigh_views(setup, blind)
     fits = [
         fit_kind(setup, k, views, panel.stage, b) for k, b in zip(available_kinds(setup), begun, strict=True)
     ]
@@ -89,22 +90,29 @@ def _blind_maps(setup: Setup, inputs: SeriesInputs, logged: set[str]) -> LevelMa
     return build_maps(setup.panel.ids, setup.panel.area_max_m2, Others(), inputs.hypsometry)
 
 
-def weigh_views(setup: Setup, blind: LevelMaps) -> tuple[Events, list[Fitted | None]]:
-    """Return views with the errors they proved to have, and the predictor learned from leaf-off views on the way."""
-    panel = setup.panel
-    kinds = available_kinds(setup)
-    factor = np.where(panel.views.kind == 0, leaf_off_factor(setup, panel.views, panel.stage.certain()), 1.0)
-    views = panel.views.with_sd(panel.views.sd * factor)
+def weigh_views(setup: Setup, blind: LevelMaps) -> tuple[Setup, Events, list[Fitted | None]]:
+    """Return views with the errors they proved to have, and the first predictor learned from leaf-off views on the way.
+
+    The setup returned knows the share of stray views.
+    """
+    kinds, stage, views = available_kinds(setup), setup.panel.stage, setup.panel.views
     begun: list[Fitted | None] = [None] * len(kinds)
+    bare = views.keep(views.kind == 0)
     evidence = None
-    if setup.drivers.fold.any() and (views.kind != 0).any():
-        bare = views.keep(views.kind == 0)
-        first = learn_kind(setup, kinds[0], bare, panel.stage)
-        evidence = hide_loggers(setup, blind, [first], bare, panel.stage)
+    if bare.day.size:
+        first = learn_kind(setup, kinds[0], bare, stage)
+        scores = left_out_scores(setup, first, pool_items(setup), bare, stage)
+        factor, stray = scene_factors(bare, scores)
+        bare = bare.with_sd(bare.sd * factor)
+        sd = views.sd.copy()
+        sd[views.kind == 0] = bare.sd
+        views = views.with_sd(sd)
+        setup = replace(setup, options=replace(setup.options, outlier_share=stray))
         begun[0] = first
+        if setup.drivers.fold.any() and (views.kind != 0).any():
+            evidence = hide_loggers(setup, blind, [first], bare, stage)
     sd = views.sd * worth_of_views(views, evidence)
-    views = views.with_sd(sd)
-    return views.keep(np.isfinite(sd)), begun
+    return setup, views.with_sd(sd).keep(np.isfinite(sd)), begun
 
 
 def _stage_days(stage: Events, days: int) -> np.ndarray:

@@ -62,7 +62,7 @@ class FillOptions:
     score_wetlands : int
         Most wetlands whose blocks are hidden (a seeded sample beyond that).
     outlier_share : float
-        Share of views taken to be unrelated to the truth (common practice, no source).
+        Share of views taken to be unrelated to the truth, where too few views tell (common practice, no source).
     min_view_sd : float
         Least standard deviation of a view as a share of the largest extent.
     workers : int

@@ -23,7 +23,7 @@ from inundate.series.fitting import (
 )
 from inundate.series.inputs import Events
 from inundate.series.kalman import smooth_one
-from inundate.series.smooth import find_sites, smooth_members
+from inundate.series.smooth import find_sites, smooth_members, spread_shares
 
 # Candidate sizes (share of the full level) and memories (days) of the departure.
 DEPARTURE_SD = (0.02, 0.04, 0.07, 0.12, 0.2, 0.32)
@@ -48,11 +48,10 @@ class Fitted:
 
 @dataclass(frozen=True, slots=True)
 class Levels:
-    """Level of wetlands a day: ``mean`` and ``sd`` (wetland, day) in m; ``info`` is the variance of the day's events."""
+    """Level of wetlands a day: ``mean`` and ``sd`` (wetland, day), float32, m."""
 
     mean: np.ndarray
     sd: np.ndarray
-    info: np.ndarray
 
 
 def available_kinds(setup: Setup) -> tuple[str, ...]:
@@ -233,17 +232,63 @@ def smooth_levels(
 ) -> Levels:
     """Smooth levels of wetlands with one predictor; rows follow ``items``, as do those of ``posterior``."""
     days = len(setup.panel.dates)
-    out = Levels(*(np.empty((len(items), days), np.float32) for _ in range(3)))
+    out = Levels(np.empty((len(items), days), np.float32), np.empty((len(items), days), np.float32))
 
     def work(row: int) -> None:
         i = int(items[row])
-        paths = member_paths(setup, fit.kind, i, posterior.theta[row], posterior.cov[row])
-        sd, memory = float(fit.departure.sd[i] * setup.maps.full_m[i]), float(fit.departure.memory[i])
-        site, site_var = _sites(setup, i, paths, _events_of(views, stage, i), sd, memory)
-        phi, s0 = float(np.exp(-1 / memory)), sd * sd
-        mean, var = np.empty(days), np.empty(days)
-        smooth_members(paths, site, site_var, phi, s0 * (1 - phi * phi), s0, mean, var)
-        out.mean[row], out.sd[row], out.info[row] = mean, np.sqrt(np.maximum(var, 1e-8)), site_var
+        rows = _events_of(views, stage, i)
+        mean, var, _, _ = _smooth_one(setup, fit, i, (posterior.theta[row], posterior.cov[row]), rows)
+        out.mean[row], out.sd[row] = mean, np.sqrt(np.maximum(var, 1e-8))
+
+    in_threads(work, range(len(items)), setup.options.workers)
+    return out
+
+
+def _smooth_one(
+    setup: Setup, fit: Fitted, i: int, parameters: tuple[np.ndarray, np.ndarray], rows: Rows
+) -> tuple[np.ndarray, np.ndarray, np.ndarray, np.ndarray]:
+    """Return mean and variance of the level (day,), and the normal observations that stand for the events."""
+    paths = member_paths(setup, fit.kind, i, *parameters)
+    sd, memory = float(fit.departure.sd[i] * setup.maps.full_m[i]), float(fit.departure.memory[i])
+    site, site_var = _sites(setup, i, paths, rows, sd, memory)
+    phi, s0 = float(np.exp(-1 / memory)), sd * sd
+    mean, var = np.empty(paths.shape[1]), np.empty(paths.shape[1])
+    smooth_members(paths, site, site_var, phi, s0 * (1 - phi * phi), s0, mean, var)
+    return mean, var, site, site_var
+
+
+def left_out_scores(setup: Setup, fit: Fitted, items: np.ndarray, views: Events, stage: Events) -> np.ndarray:
+    """Return the standardised difference of each view from the level that all other events give.
+
+    Parameters
+    ----------
+    setup : Setup
+    fit : Fitted
+    items : ndarray of int
+        Wetlands whose views are scored.
+    views, stage : Events
+
+    Returns
+    -------
+    ndarray, shape (view,)
+        In units of the view's and the prediction's joint standard deviation; NaN for views of other wetlands.
+    """
+    out = np.full(views.day.size, np.nan)
+
+    def work(row: int) -> None:
+        i = int(items[row])
+        part = slice(views.start[i], views.start[i + 1])
+        day = views.day[part]
+        parameters = (fit.posterior.theta[i], fit.posterior.cov[i])
+        mean, var, site, site_var = _smooth_one(setup, fit, i, parameters, _events_of(views, stage, i))
+        seen = np.isfinite(site_var[day])
+        held = np.where(seen, site_var[day], 1.0)
+        left = np.where(seen, np.maximum(1 / var[day] - 1 / held, 1e-2 / var[day]), 1 / var[day])
+        middle = np.where(seen, (mean[day] / var[day] - site[day] / held) / left, mean[day])
+        share, spread = np.empty(day.size), np.empty(day.size)
+        table, full = setup.maps.share[i], float(setup.maps.full_m[i])
+        spread_shares(middle, np.sqrt(1 / left), table, full, share, spread)
+        out[part] = (views.value[part] - share) / np.sqrt(views.sd[part] ** 2 + spread**2)
 
     in_threads(work, range(len(items)), setup.options.workers)
     return out
@@ -264,17 +309,9 @@ def blend(levels: Sequence[Levels], weights: np.ndarray) -> Levels:
     if len(levels) == 1:
         return levels[0]
     w = weights.astype(np.float32)
-    mean, var, precision = (
-        np.zeros_like(levels[0].mean),
-        np.zeros_like(levels[0].mean),
-        np.zeros_like(levels[0].mean),
-    )
+    mean, var = np.zeros_like(levels[0].mean), np.zeros_like(levels[0].mean)
     for k, one in enumerate(levels):
-        share = w[:, k : k + 1]
-        mean += share * one.mean
-        precision += share / one.info
+        mean += w[:, k : k + 1] * one.mean
     for k, one in enumerate(levels):
         var += w[:, k : k + 1] * (one.sd**2 + (one.mean - mean) ** 2)
-    with np.errstate(divide="ignore"):
-        info = 1 / precision
-    return Levels(mean, np.sqrt(var), info)
+    return Levels(mean, np.sqrt(var))

@@ -211,3 +211,18 @@ def area_moments(
         low[t] = share_at(mean[t] - width * sd[t], table, full)
         high[t] = share_at(mean[t] + width * sd[t], table, full)
         share[t] = min(max(total, low[t]), high[t])
+
+
+@njit(cache=True, nogil=True)
+def spread_shares(
+    mean: np.ndarray, sd: np.ndarray, table: np.ndarray, full: float, share: np.ndarray, spread: np.ndarray
+) -> None:
+    """Fill mean and standard deviation of the share (event,) of normal levels."""
+    for n in range(mean.size):
+        first, second = 0.0, 0.0
+        for k in range(_X.size):
+            here = share_at(mean[n] + sd[n] * _X[k], table, full)
+            first += _W[k] * here
+            second += _W[k] * here * here
+        share[n] = first
+        spread[n] = math.sqrt(max(second - first * first, 0.0))

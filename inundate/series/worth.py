@@ -4,8 +4,7 @@ from __future__ import annotations
 
 import numpy as np
 
-from inundate.series.fitting import Setup
-from inundate.series.heldout import Evidence, relation_share
+from inundate.series.heldout import Evidence
 from inundate.series.inputs import Events
 
 # Bounds between sharp, middling and blunt views (claimed sd, share of the largest extent).
@@ -13,6 +12,7 @@ _SHARP, _BLUNT = 0.1, 0.2
 # Without loggers a view under leaves counts with this factor on its sd; and the pooled weight, in wetland-years, of a
 # coarser group beside a finer one. Common practice, no source.
 _UNPROVEN, _SHRINK = 3.0, 4.0
+_STRAY = 0.02
 _USELESS = 30.0
 # Days over which errors of views under leaves hang together: a canopy hides the same ground all season.
 _LEAFY_MEMORY_DAYS = 60.0
@@ -25,23 +25,37 @@ def pair_events(views: Events, stage: Events) -> tuple[np.ndarray, np.ndarray]:
     return np.intersect1d(key_v, key_s, return_indices=True)[1:]
 
 
-def leaf_off_factor(setup: Setup, views: Events, stage: Events) -> float:
-    """Return the factor (>= 1) on the sd of leaf-off views at which they scatter about loggers as they claim.
+def scene_factors(views: Events, scores: np.ndarray) -> tuple[np.ndarray, float]:
+    """Return factors (>= 1) on the sd of views by day, and the share of stray views, from left-out scores.
 
-    From the median of squared standardised differences, so strays do not count; 1 with fewer than 20 pairs.
+    A day's factor is the root mean square of its scores (strays cut at four times the usual), shrunk towards that of all
+    days: a scene with haze or a wrong gain errs in all wetlands at once.
+
+    Parameters
+    ----------
+    views : Events
+    scores : ndarray, shape (view,)
+        See :func:`inundate.series.model.left_out_scores`; NaN does not count.
+
+    Returns
+    -------
+    factor : ndarray, shape (view,)
+    stray : float
+        0.01 to 0.2.
     """
-    bare = views.keep(views.kind == 0)
-    share, sd = relation_share(setup, stage)
-    at_v, at_s = pair_events(bare, stage)
-    if at_v.size < 20:
-        return 1.0
-    square = (bare.value[at_v] - share[at_s]) ** 2
-    own, other = bare.sd[at_v] ** 2, sd[at_s] ** 2
-    for factor in np.arange(1.0, 4.0, 0.05):
-        # 0.4549 is the median of a chi-squared variable with one degree of freedom.
-        if np.median(square / (factor**2 * own + other)) <= 0.4549:
-            return float(factor)
-    return 4.0
+    known = np.isfinite(scores)
+    if known.sum() < 20:
+        return np.ones(views.day.size), _STRAY
+    # 0.4549 is the median of a chi-squared variable with one degree of freedom.
+    usual = max(float(np.median(scores[known] ** 2)) / 0.4549, 1.0)
+    square = np.minimum(scores[known] ** 2, 16 * usual)
+    days = int(views.day.max()) + 1
+    total = np.bincount(views.day[known], square, days)
+    count = np.bincount(views.day[known], minlength=days)
+    by_day = np.maximum((total + _SHRINK * usual) / (count + _SHRINK), 1.0)
+    factor = np.sqrt(by_day[views.day])
+    stray = float(np.clip(np.mean(np.abs(scores[known]) / factor[known] > 4), 0.01, 0.2))
+    return factor, stray
 
 
 def _gain(error: np.ndarray, news: np.ndarray, cluster: np.ndarray) -> tuple[float, float]:
@@ -69,7 +83,7 @@ def worth_of_views(views: Events, evidence: Evidence | None) -> np.ndarray:
     Returns
     -------
     ndarray, shape (view,)
-        1 in leaf-off (see :func:`leaf_off_factor`), infinite where views proved worth nothing.
+        1 in leaf-off (see :func:`scene_factors`), infinite where views proved worth nothing.
     """
     out = np.ones(views.day.size)
     leafy = views.kind != 0
