@@ -109,6 +109,7 @@ def read_new(
     plan = ReadPlan(
         inputs.profile,
         layout.site,
+        layout.dry_ground(),
         archive.out,
         context=registrar.context,
         reference=registrar.reference,
@@ -123,6 +124,7 @@ def read_new(
         "sensor": inputs.marks["scenes.sensor"],
         "reference": registrar.mark,
         "normalisation": work.pipeline.extent.normalisation,
+        "ground": array_mark(layout.dry_ground()),
         "code": code_mark("scenes"),
     }
     jobs, parts_of = [], []
@@ -136,6 +138,9 @@ def read_new(
             else array_mark(label_site.rows, label_site.cols, np.array([label_site.grid.west, label_site.grid.north])),
         }
         stale = ledger.why("view", scene.scene_id, mine, archive.view(scene.scene_id))
+        known = ledger.get("view", scene.scene_id)
+        if stale is None and known is not None and known.state == "set_aside":
+            continue  # tried again only when its files change
         bare = label_site is not None and ledger.why("sample", scene.scene_id, sample, archive.sample(scene.scene_id))
         if stale or bare:
             jobs.append(ReadJob(plan, scene, label_site if (bare or stale) else None, bool(stale)))
@@ -170,7 +175,8 @@ def _standing(work: Work, scenes: list[Scene]) -> list[ScenePlace]:
             work.refuse([Refusal("scene", scene.scene_id, reason)])
             continue
         sun = scene.sun_elevation_deg if np.isfinite(scene.sun_elevation_deg) else 40.0
-        places.append(ScenePlace(scene.scene_id, pd.Timestamp(scene.datetime), float(sun), unit.fingerprint))
+        ground = tuple(np.nan if v is None else float(v) for v in unit.detail.get("ground") or ())
+        places.append(ScenePlace(scene.scene_id, pd.Timestamp(scene.datetime), float(sun), unit.fingerprint, ground))
     if not places:
         message = f"{work.pipeline.input_files()['scenes.catalog']}: none of {len(scenes)} scenes could be read; the first says: {work.refused[-1].reason}"
         raise InputError(message)

@@ -49,6 +49,12 @@ class Layout:
     hypsometry: pd.DataFrame | None
     refused: list[Refusal]
 
+    def dry_ground(self) -> np.ndarray:
+        """Return a boolean array (pixel,): site pixels outside every wetland."""
+        dry = np.ones(self.site.size, bool)
+        dry[self.weights["pixel"].to_numpy()] = False
+        return dry
+
 
 def wetland_table(shapes: gpd.GeoDataFrame) -> pd.DataFrame:
     """Return the wetlands table (without pixels) of a polygon layer."""

@@ -33,6 +33,8 @@ class ScoreJob:
     owner : ndarray of int32, shape (pixel,)
         Wetland row of each site pixel.
     sun_elevation_deg : float
+    ground : tuple of float
+        Reflectance of the scene's dry ground, by ``BAND_ROLES``; empty where unknown.
     site : Site
     out : Path
         Output folder.
@@ -45,6 +47,7 @@ class ScoreJob:
     leaf_state: np.ndarray
     owner: np.ndarray
     sun_elevation_deg: float
+    ground: tuple[float, ...]
     site: Site
     out: Path
     model_mark: str
@@ -113,7 +116,8 @@ def score_scene(job: ScoreJob) -> dict[str, Any]:
         scorer = _scorer(archive.models, job.model_mark)
         owner = job.owner[seen]
         leaf = job.leaf_share[owner].astype(np.float32)
-        table = features(np.ascontiguousarray(reflectance[:, seen]), bands, leaf, job.sun_elevation_deg)
+        context = np.array(job.ground, np.float32) if job.ground else None
+        table = features(np.ascontiguousarray(reflectance[:, seen]), bands, leaf, job.sun_elevation_deg, context)
         ones = np.ones(seen.size, bool)
         for name, values in scorer.score(table, job.leaf_state[owner]).items():
             columns[name][seen] = percent(values, ones)

@@ -61,6 +61,7 @@ def map_new(work: Work, layout: Layout, places: list[ScenePlace], leaves: Leaves
                 state,
                 layout.owner,
                 place.sun_elevation_deg,
+                place.ground,
                 layout.site,
                 archive.out,
                 trained.mark,

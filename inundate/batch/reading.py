@@ -27,6 +27,8 @@ class ReadPlan:
     ----------
     profile : SensorProfile
     site : Site
+    ground : ndarray of bool, shape (pixel,)
+        Site pixels outside every wetland: the scene's dry ground.
     out : Path
         Output folder.
     context : tuple of Window
@@ -42,6 +44,7 @@ class ReadPlan:
 
     profile: SensorProfile
     site: Site
+    ground: np.ndarray
     out: Path
     context: tuple[Window, ...] = ()
     reference: Any = None
@@ -95,6 +98,7 @@ def read_scene(job: ReadJob) -> dict[str, Any]:
         When it lies further off than the limit.
     """
     from inundate.common.errors import InputError
+    from inundate.pixels import scene_context
     from inundate.scenes import read_view
 
     plan, archive, scene = job.plan, Archive(job.plan.out), job.scene
@@ -115,6 +119,8 @@ def read_scene(job: ReadJob) -> dict[str, Any]:
         kept = type(view)(view.scene_id, view.bands, view.blocks[: len(own)])
         kept = _settled(kept, plan.detail, shift, gain)
         reflectance, code = _gather(plan.site, kept)
+        context = scene_context(reflectance, kept.bands, code, plan.ground)
+        detail["ground"] = [float(v) for v in context]
         detail["clear"] = float(np.mean(code == ViewCode.CLEAR))
         detail["bytes"] = write_view(archive.view(scene.scene_id), kept.bands, reflectance, code)
     if job.label_site is not None:

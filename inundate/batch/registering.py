@@ -75,7 +75,8 @@ def make_registrar(work: Work, inputs: Inputs, layout: Layout, scenes: list[Scen
         "code": code_mark("scenes"),
     }
     unit = work.ledger.get("reference", "all")
-    if unit is not None and path.exists() and {k: unit.parts[k] for k in fixed} == fixed:
+    there = unit is not None and (unit.state == "set_aside" or path.exists())
+    if unit is not None and there and {k: unit.parts[k] for k in fixed} == fixed:
         used = unit.parts["scenes"]
         if all(marks.get(k) == v for k, v in used.items()) and len(scenes) < REGROWTH * unit.detail["of"]:
             if unit.state == "set_aside":

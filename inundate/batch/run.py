@@ -13,6 +13,7 @@ from inundate import __version__
 from inundate.batch.delivering import Findings, conclude, keep_archive_tables, write_tables
 from inundate.batch.field import stage_record
 from inundate.batch.imagery import follow_leaves, lay_out, place_labels, read_new
+from inundate.batch.ledger import fingerprint
 from inundate.batch.observing import map_new, observe
 from inundate.batch.pipeline import Pipeline, load_pipeline
 from inundate.batch.progress import Progress
@@ -22,6 +23,7 @@ from inundate.batch.work import Inputs, Work, code_mark, open_inputs, open_work
 from inundate.common.errors import InputError
 from inundate.common.writing import plain, replacing_folder, write_json
 
+SUMMARY = ("month", "products", "wetlands", "days", "changed_days", "headline", "notes", "refused")
 ALL_PARTS = ("scenes", "leaves", "pixels", "extent", "stage", "relation", "series", "skill", "products", "batch")
 
 
@@ -53,15 +55,36 @@ def run_month(file: str | Path, *, month: str | None, progress: Progress) -> dic
     with open_work(pipeline, progress) as work:
         inputs = open_inputs(work)
         parts = delivery_parts(pipeline, inputs, month)
-        known = work.ledger.get("delivery", month or "newest")
-        standing = known is not None and work.archive.product(known.detail["month"]) / "run.json"
-        if known is not None and standing and work.ledger.why("delivery", month or "newest", parts, standing) is None:
+        standing = standing_delivery(work, parts, month)
+        if standing is not None:
             progress.say("nothing new: the delivery stands as it is")
-            return {**known.detail["summary"], "done": "nothing new"}
+            return {**standing, "done": "nothing new"}
         found, layout = _findings(work, inputs, month)
-        summary = _deliver(work, inputs, layout, found)
+        summary = _deliver(work, inputs, layout, found, fingerprint(parts))
         work.ledger.put("delivery", month or "newest", parts, detail={"month": found.month, "summary": summary})
         return {**summary, "done": "delivered"}
+
+
+def standing_delivery(work: Work, parts: dict[str, Any], month: str | None) -> dict[str, Any] | None:
+    """Return the summary of the delivery that stands for exactly these parts; None where it is to be made.
+
+    Each delivery carries the fingerprint of what it was made from. One that took its name just before its run was
+    killed, so that the ledger does not know it yet, is found by that and entered, never made a second time: its table
+    of changes would else be told against itself.
+    """
+    name, mark = month or "newest", fingerprint(parts)
+    known = work.ledger.get("delivery", name)
+    months = [month] if month is not None else _delivered_months(work)[-1:]
+    months += [known.detail["month"]] if known is not None else []
+    for one in dict.fromkeys(months):
+        file = work.archive.product(str(one)) / "run.json"
+        told = json.loads(file.read_text(encoding="utf-8")) if file.exists() else {}
+        if told.get("made_from") == mark:
+            summary = {k: v for k, v in told.items() if k in SUMMARY}
+            if known is None or known.fingerprint != mark:
+                work.ledger.put("delivery", name, parts, detail={"month": one, "summary": summary})
+            return {**summary, "products": str(work.archive.product(str(one)))}
+    return None
 
 
 def train_only(file: str | Path, *, progress: Progress) -> dict[str, Any]:
@@ -91,6 +114,7 @@ def delivery_parts(pipeline: Pipeline, inputs: Inputs, month: str | None) -> dic
     from inundate.scenes import fingerprint as scene_mark
 
     return {
+        "month": month or "newest",
         "scenes": {s.scene_id: scene_mark(s) for s in _until(inputs, month)},
         "inputs": {**inputs.marks, **logger_marks(pipeline)},
         "settings": pipeline.model_dump(mode="json", exclude={"file", "compute"}),
@@ -126,7 +150,7 @@ def _findings(work: Work, inputs: Inputs, month: str | None) -> tuple[Findings, 
     return conclude(work, inputs, layout, leaves[0], (observed, stage), month), layout
 
 
-def _deliver(work: Work, inputs: Inputs, layout: Any, found: Findings) -> dict[str, Any]:
+def _deliver(work: Work, inputs: Inputs, layout: Any, found: Findings, made_from: str) -> dict[str, Any]:
     """Write the delivery aside, then give it its name."""
     from inundate.batch.reporting import write_skill_and_report
 
@@ -146,17 +170,21 @@ def _deliver(work: Work, inputs: Inputs, layout: Any, found: Findings) -> dict[s
                 "refused": [r.as_dict() for r in work.refused],
             }
         )
-        _write_run(work, inputs, found, folder, summary)
-    with work.progress.step("archive tables"):
-        keep_archive_tables(work, found)
+        with work.progress.step("archive tables"):
+            keep_archive_tables(work, found)
+        _write_run(work, inputs, found, folder, {**summary, "made_from": made_from})
     return summary
 
 
 def previous_delivery(work: Work, month: str) -> Path | None:
     """Return the folder that changes are told against: this month's standing delivery, else the newest earlier one."""
+    months = [m for m in _delivered_months(work) if m <= month]
+    return work.archive.product(months[-1]) if months else None
+
+
+def _delivered_months(work: Work) -> list[str]:
     root = work.archive.out / "products"
-    months = sorted(p.name for p in root.glob("????-??") if (p / "extent_daily.parquet").exists() and p.name <= month)
-    return root / months[-1] if months else None
+    return sorted(p.name for p in root.glob("????-??") if (p / "extent_daily.parquet").exists())
 
 
 def _write_run(work: Work, inputs: Inputs, found: Findings, folder: Path, summary: dict[str, Any]) -> None:

@@ -14,12 +14,16 @@ from inundate.common.codes import ViewCode
 
 @dataclass(frozen=True, slots=True)
 class ScenePlace:
-    """When and how a scene of the archive was taken, and the fingerprint it was read with."""
+    """When and how a scene of the archive was taken, and the fingerprint it was read with.
+
+    ``ground`` is the reflectance of its dry ground by ``BAND_ROLES`` (see pixels.scene_context), NaN where unknown.
+    """
 
     scene_id: str
     datetime: pd.Timestamp
     sun_elevation_deg: float
     mark: str
+    ground: tuple[float, ...] = ()
 
 
 def pixel_ndvi(bands: tuple[str, ...], reflectance: np.ndarray, code: np.ndarray) -> np.ndarray:

@@ -51,9 +51,7 @@ def train(
         if ledger.why("models", "pixels", parts, archive.models / "water.txt") is not None:
             strata = _strata(examples.table, layout)
             # one thread: the tables are small, and threads that wait for each other cost more than they give
-            models = train_models(
-                examples, seed=settings.seed, num_threads=1, strata=strata
-            )
+            models = train_models(examples, seed=settings.seed, num_threads=1, strata=strata)
             with replacing_folder(archive.models) as scratch:
                 models.classifier.save(scratch)
                 models.fraction.save(scratch)
@@ -111,18 +109,26 @@ def _examples(
         table,
         values,
         BAND_ROLES,
-        ViewState(share.astype(np.float32), state, sun.astype(np.float32)),
+        ViewState(share.astype(np.float32), state, sun.astype(np.float32), _grounds(table, places)),
         clear=clear,
         min_own=settings.minimum_examples,
         starter=settings.starter_examples,
     )
 
 
+def _grounds(table: pd.DataFrame, places: list[ScenePlace]) -> np.ndarray:
+    """Return the dry ground of each label's scene, (band role, row)."""
+    unknown = (np.nan,) * len(BAND_ROLES)
+    known = {p.scene_id: p.ground or unknown for p in places}
+    rows = [known[s] for s in table["scene_id"]]
+    return np.array(rows, np.float32).reshape(-1, len(BAND_ROLES)).T
+
+
 def _nearest(table: pd.DataFrame, labels: LabelPixels, layout: Layout) -> np.ndarray:
     """Return the row of the wetland whose leaf state serves each label: its own, else the nearest."""
     from scipy.spatial import cKDTree
 
-    own = pd.Index(layout.wetlands["wetland_id"]).get_indexer(table["wetland_id"].to_numpy())
+    own = pd.Index(layout.wetlands["wetland_id"]).get_indexer(pd.Index(table["wetland_id"]))
     x, y = labels.grid.centres(table["grid_row"].to_numpy(), table["grid_col"].to_numpy())
     _, near = cKDTree(layout.wetlands[["x", "y"]].to_numpy()).query(np.column_stack([x, y]))
     return np.where(own >= 0, own, near)

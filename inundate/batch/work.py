@@ -2,7 +2,9 @@
 
 from __future__ import annotations
 
+import errno
 import hashlib
+import shutil
 from collections.abc import Iterator
 from contextlib import contextmanager
 from dataclasses import dataclass, field
@@ -25,12 +27,15 @@ from inundate.batch.inputs import (
 from inundate.batch.ledger import Ledger, file_mark, fingerprint, hold
 from inundate.batch.pipeline import Pipeline
 from inundate.batch.progress import Progress
-from inundate.common.errors import InputError, Refusal
+from inundate.common.errors import InputError, InundateError, Refusal
 
 if TYPE_CHECKING:
     import geopandas as gpd
 
     from inundate.scenes import Catalog, SensorProfile
+
+
+FREE_BYTES = 256_000  # with less than this free, a failed write is put down to the full disk
 
 
 @lru_cache(maxsize=16)
@@ -103,8 +108,8 @@ def open_work(pipeline: Pipeline, progress: Progress) -> Iterator[Work]:
         ledger = Ledger(archive.folder / "ledger.sqlite")
         try:
             yield Work(pipeline, archive, ledger, progress)
-        except OSError as err:
-            if err.errno in (28, 122):
+        except Exception as err:
+            if is_full(err, archive.folder):
                 message = f"{pipeline.out}: no space left; free some and run again (what is finished is kept, nothing is half-written)"
                 raise InputError(message) from err
             raise
@@ -112,10 +117,32 @@ def open_work(pipeline: Pipeline, progress: Progress) -> Iterator[Work]:
             ledger.close()
 
 
+FULL_WORDS = ("no space left", "disk is full", "disk quota", "file too large")
+
+
+def is_full(error: BaseException, folder: Path) -> bool:
+    """Tell whether an error came of a full disk: by its number, its words, or by what the disk says.
+
+    Libraries underneath report a full disk each in their own way (some as a failed write without a reason), so the disk
+    itself is asked too.
+    """
+    link: BaseException | None = error
+    while link is not None:
+        if isinstance(link, InundateError):
+            return False
+        if getattr(link, "errno", None) in (errno.ENOSPC, errno.EDQUOT, errno.EFBIG):
+            return True
+        if any(words in str(link).lower() for words in FULL_WORDS):
+            return True
+        link = link.__cause__ or link.__context__
+    try:
+        return shutil.disk_usage(folder).free < FREE_BYTES
+    except OSError:
+        return False
+
+
 def sweep(archive: Archive) -> None:
     """Remove scratch files that a killed run left behind; put back a delivery that was being replaced."""
-    import shutil
-
     for folder in (archive.folder, archive.models, archive.out / "maps", archive.out / "products"):
         if not folder.is_dir():
             continue
