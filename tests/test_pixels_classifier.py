@@ -17,7 +17,7 @@ from inundate.pixels.scoring import clustered_rate
 SMALL = {"n_trees": 60, "num_threads": 1}
 
 
-@parametrize_with_checks([WaterClassifier(**SMALL), FractionModel(**SMALL)])
+@parametrize_with_checks([WaterClassifier(**SMALL)])
 def test_estimator_contract(estimator, check):
     check(estimator)
 
@@ -195,6 +195,8 @@ def test_bad_input_is_named():
         WaterClassifier().fit(X, np.zeros(60, int))
     with pytest.raises(InputError, match="wetland: shape"):
         WaterClassifier(**SMALL).fit(X, y, wetland=np.array(["a", "b"]))
+    with pytest.raises(InputError, match="1.5 is no water fraction"):
+        FractionModel(**SMALL).fit(X, np.where(y > 0, 1.5, 0.0))
     with pytest.raises(InputError, match="monotone: 'depth' is not a feature"):
         WaterClassifier(monotone={"depth": 1}, **SMALL).fit(X, y)
 

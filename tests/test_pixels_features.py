@@ -8,7 +8,7 @@ from hypothesis.extra import numpy as hnp
 
 from inundate.common.codes import BAND_ROLES
 from inundate.common.errors import InputError
-from inundate.pixels import FEATURES, features
+from inundate.pixels import FEATURES, features, scene_context
 
 COL = {name: i for i, name in enumerate(FEATURES)}
 
@@ -72,3 +72,30 @@ def test_bad_bands_are_named(bands, shape, words):
 def test_leaf_share_of_wrong_length_is_refused():
     with pytest.raises(InputError, match=r"leaf_share: shape \(2,\) for 3 pixels"):
         features(np.zeros((1, 3), "f4"), ("blue",), np.zeros(2), 30.0)
+
+
+def test_a_scene_wide_factor_leaves_the_comparison_with_the_ground():
+    rng = np.random.default_rng(1)
+    values, code = rng.uniform(0.02, 0.3, (10, 200)).astype("f4"), np.zeros(200, "u1")
+    code[:20] = 1
+    ground = np.arange(200) < 120
+    base = scene_context(values, BAND_ROLES, code, ground)
+    np.testing.assert_allclose(base, np.median(values[:, 20:120], axis=1), rtol=1e-6)
+    columns = [COL[name] for name in FEATURES if name.endswith("_to_ground")]
+    plain = features(values, BAND_ROLES, 0.0, 30.0, base)[:, columns]
+    dimmed = features(0.6 * values, BAND_ROLES, 0.0, 30.0, scene_context(0.6 * values, BAND_ROLES, code, ground))[
+        :, columns
+    ]
+    np.testing.assert_allclose(plain, dimmed, atol=1e-5)
+    np.testing.assert_allclose(plain[:, 0], np.log(values[0] / base[0]), atol=1e-5)
+
+
+def test_context_is_unknown_where_little_ground_is_clear_or_none_is_given():
+    values, code = np.full((10, 60), 0.1, "f4"), np.zeros(60, "u1")
+    code[:30] = 1
+    base = scene_context(values, BAND_ROLES, code, np.ones(60, bool))
+    assert np.isnan(base).all()
+    columns = [COL[name] for name in FEATURES if name.endswith("_to_ground")]
+    assert np.isnan(features(values, BAND_ROLES, 0.0, 30.0)[:, columns]).all()
+    with pytest.raises(InputError, match=r"context: shape \(3,\) for 60 pixels"):
+        features(values, BAND_ROLES, 0.0, 30.0, np.zeros(3))

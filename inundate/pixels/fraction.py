@@ -7,6 +7,7 @@ from typing import Any, cast
 
 import numpy as np
 import pandas as pd
+from scipy.special import expit
 from sklearn.base import BaseEstimator, RegressorMixin
 from sklearn.utils.validation import _check_sample_weight, check_is_fitted, validate_data
 
@@ -41,6 +42,11 @@ class FractionModel(RegressorMixin, BaseEstimator):
         Out of fold, weighted.
     oof_fraction_ : ndarray, shape (row,)
     card_ : dict
+
+    Notes
+    -----
+    Boosted trees with the cross-entropy of a fraction (a Bernoulli likelihood with fractional outcome: Papke & Wooldridge
+    1996, doi:10.1002/(SICI)1099-1255(199611)11:6<619::AID-JAE418>3.0.CO;2-1), so that predictions stay within 0..1.
     """
 
     def __init__(
@@ -49,7 +55,7 @@ class FractionModel(RegressorMixin, BaseEstimator):
         n_trees: int = 200,
         n_leaves: int = 16,
         learning_rate: float = 0.06,
-        min_weight: float = 20.0,
+        min_weight: float = 2.0,
         l2: float = 1.0,
         feature_share: float = 0.4,
         wetland_folds: int = 4,
@@ -96,9 +102,17 @@ class FractionModel(RegressorMixin, BaseEstimator):
         Returns
         -------
         FractionModel
+
+        Raises
+        ------
+        InputError
+            A fraction outside 0..1, or no example of weight above 0.
         """
         X, y = validate_data(self, X, y, dtype=np.float64, ensure_all_finite="allow-nan", y_numeric=True)
         y = np.asarray(y, np.float64)
+        if ((y < 0) | (y > 1)).any():
+            message = f"y: {y[(y < 0) | (y > 1)][0]:g} is no water fraction; give values from 0 to 1"
+            raise InputError(message)
         weight = _check_sample_weight(sample_weight, X, dtype=np.float64, ensure_non_negative=True)
         key = row_keys(X, y)
         group = key if wetland is None else np.asarray(wetland).astype(str)
@@ -129,7 +143,7 @@ class FractionModel(RegressorMixin, BaseEstimator):
         own: np.ndarray,
     ) -> None:
         options = BoostOptions(
-            "regression",
+            "cross_entropy",
             self.n_trees,
             self.n_leaves,
             self.learning_rate,
@@ -151,8 +165,9 @@ class FractionModel(RegressorMixin, BaseEstimator):
         self.n_trees_ = best or min(self.n_trees, 60)
         self.booster_ = train(X, y, weight, options, self.n_trees_)
         self._fast = FastForest.from_booster(self.booster_)
-        self._set_residuals(np.clip(raw, 0, 1), y, weight)
-        self._oof: np.ndarray = np.clip(raw, 0, 1)
+        predicted = expit(raw)
+        self._set_residuals(predicted, y, weight)
+        self._oof: np.ndarray = predicted
         self.card_ = self._card(y.size, losses)
 
     def _set_residuals(self, predicted: np.ndarray, y: np.ndarray, weight: np.ndarray) -> None:

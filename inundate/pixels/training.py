@@ -12,6 +12,10 @@ from inundate.pixels.examples import ExampleSet
 from inundate.pixels.fraction import FractionModel
 from inundate.pixels.mixing import MixOptions, mix_examples
 
+MIXED_SHARE = 0.25
+"""Share of the fraction model's weight that mixed examples have; about that of shore pixels in small wetlands (common
+practice, no source)."""
+
 
 @dataclass(frozen=True, slots=True)
 class PixelModels:
@@ -69,9 +73,13 @@ def train_models(
     trusted[classifier.doubtful_["row"].to_numpy(int)] = False
     mixed = mix_examples(examples, trusted, options=mix or MixOptions(seed=seed))
     starter = (mixed.table["source"] == STARTER).to_numpy()
+    made = (mixed.table["source"] == "mixed").to_numpy()
+    odds = MIXED_SHARE / (1 - MIXED_SHARE)
+    weight = np.where(made, odds * (~made).sum() / max(int(made.sum()), 1), 1.0)
     fraction = FractionModel(seed=seed, num_threads=num_threads).fit(
         mixed.X,
         mixed.table["fraction"].to_numpy(),
+        weight,
         wetland=mixed.table["wetland_id"].to_numpy(),
         date=mixed.table["date"].to_numpy(),
         scored=~starter,
