@@ -2,12 +2,14 @@
 
 from __future__ import annotations
 
+import ctypes
 import json
 import os
 import shutil
 import tempfile
 from collections.abc import Iterator
 from contextlib import contextmanager
+from functools import lru_cache
 from pathlib import Path
 
 import numpy as np
@@ -24,6 +26,7 @@ def replacing(path: Path) -> Iterator[Path]:
     try:
         yield scratch
         scratch.chmod(0o644)
+        _to_disk(scratch)
         scratch.replace(path)
     finally:
         scratch.unlink(missing_ok=True)
@@ -37,14 +40,43 @@ def replacing_folder(path: Path) -> Iterator[Path]:
     try:
         yield scratch
         scratch.chmod(0o755)
-        old = path.with_name(f".{path.name}.old")
-        shutil.rmtree(old, ignore_errors=True)
-        if path.exists():
+        for file in sorted(scratch.rglob("*")):
+            if file.is_file():
+                _to_disk(file)
+        if not path.exists():
+            scratch.replace(path)
+        elif not _exchange(scratch, path):
+            old = path.with_name(f".{path.name}.old")
+            shutil.rmtree(old, ignore_errors=True)
             path.replace(old)
-        scratch.replace(path)
-        shutil.rmtree(old, ignore_errors=True)
+            scratch.replace(path)
+            shutil.rmtree(old, ignore_errors=True)
     finally:
         shutil.rmtree(scratch, ignore_errors=True)
+
+
+def _to_disk(file: Path) -> None:
+    """Wait until a file's bytes are on the disk, so that a name never stands for less than its file (loss of power)."""
+    handle = os.open(file, os.O_RDONLY)
+    try:
+        os.fsync(handle)
+    finally:
+        os.close(handle)
+
+
+@lru_cache(maxsize=1)
+def _renamer() -> object | None:
+    library = ctypes.CDLL(None, use_errno=True)
+    return getattr(library, "renameat2", None)
+
+
+def _exchange(one: Path, other: Path) -> bool:
+    """Swap two names in one step where the system can (Linux ``renameat2`` with RENAME_EXCHANGE); False where not."""
+    rename = _renamer()
+    if rename is None:
+        return False
+    here, swap = -100, 2  # AT_FDCWD, RENAME_EXCHANGE in the Linux headers fcntl.h and fs.h
+    return bool(rename(here, os.fsencode(one), here, os.fsencode(other), ctypes.c_uint(swap)) == 0)  # type: ignore[operator]
 
 
 def write_text(path: Path, text: str) -> None:
