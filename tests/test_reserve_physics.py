@@ -221,3 +221,12 @@ def test_random_fields_are_standard(rows, cols, scale):
         assert field.dtype == np.float32
         assert np.isfinite(field).all()
         assert field.std() == pytest.approx(1.0, rel=1e-3)
+
+
+@pytest.mark.parametrize("kind", range(len(canopy.HERB_KINDS)))
+def test_herbs_grow_and_die_without_a_jump_at_new_year(kind):
+    """Leaf area (share of peak) stays within 0..1 and moves by less than 5 % from one winter day to the next."""
+    days = pd.date_range("2031-12-20", "2032-01-12")
+    share = np.array([canopy.herb_state(kind, d, 119.0) for d in days])
+    assert (np.abs(np.diff(share[:, 0])) < 0.05).all()
+    assert ((share >= 0) & (share <= 1)).all()

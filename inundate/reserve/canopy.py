@@ -113,7 +113,8 @@ def herb_state(kind: int, day: pd.Timestamp, up_doy: float) -> tuple[float, floa
         return float(0.05 + 0.95 * early * fade), float(0.1 + 0.9 * early * fade)
     if name == "emergent":
         late = 1 / (1 + np.exp(-(doy - up_doy - 25) / 10.0))
-        return float(0.06 + 0.94 * late * (0.4 + 0.6 * fade)), float(0.03 + 0.97 * late * fade)
+        lodged = 0.4 * np.exp(-max(doy - 285.0, 0.0) / 25.0)  # dead stems break down by the turn of the year
+        return float(0.06 + 0.94 * late * (fade + (1 - fade) * lodged)), float(0.03 + 0.97 * late * fade)
     if name == "meadow":
         mown = min(abs(doy - 172), abs(doy - 238))
         return float(0.35 + 0.65 * rise * fade * np.clip(mown / 25.0, 0.35, 1)), float(0.45 + 0.5 * rise * fade)
