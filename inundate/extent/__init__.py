@@ -18,6 +18,7 @@ from inundate.extent.observer import (
     observe_extents,
 )
 from inundate.extent.stack import ExtentOptions, SceneStack, weights_on_site
+from inundate.extent.veil import haze_index, veiled
 from inundate.extent.weights import check_wetlands, other_shares, pixel_weights
 
 __all__ = [
@@ -34,10 +35,12 @@ __all__ = [
     "elevation_cells",
     "error_adjusted_area",
     "fraction_errors",
+    "haze_index",
     "hypsometry",
     "lowest_elevation",
     "observe_extents",
     "other_shares",
     "pixel_weights",
+    "veiled",
     "weights_on_site",
 ]

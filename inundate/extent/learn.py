@@ -19,7 +19,17 @@ from inundate.extent.estimate import (
     pixel_terms,
     weigh,
 )
-from inundate.extent.noise import BAND_EDGES, BLURS, SHIFTS, VIEW_CLASSES, NoiseModel, NoiseSums
+from inundate.extent.noise import (
+    BAND_EDGES,
+    BENDS,
+    BLURS,
+    KINDS,
+    OPEN_CLASS,
+    SHIFTS,
+    VIEW_CLASSES,
+    NoiseModel,
+    NoiseSums,
+)
 from inundate.extent.shapes import edge_distance, refine_shape, shape_from_cells, shape_from_order
 from inundate.extent.stack import NEAR_STEPS, ExtentOptions, WetlandPixels
 
@@ -31,7 +41,8 @@ NEAR_DAYS = 30.0
 
 def good_views(views: Views, options: ExtentOptions) -> np.ndarray:
     """Which scenes may teach: bool (scene,)."""
-    return (views.view_fraction >= options.good_view) & (views.ice < 0.02)
+    clear = views.clear_fraction >= options.good_clear
+    return clear & (views.view_fraction >= options.good_view) & (views.ice < 0.02)
 
 
 def first_shape(
@@ -68,7 +79,7 @@ def wetness(views: Views, wetland: WetlandPixels, noise: NoiseModel, good: np.nd
 
 def renew_shape(views: Views, shape: Shape, wetland: WetlandPixels, noise: NoiseModel, options: ExtentOptions) -> Shape:
     """Refine a shape with the good views (and the nearly good ones, by their precision)."""
-    teach = (views.view_fraction >= 0.7) & (views.ice < 0.02)
+    teach = (views.clear_fraction >= 0.7) & (views.view_fraction >= 0.8 * options.good_view) & (views.ice < 0.02)
     prior_var = noise.shape_var[shape.source]
     if teach.sum() < 2:
         return Shape(shape.prior, shape.prior, shape.source, prior_var, int(teach.sum()))
@@ -127,14 +138,14 @@ def noise_sums(
     level = np.linspace(0, 1, post.shape[1])
     mean = post @ level
     sd = np.sqrt(np.maximum(post @ level**2 - mean**2, 0))
-    expected = expected_fraction(shape.filling, wetland, noise.blur).astype(float)
+    expected = expected_fraction(shape.filling, wetland, noise.blur, noise.bend).astype(float)
     _, e = fitted_fraction(post, rest, shape, wetland, noise)
     row = noise.table[np.maximum(views.kind, 0)]
     fit = row[..., 0] + row[..., 1] * e
     var = row[..., 2] + row[..., 3] * 4 * e * (1 - e)
     step = (np.maximum(views.kind, 0) // 2) % VIEW_CLASSES
-    sure = (sd < 0.1) & (views.view_fraction >= 0.5) & (views.ice < 0.02) & (rest[:, 0] < 4)
-    own = (views.kind >= 0) & sure[:, None] & (step == VIEW_CLASSES - 1)
+    sure = (sd < 0.1) & (views.view_fraction >= 0.5 * options.good_view) & (views.ice < 0.02) & (rest[:, 0] < 4)
+    own = (views.kind >= 0) & sure[:, None] & (step >= OPEN_CLASS)
     sums.add_own(views.kind[own], views.fraction[own].astype(float), e[own], var[own], fit[own])
     good = good_views(views, options) & (sd < 0.1)
     sums.area += post[good].sum(axis=0)
@@ -143,7 +154,7 @@ def noise_sums(
     _add_shape(sums, shape, views.fraction - fit, e, var, whole)
     ref, ref_sd = reference_levels(days, mean, sd, good, noise.drift_var)
     with np.errstate(invalid="ignore"):
-        held = (views.kind >= 0) & (step < VIEW_CLASSES - 1) & (ref_sd < 0.12)[:, None]
+        held = (views.kind >= 0) & (step < OPEN_CLASS) & (ref_sd < 0.12)[:, None]
     if held.any():
         place = np.nan_to_num(ref) * (expected.shape[1] - 1)
         low = np.minimum(place.astype(int), expected.shape[1] - 2)
@@ -154,14 +165,33 @@ def noise_sums(
     return sums
 
 
+def add_anchor(sums: NoiseSums, views: Views, wetland: WetlandPixels) -> None:
+    """Add what needs no level: pixels outside the outline are dry; inmost ones of the wettest good views are water."""
+    seen = (views.kind >= 0) & (views.ice < 0.02)[:, None]
+    ring = seen & ((wetland.share == 0) & (wetland.other < 0.01))[None, :]
+    sums.anchor[:, 0] += np.bincount(views.kind[ring], minlength=KINDS)
+    sums.anchor[:, 1] += np.bincount(views.kind[ring], weights=views.fraction[ring], minlength=KINDS)
+    inner = edge_distance(wetland)
+    inner = (wetland.share > 0.99) & (inner >= np.quantile(inner, 0.7))
+    clear = (views.clear_fraction > 0.9) & (views.ice < 0.02)
+    if inner.sum() < 2 or clear.sum() < 10:
+        return
+    mean = views.fraction[:, inner].mean(axis=1)
+    wettest = clear & (mean >= np.quantile(mean[clear], 0.9))
+    top = seen & wettest[:, None] & inner[None, :]
+    sums.anchor[:, 2] += np.bincount(views.kind[top], minlength=KINDS)
+    sums.anchor[:, 3] += np.bincount(views.kind[top], weights=views.fraction[top], minlength=KINDS)
+
+
 def blur_evidence(
     views: Views, shape: Shape, wetland: WetlandPixels, noise: NoiseModel, options: ExtentOptions
-) -> tuple[np.ndarray, np.ndarray]:
-    """Log evidence of the good views under each candidate of ``BLURS`` and of ``SHIFTS``; float64 (candidate,) each."""
+) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+    """Log evidence of the good views under each candidate of ``BLURS``, ``SHIFTS`` and ``BENDS``; float64 (candidate,)."""
     some = pick_views(views, good_views(views, options))
     blur = [weigh(some, shape, wetland, replace(noise, blur=b))[1][:, 1].sum() for b in BLURS]
     shift = [weigh(some, shape, wetland, replace(noise, shift_px=s))[1][:, 1].sum() for s in SHIFTS]
-    return np.array(blur), np.array(shift)
+    bend = [weigh(some, shape, wetland, replace(noise, bend=float(np.exp(b))))[1][:, 1].sum() for b in BENDS]
+    return np.array(blur), np.array(shift), np.array(bend)
 
 
 def _add_pairs(sums: NoiseSums, u: np.ndarray, seen: np.ndarray, wetland: WetlandPixels) -> None:

@@ -14,6 +14,8 @@ VIEW_EDGES = (0.15, 0.35, 0.65, 0.9)
 """Edges of the classes of canopy view, and with them of the kinds of pixel view."""
 VIEW_CLASSES = len(VIEW_EDGES) + 1
 KINDS = len(LEAF_STATES) * VIEW_CLASSES * 2
+OPEN_CLASS = 3
+"""Class of canopy view from which a view's own level judges its pixels; below, neighbouring dates do."""
 BAND_EDGES = (0.3, 0.5, 0.7, 0.9)
 """Edges of the bands of view fraction within which sd is scaled."""
 _SLOPE = (0.2, 0.4, 0.65, 0.9, 1.0)
@@ -21,6 +23,8 @@ _PURE = (0.08, 0.07, 0.05, 0.025, 0.01)
 _MIXED = 0.02
 BLURS = np.linspace(0.0, 0.5, 6)
 """Candidates for the part of a pixel's water fraction that comes from its neighbours."""
+BENDS = np.linspace(0.0, 2.1, 7)
+"""Candidates of the logarithm of ``bend``."""
 SHIFTS = np.array([0.03, 0.08, 0.13, 0.18, 0.23, 0.28, 0.33])
 """Candidates for the sd of a scene's leftover shift, pixels."""
 _HELD = 200.0
@@ -75,6 +79,8 @@ class NoiseModel:
         Part of a pixel's water fraction that comes from the eight pixels around it.
     shift_px : float
         Standard deviation of the shift that is left in a scene, pixels, each way.
+    bend : float
+        Factor by which the odds of water shown by a mixed pixel fall short of the odds of water held.
     """
 
     table: np.ndarray
@@ -87,6 +93,7 @@ class NoiseModel:
     steady_var: float
     blur: float = 0.0
     shift_px: float = 0.1
+    bend: float = 1.0
 
     def to_dict(self) -> dict[str, object]:
         """Return plain values for JSON."""
@@ -101,6 +108,7 @@ class NoiseModel:
             "steady_var": self.steady_var,
             "blur": self.blur,
             "shift_px": self.shift_px,
+            "bend": self.bend,
         }
 
     @classmethod
@@ -148,11 +156,31 @@ def start_noise(steps: int, errors: pd.DataFrame | None = None) -> NoiseModel:
                     "sum to less than 0.9; check the classifier's out-of-fold scores"
                 )
                 raise InputError(text)
-            top = (LEAF_STATES.index(state) * VIEW_CLASSES + VIEW_CLASSES - 1) * 2
-            table[top : top + 2, 0], table[top : top + 2, 1] = commission, contrast
+            first = LEAF_STATES.index(state) * VIEW_CLASSES * 2
+            clear = slice(first + OPEN_CLASS * 2, first + VIEW_CLASSES * 2)
+            table[clear, 0], table[clear, 1] = commission, contrast
     prior = np.full(steps, 1.0 / steps)
     var = {"cells": 0.04, "order": 0.08, "outline": 0.12}
     return NoiseModel(table, 0.05, 1.5, var, prior, 0.02**2, np.ones(len(BAND_EDGES) + 1), 0.0)
+
+
+def anchor_noise(start: NoiseModel, sums: NoiseSums, errors: pd.DataFrame | None) -> NoiseModel:
+    """Starting noise with dry and water ends from pixels that are dry or water by where they lie.
+
+    Leaf states with out-of-fold errors keep those; they weigh as much as ``_HELD`` pixels.
+    """
+    table = start.table.copy()
+    known = np.zeros(KINDS, bool)
+    if errors is not None:
+        for state in errors["leaf_state"].astype(str):
+            first = LEAF_STATES.index(state) * VIEW_CLASSES * 2
+            known[first + OPEN_CLASS * 2 : first + VIEW_CLASSES * 2] = True
+    n, f, m, g = sums.anchor.T
+    low = (f + 30 * table[:, 0]) / (n + 30)
+    top = (g + 30 * (table[:, 0] + table[:, 1])) / (m + 30)
+    table[~known, 0] = np.clip(low, 0.0, 0.5)[~known]
+    table[~known, 1] = np.maximum(np.clip(top, 0.0, 1.0) - table[:, 0], 0.1)[~known]
+    return replace(start, table=table)
 
 
 class NoiseSums:
@@ -165,13 +193,15 @@ class NoiseSums:
         self.line = np.zeros((KINDS, 6))
         self.pairs = np.zeros((3, 2))
         self.area = np.zeros(steps)
+        self.anchor = np.zeros((KINDS, 4))
         self.blur = np.zeros(BLURS.size)
         self.shift = np.zeros(SHIFTS.size)
+        self.bend = np.zeros(BENDS.size)
         self.shape = {name: np.zeros(2) for name in ("cells", "order", "outline")}
 
     def add(self, other: NoiseSums) -> None:
         """Add the sums of another wetland."""
-        for name in ("dry", "wet", "half", "line", "pairs", "area", "blur", "shift"):
+        for name in ("dry", "wet", "half", "line", "pairs", "area", "anchor", "blur", "shift", "bend"):
             getattr(self, name)[...] += getattr(other, name)
         for name, value in other.shape.items():
             self.shape[name] += value
@@ -209,7 +239,7 @@ def renew_noise(old: NoiseModel, sums: NoiseSums, start: NoiseModel) -> NoiseMod
     """
     table = start.table.copy()
     own, line = _own_rows(sums, start), _line_rows(sums, start)
-    clear = (np.arange(KINDS) // 2) % VIEW_CLASSES == VIEW_CLASSES - 1
+    clear = (np.arange(KINDS) // 2) % VIEW_CLASSES >= OPEN_CLASS
     table[clear], table[~clear] = own[clear], line[~clear]
     within = [float(a / max(n, 1.0)) if n > 100 else np.nan for a, n in sums.pairs]
     rho = float(np.clip(np.nan_to_num(within[0], nan=old.rho), 0.0, 0.3))
@@ -223,7 +253,7 @@ def renew_noise(old: NoiseModel, sums: NoiseSums, start: NoiseModel) -> NoiseMod
         var[name] = float(np.clip((total + 50 * first) / (n + 50), 0.003, 0.15))
     blur, shift = _top_of(BLURS, sums.blur), _top_of(SHIFTS, sums.shift)
     new = replace(old, table=table, rho=rho, temper=temper, shape_var=var, area_prior=prior)
-    return replace(new, blur=blur, shift_px=shift)
+    return replace(new, blur=blur, shift_px=shift, bend=float(np.exp(_top_of(BENDS, sums.bend))))
 
 
 def _top_of(x: np.ndarray, y: np.ndarray) -> float:

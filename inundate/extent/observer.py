@@ -14,6 +14,7 @@ from inundate.common.errors import InputError
 from inundate.common.seeds import rng_for, seed_for
 from inundate.extent.estimate import Shape, Views, areas, band_of, look
 from inundate.extent.learn import (
+    add_anchor,
     blur_evidence,
     first_shape,
     fit_drift,
@@ -22,7 +23,7 @@ from inundate.extent.learn import (
     noise_sums,
     renew_shape,
 )
-from inundate.extent.noise import BAND_EDGES, NoiseModel, NoiseSums, renew_noise, start_noise
+from inundate.extent.noise import BAND_EDGES, NoiseModel, NoiseSums, anchor_noise, renew_noise, start_noise
 from inundate.extent.stack import ExtentOptions, SceneStack, WetlandPixels, split_wetlands
 
 REASONS = (
@@ -196,20 +197,23 @@ class ExtentObserver(BaseEstimator):
     def _learn_noise(self, stack: SceneStack, options: ExtentOptions) -> NoiseModel:
         """Noise shared by all wetlands, from a sample of them."""
         steps = options.levels + 1
-        start = start_noise(steps, self.errors)
-        noise, days = start, _days(stack)
+        start, days = start_noise(steps, self.errors), _days(stack)
         sample = self._sample(options)
-        for _ in range(options.rounds):
+        anchors = NoiseSums(steps)
+        for wetland in sample:
+            add_anchor(anchors, self._views(stack, wetland), wetland)
+        start = noise = anchor_noise(start, anchors, self.errors)
+        for turn in range(options.rounds):
             sums = NoiseSums(steps)
             for wetland in sample:
                 views = self._views(stack, wetland)
                 shape = first_shape(self.cells_.get(wetland.name), wetland, views, noise, options)
                 before = noise_sums(views, shape, wetland, noise, days, options)
-                edges = blur_evidence(views, shape, wetland, noise, options)
-                shape = renew_shape(views, shape, wetland, noise, options)
+                if turn:
+                    before.blur, before.shift, before.bend = blur_evidence(views, shape, wetland, noise, options)
+                    shape = renew_shape(views, shape, wetland, noise, options)
                 mine = noise_sums(views, shape, wetland, noise, days, options)
-                mine.shape = before.shape
-                mine.blur, mine.shift = edges
+                mine.shape, mine.blur, mine.shift, mine.bend = before.shape, before.blur, before.shift, before.bend
                 sums.add(mine)
             noise = renew_noise(noise, sums, start)
         return self._scale(stack, sample, noise, options)

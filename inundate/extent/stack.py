@@ -98,8 +98,8 @@ class ExtentOptions:
     ----------
     levels : int
         Steps of wetland area, from dry to full, over which the posterior is computed.
-    good_view : float
-        View fraction from which a view teaches shapes and noise.
+    good_clear, good_view : float
+        Clear fraction and view fraction from which a view teaches shapes and noise.
     least_view : float
         View fraction below which a view is not used.
     ice_share : float
@@ -114,12 +114,13 @@ class ExtentOptions:
     """
 
     levels: int = 64
-    good_view: float = 0.9
+    good_clear: float = 0.9
+    good_view: float = 0.6
     least_view: float = 0.05
     ice_share: float = 0.2
     widest_sd: float = 0.25
     sample_wetlands: int = 300
-    rounds: int = 3
+    rounds: int = 4
     seed: int = 0
 
 
