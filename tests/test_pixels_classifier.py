@@ -195,7 +195,7 @@ def test_bad_input_is_named():
         WaterClassifier().fit(X, np.zeros(60, int))
     with pytest.raises(InputError, match="wetland: shape"):
         WaterClassifier(**SMALL).fit(X, y, wetland=np.array(["a", "b"]))
-    with pytest.raises(InputError, match="1.5 is no water fraction"):
+    with pytest.raises(InputError, match=r"1\.5 is no water fraction"):
         FractionModel(**SMALL).fit(X, np.where(y > 0, 1.5, 0.0))
     with pytest.raises(InputError, match="monotone: 'depth' is not a feature"):
         WaterClassifier(monotone={"depth": 1}, **SMALL).fit(X, y)
