@@ -109,7 +109,7 @@ def interval_measures(
         "n": int(value.size),
         "coverage": float(inside.mean()),
         "width": float(((high - low) / largest).mean()),
-        "interval_score": float(score["interval_score"]),
+        "interval_score": float(score["total"]),
     }
 
 
