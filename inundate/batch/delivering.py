@@ -66,7 +66,7 @@ def conclude(
     month: str | None,
 ) -> Findings:
     """Fit relations and fill the series."""
-    from inundate.relation import fit_relations, make_pairs
+    from inundate.relation import best_pairs, fit_relations, make_pairs
     from inundate.series import FillOptions, SeriesInputs, fill_series
 
     observed, stage = found
@@ -76,7 +76,7 @@ def conclude(
     settings = work.pipeline
     with work.progress.step("stage-area relations"):
         pairs = make_pairs(observed, daily if daily is not None else _no_stage())
-        relations = fit_relations(pairs, wetlands, layout.hypsometry, seed=settings.relation.seed)
+        relations = fit_relations(best_pairs(pairs), wetlands, layout.hypsometry, seed=settings.relation.seed)
     first = min(
         t
         for t in (pd.to_datetime(observed["datetime"]).min(), None if daily is None else daily["date"].min())

@@ -16,7 +16,7 @@ from inundate.common.site import Site
 from inundate.products import write_map
 
 UNLIKE_SCALE = 0.2  # a pixel is unlike all examples from one radius on: 20 in the archive's percent
-SCORE_COLUMNS = ("probability", "fraction", "fraction_sd", "unlike", "ndvi", "code")
+SCORE_COLUMNS = ("probability", "fraction", "fraction_sd", "unlike", "ndvi", "haze", "code")
 
 
 @dataclass(frozen=True, slots=True)
@@ -90,6 +90,17 @@ def ndvi_value(code: np.ndarray) -> np.ndarray:
     return np.where(code == 255, np.nan, (code.astype(np.float32) - 100.0) * 0.01)
 
 
+def haze_code(haze: np.ndarray) -> np.ndarray:
+    """Turn the haze index -0.1..0.15 into uint8 thousandths above -0.1, 255 where missing."""
+    code = np.clip(np.nan_to_num(haze) * 1000.0 + 100.5, 0, 254).astype(np.uint8)
+    return np.where(np.isfinite(haze), code, np.uint8(255))
+
+
+def haze_value(code: np.ndarray) -> np.ndarray:
+    """Turn thousandths back into the haze index, NaN where 255."""
+    return np.where(code == 255, np.nan, (code.astype(np.float32) - 100.0) * 0.001)
+
+
 def score_scene(job: ScoreJob) -> dict[str, Any]:
     """Score one archived view; leaves the scene's scores and map, returns counts.
 
@@ -102,6 +113,7 @@ def score_scene(job: ScoreJob) -> dict[str, Any]:
     dict
         seen (pixels), water_share (mean probability over seen pixels), bytes.
     """
+    from inundate.extent import haze_index
     from inundate.pixels import features
 
     archive = Archive(job.out)
@@ -112,6 +124,8 @@ def score_scene(job: ScoreJob) -> dict[str, Any]:
     columns = {name: np.full(n, 255, np.uint8) for name in SCORE_COLUMNS}
     columns["code"] = code
     columns["ndvi"] = ndvi_code(pixel_ndvi(bands, reflectance, code))
+    blue, red = (reflectance[bands.index(b)] if b in bands else np.full(n, np.nan, np.float32) for b in ("blue", "red"))
+    columns["haze"] = haze_code(haze_index(blue, red))
     if seen.size:
         scorer = _scorer(archive.models, job.model_mark)
         owner = job.owner[seen]

@@ -12,7 +12,7 @@ from inundate.batch.archive import ROWS, read_score
 from inundate.batch.compute import run_units
 from inundate.batch.imagery import array_mark
 from inundate.batch.layout import Layout
-from inundate.batch.mapping import SCORE_COLUMNS, UNLIKE_SCALE, ScoreJob, ndvi_value, score_scene
+from inundate.batch.mapping import SCORE_COLUMNS, UNLIKE_SCALE, ScoreJob, haze_value, ndvi_value, score_scene
 from inundate.batch.seasons import ScenePlace
 from inundate.batch.training import Trained
 from inundate.batch.work import Inputs, Work, code_mark, settings_mark, table_mark
@@ -167,18 +167,21 @@ def build_stack(
     share: np.ndarray,
 ) -> SceneStack:
     """Read the scores of a range of site pixels into a stack in time; share is (scene, wetland of the layout)."""
-    from inundate.extent import SceneStack
+    from inundate.extent import SceneStack, veiled
 
     group, low, high = where
     n = len(places)
     span = (low // ROWS, -(-high // ROWS))
     cut = slice(low - span[0] * ROWS, high - span[0] * ROWS)
     stack = {name: np.full((n, high - low), 255, np.uint8) for name in SCORE_COLUMNS}
-    names = ("fraction", "fraction_sd", "unlike", "ndvi", "code")
+    names = ("fraction", "fraction_sd", "unlike", "ndvi", "haze", "code")
     for i, place in enumerate(places):
         for name, values in zip(names, read_score(work.archive.score(place.scene_id), names, span), strict=True):
             stack[name][i] = values[cut]
     owner = layout.owner[low:high]
+    veil = veiled(haze_value(stack["haze"]), stack["code"], owner)
+    stack["code"][veil] = ViewCode.CLOUD
+    stack["fraction"][veil] = 255
     view = canopy_view(stack["ndvi"], share[:, owner])
     return SceneStack(
         scene_id=np.array([p.scene_id for p in places], object),

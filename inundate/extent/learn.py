@@ -20,7 +20,6 @@ from inundate.extent.estimate import (
     weigh,
 )
 from inundate.extent.noise import (
-    BAND_EDGES,
     BENDS,
     BLURS,
     KINDS,
@@ -35,6 +34,8 @@ from inundate.extent.stack import NEAR_STEPS, ExtentOptions, WetlandPixels
 
 FEW_VIEWS = 4
 """Views below which a ranking by wetness is not tried; common practice, no source."""
+LONGEST_BRIDGE = 8.0
+"""Longest bridge, d1 d2 / (d1 + d2) days, in checks of views against their neighbours."""
 NEAR_DAYS = 30.0
 """Longest time over which two good views between them tell a wetland's level."""
 
@@ -284,8 +285,10 @@ def _half_plane(wetland: WetlandPixels, rng: np.random.Generator) -> np.ndarray:
 
 def neighbour_checks(
     views: Views, area: np.ndarray, sd: np.ndarray, days: np.ndarray, options: ExtentOptions
-) -> list[tuple[int, float, float, float, float]]:
-    """Views against the good views around them: (band, difference, own sd, neighbours' sd, days of bridge)."""
+) -> list[tuple[int, float, float, float, float, float]]:
+    """Views against the good views around them: (band, difference, own sd, neighbours' sd, days of bridge,
+    1 if the view itself is good).
+    """
     good = good_views(views, options)
     level, out = reference_levels(days, area, sd, good, 0.0)
     bridge, _ = reference_levels(days, area, np.zeros_like(sd), good, 0.0)
@@ -293,7 +296,7 @@ def neighbour_checks(
     usable = np.isfinite(bridge) & (views.view_fraction >= options.least_view) & (views.ice < 0.02)
     bands = band_of(views.view_fraction)
     return [
-        (int(bands[t]), float(area[t] - level[t]), float(sd[t]), float(out[t]), float(wander[t] ** 2))
+        (int(bands[t]), float(area[t] - level[t]), float(sd[t]), float(out[t]), float(wander[t] ** 2), float(good[t]))
         for t in np.flatnonzero(usable)
     ]
 
@@ -306,15 +309,14 @@ def fit_drift(checks: np.ndarray) -> tuple[float, float]:
 
     Parameters
     ----------
-    checks : ndarray of float64, shape (check, 5)
+    checks : ndarray of float64, shape (check, 6)
         From :func:`neighbour_checks`.
 
     Returns
     -------
     drift_var, scale : float
     """
-    good = checks[checks[:, 0] == len(BAND_EDGES)]
-    good = good[good[:, 4] <= 8.0]
+    good = checks[(checks[:, 5] > 0) & (checks[:, 4] <= LONGEST_BRIDGE)]
     if good.shape[0] < 60:
         return 0.02**2, 1.0
     d2, v, g = good[:, 1] ** 2, good[:, 2] ** 2 + good[:, 3] ** 2, good[:, 4]

@@ -23,8 +23,8 @@ _PURE = (0.08, 0.07, 0.05, 0.025, 0.01)
 _MIXED = 0.02
 BLURS = np.linspace(0.0, 0.5, 6)
 """Candidates for the part of a pixel's water fraction that comes from its neighbours."""
-BENDS = np.linspace(0.0, 2.1, 7)
-"""Candidates of the logarithm of ``bend``."""
+BENDS = np.linspace(0.0, np.log(3.0), 6)
+"""Candidates of the logarithm of ``bend``: a pixel half under water shows at least a quarter (common practice, no source)."""
 SHIFTS = np.array([0.03, 0.08, 0.13, 0.18, 0.23, 0.28, 0.33])
 """Candidates for the sd of a scene's leftover shift, pixels."""
 _HELD = 200.0
@@ -242,7 +242,7 @@ def renew_noise(old: NoiseModel, sums: NoiseSums, start: NoiseModel) -> NoiseMod
     clear = (np.arange(KINDS) // 2) % VIEW_CLASSES >= OPEN_CLASS
     table[clear], table[~clear] = own[clear], line[~clear]
     within = [float(a / max(n, 1.0)) if n > 100 else np.nan for a, n in sums.pairs]
-    rho = float(np.clip(np.nan_to_num(within[0], nan=old.rho), 0.0, 0.3))
+    rho = float(np.clip(np.nan_to_num(within[0], nan=old.rho), 0.0, 0.8))
     beside = [max(float(np.nan_to_num(c, nan=0.1)) - rho, 0.0) for c in within[1:]]
     temper = float(np.clip(1.0 + 4.0 * beside[0] + 4.0 * beside[1], 1.0, 4.0))
     prior = sums.area + 1e-9

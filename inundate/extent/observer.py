@@ -14,6 +14,7 @@ from inundate.common.errors import InputError
 from inundate.common.seeds import rng_for, seed_for
 from inundate.extent.estimate import Shape, Views, areas, band_of, look
 from inundate.extent.learn import (
+    LONGEST_BRIDGE,
     add_anchor,
     blur_evidence,
     first_shape,
@@ -229,7 +230,7 @@ class ExtentObserver(BaseEstimator):
             area, sd = areas(views, shape, wetland, noise)
             masked += masked_checks(views, shape, wetland, noise, options, rng_for(options.seed, "masks", wetland.name))
             beside += neighbour_checks(views, area, sd, days, options)
-        table = np.array(beside, float).reshape(-1, 5)
+        table = np.array(beside, float).reshape(-1, 6)
         drift, top = fit_drift(table)
         scale = band_scales(np.array(masked, float).reshape(-1, 5), table, drift, top)
         values = {n: getattr(noise, n) for n in NoiseModel.__slots__}
@@ -281,7 +282,7 @@ def band_scales(masked: np.ndarray, beside: np.ndarray, drift_var: float, top: f
     ----------
     masked : ndarray of float64, shape (check, 5)
         From ``masked_checks``.
-    beside : ndarray of float64, shape (check, 5)
+    beside : ndarray of float64, shape (check, 6)
         From ``neighbour_checks``.
     drift_var, top : float
         From ``fit_drift``.
@@ -293,8 +294,8 @@ def band_scales(masked: np.ndarray, beside: np.ndarray, drift_var: float, top: f
     bands = len(BAND_EDGES) + 1
     out = np.full(bands, top)
     for b in range(bands):
-        own = masked[masked[:, 0] == b] if b < bands - 1 else np.zeros((0, 5))
-        near = beside[(beside[:, 0] == b) & (beside[:, 4] <= 8.0)]
+        own = masked[masked[:, 0] == b]
+        near = beside[(beside[:, 0] == b) & (beside[:, 4] <= LONGEST_BRIDGE)]
         size = np.r_[np.abs(own[:, 1]), np.abs(near[:, 1])]
         mine = np.r_[own[:, 2], near[:, 2]] ** 2
         extra = np.r_[-((top * own[:, 3]) ** 2), (top * near[:, 3]) ** 2 + drift_var * near[:, 4]]

@@ -88,6 +88,29 @@ def make_pairs(extent_observed: pd.DataFrame, stage_daily: pd.DataFrame) -> pd.D
     return both.sort_values(["wetland_id", "date"], kind="stable")[[*PAIR_COLUMNS, "rising"]].reset_index(drop=True)
 
 
+def best_pairs(pairs: pd.DataFrame, *, least: int = 8) -> pd.DataFrame:
+    """Return the pairs that relations should rest on: those with leaves off, where a wetland has enough of them.
+
+    A canopy in leaf hides water in ways that an observation's own standard deviation does not fully tell; such pairs serve
+    where nothing better does.
+
+    Parameters
+    ----------
+    pairs : DataFrame
+        From :func:`make_pairs`.
+    least : int
+        Leaf-off pairs from which a wetland (and period) needs no others (common practice, no source).
+
+    Returns
+    -------
+    DataFrame
+        Rows of ``pairs`` in their order.
+    """
+    bare = pairs["leaf_state"].astype(str) == "leaf_off"
+    count = bare.groupby([pairs["wetland_id"], pairs["period"]]).transform("sum")
+    return pairs[bare | (count < least)].reset_index(drop=True)
+
+
 def _day(times: pd.Series) -> pd.Series:
     stamp = pd.to_datetime(times)
     if getattr(stamp.dt, "tz", None) is not None:

@@ -117,15 +117,19 @@ def features(units: Units) -> np.ndarray:
     depth = np.where(known, base[:, 0] - np.log(0.7), 0.0)
     shape = np.where(known, base[:, 1], 0.0)
     cover = table["cover"].to_numpy(str)
-    return np.column_stack(
-        [np.ones(size.size), size, cover == "deciduous", cover == "evergreen", depth, shape]
-    ).astype(float)
+    return np.column_stack([np.ones(size.size), size, cover == "deciduous", cover == "evergreen", depth, shape]).astype(
+        float
+    )
 
 
 def _columns(family: int, parameter: int) -> np.ndarray:
     if family == ELEVATION:
         return np.array([0, 1, 2, 3]) if parameter < 2 else np.array([0])
     return np.array([0, 1, 2, 3, 4, 5]) if parameter < 2 else np.array([0])
+
+
+_WORST = 1e12
+"""Condition of a spread beyond which it is no longer told apart in double precision."""
 
 
 def learn_prior(
@@ -186,6 +190,7 @@ def _expectation_maximisation(
     spread = [np.diag((loose[_columns(family, j)] * DEFAULT_SD[family][j]) ** 2) for j in range(d)]
     if x.shape[0] < 3:
         return coef, sigma, [0.0 * one for one in spread]
+    own = _no_less_than_nothing(own)
     for _ in range(80):
         hold = np.linalg.inv(sigma)
         cov = np.linalg.inv(own + hold)
@@ -196,5 +201,17 @@ def _expectation_maximisation(
             spread[j] = np.linalg.inv(x[:, use].T @ x[:, use] / sigma[j, j] + before)
             coef[use, j] = spread[j] @ (x[:, use].T @ mean[:, j]) / sigma[j, j]
         gap = mean - x @ coef
-        sigma = (gap.T @ gap + cov.sum(axis=0) + weight * scatter) / (x.shape[0] + weight)
+        wider = (gap.T @ gap + cov.sum(axis=0) + weight * scatter) / (x.shape[0] + weight)
+        if not (np.isfinite(wider).all() and np.linalg.cond(wider) < _WORST):
+            break
+        sigma = 0.5 * (wider + wider.T)
     return coef, sigma, spread
+
+
+def _no_less_than_nothing(info: np.ndarray) -> np.ndarray:
+    """Return information matrices (wetland, parameter, parameter) without directions of negative information.
+
+    A fit that ended on a ridge can have one; taken as it is, it would make a wetland's spread negative.
+    """
+    value, axis = np.linalg.eigh(0.5 * (info + info.transpose(0, 2, 1)))
+    return np.einsum("uij,uj,ukj->uik", axis, np.maximum(value, 0.0), axis)

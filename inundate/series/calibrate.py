@@ -103,28 +103,34 @@ def blended_evidence(evidence: Evidence, weights: np.ndarray) -> tuple[np.ndarra
 
 
 def fit_widths(evidence: Evidence | None, weights: np.ndarray, third: np.ndarray) -> np.ndarray:
-    """Return factors (leaf state, size third) so that intervals of hidden blocks hold 90 % of what was hidden."""
+    """Return factors (leaf state, size third) so that intervals hold 90 % of what was hidden.
+
+    Leaf-off days have views near, so only loggers hidden while views were kept speak for them. Under leaves views are
+    far, as in a season of hidden views, so both kinds of hidden values speak. Factors of few blocks are shrunk: cells
+    to leaf states, these to all, all to 1.
+    """
     out = np.ones((4, 3))
     if evidence is None or evidence.day.size == 0:
         return out
     mean, sd = blended_evidence(evidence, weights)
-    gap = np.where(
-        mean < evidence.low, evidence.low - mean, np.where(mean > evidence.high, evidence.high - mean, 0.0)
-    )
+    gap = np.where(mean < evidence.low, evidence.low - mean, np.maximum(mean - evidence.high, 0.0))
     # A row teaches as far as the hidden value is sharper than the prediction.
     weight = _clusters(evidence) * sd**2 / (sd**2 + evidence.level_sd**2)
-    every = solve_width(gap, sd, evidence.level_sd, weight)
+
+    def shrunk(rows: np.ndarray, parent: float) -> float:
+        blocks = float(weight[rows].sum())
+        if blocks <= 0:
+            return parent
+        aim = min(0.9 * (1 + 1 / blocks), 0.97)
+        own = solve_width(gap[rows], sd[rows], evidence.level_sd[rows], weight[rows], aim)
+        return float(np.exp((_SHRINK_BLOCKS * np.log(parent) + blocks * np.log(own)) / (_SHRINK_BLOCKS + blocks)))
+
+    far = shrunk(~evidence.from_stage | (evidence.leaf != 0), 1.0)
     for leaf in range(4):
-        in_leaf = evidence.leaf == leaf
+        in_leaf = evidence.from_stage & (evidence.leaf == leaf)
+        state = shrunk(in_leaf, far if leaf else 1.0)
         for size in range(3):
-            cell = in_leaf & (third[evidence.wetland] == size)
-            value, mass = every, _SHRINK_BLOCKS
-            for rows in (in_leaf, cell):
-                blocks = weight[rows].sum()
-                if blocks > 0:
-                    own = solve_width(gap[rows], sd[rows], evidence.level_sd[rows], weight[rows])
-                    value = np.exp((mass * np.log(value) + blocks * np.log(own)) / (mass + blocks))
-            out[leaf, size] = value
+            out[leaf, size] = shrunk(in_leaf & (third[evidence.wetland] == size), state)
     return out
 
 

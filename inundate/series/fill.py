@@ -21,7 +21,16 @@ from inundate.series.fitting import Setup, make_setup, pool_items
 from inundate.series.heldout import Evidence, hide_blocks, hide_loggers, join
 from inundate.series.inputs import Events, FillOptions, SeriesInputs, build_panel
 from inundate.series.maps import LevelMaps, build_maps, slope_at
-from inundate.series.model import Fitted, Levels, available_kinds, blend, fit_kind, learn_kind, left_out_scores, smooth_levels
+from inundate.series.model import (
+    Fitted,
+    Levels,
+    available_kinds,
+    blend,
+    fit_kind,
+    learn_kind,
+    left_out_scores,
+    smooth_levels,
+)
 from inundate.series.result import Joint, SeriesResult, daily_table
 from inundate.series.smooth import area_moments
 from inundate.series.worth import scene_factors, worth_of_views

@@ -11,6 +11,7 @@ const Charts = {
       ...options,
     });
     figure.toolbar.logo = null;
+    if (window.innerWidth < 600 && figure.xaxis.ticker) figure.xaxis.ticker.desired_num_ticks = 3;
     for (const axis of [figure.xaxis, figure.yaxis]) {
       axis.axis_label_text_font_style = "normal";
       axis.axis_label_text_font_size = "13px";
@@ -48,7 +49,7 @@ const Charts = {
   /* A key in the page's own text, so that it never lies on the data. Entries: [words, colour, mark]. */
   key(element, entries) {
     const marks = { circle: '<circle cx="8" cy="8" r="5"/>', square: '<path d="M3 3h10v10h-10z"/>', triangle: '<path d="M8 2l6 11h-12z"/>',
-      inverted_triangle: '<path d="M8 14l6 -11h-12z"/>', band: '<path d="M0 2h16v12h-16z"/>', line: '<path d="M0 7h16v2.5h-16z"/>' };
+      inverted_triangle: '<path d="M8 14l6 -11h-12z"/>', band: '<path d="M0 2h16v12h-16z"/>', cross: '<path d="M3 5l2-2 3 3 3-3 2 2-3 3 3 3-2 2-3-3-3 3-2-2 3-3z"/>', diamond: '<path d="M8 1l5 7-5 7-5-7z"/>', line: '<path d="M0 7h16v2.5h-16z"/>' };
     const key = el("div", { class: "key" });
     for (const [words, colour, mark] of entries) {
       const svg = svgEl("svg", { viewBox: "0 0 16 16", fill: colour, "aria-hidden": "true" });
@@ -91,7 +92,7 @@ function drawTotal() {
     figure.line({ field: "x" }, { field: "y" }, { source: Charts.source({ x, y: above }), line_color: "#ffffff", line_width: 0.7 });
     below = above;
   });
-  figure.y_range.start = 0;
+  figure.y_range = new Bokeh.Range1d({ start: 0, end: Math.max(0.01, 1.05 * below.reduce((p, q) => Math.max(p, q), 0)) });
   Charts.words(figure, "day (UTC)", "inundated area (ha)");
   Charts.key(element, totals.classes.map((name, k) => [`${name} (${totals.wetlands[k]} wetlands)`, PAGE.palette.classes[k % PAGE.palette.classes.length], "band"]).reverse());
   const marker = Charts.dayMarker(figure);

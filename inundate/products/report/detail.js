@@ -107,8 +107,7 @@ const Details = {
       key.push([`scene, ${LEAF[state]}`, colour, PAGE.palette.leafMarks[state]]);
     }
     Charts.hover(figure, dots, [["scene", "@scene"], ["day", "@date"], ["area", "@area"], ["sd", "@sd"], ["", "@word"]]);
-    figure.y_range.start = 0;
-    figure.y_range.end = Math.max(1, w.areaMax * 1.05);
+    figure.y_range = new Bokeh.Range1d({ start: 0, end: Math.max(1, (w.areaMax || 1) * 1.05) });
     Charts.words(figure, "day (UTC)", "inundated area (m²)");
     Charts.key(document.getElementById("d-series"), key);
     this.marker.push(Charts.dayMarker(figure));
@@ -141,7 +140,7 @@ const Details = {
       }
       Charts.hover(figure, dots, [["day", "@date"], ["stage", "@stage"], ["area", "@area"], ["", "@word"]]);
     }
-    figure.y_range.start = 0;
+    figure.y_range = new Bokeh.Range1d({ start: 0, end: Math.max(1, (w.areaMax || 1) * 1.05) });
     Charts.words(figure, "stage (m above lowest ground)", "inundated area (m²)");
     Charts.legend(figure, "bottom_right", false);
     Charts.put(document.getElementById("d-relation"), figure, `Stage-area relation of ${w.id}`);
@@ -151,8 +150,8 @@ const Details = {
     const figure = Charts.figure({ x_axis_type: "datetime" }), good = one.flags.indexOf("good"), colours = PAGE.palette.flags;
     const only = (values, keep) => Float64Array.from(values, (v, i) => (keep(flag[i]) ? v : NaN));
     const sound = (f) => f === good || one.flags[f] === "at or below sensor";
-    figure.line({ field: "x" }, { field: "y" }, { source: Charts.source({ x, y: only(level, sound) }), line_color: colours["as read"], line_width: 1, legend_label: "level as read" });
-    figure.line({ field: "x" }, { field: "y" }, { source: Charts.source({ x, y: only(stage, (f) => f === good) }), line_color: colours.stage, line_width: 1.4, legend_label: "stage" });
+    figure.line({ field: "x" }, { field: "y" }, { source: Charts.source({ x, y: only(level, sound) }), line_color: colours["as read"], line_width: 1 });
+    figure.line({ field: "x" }, { field: "y" }, { source: Charts.source({ x, y: only(stage, (f) => f === good) }), line_color: colours.stage, line_width: 1.4 });
     const out = Array.from(flag.keys()).filter((i) => !sound(flag[i]) && finite(level[i]));
     const sane = Array.from(level).filter((v, i) => sound(flag[i]) && finite(v));
     if (sane.length) {
@@ -160,17 +159,17 @@ const Details = {
       figure.y_range = new Bokeh.Range1d({ start: low - room, end: high + room });
     }
     if (out.length) {
-      const dots = figure.scatter({ field: "x" }, { field: "y" }, { source: Charts.source({ x: out.map((i) => x[i]), y: out.map((i) => level[i]), word: out.map((i) => one.flags[flag[i]]) }), marker: "x", size: 6, line_color: colours["left out"], legend_label: "left out" });
+      const dots = figure.scatter({ field: "x" }, { field: "y" }, { source: Charts.source({ x: out.map((i) => x[i]), y: out.map((i) => level[i]), word: out.map((i) => one.flags[flag[i]]) }), marker: "x", size: 6, line_color: colours["left out"] });
       Charts.hover(figure, [dots], [["left out as", "@word"]]);
     }
     if (one.checks) {
       const t = Float64Array.from(numbers(one.checks.minute), (m) => m * 60000), y = numbers(one.checks.stage), sd = numbers(one.checks.sd);
       const bars = { x0: t, y0: y.map((v, i) => v - 2 * (sd[i] || 0)), y1: y.map((v, i) => v + 2 * (sd[i] || 0)) };
       figure.segment({ field: "x0" }, { field: "y0" }, { field: "x0" }, { field: "y1" }, { source: Charts.source(bars), line_color: colours.check, line_width: 1.4 });
-      figure.scatter({ field: "x" }, { field: "y" }, { source: Charts.source({ x: t, y }), marker: "diamond", size: 9, fill_color: "#ffffff", line_color: colours.check, line_width: 1.6, legend_label: "field check (2 sd)" });
+      figure.scatter({ field: "x" }, { field: "y" }, { source: Charts.source({ x: t, y }), marker: "diamond", size: 9, fill_color: "#ffffff", line_color: colours.check, line_width: 1.6 });
     }
     Charts.words(figure, "time (UTC)", "m above lowest ground");
-    Charts.legend(figure, "top_left", false);
+    Charts.key(element, [["level as read", colours["as read"], "line"], ["stage", colours.stage, "line"], ["left out", colours["left out"], "cross"], ["field check (2 sd)", colours.check, "diamond"]]);
     Charts.put(element, figure, `Record of logger ${one.logger}, metres above lowest ground`);
   },
   day(day) {

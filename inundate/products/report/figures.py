@@ -15,7 +15,7 @@ from matplotlib.figure import Figure
 
 from inundate.common.writing import replacing
 from inundate.products.report.details import Split
-from inundate.products.report.index import skill_figures
+from inundate.products.report.index import lower_edge, skill_figures
 from inundate.products.report.palettes import CLASS_COLOURS, FLAG_COLOURS, LEAF_COLOURS
 from inundate.products.report.tables import ReportTables
 
@@ -87,9 +87,11 @@ def _labels(figure: Figure) -> tuple[list[Any], list[str]]:
 
 
 def _total(tables: ReportTables) -> Figure | None:
-    if tables.size_classes.empty:
+    parts = tables.size_classes[tables.size_classes["size_class"].astype(str) != "all"]
+    if parts.empty:
         return None
-    wide = tables.size_classes.pivot_table(index="date", columns="size_class", values="area_m2", sort=True) / 1e4
+    wide = parts.pivot_table(index="date", columns="size_class", values="area_m2", sort=True) / 1e4
+    wide = wide[sorted(wide.columns, key=lower_edge)]
     figure = Figure(figsize=(7.5, 3.4), layout="constrained")
     axes = figure.subplots()
     colours = [CLASS_COLOURS[i % len(CLASS_COLOURS)] for i in range(wide.shape[1])]

@@ -74,13 +74,14 @@ def map_days(tables: ReportTables, rows: pd.DataFrame) -> dict[str, Any]:
 
 
 def totals(size_classes: pd.DataFrame) -> dict[str, Any]:
-    """Return the landscape's total by size class and day, ha."""
+    """Return the landscape's total by size class and day, ha; the class ``all`` is left out, the others add up to it."""
+    size_classes = size_classes[size_classes["size_class"].astype(str) != "all"]
     if size_classes.empty:
         return {"first": 0, "n": 0, "classes": []}
     table = size_classes.assign(day=day_numbers(size_classes["date"]))
     first, n = int(table["day"].min()), int(table["day"].max() - table["day"].min() + 1)
     largest = table.groupby("size_class")[["area_max_m2", "n_wetlands"]].max()
-    order = sorted(largest.index, key=_lower_edge)
+    order = sorted(largest.index, key=lower_edge)
     areas = []
     for name in order:
         rows = table[table["size_class"] == name]
@@ -97,8 +98,8 @@ def totals(size_classes: pd.DataFrame) -> dict[str, Any]:
     }
 
 
-def _lower_edge(name: str) -> tuple[float, str]:
-    """Sort size classes by their first number; ``under x`` and ``< x`` come first."""
+def lower_edge(name: str) -> tuple[float, str]:
+    """Return a key that sorts size classes by their first number; ``under x`` and ``< x`` come first."""
     import re
 
     found = re.search(r"\d+(\.\d+)?", str(name))

@@ -47,7 +47,7 @@ const WetlandTable = {
         row.append(el("td", {}, choose));
       } else {
         const text = column.digits !== undefined ? fixed(finite(value) ? value * (column.factor ?? 1) : value, column.digits) : (column.show ?? String)(value);
-        row.append(el("td", { class: column.digits === undefined ? null : "n", text }));
+        row.append(el("td", { class: column.digits !== undefined ? "n" : column.key === "lastView" ? "day" : null, text }));
       }
     }
     return row;
