@@ -15,10 +15,14 @@ def bowl(depth: float, b: float, bump: float = 0.0) -> tuple[np.ndarray, np.ndar
     return u * depth, share / share[-1]
 
 
-def pairs_of(name: str, stage: np.ndarray, share: np.ndarray, size: float, n: int, rng: np.random.Generator) -> pd.DataFrame:
+def pairs_of(
+    name: str, stage: np.ndarray, share: np.ndarray, size: float, n: int, rng: np.random.Generator
+) -> pd.DataFrame:
     """Return pairs over three years with an area sd of 4 % and a stage sd of 1 cm."""
     day = np.sort(rng.choice(1095, n, replace=False))
-    true = stage[-1] * np.clip(0.45 + 0.4 * np.cos(2 * np.pi * (day - 60) / 365) + 0.1 * rng.standard_normal(n), -0.05, 1.05)
+    true = stage[-1] * np.clip(
+        0.45 + 0.4 * np.cos(2 * np.pi * (day - 60) / 365) + 0.1 * rng.standard_normal(n), -0.05, 1.05
+    )
     area = np.interp(true, stage, share) * (true > 0) + 0.04 * rng.standard_normal(n)
     return pd.DataFrame(
         {

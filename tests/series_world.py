@@ -56,9 +56,7 @@ def weather_table(dates: pd.DatetimeIndex, rng: np.random.Generator) -> pd.DataF
     return pd.DataFrame({"date": dates, "precipitation_mm": rain, "pet_mm": pet})
 
 
-def _balance(
-    weather: pd.DataFrame, own: dict[str, float], rng: np.random.Generator
-) -> tuple[np.ndarray, np.ndarray]:
+def _balance(weather: pd.DataFrame, own: dict[str, float], rng: np.random.Generator) -> tuple[np.ndarray, np.ndarray]:
     rain = weather["precipitation_mm"].to_numpy() / 1000 * rng.gamma(30, 1 / 30, len(weather))
     pet = weather["pet_mm"].to_numpy() / 1000
     depth, shape, area = own["depth"], own["shape"], own["area"]
@@ -135,9 +133,7 @@ def make_world(seed: int = 0, wetlands: int = 12, years: int = 3, logged: int = 
     weather = weather_table(spin.append(dates), rng)
     area = np.exp(rng.uniform(np.log(600), np.log(40000), wetlands))
     table = pd.DataFrame({"wetland_id": [f"w{i:04d}" for i in range(wetlands)], "area_max_m2": area})
-    table["cover"] = np.array(["deciduous", "deciduous", "deciduous", "open", "evergreen"])[
-        np.arange(wetlands) % 5
-    ]
+    table["cover"] = np.array(["deciduous", "deciduous", "deciduous", "open", "evergreen"])[np.arange(wetlands) % 5]
     share, stage, curves, hyps = np.empty((wetlands, len(dates))), np.empty((wetlands, len(dates))), {}, []
     is_logged = np.zeros(wetlands, bool)
     is_logged[rng.permutation(wetlands)[:logged]] = True
@@ -151,17 +147,10 @@ def make_world(seed: int = 0, wetlands: int = 12, years: int = 3, logged: int = 
         wrong = np.clip(truth * (1 + 0.06 * rng.standard_normal()), 0, area[i])
         if is_logged[i]:
             curves[f"w{i:04d}"] = (grid, wrong, 0.04 * area[i])
-        bent = (
-            np.clip(grid / own["depth"], 0, 1) ** (2 / own["shape"] * np.exp(0.15 * rng.standard_normal()))
-            * area[i]
-        )
-        hyps.append(
-            pd.DataFrame({"wetland_id": f"w{i:04d}", "stage_m": grid, "area_m2": np.r_[bent[:-1], area[i]]})
-        )
+        bent = np.clip(grid / own["depth"], 0, 1) ** (2 / own["shape"] * np.exp(0.15 * rng.standard_normal())) * area[i]
+        hyps.append(pd.DataFrame({"wetland_id": f"w{i:04d}", "stage_m": grid, "area_m2": np.r_[bent[:-1], area[i]]}))
     day = dates.day_of_year.to_numpy()
-    state = np.select(
-        [(day >= 95) & (day < 125), (day >= 125) & (day < 285), (day >= 285) & (day < 320)], [1, 2, 3], 0
-    )
+    state = np.select([(day >= 95) & (day < 125), (day >= 125) & (day < 285), (day >= 285) & (day < 320)], [1, 2, 3], 0)
     leaf = np.repeat(state[None, :], wetlands, axis=0)
     leaf[table["cover"] == "open"] = 0
     leaf_daily = pd.DataFrame(

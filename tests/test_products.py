@@ -1,6 +1,5 @@
 """Product files: exact columns, open standards, same bytes for the same rows."""
 
-import netCDF4
 import numpy as np
 import pandas as pd
 import pytest

@@ -102,7 +102,9 @@ def test_table_runs_from_dry_to_spill_and_volume_is_its_integral(world, found):
         size = world.truth[name][2]
         assert rows["area_m2"].iloc[0] == 0
         assert rows["area_m2"].iloc[-1] == pytest.approx(size, rel=1e-3)
-        rough = np.concatenate([[0], np.cumsum((rows["area_m2"].to_numpy()[1:] + rows["area_m2"].to_numpy()[:-1]) / 2 * 0.01)])
+        rough = np.concatenate(
+            [[0], np.cumsum((rows["area_m2"].to_numpy()[1:] + rows["area_m2"].to_numpy()[:-1]) / 2 * 0.01)]
+        )
         # the trapezium rule on 1 cm steps against Gauss-Legendre within them
         np.testing.assert_allclose(rows["volume_m3"], rough, atol=0.002 * size)
         assert (rows["volume_lo_m3"] <= rows["volume_m3"] + 1e-9).all()
@@ -153,7 +155,9 @@ def test_few_pairs_lean_on_the_others(world):
     assert row["pooled"]
     assert world.error(got, "w04") < 0.10
     stage = world.truth["w04"][0]
-    wide, slim = (x.predict("w04", stage) for x in (got, fit_relations(world.pairs, world.wetlands, world.hypsometry, seed=1)))
+    wide, slim = (
+        x.predict("w04", stage) for x in (got, fit_relations(world.pairs, world.wetlands, world.hypsometry, seed=1))
+    )
     assert (wide["area_hi_m2"] - wide["area_lo_m2"]).mean() > 1.2 * (slim["area_hi_m2"] - slim["area_lo_m2"]).mean()
 
 

@@ -30,7 +30,13 @@ def extents() -> pd.DataFrame:
 def stages() -> pd.DataFrame:
     days = pd.date_range("2031-02-20", "2031-03-31")
     one = pd.DataFrame(
-        {"wetland_id": "a", "date": days, "stage_m": np.linspace(0.1, 0.49, len(days)), "stage_sd_m": 0.02, "period": "1"}
+        {
+            "wetland_id": "a",
+            "date": days,
+            "stage_m": np.linspace(0.1, 0.49, len(days)),
+            "stage_sd_m": 0.02,
+            "period": "1",
+        }
     )
     better = one.assign(stage_m=0.3, stage_sd_m=0.01).iloc[5:12]
     return pd.concat([one.assign(logger_id="L1"), better.assign(logger_id="L2")]).assign(quality="good", censored=False)

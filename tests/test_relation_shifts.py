@@ -41,7 +41,8 @@ def test_extent_lost_at_the_same_stage_is_told_apart():
 
 def test_steady_records_raise_no_alarm():
     alarms = sum(
-        len(fit_relations(w.pairs, w.wetlands, seed=1).shifts) for w in (World(seed=20 + s, n=45, n_loggers=12) for s in range(7))
+        len(fit_relations(w.pairs, w.wetlands, seed=1).shifts)
+        for w in (World(seed=20 + s, n=45, n_loggers=12) for s in range(7))
     )
     # 84 wetlands x 3 years; the least wanted is 1 in 40
     assert alarms <= 1

@@ -33,7 +33,14 @@ KEPT = {
     "loggers": "logger_record",
     "checks": "field_checks",
 }
-_WHEN = {"pairs": "date", "shifts": "date", "heldout": "date", "loggers": "time", "checks": "time", "corrections": "start"}
+_WHEN = {
+    "pairs": "date",
+    "shifts": "date",
+    "heldout": "date",
+    "loggers": "time",
+    "checks": "time",
+    "corrections": "start",
+}
 
 
 def thin_record(flagged: pd.DataFrame, height_m: float) -> pd.DataFrame:
@@ -230,7 +237,9 @@ def _read_scene(archive: Archive, scene: str, size: int) -> tuple[dict[str, np.n
     if table.num_rows != size or percent.size != size:
         return None
     code = table.column("code").to_numpy()
-    unseen = (code != ViewCode.CLEAR) & (code != ViewCode.CLOUD) & (code != ViewCode.SHADOW) & (code != ViewCode.SNOW_ICE)
+    unseen = (
+        (code != ViewCode.CLEAR) & (code != ViewCode.CLOUD) & (code != ViewCode.SHADOW) & (code != ViewCode.SNOW_ICE)
+    )
     bands = {}
     for name in names:
         raw = table.column(name).to_numpy()
@@ -255,4 +264,3 @@ def _paint(
     seen = percent[place]
     seen[off] = MAP_NOT_SEEN
     return paint_view(scene, part, seen, bounds)
-

@@ -32,7 +32,18 @@ _TABLES = (
     ("size_classes", "size_classes"),
     ("changes", "changes"),
 )
-_LIBRARIES = ("numpy", "pandas", "scipy", "scikit-learn", "lightgbm", "rasterio", "numba", "xarray", "dask", "geopandas")
+_LIBRARIES = (
+    "numpy",
+    "pandas",
+    "scipy",
+    "scikit-learn",
+    "lightgbm",
+    "rasterio",
+    "numba",
+    "xarray",
+    "dask",
+    "geopandas",
+)
 
 
 def write_skill_and_report(

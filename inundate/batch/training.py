@@ -102,7 +102,7 @@ def _examples(
         clear[where] = code[at] == ViewCode.CLEAR
     owner = _nearest(table, labels, layout)
     calendar, settled = leaves
-    share = settled.to_numpy()[settled.index.get_indexer(table["scene_id"]), owner]
+    share = settled.to_numpy()[settled.index.get_indexer(list(table["scene_id"])), owner]
     state, _ = calendar.states(layout.wetlands["wetland_id"].to_numpy()[owner], table["date"].to_numpy())
     sun = table["scene_id"].map({p.scene_id: p.sun_elevation_deg for p in places}).to_numpy(float)
     return make_examples(
@@ -128,7 +128,7 @@ def _nearest(table: pd.DataFrame, labels: LabelPixels, layout: Layout) -> np.nda
     """Return the row of the wetland whose leaf state serves each label: its own, else the nearest."""
     from scipy.spatial import cKDTree
 
-    own = pd.Index(layout.wetlands["wetland_id"]).get_indexer(pd.Index(table["wetland_id"]))
+    own = pd.Index(layout.wetlands["wetland_id"]).get_indexer(list(table["wetland_id"]))
     x, y = labels.grid.centres(table["grid_row"].to_numpy(), table["grid_col"].to_numpy())
     _, near = cKDTree(layout.wetlands[["x", "y"]].to_numpy()).query(np.column_stack([x, y]))
     return np.where(own >= 0, own, near)

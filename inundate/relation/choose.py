@@ -149,9 +149,7 @@ def band_weights(weights: np.ndarray, able: np.ndarray) -> np.ndarray:
     return out
 
 
-def mixture_error(
-    held: dict[int, np.ndarray], weights: np.ndarray, unit: np.ndarray, best: np.ndarray
-) -> np.ndarray:
+def mixture_error(held: dict[int, np.ndarray], weights: np.ndarray, unit: np.ndarray, best: np.ndarray) -> np.ndarray:
     """Return held-out predictions of the chosen family (pair, 4) whose model sd holds the spread between families too."""
     total = np.zeros(unit.size)
     square = np.zeros(unit.size)
@@ -194,7 +192,8 @@ def band_scale(
     worth = np.ones(gap.size) if heft is None else heft
     gap, model_sd, noise_sd, worth = gap[good], model_sd[good], noise_sd[good], worth[good]
     best = [
-        float(np.sum(worth * log_density(gap, np.sqrt((c * model_sd) ** 2 + noise_sd**2), nu))) - 0.5 * (np.log(c) / (_WIDER_SD if c > 1 else _NARROWER_SD)) ** 2
+        float(np.sum(worth * log_density(gap, np.sqrt((c * model_sd) ** 2 + noise_sd**2), nu)))
+        - 0.5 * (np.log(c) / (_WIDER_SD if c > 1 else _NARROWER_SD)) ** 2
         for c in _SCALES
     ]
     return float(_SCALES[int(np.argmax(best))])

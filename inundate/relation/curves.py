@@ -62,7 +62,9 @@ def draw_curves(
             if code in roots and cut[code] > begin:
                 rows = slice(begin, cut[code])
                 family[u, rows] = code
-                drawn[u, rows] = _from_share(code, centres[code][u] + z[rows, :N_PARAM] @ roots[code][u].T, reference[u])
+                drawn[u, rows] = _from_share(
+                    code, centres[code][u] + z[rows, :N_PARAM] @ roots[code][u].T, reference[u]
+                )
             begin = cut[code]
     return Drawn(family, drawn, shift)
 
@@ -163,9 +165,7 @@ class Curves:
 
     def central(self, unit: np.ndarray, stage_m: np.ndarray) -> np.ndarray:
         """Return the share of the largest extent (row,) at each row's stage on its unit's curve."""
-        return reading.share_of_units(
-            self.family, self.best, unit, self.ground, np.asarray(stage_m, float)
-        )
+        return reading.share_of_units(self.family, self.best, unit, self.ground, np.asarray(stage_m, float))
 
     def top_stage(self) -> np.ndarray:
         """Return the stage (m) at which each unit's curve reaches its largest extent."""
@@ -242,9 +242,7 @@ class Curves:
         at = np.zeros(N_GRID, np.int64)
         for row, d in enumerate(take):
             wet = np.where(grid > 0, grid + shift[unit, d], 0.0)
-            one = reading.share_of_units(
-                family[unit, d : d + 1], theta[unit, d : d + 1], at, ground, wet
-            )
+            one = reading.share_of_units(family[unit, d : d + 1], theta[unit, d : d + 1], at, ground, wet)
             curve = np.clip(np.maximum.accumulate(centre + factor * (one - centre)), 0.0, 1.0)
             out[row] = np.where(stage > 0, np.interp(stage, grid, curve), 0.0) * size
             out[row, np.isnan(stage)] = np.nan

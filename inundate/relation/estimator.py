@@ -107,7 +107,9 @@ class StageAreaRelation(RegressorMixin, BaseEstimator):
 
     def _one_feature(self, X: np.ndarray) -> None:
         if X.shape[1] != 1:
-            message = f"X: got {X.shape[1]} columns; stage alone is the feature (reshape to (pairs, 1)); drop the others"
+            message = (
+                f"X: got {X.shape[1]} columns; stage alone is the feature (reshape to (pairs, 1)); drop the others"
+            )
             raise InputError(message)
 
     def predict(self, X: np.ndarray) -> np.ndarray:

@@ -318,19 +318,17 @@ def _serving(units: Units) -> np.ndarray:
     return known
 
 
-def _relations_table(
-    units: Units, fits: dict[int, Fit], weights: np.ndarray, choices: pd.DataFrame
-) -> pd.DataFrame:
+def _relations_table(units: Units, fits: dict[int, Fit], weights: np.ndarray, choices: pd.DataFrame) -> pd.DataFrame:
     best = weights.argmax(axis=1)
     table = units.table
     size = table["area_max_m2"].to_numpy(float)
     scores = choices.loc[choices["chosen"], ["wetland_id", "period", "heldout_rmse_m2"]]
     rmse = table[["wetland_id", "period"]].merge(scores, on=["wetland_id", "period"], how="left")["heldout_rmse_m2"]
     own = np.array([fits[int(f)].own[u] / FAMILY_SIZE[f] for u, f in enumerate(best)])
-    words = [
-        json.dumps(named_parameters(int(f), fits[int(f)].theta[u], float(size[u]))) for u, f in enumerate(best)
-    ]
-    out = table[["wetland_id", "period", "n_pairs", "stage_min_m", "stage_max_m", "valid_from", "valid_to", "note"]].copy()
+    words = [json.dumps(named_parameters(int(f), fits[int(f)].theta[u], float(size[u]))) for u, f in enumerate(best)]
+    out = table[
+        ["wetland_id", "period", "n_pairs", "stage_min_m", "stage_max_m", "valid_from", "valid_to", "note"]
+    ].copy()
     out["family"] = [FAMILIES[f] for f in best]
     out["parameters"] = words
     out["rmse_m2"] = rmse.to_numpy(float)

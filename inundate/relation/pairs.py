@@ -202,7 +202,9 @@ def lay_out(
     bad = sites.loc[~(sites["area_max_m2"] > 0)]
     if len(bad):
         key, value = bad.iloc[0]["wetland_id"], bad.iloc[0]["area_max_m2"]
-        message = f"table wetlands, wetland {key}: area_max_m2 is {value}; it must be above 0 m2; give the polygon's area"
+        message = (
+            f"table wetlands, wetland {key}: area_max_m2 is {value}; it must be above 0 m2; give the polygon's area"
+        )
         raise InputError(message)
     sites = sites.sort_values("wetland_id", kind="stable").reset_index(drop=True)
     tables, spans, laid, place = _hypsometries(hypsometry, sites)
@@ -262,9 +264,7 @@ def stack_tables(laid: dict[str, tuple[np.ndarray, np.ndarray]]) -> tuple[np.nda
     return np.stack([one[0] for one in built]), np.stack([one[1] for one in built])
 
 
-def _clean(
-    pairs: pd.DataFrame, sites: pd.DataFrame, options: RelationOptions
-) -> tuple[pd.DataFrame, list[Refusal]]:
+def _clean(pairs: pd.DataFrame, sites: pd.DataFrame, options: RelationOptions) -> tuple[pd.DataFrame, list[Refusal]]:
     clean = pairs.copy()
     clean["wetland_id"] = clean["wetland_id"].astype(str)
     clean["date"] = _day(clean["date"]) if len(clean) else pd.to_datetime(clean["date"])
@@ -331,7 +331,12 @@ def _believable(
 def _unit_table(clean: pd.DataFrame, sites: pd.DataFrame, place: dict[str, int]) -> pd.DataFrame:
     found = (
         clean.groupby(["wetland_id", "period"], sort=True)
-        .agg(start=("date", "min"), n_pairs=("date", "size"), stage_min_m=("stage_m", "min"), stage_max_m=("stage_m", "max"))
+        .agg(
+            start=("date", "min"),
+            n_pairs=("date", "size"),
+            stage_min_m=("stage_m", "min"),
+            stage_max_m=("stage_m", "max"),
+        )
         .reset_index()
     )
     units = sites.merge(found, on="wetland_id", how="left")

@@ -94,7 +94,9 @@ def plot_relation(found: RelationSet, wetland_id: str, pairs: pd.DataFrame) -> F
     axes.set_title(f"{wetland_id}: {family}, {last['n_pairs']} pairs{fit}", loc="left", fontsize=11)
     words = [w.split(":")[0] for w in found.shifts.loc[found.shifts["wetland_id"] == wetland_id, "words"]]
     if words:
-        axes.text(0.02, 0.98, "\n".join(words), transform=axes.transAxes, va="top", fontsize=8, color="#8a3b00", wrap=True)
+        axes.text(
+            0.02, 0.98, "\n".join(words), transform=axes.transAxes, va="top", fontsize=8, color="#8a3b00", wrap=True
+        )
     axes.legend(loc="lower right", fontsize=7.5, frameon=False, ncols=2)
     axes.spines[["top", "right"]].set_visible(False)
     return figure

@@ -96,9 +96,7 @@ class RelationSet:
         """Factor by which held-out pairs widened the bands inside and outside the stages seen, and without pairs."""
         return self._curves.scale
 
-    def predict(
-        self, wetland_id: str, stage_m: np.ndarray, dates: np.ndarray | None = None
-    ) -> pd.DataFrame:
+    def predict(self, wetland_id: str, stage_m: np.ndarray, dates: np.ndarray | None = None) -> pd.DataFrame:
         """Predict extent from stage for one wetland.
 
         Parameters
@@ -135,9 +133,7 @@ class RelationSet:
         out.insert(0, "wetland_id", names)
         return out
 
-    def draws(
-        self, wetland_id: str, stage_m: np.ndarray, n: int = 100, dates: np.ndarray | None = None
-    ) -> np.ndarray:
+    def draws(self, wetland_id: str, stage_m: np.ndarray, n: int = 100, dates: np.ndarray | None = None) -> np.ndarray:
         """Return whole drawn curves read at the stages, m2, shape (draw, row): errors that days of a wetland share.
 
         Parameters
@@ -192,7 +188,9 @@ class RelationSet:
             message = f"step_m: got {step_m!r}; it must be above 0 m; 0.01 is usual"
             raise InputError(message)
         c = self._curves
-        end = np.minimum(np.maximum(c.top_stage() + step_m, c.table["stage_max_m"].fillna(0.0).to_numpy(float)), c.grid[:, -1])
+        end = np.minimum(
+            np.maximum(c.top_stage() + step_m, c.table["stage_max_m"].fillna(0.0).to_numpy(float)), c.grid[:, -1]
+        )
         count = np.ceil(end / step_m - 1e-9).astype(np.int64) + 1
         if count.size and count.max() > _STEPS_MOST:
             message = f"step_m: {step_m} m gives {count.max()} rows for one wetland; at most {_STEPS_MOST}; take a coarser step"
@@ -292,7 +290,8 @@ def _table(kept: dict[str, Any]) -> pd.DataFrame:
     return pd.DataFrame(
         {
             name: pd.Series(
-                pd.to_datetime(kept["values"][name]) if kind.startswith("datetime") else kept["values"][name], dtype=kind
+                pd.to_datetime(kept["values"][name]) if kind.startswith("datetime") else kept["values"][name],
+                dtype=kind,
             )
             for name, kind in kept["columns"].items()
         }

@@ -210,14 +210,22 @@ def _search(scene: Scene, before: list[np.ndarray], options: RelationOptions) ->
             tried.add(k)
             other = _account(scene, [*before, columns[:, k]])
             ratio = _ratio(scene, base, other)
-            again = _gains(scene, replace(base, heft=other.heft, left=_left_without(scene, other, before)), before, columns)
+            again = _gains(
+                scene, replace(base, heft=other.heft, left=_left_without(scene, other, before)), before, columns
+            )
             ratio_kind = ratio - (_STAGE_FIRST if kind == "extent" else 0.0)
             if ratio_kind > top:
                 top = ratio_kind
                 chance = min(float(stats.chi2.sf(ratio, 1)) * 2 * rows.size, 1.0)
                 near = np.flatnonzero(again >= again.max() - stats.chi2.ppf(0.95, 1))
                 best = Found(
-                    int(rows[k]), kind, float(other.coef[-1]), chance, int(rows[near[0]]), int(rows[near[-1]]), columns[:, k]
+                    int(rows[k]),
+                    kind,
+                    float(other.coef[-1]),
+                    chance,
+                    int(rows[near[0]]),
+                    int(rows[near[-1]]),
+                    columns[:, k],
                 )
             k = int(again.argmax())
     if best is None or best.chance >= options.shift_alpha:

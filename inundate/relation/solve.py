@@ -203,15 +203,15 @@ def _step(size: int, damp: float, one: One, space: Space, info: np.ndarray, move
 
 
 @nb.njit(cache=True, nogil=True)
-def fit_one(family: int, size: int, theta: np.ndarray, phi: float, one: One, info: np.ndarray) -> tuple[float, float, float]:
+def fit_one(
+    family: int, size: int, theta: np.ndarray, phi: float, one: One, info: np.ndarray
+) -> tuple[float, float, float]:
     """Fit one curve from ``theta`` (changed in place); ``info`` receives the information of the pairs.
 
     Returns the cost, the weighted sum of squared raw residuals (for the noise scale) and the number of pairs that count.
     """
     n = one.use.size
-    space = Space(
-        np.zeros((n, N_PARAM)), np.zeros(n), np.ones(n), np.ones(n), np.zeros(N_PARAM), np.zeros(N_WORK)
-    )
+    space = Space(np.zeros((n, N_PARAM)), np.zeros(n), np.ones(n), np.ones(n), np.zeros(N_PARAM), np.zeros(N_WORK))
     move, trial = np.zeros(N_PARAM), theta.copy()
     damp, cost, fresh = 1e-3, 0.0, True
     for _ in range(MAX_STEPS):
@@ -337,7 +337,13 @@ def fit_units(
 
 @nb.njit(cache=True, nogil=True)
 def hold_out(
-    family: int, size: int, fitted: tuple[np.ndarray, np.ndarray, float], belief: Belief, flat: Flat, ground: Ground, blocks: np.ndarray
+    family: int,
+    size: int,
+    fitted: tuple[np.ndarray, np.ndarray, float],
+    belief: Belief,
+    flat: Flat,
+    ground: Ground,
+    blocks: np.ndarray,
 ) -> np.ndarray:
     """Refit without each block in turn and predict the block.
 

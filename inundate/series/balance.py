@@ -73,7 +73,7 @@ def bucket_path(
 
 
 @njit(cache=True, nogil=True)
-def bucket_slopes(
+def bucket_slopes(  # noqa: PLR0912, PLR0915 - the derivative beside each line of the balance
     form: int,
     theta: np.ndarray,
     rain: np.ndarray,

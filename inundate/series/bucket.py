@@ -144,9 +144,7 @@ def fit_bucket(
                 damped[a, a] *= 1.0 + damp
             trial = theta + np.linalg.solve(damped, grad)
             bucket_path(form, trial, rain, pet, runoff, base, wet, table, full, moved)
-            new = _cost(moved, day, level, inv_low, inv_high, resid2, weight2) + _prior_cost(
-                trial, mean, precision
-            )
+            new = _cost(moved, day, level, inv_low, inv_high, resid2, weight2) + _prior_cost(trial, mean, precision)
             if new < cost:
                 better = True
                 break

@@ -79,9 +79,7 @@ def _simplex(kinds: int) -> np.ndarray:
     return grid[np.argsort((grid**2).sum(axis=1), kind="stable")]
 
 
-def solve_width(
-    gap: np.ndarray, sd: np.ndarray, noise: np.ndarray, weight: np.ndarray, aim: float = 0.9
-) -> float:
+def solve_width(gap: np.ndarray, sd: np.ndarray, noise: np.ndarray, weight: np.ndarray, aim: float = 0.9) -> float:
     """Return the factor on ``sd`` at which a share ``aim`` of gaps lies inside; ``noise`` is the hidden value's own error."""
     low, high = 0.2, 6.0
     for _ in range(40):

@@ -34,17 +34,13 @@ def _day_keys(table: pd.DataFrame | None, time: str, values: list[str]) -> pd.Da
     return frame.sort_values([*_KEY, "text"]).groupby(_KEY)["text"].agg(";".join).reset_index()
 
 
-def _moved_days(
-    before: pd.DataFrame | None, now: pd.DataFrame | None, time: str, values: list[str]
-) -> pd.DataFrame:
+def _moved_days(before: pd.DataFrame | None, now: pd.DataFrame | None, time: str, values: list[str]) -> pd.DataFrame:
     """Return days whose events are new, gone or changed: wetland_id, date, what."""
     old, new = _day_keys(before, time, values), _day_keys(now, time, values)
     both = old.merge(new, on=_KEY, how="outer", suffixes=("_old", "_new"))
     both = both[both["text_old"] != both["text_new"]]
     what = np.where(both["text_old"].isna(), "new", np.where(both["text_new"].isna(), "withdrawn", "revised"))
-    return pd.DataFrame(
-        {"wetland_id": both["wetland_id"].to_numpy(), "date": both["date"].to_numpy(), "what": what}
-    )
+    return pd.DataFrame({"wetland_id": both["wetland_id"].to_numpy(), "date": both["date"].to_numpy(), "what": what})
 
 
 def _used(table: pd.DataFrame | None) -> pd.DataFrame | None:
@@ -94,15 +90,9 @@ def changes(
         if gone:
             msg = f"{name}: column {gone[0]!r} is missing: give an extent_daily table"
             raise InputError(msg)
-    both = previous_daily[[*_KEY, "area_m2"]].merge(
-        daily[[*_KEY, "area_m2"]], on=_KEY, suffixes=("_before", "")
-    )
-    both = both[(both["area_m2"] - both["area_m2_before"]).abs() >= least_m2].sort_values(
-        _KEY, ignore_index=True
-    )
-    out = both.rename(columns={"area_m2_before": "area_before_m2"})[
-        [*_KEY, "area_before_m2", "area_m2"]
-    ].copy()
+    both = previous_daily[[*_KEY, "area_m2"]].merge(daily[[*_KEY, "area_m2"]], on=_KEY, suffixes=("_before", ""))
+    both = both[(both["area_m2"] - both["area_m2_before"]).abs() >= least_m2].sort_values(_KEY, ignore_index=True)
+    out = both.rename(columns={"area_m2_before": "area_before_m2"})[[*_KEY, "area_before_m2", "area_m2"]].copy()
     views = _moved_days(_used(observed_before), _used(observed_now), "datetime", ["area_m2", "area_sd_m2"])
     stage = _moved_days(stage_before, stage_now, "date", ["stage_m"])
     causes = pd.concat([views.assign(source="view"), stage.assign(source="stage")], ignore_index=True)

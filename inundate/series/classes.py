@@ -144,9 +144,7 @@ def area_days(
             continue
         best = np.add.reduceat(area[own].sum(axis=0, dtype=np.float64), start)
         low, high = np.percentile(np.add.reduceat(sums[k], start, axis=1), [5, 95], axis=0)
-        frame = pd.DataFrame(
-            {"month": months.astype("datetime64[ns]"), "size_class": name, "area_days_m2d": best}
-        )
+        frame = pd.DataFrame({"month": months.astype("datetime64[ns]"), "size_class": name, "area_days_m2d": best})
         frame["area_days_lo_m2d"], frame["area_days_hi_m2d"] = np.minimum(low, best), np.maximum(high, best)
         frame["area_days_max_m2d"], frame["n_days"] = largest[own].sum() * length, length
         frame["n_wetlands"] = int(own.sum())

@@ -68,9 +68,7 @@ def fill_series(inputs: SeriesInputs, *, options: FillOptions | None = None, see
     logged = {panel.ids[i] for i in np.flatnonzero(setup.drivers.fold > 0)}
     blind = _blind_maps(setup, inputs, logged)
     setup, views, begun = weigh_views(setup, blind)
-    fits = [
-        fit_kind(setup, k, views, panel.stage, b) for k, b in zip(available_kinds(setup), begun, strict=True)
-    ]
+    fits = [fit_kind(setup, k, views, panel.stage, b) for k, b in zip(available_kinds(setup), begun, strict=True)]
     parts = [
         hide_loggers(setup, blind, fits, views, panel.stage),
         hide_blocks(setup, fits, views, panel.stage),
@@ -79,9 +77,7 @@ def fill_series(inputs: SeriesInputs, *, options: FillOptions | None = None, see
     evidence = join(found) if found else None
     weights, scores = choose_weights(evidence, len(panel.ids), len(fits))
     everyone = range(len(panel.ids))
-    levels = blend(
-        [smooth_levels(setup, f, everyone, views, panel.stage, f.posterior) for f in fits], weights
-    )
+    levels = blend([smooth_levels(setup, f, everyone, views, panel.stage, f.posterior) for f in fits], weights)
     wide = _widen(setup, levels, evidence, weights, views)
     reasons = _reasons(setup, fits, weights, scores, evidence)
     return _assemble(setup, levels, wide, views, (reasons, _joint(evidence, weights, fits)))
@@ -130,9 +126,7 @@ def _stage_days(stage: Events, days: int) -> np.ndarray:
     return out
 
 
-def _widen(
-    setup: Setup, levels: Levels, evidence: Evidence | None, weights: np.ndarray, views: Events
-) -> np.ndarray:
+def _widen(setup: Setup, levels: Levels, evidence: Evidence | None, weights: np.ndarray, views: Events) -> np.ndarray:
     """Return calibrated standard deviations of levels (wetland, day)."""
     panel = setup.panel
     third = size_third(panel.area_max_m2)
@@ -158,9 +152,7 @@ def _joint(evidence: Evidence | None, weights: np.ndarray, fits: Sequence[Fitted
     if evidence is None:
         return Joint(memory, 0.5)
     mean, sd = blended_evidence(evidence, weights)
-    z = np.clip(
-        (0.5 * (np.clip(evidence.low, mean, None) + np.clip(evidence.high, None, mean)) - mean) / sd, -3, 3
-    )
+    z = np.clip((0.5 * (np.clip(evidence.low, mean, None) + np.clip(evidence.high, None, mean)) - mean) / sd, -3, 3)
     frame = (
         pd.DataFrame({"w": evidence.wetland, "d": evidence.day // 5, "z": z})
         .groupby(["w", "d"], as_index=False)["z"]
@@ -204,9 +196,7 @@ def _reasons(
         key = fit.kind.replace(" ", "_")
         frame[f"weight_{key}"] = weights[:, k]
         frame[f"score_{key}"] = scores[:, k]
-    frame["departure_sd_m"] = (
-        sum(weights[:, k] * f.departure.sd for k, f in enumerate(fits)) * setup.maps.full_m
-    )
+    frame["departure_sd_m"] = sum(weights[:, k] * f.departure.sd for k, f in enumerate(fits)) * setup.maps.full_m
     frame["departure_memory_days"] = sum(weights[:, k] * f.departure.memory for k, f in enumerate(fits))
     frame["n_views"] = np.diff(panel.views.start)
     frame["n_stage_days"] = logged

@@ -68,9 +68,7 @@ class Evidence:
 
 def join(parts: Sequence[Evidence]) -> Evidence:
     """Return the rows of several pieces, one after another."""
-    return Evidence(
-        *(np.concatenate([getattr(p, name) for p in parts], axis=-1) for name in Evidence.__slots__)
-    )
+    return Evidence(*(np.concatenate([getattr(p, name) for p in parts], axis=-1) for name in Evidence.__slots__))
 
 
 def season_blocks(setup: Setup) -> np.ndarray:
@@ -162,9 +160,7 @@ def hide_loggers(
         wanted = stage.keep(np.isin(stage.owner, items)).certain()
         row = np.searchsorted(items, wanted.owner)
         truth, truth_sd = relation_share(setup, wanted)
-        parts.append(
-            _rows(hidden, items, row, wanted.day, truth, truth_sd, block_of[wanted.day], levels, True)
-        )
+        parts.append(_rows(hidden, items, row, wanted.day, truth, truth_sd, block_of[wanted.day], levels, True))
     return join(parts)
 
 
@@ -259,7 +255,5 @@ def hide_blocks(setup: Setup, fits: Sequence[Fitted], views: Events, stage: Even
             levels.append(smooth_levels(setup, fit, items.tolist(), seen, kept, got))
         gone = sample.keep((group[sample.day] == g) & (sample.kind == 0))
         row = np.searchsorted(items, gone.owner)
-        parts.append(
-            _rows(setup, items, row, gone.day, gone.value, gone.sd, block_of[gone.day], levels, False)
-        )
+        parts.append(_rows(setup, items, row, gone.day, gone.value, gone.sd, block_of[gone.day], levels, False))
     return join(parts)

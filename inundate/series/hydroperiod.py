@@ -76,9 +76,7 @@ def hydroperiod(
         for y in range(names.size):
             got = np.empty((n_draws, len(MEASURES)))
             for n in range(n_draws):
-                year_measures(
-                    draws[n, start[y] : stop[y]].astype(np.float64), wet_share * largest, largest, one
-                )
+                year_measures(draws[n, start[y] : stop[y]].astype(np.float64), wet_share * largest, largest, one)
                 got[n] = one
             table[i, y] = _summary(got)
             middle, concentration[i, y] = circular_timing(got[:, place])
@@ -124,8 +122,5 @@ def mean_timing(hydro: pd.DataFrame, measure: str = "max_day") -> pd.DataFrame:
     if measure not in _DAY_MEASURES:
         msg = f"measure: got {measure!r}: it must be one of {', '.join(_DAY_MEASURES)}"
         raise InputError(msg)
-    rows = [
-        (w, *circular_timing(g[measure].dropna().to_numpy(), YEAR_DAYS))
-        for w, g in hydro.groupby("wetland_id")
-    ]
+    rows = [(w, *circular_timing(g[measure].dropna().to_numpy(), YEAR_DAYS)) for w, g in hydro.groupby("wetland_id")]
     return pd.DataFrame(rows, columns=["wetland_id", "mean_day", "r"])

@@ -190,14 +190,8 @@ def _span(inputs: SeriesInputs) -> tuple[pd.Timestamp, pd.Timestamp]:
     if not days and (inputs.first_date is None or inputs.last_date is None):
         msg = "observed, stage_daily: both are empty and no first_date and last_date given: give views, stage or both dates"
         raise InputError(msg)
-    first = (
-        min(d.min() for d in days)
-        if inputs.first_date is None
-        else pd.Timestamp(inputs.first_date).normalize()
-    )
-    last = (
-        max(d.max() for d in days) if inputs.last_date is None else pd.Timestamp(inputs.last_date).normalize()
-    )
+    first = min(d.min() for d in days) if inputs.first_date is None else pd.Timestamp(inputs.first_date).normalize()
+    last = max(d.max() for d in days) if inputs.last_date is None else pd.Timestamp(inputs.last_date).normalize()
     if last < first:
         msg = f"last_date: {last.date()} lies before first_date {first.date()}: swap or correct them"
         raise InputError(msg)
@@ -235,10 +229,7 @@ def _views(
     _need(table, "observed", ("wetland_id", "datetime", "area_m2", "area_sd_m2", "leaf_state", "used"))
     wetland = table["wetland_id"].astype(str).map(place)
     good = (
-        table["used"].astype(bool)
-        & wetland.notna()
-        & np.isfinite(table["area_m2"])
-        & np.isfinite(table["area_sd_m2"])
+        table["used"].astype(bool) & wetland.notna() & np.isfinite(table["area_m2"]) & np.isfinite(table["area_sd_m2"])
     )
     table, wetland = table[good], wetland[good].astype(np.int64)
     unknown = set(table["leaf_state"].astype(str)) - set(LEAF_STATES)
@@ -246,9 +237,7 @@ def _views(
         msg = f"observed: leaf_state {sorted(unknown)[0]!r} is unknown: use one of {', '.join(LEAF_STATES)}"
         raise InputError(msg)
     largest = area_max[wetland.to_numpy()]
-    frame = pd.DataFrame(
-        {"wetland": wetland.to_numpy(), "day": (_dates(table["datetime"]) - first).dt.days.to_numpy()}
-    )
+    frame = pd.DataFrame({"wetland": wetland.to_numpy(), "day": (_dates(table["datetime"]) - first).dt.days.to_numpy()})
     frame["value"] = np.clip(table["area_m2"].to_numpy(float) / largest, 0, 1)
     frame["sd"] = np.maximum(table["area_sd_m2"].to_numpy(float) / largest, least)
     frame["kind"] = table["leaf_state"].astype(str).map({s: k for k, s in enumerate(LEAF_STATES)}).to_numpy()
@@ -264,9 +253,7 @@ def _stage(table: pd.DataFrame | None, place: dict[str, int], first: pd.Timestam
     wetland = table["wetland_id"].astype(str).map(place)
     good = wetland.notna() & np.isfinite(table["stage_m"].astype(float))
     table, wetland = table[good], wetland[good].astype(np.int64)
-    frame = pd.DataFrame(
-        {"wetland": wetland.to_numpy(), "day": (_dates(table["date"]) - first).dt.days.to_numpy()}
-    )
+    frame = pd.DataFrame({"wetland": wetland.to_numpy(), "day": (_dates(table["date"]) - first).dt.days.to_numpy()})
     frame["value"] = table["stage_m"].to_numpy(float)
     sd = table["stage_sd_m"].to_numpy(float) if "stage_sd_m" in table else np.full(len(table), 0.02)
     frame["sd"] = np.maximum(np.where(np.isfinite(sd), sd, 0.02), 0.002)
@@ -293,9 +280,7 @@ def _leaf(table: pd.DataFrame, place: dict[str, int], first: pd.Timestamp, days:
     return out
 
 
-def _lacked(
-    inputs: SeriesInputs, maps: LevelMaps, views: Events, stage: Events, dates: np.ndarray
-) -> tuple[str, ...]:
+def _lacked(inputs: SeriesInputs, maps: LevelMaps, views: Events, stage: Events, dates: np.ndarray) -> tuple[str, ...]:
     words = []
     if stage.day.size == 0:
         words.append("no logger gave stage: dry-down under leaves rests on weather and season alone")

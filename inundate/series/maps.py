@@ -94,9 +94,7 @@ def slope_at(level: float, table: np.ndarray, full: float) -> float:
     return (share_at(high, table, full) - share_at(low, table, full)) / (high - low)
 
 
-def _tabulate(
-    stage: np.ndarray, share: np.ndarray, sd: np.ndarray
-) -> tuple[np.ndarray, np.ndarray, float] | None:
+def _tabulate(stage: np.ndarray, share: np.ndarray, sd: np.ndarray) -> tuple[np.ndarray, np.ndarray, float] | None:
     """Turn a curve into nodes; None if it holds no bowl."""
     ok = np.isfinite(stage) & np.isfinite(share)
     stage, share, sd = stage[ok], np.maximum.accumulate(np.clip(share[ok], 0, 1)), np.nan_to_num(sd[ok])
@@ -168,9 +166,7 @@ def build_maps(
     full, source = np.full(count, np.nan), ["bowl"] * count
     groups: dict[str, pd.DataFrame] = {}
     if hypsometry is not None and len(hypsometry):
-        groups = {
-            str(k): g for k, g in hypsometry.sort_values(["wetland_id", "stage_m"]).groupby("wetland_id")
-        }
+        groups = {str(k): g for k, g in hypsometry.sort_values(["wetland_id", "stage_m"]).groupby("wetland_id")}
     for i, wetland in enumerate(wetland_ids):
         got = _from_relation(relations, wetland, float(area_max_m2[i]))
         name = "relation"

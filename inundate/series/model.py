@@ -168,9 +168,7 @@ def learn_kind(setup: Setup, kind: str, views: Events, stage: Events, begin: Fit
     count, items = len(setup.panel.ids), pool_items(setup)
     prior = first_prior(setup, kind) if begin is None else begin.prior
     departure = (
-        Departure(np.full(count, _FIRST_SD), np.full(count, _FIRST_MEMORY))
-        if begin is None
-        else begin.departure
+        Departure(np.full(count, _FIRST_SD), np.full(count, _FIRST_MEMORY)) if begin is None else begin.departure
     )
     say = np.full((len(DEPARTURE_SD), len(DEPARTURE_MEMORY)), 1 / (len(DEPARTURE_SD) * len(DEPARTURE_MEMORY)))
     theta = setup.group @ prior.coef if begin is None else begin.posterior.theta.copy()

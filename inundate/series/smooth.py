@@ -96,9 +96,7 @@ def find_sites(
             p = phi * phi * p + q
         while n < day.size and day[n] == t:
             var = p + spread_var[t]
-            new_mean, new_var = matched(
-                path[t] + a, var, value[n], sd[n], kind[n], is_stage[n], table, full, outlier
-            )
+            new_mean, new_var = matched(path[t] + a, var, value[n], sd[n], kind[n], is_stage[n], table, full, outlier)
             seen, seen_var = _site(path[t] + a, var, new_mean, new_var)
             _add(site, site_var, t, seen, seen_var)
             if math.isfinite(seen_var):
@@ -106,9 +104,7 @@ def find_sites(
                 a += gain * (seen - path[t] - a)
                 p *= 1.0 - gain
             n += 1
-    _second_pass(
-        path, spread_var, day, value, sd, kind, is_stage, table, full, phi, q, s0, outlier, site, site_var
-    )
+    _second_pass(path, spread_var, day, value, sd, kind, is_stage, table, full, phi, q, s0, outlier, site, site_var)
 
 
 @njit(cache=True, nogil=True)

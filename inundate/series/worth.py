@@ -112,9 +112,7 @@ def _gains(views: Events, evidence: Evidence) -> np.ndarray:
     for leaf in (1, 2, 3):
         base = variance / (variance + (_UNPROVEN * typical) ** 2)
         in_leaf = kind == leaf
-        whole, blocks = (
-            _gain(error[in_leaf], news[in_leaf], cluster[in_leaf]) if in_leaf.any() else (0.0, 0.0)
-        )
+        whole, blocks = _gain(error[in_leaf], news[in_leaf], cluster[in_leaf]) if in_leaf.any() else (0.0, 0.0)
         for size in range(3):
             cell = in_leaf & (bins == size)
             g = (blocks * whole + _SHRINK * base[size]) / (blocks + _SHRINK)

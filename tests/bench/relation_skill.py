@@ -39,7 +39,9 @@ def simulated(folder: Path, sites: pd.DataFrame, seed: int) -> pd.DataFrame:
     """Return pairs at the dates of clear scenes from the truth, with errors."""
     rng = np.random.default_rng(seed)
     scenes = pd.read_parquet(folder / "truth/scenes.parquet")
-    days = pd.to_datetime(scenes.loc[(scenes["cloud_share"] < 0.6) & ~scenes["ice"].astype(bool), "date"]).dt.normalize()
+    days = pd.to_datetime(
+        scenes.loc[(scenes["cloud_share"] < 0.6) & ~scenes["ice"].astype(bool), "date"]
+    ).dt.normalize()
     stage = pd.read_parquet(folder / "truth/stage_daily.parquet")
     extent = pd.read_parquet(folder / "truth/extent_daily.parquet")
     both = stage.merge(extent, on=["wetland_id", "date"]).assign(date=lambda t: pd.to_datetime(t["date"]))

@@ -123,9 +123,7 @@ def score(case: Case, options: FillOptions) -> dict[str, float]:
             for size in range(3):
                 cell = (leaf == state) & (log == is_log) & (third == size)
                 if cell.any():
-                    out[f"cover {state} {'logged' if is_log else 'unlogged'} {size}"] = (
-                        100 * inside[cell].mean()
-                    )
+                    out[f"cover {state} {'logged' if is_log else 'unlogged'} {size}"] = 100 * inside[cell].mean()
                     out[f"n {state} {'logged' if is_log else 'unlogged'} {size}"] = int(cell.sum())
     out["_result"] = got  # type: ignore[assignment]
     return out
@@ -137,9 +135,7 @@ def show(rows: dict[str, dict[str, float]]) -> None:
     main = table.drop(index=[r for r in table.index if r.startswith("n ") or r in cells])
     main["mean"] = main.mean(axis=1)
     print(main.round(3).to_string())
-    pooled = {
-        r[6:]: (table.loc[r] * table.loc["n" + r[5:]]).sum() / table.loc["n" + r[5:]].sum() for r in cells
-    }
+    pooled = {r[6:]: (table.loc[r] * table.loc["n" + r[5:]]).sum() / table.loc["n" + r[5:]].sum() for r in cells}
     print("coverage by cell (all seeds):")
     print(pd.Series(pooled).round(1).unstack() if False else pd.Series(pooled).round(1).to_string())
 

@@ -42,9 +42,7 @@ def true_leaf(folder: Path, wetlands: pd.DataFrame, dates: pd.DatetimeIndex) -> 
     out = np.zeros((len(wetlands), len(dates)), int)
     place = {w: i for i, w in enumerate(wetlands["wetland_id"])}
     for row in leaves.itertuples():
-        edges = [
-            pd.Timestamp(d) for d in (row.green_up_10, row.green_up_90, row.leaf_fall_10, row.leaf_fall_90)
-        ]
+        edges = [pd.Timestamp(d) for d in (row.green_up_10, row.green_up_90, row.leaf_fall_10, row.leaf_fall_90)]
         if any(pd.isna(e) for e in edges):
             continue
         for k in range(3):
@@ -207,7 +205,5 @@ def products_case(reserve: Path, products: Path) -> Case:
         )
     weather = pd.read_csv(reserve / "inputs/weather.csv", parse_dates=["date"])
     logged = wetlands["wetland_id"].isin(stage["wetland_id"].unique()).to_numpy()
-    inputs = SeriesInputs(
-        wetlands, observed, stage, relations, hyps, weather, leaf_daily, dates[0], dates[-1]
-    )
+    inputs = SeriesInputs(wetlands, observed, stage, relations, hyps, weather, leaf_daily, dates[0], dates[-1])
     return Case(products.name, inputs, share, logged)

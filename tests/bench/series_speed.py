@@ -35,9 +35,7 @@ def many(wetlands: int, years: int) -> SeriesInputs:
             parts.append(frame)
     joined = {name: pd.concat(parts, ignore_index=True) for name, parts in tables.items()}
     stage = base.stage_daily.assign(wetland_id="c000" + base.stage_daily["wetland_id"])  # type: ignore[union-attr,operator]
-    return SeriesInputs(
-        **joined, stage_daily=stage, relations=_Prefixed(base.relations), weather=base.weather
-    )
+    return SeriesInputs(**joined, stage_daily=stage, relations=_Prefixed(base.relations), weather=base.weather)
 
 
 class _Prefixed:

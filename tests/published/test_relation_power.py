@@ -49,7 +49,8 @@ def test_two_points_give_the_constants():
 
 
 @pytest.mark.parametrize(
-    ("p", "volume", "s"), [(1.0, 628.318531, 558.505361), (2.0, 942.477796, 837.758041), (1e9, 1884.955592, 1256.637061)]
+    ("p", "volume", "s"),
+    [(1.0, 628.318531, 558.505361), (2.0, 942.477796, 837.758041), (1e9, 1884.955592, 1256.637061)],
 )
 def test_cone_paraboloid_and_cylinder(p, volume, s):
     """Radius 20 m, depth 1.5 m: a third, a half and the whole of base times depth."""

@@ -79,6 +79,4 @@ def test_published_gap_values(nile):
     np.testing.assert_allclose(
         got.smoothed[[20, 29, 39, 69]], [990.083526, 903.421103, 807.129522, 837.177324], atol=1e-6
     )
-    np.testing.assert_allclose(
-        got.smoothed_var[[20, 29, 39, 69]], [4723.604, 9715.006, 4723.597, 9715.006], atol=1e-3
-    )
+    np.testing.assert_allclose(got.smoothed_var[[20, 29, 39, 69]], [4723.604, 9715.006, 4723.597, 9715.006], atol=1e-3)

@@ -11,7 +11,7 @@ const Charts = {
       ...options,
     });
     figure.toolbar.logo = null;
-    if (window.innerWidth < 600 && figure.xaxis.ticker) figure.xaxis.ticker.desired_num_ticks = 3;
+    if (window.innerWidth < 600) for (const axis of figure.below) if (axis.ticker?.desired_num_ticks) axis.ticker.desired_num_ticks = 3;
     for (const axis of [figure.xaxis, figure.yaxis]) {
       axis.axis_label_text_font_style = "normal";
       axis.axis_label_text_font_size = "13px";

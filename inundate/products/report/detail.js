@@ -168,7 +168,7 @@ const Details = {
       figure.segment({ field: "x0" }, { field: "y0" }, { field: "x0" }, { field: "y1" }, { source: Charts.source(bars), line_color: colours.check, line_width: 1.4 });
       figure.scatter({ field: "x" }, { field: "y" }, { source: Charts.source({ x: t, y }), marker: "diamond", size: 9, fill_color: "#ffffff", line_color: colours.check, line_width: 1.6 });
     }
-    Charts.words(figure, "time (UTC)", "m above lowest ground");
+    Charts.words(figure, "time (UTC)", "level (m above lowest ground)");
     Charts.key(element, [["level as read", colours["as read"], "line"], ["stage", colours.stage, "line"], ["left out", colours["left out"], "cross"], ["field check (2 sd)", colours.check, "diamond"]]);
     Charts.put(element, figure, `Record of logger ${one.logger}, metres above lowest ground`);
   },

@@ -181,7 +181,9 @@ def _years(split: Split, wetland_id: str) -> list[dict[str, Any]]:
         one: dict[str, Any] = {"year": int(row["water_year"]), "days": int(row["n_days"])}
         for column in YEAR_COLUMNS:
             if column in rows.columns:
-                one[column] = [float(row[c]) if c in rows.columns else np.nan for c in (column, f"{column}_lo", f"{column}_hi")]
+                one[column] = [
+                    float(row[c]) if c in rows.columns else np.nan for c in (column, f"{column}_lo", f"{column}_hi")
+                ]
         out.append(one)
     return out
 

@@ -21,13 +21,22 @@ from inundate.products.report.tables import ReportTables
 
 _MARK = {"leaf_off": "o", "green_up": "^", "leaf_on": "s", "leaf_fall": "v"}
 _ROWS_A_SHEET = 8
-_STYLE = {"svg.hashsalt": "inundate", "svg.fonttype": "path", "font.size": 8.5, "axes.spines.top": False, "axes.spines.right": False}
+_STYLE = {
+    "svg.hashsalt": "inundate",
+    "svg.fonttype": "path",
+    "font.size": 8.5,
+    "axes.spines.top": False,
+    "axes.spines.right": False,
+}
 
 
 def _save(figure: Figure, path: Path) -> list[Path]:
     """Write a figure as PNG (200 dpi) and SVG without any date."""
     out = []
-    for suffix, extra in ((".png", {"dpi": 200, "metadata": {"Software": None}}), (".svg", {"metadata": {"Date": None}})):
+    for suffix, extra in (
+        (".png", {"dpi": 200, "metadata": {"Software": None}}),
+        (".svg", {"metadata": {"Date": None}}),
+    ):
         target = path.with_name(path.name + suffix)
         with replacing(target) as scratch:
             figure.savefig(scratch, format=suffix[1:], **extra)  # type: ignore[arg-type]
@@ -50,7 +59,9 @@ def _dates(axes: Axes) -> None:
 def _series_panel(axes: Axes, split: Split, wetland_id: str) -> None:
     daily, seen = split.rows("daily", wetland_id), split.rows("observed", wetland_id)
     days = pd.to_datetime(daily["date"])
-    axes.fill_between(days, daily["area_lo_m2"], daily["area_hi_m2"], color="#8fa3a8", alpha=0.45, lw=0, label="90 % interval")
+    axes.fill_between(
+        days, daily["area_lo_m2"], daily["area_hi_m2"], color="#8fa3a8", alpha=0.45, lw=0, label="90 % interval"
+    )
     axes.plot(days, daily["area_m2"], color="#1d2a2f", lw=0.9, label="daily estimate")
     if len(seen):
         used = seen[seen["used"].astype(bool)]
@@ -58,7 +69,16 @@ def _series_panel(axes: Axes, split: Split, wetland_id: str) -> None:
         for state, colour in LEAF_COLOURS.items():
             mine = (used["leaf_state"] == state).to_numpy()
             if mine.any():
-                axes.errorbar(when[mine], used["area_m2"][mine], yerr=used["area_sd_m2"][mine], fmt=_MARK[state], ms=2.8, color=colour, lw=0.6, label=state.replace("_", "-"))
+                axes.errorbar(
+                    when[mine],
+                    used["area_m2"][mine],
+                    yerr=used["area_sd_m2"][mine],
+                    fmt=_MARK[state],
+                    ms=2.8,
+                    color=colour,
+                    lw=0.6,
+                    label=state.replace("_", "-"),
+                )
     axes.set_title(_plain(wetland_id), loc="left", fontsize=8.5)
     axes.set_ylim(bottom=0)
     _dates(axes)
@@ -91,11 +111,13 @@ def _total(tables: ReportTables) -> Figure | None:
     if parts.empty:
         return None
     wide = parts.pivot_table(index="date", columns="size_class", values="area_m2", sort=True) / 1e4
-    wide = wide[sorted(wide.columns, key=lower_edge)]
+    wide = wide[sorted(map(str, wide.columns), key=lower_edge)]
     figure = Figure(figsize=(7.5, 3.4), layout="constrained")
     axes = figure.subplots()
     colours = [CLASS_COLOURS[i % len(CLASS_COLOURS)] for i in range(wide.shape[1])]
-    axes.stackplot(pd.to_datetime(wide.index), wide.to_numpy().T, labels=[str(c) for c in wide.columns], colors=colours, lw=0)
+    axes.stackplot(
+        pd.to_datetime(wide.index), wide.to_numpy().T, labels=[str(c) for c in wide.columns], colors=colours, lw=0
+    )
     axes.set_ylabel("inundated area (ha)")
     axes.set_xlabel("day (UTC)")
     axes.legend(frameon=False, ncols=3, loc="upper left")
@@ -115,11 +137,20 @@ def _relations(tables: ReportTables, split: Split) -> Figure | None:
     panels = figure.subplots(rows, columns, squeeze=False).ravel()
     for axes, name in zip(panels, names, strict=False):
         table, pairs = split.rows("relation_table", name), split.rows("pairs", name)
-        axes.fill_between(table["stage_m"], table["area_lo_m2"] / 1e4, table["area_hi_m2"] / 1e4, color="#8fa3a8", alpha=0.5, lw=0)
+        axes.fill_between(
+            table["stage_m"], table["area_lo_m2"] / 1e4, table["area_hi_m2"] / 1e4, color="#8fa3a8", alpha=0.5, lw=0
+        )
         axes.plot(table["stage_m"], table["area_m2"] / 1e4, color="#1d2a2f", lw=1.2)
         for state, colour in LEAF_COLOURS.items() if len(pairs) else ():
             mine = pairs[pairs["leaf_state"] == state]
-            axes.plot(mine["stage_m"], mine["area_m2"] / 1e4, _MARK[state], ms=2.2, color=colour, label=state.replace("_", "-"))
+            axes.plot(
+                mine["stage_m"],
+                mine["area_m2"] / 1e4,
+                _MARK[state],
+                ms=2.2,
+                color=colour,
+                label=state.replace("_", "-"),
+            )
         axes.set_title(_plain(name, 24), loc="left", fontsize=7.5)
         axes.set_ylim(bottom=0)
         axes.tick_params(labelsize=6.5)
@@ -145,7 +176,17 @@ def _loggers(tables: ReportTables, split: Split) -> Figure | None:
             axes.plot(good["time"], good["level_m"], color=FLAG_COLOURS["as read"], lw=0.7, label="level as read")
             axes.plot(good["time"], good["stage_m"], color=FLAG_COLOURS["stage"], lw=0.9, label="stage")
         if len(checks):
-            axes.errorbar(checks["time"], checks["stage_m"], yerr=2 * checks["sd_m"].fillna(0.0), fmt="D", ms=3.5, mfc="white", color=FLAG_COLOURS["check"], lw=0.8, label="field check (2 sd)")
+            axes.errorbar(
+                checks["time"],
+                checks["stage_m"],
+                yerr=2 * checks["sd_m"].fillna(0.0),
+                fmt="D",
+                ms=3.5,
+                mfc="white",
+                color=FLAG_COLOURS["check"],
+                lw=0.8,
+                label="field check (2 sd)",
+            )
         axes.axhline(0.0, color="#1d2a2f", lw=0.5, ls=":")
         axes.set_title(_plain(name), loc="left", fontsize=8.5)
         _dates(axes)
@@ -166,7 +207,15 @@ def _skill(tables: ReportTables) -> Figure | None:
     left.plot([0, 1], [0, 1], ls="--", color="#55656b", lw=0.8)
     if bins:
         sd = np.array([b.get("gap_sd") or 0.0 for b in bins])
-        left.errorbar([b["mean_probability"] for b in bins], [b["share_water"] for b in bins], yerr=2 * sd, fmt="o-", color="#0072B2", ms=4, lw=1)
+        left.errorbar(
+            [b["mean_probability"] for b in bins],
+            [b["share_water"] for b in bins],
+            yerr=2 * sd,
+            fmt="o-",
+            color="#0072B2",
+            ms=4,
+            lw=1,
+        )
     left.set(xlabel="water probability given (share)", ylabel="water among labels (share)", xlim=(0, 1), ylim=(0, 1))
     for kind, colour, mark in (("views", "#0072B2", "o"), ("logger", "#D55E00", "s")):
         mine = [(i, r) for i, r in enumerate(reversed(cover)) if r["kind"] == kind]

@@ -36,7 +36,12 @@ def map_paths(shapes: Any, order: list[str]) -> dict[str, Any]:
                 points = np.round(np.column_stack([(xy[:, 0] - west) * scale, (north - xy[:, 1]) * scale]), 1)
                 parts.append("M" + "L".join(f"{x:g} {y:g}" for x, y in points) + "Z")
         paths.append("".join(parts))
-    return {"paths": paths, "width": (east - west) * scale, "height": (north - south) * scale, "metres": span / MAP_SIZE}
+    return {
+        "paths": paths,
+        "width": (east - west) * scale,
+        "height": (north - south) * scale,
+        "metres": span / MAP_SIZE,
+    }
 
 
 def map_days(tables: ReportTables, rows: pd.DataFrame) -> dict[str, Any]:
@@ -147,7 +152,14 @@ def skill_figures(tables: ReportTables) -> dict[str, Any]:
             entries = {"all": scored.get("all") or {}} if group == "all" else scored.get(group) or {}
             for name, row in entries.items():
                 if row.get("n"):
-                    coverage.append({"kind": kind, "group": group, "name": name, **{k: row.get(k) for k in ("n", "coverage", "width", "rmse", "bias", "crps")}})
+                    coverage.append(
+                        {
+                            "kind": kind,
+                            "group": group,
+                            "name": name,
+                            **{k: row.get(k) for k in ("n", "coverage", "width", "rmse", "bias", "crps")},
+                        }
+                    )
     out: dict[str, Any] = {"reliability": reliability, "coverage": coverage, "trend": [list(t) for t in tables.trend]}
     if tables.heldout is not None and len(tables.heldout):
         hidden = tables.heldout.merge(tables.shapes[["wetland_id", "area_max_m2"]], on="wetland_id")

@@ -17,6 +17,11 @@ def _utc_day(values: pd.Series) -> pd.Series:
     return pd.to_datetime(values, utc=True).dt.tz_localize(None).dt.normalize()
 
 
+def _count(table: pd.DataFrame, wetlands: pd.Series) -> np.ndarray:
+    """Return how many rows of a table each wetland has."""
+    return table.groupby("wetland_id").size().reindex(wetlands, fill_value=0).to_numpy(int)
+
+
 def wetland_rows(tables: ReportTables) -> pd.DataFrame:
     """Return one row a wetland, sorted by wetland_id.
 
@@ -36,18 +41,19 @@ def wetland_rows(tables: ReportTables) -> pd.DataFrame:
     used = tables.observed[tables.observed["used"].astype(bool)]
     used = used.assign(day=_utc_day(used["datetime"]))
     key = out["wetland_id"]
-    out["views_used"] = key.map(used.groupby("wetland_id").size()).fillna(0).astype(int)
+    out["views_used"] = _count(used, key)
     recent = used[used["day"].dt.strftime("%Y-%m") == tables.run["month"]]
-    out["views_month"] = key.map(recent.groupby("wetland_id").size()).fillna(0).astype(int)
-    out["last_view"] = key.map(used.groupby("wetland_id")["day"].max())
+    out["views_month"] = _count(recent, key)
+    out["last_view"] = pd.to_datetime(used.groupby("wetland_id")["day"].max().reindex(key)).to_numpy()
     last = tables.relations.drop_duplicates("wetland_id", keep="last").set_index("wetland_id")
-    out["family"] = key.map(last["family"].astype(str)).fillna("")
-    out["n_pairs"] = key.map(last["n_pairs"]).fillna(0).astype(int)
-    out["rmse_m2"] = key.map(last["rmse_m2"]).astype(float)
+    last = last.reindex(key)
+    out["family"] = last["family"].astype(object).fillna("").astype(str).to_numpy()
+    out["n_pairs"] = last["n_pairs"].astype(float).fillna(0).to_numpy(int)
+    out["rmse_m2"] = last["rmse_m2"].to_numpy(float)
     own = tables.skill.get("by_wetland") or {}
     for column, name in (("hidden_rmse_share", "filled_rmse_share"), ("coverage", "filled_coverage")):
         out[column] = np.array([(own.get(w) or {}).get(name) for w in key], dtype=float)
-    out["changed_days"] = key.map(tables.changes.groupby("wetland_id").size()).fillna(0).astype(int)
+    out["changed_days"] = _count(tables.changes, key)
     out["logger"] = key.isin(set(tables.stage["wetland_id"]))
     return out
 
@@ -70,10 +76,17 @@ def look_at(tables: ReportTables, rows: pd.DataFrame) -> list[dict[str, Any]]:
     items += [_item(str(r["reason"]), []) for r in loggers[:MOST_NAMED]]
     if tables.shifts is not None and len(tables.shifts):
         words = tables.shifts.sort_values(["wetland_id", "date"])
-        items.append(_item("Stage and extent stopped agreeing as before: a moved logger or a changed wetland?", words["wetland_id"].unique().tolist()))
+        items.append(
+            _item(
+                "Stage and extent stopped agreeing as before: a moved logger or a changed wetland?",
+                words["wetland_id"].unique().tolist(),
+            )
+        )
     never = rows[rows["views_used"] == 0]
     if len(never):
-        items.append(_item("No usable view at all; the series rests on the rest of the landscape.", never["wetland_id"]))
+        items.append(
+            _item("No usable view at all; the series rests on the rest of the landscape.", never["wetland_id"])
+        )
     end = pd.Timestamp(tables.run["last_day"])
     age = (end - rows["last_view"]).dt.days
     old = rows[age > 60].assign(age=age).sort_values(["age", "wetland_id"], ascending=[False, True])
@@ -82,11 +95,18 @@ def look_at(tables: ReportTables, rows: pd.DataFrame) -> list[dict[str, Any]]:
     share = rows["interval_mean_m2"] / rows["area_max_m2"]
     wide = rows[share > 0.5].assign(share=share).sort_values(["share", "wetland_id"], ascending=[False, True])
     if len(wide):
-        items.append(_item("The month's interval is on average wider than half of the largest extent.", wide["wetland_id"]))
+        items.append(
+            _item("The month's interval is on average wider than half of the largest extent.", wide["wetland_id"])
+        )
     error = rows["rmse_m2"] / rows["area_max_m2"]
     rough = rows[error > 0.2].assign(error=error).sort_values(["error", "wetland_id"], ascending=[False, True])
     if len(rough):
-        items.append(_item("The stage-area relation misses held-out pairs by more than a fifth of the largest extent.", rough["wetland_id"]))
+        items.append(
+            _item(
+                "The stage-area relation misses held-out pairs by more than a fifth of the largest extent.",
+                rough["wetland_id"],
+            )
+        )
     poor = rows[(rows["coverage"] < 0.75)].sort_values(["coverage", "wetland_id"])
     if len(poor):
         items.append(_item("Intervals covered fewer than three quarters of the hidden views.", poor["wetland_id"]))
@@ -119,7 +139,10 @@ def delivered(tables: ReportTables, rows: pd.DataFrame) -> list[tuple[str, str]]
         ("first to last day", f"{days.min():%Y-%m-%d} to {days.max():%Y-%m-%d}" if len(days) else "none"),
         ("mean inundated area of the month", area_text(total)),
         ("share of the landscape's largest extent", percent_text(total / rows["area_max_m2"].sum())),
-        ("of the month's wetland days: seen by a scene", percent_text(float(basis.get("observed", np.nan)) if len(basis) else np.nan, 0.0)),
+        (
+            "of the month's wetland days: seen by a scene",
+            percent_text(float(basis.get("observed", np.nan)) if len(basis) else np.nan, 0.0),
+        ),
         ("told by an own logger", percent_text(float(basis.get("stage", np.nan)) if len(basis) else np.nan, 0.0)),
         ("told by neighbours, weather or season", percent_text(rest if len(basis) else np.nan)),
         ("usable views in the month", f"{int(rows['views_month'].sum()):,}"),

@@ -127,9 +127,7 @@ def paint_view(
     step = -(-max(percent.shape) // MOST_SIDE_PX)
     percent = percent[::step, ::step]
     blank = np.full(percent.shape, np.nan, np.float32)
-    blue, green, red, nir = (
-        bands[b][::step, ::step] if b in bands else blank for b in ("blue", "green", "red", "nir")
-    )
+    blue, green, red, nir = (bands[b][::step, ::step] if b in bands else blank for b in ("blue", "green", "red", "nir"))
     return Thumbnail(
         str(scene_id),
         png(_colour((red, green, blue), (0.25, 0.25, 0.25))),
