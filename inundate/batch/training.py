@@ -102,7 +102,7 @@ def _examples(
         clear[where] = code[at] == ViewCode.CLEAR
     owner = _nearest(table, labels, layout)
     calendar, settled = leaves
-    share = settled.to_numpy()[settled.index.get_indexer(list(table["scene_id"])), owner]
+    share = settled.to_numpy()[settled.index.get_indexer(pd.Index(list(table["scene_id"]))), owner]
     state, _ = calendar.states(layout.wetlands["wetland_id"].to_numpy()[owner], table["date"].to_numpy())
     sun = table["scene_id"].map({p.scene_id: p.sun_elevation_deg for p in places}).to_numpy(float)
     return make_examples(
