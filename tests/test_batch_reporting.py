@@ -29,7 +29,9 @@ def pipeline(tmp_path: Path) -> Path:
     for name in ("wetlands.gpkg", "scenes.csv"):
         (tmp_path / name).touch()
     file = tmp_path / "pipeline.toml"
-    file.write_text('[area]\nname = "A"\ncrs = "EPSG:32633"\nwetlands = "wetlands.gpkg"\n[scenes]\ncatalog = "scenes.csv"\n')
+    file.write_text(
+        '[area]\nname = "A"\ncrs = "EPSG:32633"\nwetlands = "wetlands.gpkg"\n[scenes]\ncatalog = "scenes.csv"\n'
+    )
     return file
 
 
@@ -55,8 +57,13 @@ def test_skill_is_shown_from_the_delivery(pipeline: Path) -> None:
     (pipeline.parent / "out" / "archive").mkdir(parents=True)
     write_json(folder / "run.json", {"month": "2033-01"})
     wet = {"n": 4, "accuracy": 0.75, "omission": 0.5, "commission": None}
-    skill = {"classifier": {}, "wet_dry": {"all": wet, "by_leaf_state": {"leaf_off": wet}}, "rank": None, "relation": {"median_rmse_share": None},
-             "filled": {"views": {"all": {"n": 0}}, "logger": {"all": {"n": 0}}}}
+    skill = {
+        "classifier": {},
+        "wet_dry": {"all": wet, "by_leaf_state": {"leaf_off": wet}},
+        "rank": None,
+        "relation": {"median_rmse_share": None},
+        "filled": {"views": {"all": {"n": 0}}, "logger": {"all": {"n": 0}}},
+    }
     write_json(folder / "skill.json", skill)
     found = show_skill(pipeline, None, QUIET)
     assert found["headline"] == {"wet/dry agreement with stage": 0.75}
@@ -72,7 +79,14 @@ def test_thinned_record_keeps_extremes_and_what_was_left_out() -> None:
     flag = np.full(n, "good", object)
     flag[1000] = "spike"
     depth[1000], depth[20_000] = 9.0, 3.0
-    frame = pd.DataFrame({"time": pd.date_range("2033-01-01", periods=n, freq="h"), "depth_m": depth, "stage_m": depth + 0.3, "flag": flag})
+    frame = pd.DataFrame(
+        {
+            "time": pd.date_range("2033-01-01", periods=n, freq="h"),
+            "depth_m": depth,
+            "stage_m": depth + 0.3,
+            "flag": flag,
+        }
+    )
     thin = thin_record(frame, 0.25)
     assert len(thin) <= 1501
     assert thin["time"].is_monotonic_increasing
@@ -98,15 +112,28 @@ def test_pictures_come_from_the_right_pixels(tmp_path: Path) -> None:
     site = make_site(grid, rows.ravel(), cols.ravel(), margin=2)
     archive = Archive(tmp_path)
     write_table(archive.table("site"), pd.DataFrame({"row": site.rows, "col": site.cols}))
-    write_json(archive.folder / "grid.json", {k: getattr(grid, k) for k in ("crs", "west", "north", "step", "height", "width")})
+    write_json(
+        archive.folder / "grid.json", {k: getattr(grid, k) for k in ("crs", "west", "north", "step", "height", "width")}
+    )
     percent = ((site.rows * 7 + site.cols * 3) % 101).astype(np.uint8)
-    bands = np.stack([(site.rows - 8) / 100.0, (site.cols - 18) / 100.0, np.full(site.size, 0.1), np.full(site.size, 0.4)]).astype(np.float32)
+    bands = np.stack(
+        [(site.rows - 8) / 100.0, (site.cols - 18) / 100.0, np.full(site.size, 0.1), np.full(site.size, 0.4)]
+    ).astype(np.float32)
     write_view(archive.view("S1"), ("blue", "green", "red", "nir"), bands, np.zeros(site.size, np.uint8))
     write_score(archive.score("S1"), {"probability": percent})
     x, y = 1000.0 + 200.0, 2000.0 - 160.0
     shapes = gpd.GeoDataFrame({"wetland_id": ["A"]}, geometry=[box(x + 1, y + 1, x + 49, y + 59)], crs=grid.crs)
-    seen = pd.DataFrame({"wetland_id": "A", "scene_id": ["S1", "gone"], "datetime": pd.date_range("2033-01-01", periods=2), "leaf_state": "leaf_off",
-                         "area_m2": 1.0, "clear_fraction": 1.0, "used": True})
+    seen = pd.DataFrame(
+        {
+            "wetland_id": "A",
+            "scene_id": ["S1", "gone"],
+            "datetime": pd.date_range("2033-01-01", periods=2),
+            "leaf_state": "leaf_off",
+            "area_m2": 1.0,
+            "clear_fraction": 1.0,
+            "used": True,
+        }
+    )
     loaded = load_site(archive)
     assert loaded is not None
     shots = paint_wetlands(archive, loaded, shapes, seen)["A"]

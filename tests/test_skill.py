@@ -9,7 +9,16 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from inundate.products.report import ReportTables
-from inundate.skill import SkillInputs, headline, interval_measures, pair_with_stage, score_all, size_class, unusual, wet_dry_measures
+from inundate.skill import (
+    SkillInputs,
+    headline,
+    interval_measures,
+    pair_with_stage,
+    score_all,
+    size_class,
+    unusual,
+    wet_dry_measures,
+)
 from tests.report_world import make_card, make_heldout, make_stage, make_tables
 
 Z = 1.6448536269514722
@@ -54,12 +63,14 @@ def test_wet_dry_counts_equal_counting_by_hand(tables: ReportTables, stage: pd.D
         assert score["only_seen"] == sum(r["seen"] and not r["wet"] for r in sure)
         assert score["only_known"] == sum(r["wet"] and not r["seen"] for r in sure)
         assert score["accuracy"] == pytest.approx(np.mean([r["wet"] == r["seen"] for r in sure]))
-    assert 0 < found["all"]["both_dry"] + found["all"]["only_seen"], "the invented season has dry days too"
+    assert found["all"]["both_dry"] + found["all"]["only_seen"] > 0, "the invented season has dry days too"
 
 
 def test_filled_scores_equal_plain_formulas(tables: ReportTables) -> None:
     for kind in ("views", "logger"):
-        rows = tables.heldout[tables.heldout["kind"] == kind].merge(tables.shapes[["wetland_id", "area_max_m2", "cover"]], on="wetland_id")
+        rows = tables.heldout[tables.heldout["kind"] == kind].merge(
+            tables.shapes[["wetland_id", "area_max_m2", "cover"]], on="wetland_id"
+        )
         half = Z * rows["known_sd_m2"]
         low = rows["area_m2"] - np.sqrt((rows["area_m2"] - rows["area_lo_m2"]) ** 2 + half**2)
         high = rows["area_m2"] + np.sqrt((rows["area_hi_m2"] - rows["area_m2"]) ** 2 + half**2)
@@ -90,9 +101,19 @@ def test_rank_correlation_and_relation_equal_scipy(tables: ReportTables, stage: 
 def test_row_order_does_not_matter(tables: ReportTables, stage: pd.DataFrame) -> None:
     shake = lambda t: t.sample(frac=1.0, random_state=3).reset_index(drop=True)  # noqa: E731
     choices = pd.DataFrame({"wetland_id": ["W0"], "family": ["power"]})
-    parts = (tables.shapes, tables.observed, tables.daily, stage, tables.relations, choices, make_heldout(tables.observed, tables.daily))
+    parts = (
+        tables.shapes,
+        tables.observed,
+        tables.daily,
+        stage,
+        tables.relations,
+        choices,
+        make_heldout(tables.observed, tables.daily),
+    )
     one = headline(score_all(SkillInputs(*parts, None, make_card())))
-    two = headline(score_all(SkillInputs(parts[0], *(shake(t) for t in parts[1:5]), choices, shake(parts[6]), None, make_card())))
+    two = headline(
+        score_all(SkillInputs(parts[0], *(shake(t) for t in parts[1:5]), choices, shake(parts[6]), None, make_card()))
+    )
     assert one.keys() == two.keys()
     assert len(one) == 9, "with labels, loggers and hidden values every followed score is defined"
     for name, value in one.items():
@@ -113,9 +134,13 @@ def test_without_field_data_scores_say_so(tables: ReportTables) -> None:
 
 def test_walked_extents_are_held_against_the_day(tables: ReportTables) -> None:
     day = tables.daily.iloc[[3, 500]]
-    walked = pd.DataFrame({"wetland_id": day["wetland_id"], "date": day["date"], "area_m2": day["area_m2"] * 1.1, "sd_m2": 1.0})
+    walked = pd.DataFrame(
+        {"wetland_id": day["wetland_id"], "date": day["date"], "area_m2": day["area_m2"] * 1.1, "sd_m2": 1.0}
+    )
     choices = pd.DataFrame({"wetland_id": [], "family": []})
-    found = score_all(SkillInputs(tables.shapes, tables.observed, tables.daily, None, tables.relations, choices, None, walked))["walked"]
+    found = score_all(
+        SkillInputs(tables.shapes, tables.observed, tables.daily, None, tables.relations, choices, None, walked)
+    )["walked"]
     largest = day["wetland_id"].map(tables.shapes.set_index("wetland_id")["area_max_m2"])
     assert found["all"]["n"] == 2
     assert found["all"]["bias"] == pytest.approx((-0.1 * day["area_m2"] / largest).mean())
@@ -133,7 +158,12 @@ def test_unusual_months_are_told_and_usual_ones_are_not() -> None:
 
 
 def test_size_classes_hold_their_lower_edge() -> None:
-    assert size_class(np.array([2999.9, 3000.0, 9999.9, 10000.0])).tolist() == ["under 0.3 ha", "0.3 to 1 ha", "0.3 to 1 ha", "1 ha and more"]
+    assert size_class(np.array([2999.9, 3000.0, 9999.9, 10000.0])).tolist() == [
+        "under 0.3 ha",
+        "0.3 to 1 ha",
+        "0.3 to 1 ha",
+        "1 ha and more",
+    ]
 
 
 @settings(max_examples=60, deadline=None)

@@ -53,9 +53,11 @@ def main(names: list[str]) -> None:
             index = (folder / "report.html").stat().st_size
             pages = sum(f.stat().st_size for f in (folder / "report_wetlands").rglob("*")) if wetlands > 200 else 0
             opened = ", ".join(f"{s:.2f}" for s in open_seconds(folder / "report.html"))
-            print(f"{wetlands} wetlands x {days} days, {pictures} views pictured, {logged} logged: written in {seconds:.1f} s;"
-                  f" report.html {index / 1e6:.2f} MB, wetland pages {pages / 1e6:.1f} MB; opens in {opened} s;"
-                  f" peak memory {resource.getrusage(resource.RUSAGE_SELF).ru_maxrss / 1024:.0f} MB (tables included)")
+            print(
+                f"{wetlands} wetlands x {days} days, {pictures} views pictured, {logged} logged: written in {seconds:.1f} s;"
+                f" report.html {index / 1e6:.2f} MB, wetland pages {pages / 1e6:.1f} MB; opens in {opened} s;"
+                f" peak memory {resource.getrusage(resource.RUSAGE_SELF).ru_maxrss / 1024:.0f} MB (tables included)"
+            )
 
 
 if __name__ == "__main__":

@@ -72,7 +72,10 @@ def test_crps_is_the_integral_that_defines_it():
 
 
 TABLES = [
-    ((90, 10, 20, 380), {"accuracy": 0.94, "kappa": 0.8192771084, "mcc": 0.8207677343, "omission": 0.1818181818, "commission": 0.1}),
+    (
+        (90, 10, 20, 380),
+        {"accuracy": 0.94, "kappa": 0.8192771084, "mcc": 0.8207677343, "omission": 0.1818181818, "commission": 0.1},
+    ),
     ((20, 5, 10, 15), {"accuracy": 0.70, "kappa": 0.4, "mcc": 0.4082482905, "omission": 1 / 3, "commission": 0.2}),
 ]
 

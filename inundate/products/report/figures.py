@@ -112,7 +112,7 @@ def _total(tables: ReportTables) -> Figure | None:
         return None
     wide = parts.pivot_table(index="date", columns="size_class", values="area_m2", sort=True) / 1e4
     names: list[str] = [str(c) for c in wide.columns]
-    wide = wide[sorted(names, key=lambda name: lower_edge(name))]
+    wide = wide[sorted(names, key=lower_edge)]
     figure = Figure(figsize=(7.5, 3.4), layout="constrained")
     axes = figure.subplots()
     colours = [CLASS_COLOURS[i % len(CLASS_COLOURS)] for i in range(wide.shape[1])]

@@ -63,6 +63,14 @@ def _item(text: str, wetlands: pd.Series | list[str]) -> dict[str, Any]:
     return {"text": text, "wetlands": names[:MOST_NAMED], "more": max(len(names) - MOST_NAMED, 0)}
 
 
+def _worst(rows: pd.DataFrame, measure: pd.Series, limit: float) -> pd.DataFrame:
+    """Return the rows whose measure is over a limit, greatest first, then by name."""
+    ranked = rows.assign(measure=measure.to_numpy(float)).sort_values(
+        ["measure", "wetland_id"], ascending=[False, True]
+    )
+    return ranked[ranked["measure"] > limit]
+
+
 def look_at(tables: ReportTables, rows: pd.DataFrame) -> list[dict[str, Any]]:
     """Return what needs a human eye, most pressing first: text, wetlands (at most eight named) and how many more.
 
@@ -89,17 +97,17 @@ def look_at(tables: ReportTables, rows: pd.DataFrame) -> list[dict[str, Any]]:
         )
     end = pd.Timestamp(tables.run["last_day"])
     age = (end - rows["last_view"]).dt.days
-    old = rows[age > 60].assign(age=age).sort_values(["age", "wetland_id"], ascending=[False, True])
+    old = _worst(rows, age, 60)
     if len(old):
         items.append(_item(f"No usable view for more than 60 days before {end:%Y-%m-%d}.", old["wetland_id"]))
     share = rows["interval_mean_m2"] / rows["area_max_m2"]
-    wide = rows[share > 0.5].assign(share=share).sort_values(["share", "wetland_id"], ascending=[False, True])
+    wide = _worst(rows, share, 0.5)
     if len(wide):
         items.append(
             _item("The month's interval is on average wider than half of the largest extent.", wide["wetland_id"])
         )
     error = rows["rmse_m2"] / rows["area_max_m2"]
-    rough = rows[error > 0.2].assign(error=error).sort_values(["error", "wetland_id"], ascending=[False, True])
+    rough = _worst(rows, error, 0.2)
     if len(rough):
         items.append(
             _item(
