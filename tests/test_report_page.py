@@ -315,6 +315,35 @@ def test_more_than_200_wetlands_have_a_page_each(browser: Any, tmp_path: Path) -
     one.page.close()
 
 
+def test_what_to_look_at_names_the_right_wetlands(browser: Any, tmp_path: Path, tables: ReportTables) -> None:
+    observed, daily, relations = tables.observed.copy(), tables.daily.copy(), tables.relations.copy()
+    gone = observed["wetland_id"] == "W05"
+    observed = observed[~(gone & (observed["datetime"] > pd.Timestamp("2031-09-15", tz="UTC")))]
+    observed.loc[observed["wetland_id"] == "W07", "used"] = False
+    largest = daily["wetland_id"].map(tables.shapes.set_index("wetland_id")["area_max_m2"])
+    wide = daily["wetland_id"] == "W02"
+    daily.loc[wide, "area_lo_m2"], daily.loc[wide, "area_hi_m2"] = 0.0, largest[wide]
+    relations.loc[relations["wetland_id"] == "W01", "rmse_m2"] = 1e6
+    loud = ["agreement is 0.500 this month; it was 0.900 in the middle of 8 earlier months"]
+    odd = dataclasses.replace(tables, observed=observed, daily=daily, relations=relations, warnings=loud)
+    write_report(tmp_path, odd)
+    one = Opened(browser, tmp_path / "report.html")
+    items = one.page.eval_on_selector_all(
+        ".look li",
+        "n => n.map(i => [i.firstChild.textContent, [...i.querySelectorAll('button')].map(b => b.textContent)])",
+    )
+    starts = ("agreement is", "No usable view at all", "No usable view for", "The month's", "The stage-area")
+    assert [text.startswith(s) for (text, _), s in zip(items, starts, strict=True)] == [True] * 5
+    assert [names for _, names in items] == [[], ["W07"], ["W05"], ["W02"], ["W01"]]
+    one.page.check("#f-look")
+    assert one.column(1) == ["W01", "W02", "W05", "W07"]
+    one.page.click(".look button:text('W02')")
+    one.settle()
+    assert one.page.text_content("#one-name") == "W02"
+    assert one.errors == []
+    one.page.close()
+
+
 def test_page_prints_and_every_chart_names_its_axes(opened: Opened) -> None:
     labels = opened.page.evaluate(
         "() => Bokeh.documents.flatMap(d => d.roots()).flatMap(f => [...(f.below ?? []), ...(f.left ?? [])]).map(a => a.axis_label)"

@@ -111,8 +111,8 @@ def _total(tables: ReportTables) -> Figure | None:
     if parts.empty:
         return None
     wide = parts.pivot_table(index="date", columns="size_class", values="area_m2", sort=True) / 1e4
-    names: list[str] = [str(c) for c in wide.columns]
-    wide = wide[sorted(names, key=lower_edge)]
+    names: list[str] = sorted((str(c) for c in wide.columns), key=lower_edge)
+    wide = wide[names]
     figure = Figure(figsize=(7.5, 3.4), layout="constrained")
     axes = figure.subplots()
     colours = [CLASS_COLOURS[i % len(CLASS_COLOURS)] for i in range(wide.shape[1])]
