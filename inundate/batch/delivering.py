@@ -64,6 +64,7 @@ def conclude(
     calendar: LeafCalendar,
     found: tuple[pd.DataFrame, StageResult | None],
     month: str | None,
+    lasting: tuple[float, float] = (0.0, 0.0),
 ) -> Findings:
     """Fit relations and fill the series."""
     from inundate.relation import best_pairs, fit_relations, make_pairs
@@ -89,7 +90,7 @@ def conclude(
             SeriesInputs(
                 wetlands, observed, daily, relations, layout.hypsometry, inputs.weather, leaf_daily, dates[0], last
             ),
-            options=FillOptions(workers=settings.compute.workers),
+            options=FillOptions(workers=settings.compute.workers, lasting=lasting),
             seed=settings.series.seed,
         )
     work.notes.extend(series.lacked)

@@ -147,7 +147,7 @@ def _findings(work: Work, inputs: Inputs, month: str | None) -> tuple[Findings, 
     trained = train(work, layout, labels, places, leaves)
     map_new(work, layout, places, leaves, trained)
     observed = observe(work, inputs, layout, places, leaves[0])
-    return conclude(work, inputs, layout, leaves[0], (observed, stage), month), layout
+    return conclude(work, inputs, layout, leaves[0], (observed, stage), month, trained.lasting), layout
 
 
 def _deliver(work: Work, inputs: Inputs, layout: Any, found: Findings, made_from: str) -> dict[str, Any]:

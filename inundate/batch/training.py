@@ -18,7 +18,7 @@ from inundate.common.writing import replacing_folder, write_json, write_table
 
 if TYPE_CHECKING:
     from inundate.leaves import LeafCalendar
-    from inundate.pixels import ExampleSet
+    from inundate.pixels import ExampleSet, PixelModels
 
 
 @dataclass(frozen=True, slots=True)
@@ -27,6 +27,7 @@ class Trained:
 
     mark: str
     notes: list[str]
+    lasting: tuple[float, float] = (0.0, 0.0)
 
 
 def train(
@@ -42,7 +43,11 @@ def train(
     archive, ledger, settings = work.archive, work.ledger, work.pipeline.classifier
     with work.progress.step("classifier"):
         examples = _examples(work, layout, labels, places, leaves)
-        work.refuse(list(examples.refused))
+        if examples.refused:
+            rows = ", ".join(r.name for r in examples.refused[:5])
+            work.notes.append(
+                f"{len(examples.refused)} labels are not clear in their scenes and were left out (rows {rows}, ...)"
+            )
         parts = {
             "examples": table_mark(examples.table) + array_mark(examples.reflectance),
             "code": code_mark("pixels"),
@@ -57,12 +62,25 @@ def train(
                 models.fraction.save(scratch)
                 write_table(scratch / "doubtful_labels.parquet", models.doubtful)
                 write_json(scratch / "notes.json", list(models.notes))
-            ledger.put("models", "pixels", parts, detail={"notes": list(models.notes)})
+            ledger.put(
+                "models", "pixels", parts, detail={"notes": list(models.notes), "lasting": _lasting(models, examples)}
+            )
         unit = ledger.get("models", "pixels")
     notes = [] if unit is None else list(unit.detail.get("notes", []))
     for note in notes:
         work.progress.say(f"classifier: {note}")
-    return Trained("" if unit is None else unit.fingerprint, notes)
+    missed, added = (0.0, 0.0) if unit is None else unit.detail.get("lasting", (0.0, 0.0))
+    return Trained("" if unit is None else unit.fingerprint, notes, (float(missed), float(added)))
+
+
+def _lasting(models: PixelModels, examples: ExampleSet) -> tuple[float, float]:
+    """Errors of leaf-off views that last in a wetland, from own labels out of fold."""
+    from inundate.pixels import lasting_errors
+
+    table = examples.table
+    own = (table["source"] != "starter").to_numpy() & (table["leaf_state"] == 0).to_numpy()
+    oof = models.classifier.oof_probability_
+    return lasting_errors(oof, (table["label"] == 1).to_numpy(), table["wetland_id"].to_numpy(), own)
 
 
 def _strata(table: pd.DataFrame, layout: Layout) -> pd.DataFrame:

@@ -11,6 +11,7 @@ from inundate.pixels.features import FEATURES, features, scene_context
 from inundate.pixels.forest import FastForest, ForestFallbackWarning, JointForest
 from inundate.pixels.fraction import FractionModel
 from inundate.pixels.labels import check_labels, label_pixels, match_scenes
+from inundate.pixels.lasting import between_sd, lasting_errors
 from inundate.pixels.mixing import MixOptions, mix_examples
 from inundate.pixels.training import PixelModels, train_models
 
@@ -25,10 +26,12 @@ __all__ = [
     "PixelModels",
     "ViewState",
     "WaterClassifier",
+    "between_sd",
     "check_labels",
     "features",
     "join_starter",
     "label_pixels",
+    "lasting_errors",
     "make_examples",
     "match_scenes",
     "mix_examples",

@@ -8,6 +8,7 @@ from dataclasses import replace
 import numpy as np
 import pandas as pd
 
+from inundate.common.codes import LEAF_STATES
 from inundate.series.calibrate import (
     WIDTH_90,
     blended_evidence,
@@ -20,7 +21,7 @@ from inundate.series.drivers import build_drivers
 from inundate.series.fitting import Setup, make_setup, pool_items
 from inundate.series.heldout import Evidence, hide_blocks, hide_loggers, join
 from inundate.series.inputs import Events, FillOptions, SeriesInputs, build_panel
-from inundate.series.maps import LevelMaps, build_maps, slope_at
+from inundate.series.maps import LevelMaps, build_maps, share_at, slope_at
 from inundate.series.model import (
     Fitted,
     Levels,
@@ -79,8 +80,10 @@ def fill_series(inputs: SeriesInputs, *, options: FillOptions | None = None, see
     everyone = range(len(panel.ids))
     levels = blend([smooth_levels(setup, f, everyone, views, panel.stage, f.posterior) for f in fits], weights)
     wide = _widen(setup, levels, evidence, weights, views)
+    heldout = heldout_table(setup, evidence, weights)
     reasons = _reasons(setup, fits, weights, scores, evidence)
-    return _assemble(setup, levels, wide, views, (reasons, _joint(evidence, weights, fits)))
+    made = _assemble(setup, levels, wide, views, (reasons, _joint(evidence, weights, fits)), options.lasting)
+    return replace(made, heldout=heldout)
 
 
 def _blind_maps(setup: Setup, inputs: SeriesInputs, logged: set[str]) -> LevelMaps:
@@ -220,7 +223,12 @@ def _reasons(
 
 
 def _assemble(
-    setup: Setup, levels: Levels, sd: np.ndarray, views: Events, rest: tuple[pd.DataFrame, Joint]
+    setup: Setup,
+    levels: Levels,
+    sd: np.ndarray,
+    views: Events,
+    rest: tuple[pd.DataFrame, Joint],
+    lasting: tuple[float, float],
 ) -> SeriesResult:
     panel = setup.panel
     count, days = levels.mean.shape
@@ -237,6 +245,7 @@ def _assemble(
             one[2],
             WIDTH_90,
         )
+        widen_lasting(one, lasting)
         areas[:, i] = np.minimum(one * panel.area_max_m2[i], panel.area_max_m2[i])
     basis = _basis(setup, levels, views)
     daily = daily_table(panel.ids, panel.dates, areas, basis, panel.leaf)
@@ -252,4 +261,56 @@ def _assemble(
         panel.area_max_m2,
         rest[1],
         setup.seed,
+        lasting,
     )
+
+
+def widen_lasting(share: np.ndarray, lasting: tuple[float, float]) -> None:
+    """Widen 90 % intervals by errors that last in a wetland, in place.
+
+    Parameters
+    ----------
+    share : ndarray of float64, shape (3, day)
+        Middle, low and high share of the largest extent, 0..1. Days known to be dry (all three 0) stay so.
+    lasting : (float, float)
+        See ``FillOptions.lasting``.
+    """
+    middle, low, high = share
+    reach = WIDTH_90 * np.hypot(middle * lasting[0], (1.0 - middle) * lasting[1])
+    reach = np.where(high > 1e-9, reach, 0.0)
+    share[1] = np.clip(middle - np.hypot(middle - low, reach), 0.0, middle)
+    share[2] = np.clip(middle + np.hypot(high - middle, reach), middle, 1.0)
+
+
+def heldout_table(setup: Setup, evidence: Evidence | None, weights: np.ndarray) -> pd.DataFrame | None:
+    """Return what was hidden beside what was predicted, in m2, with the calibrated 90 % interval."""
+    if evidence is None or not evidence.day.size:
+        return None
+    panel = setup.panel
+    mean, sd = blended_evidence(evidence, weights)
+    third = size_third(panel.area_max_m2)
+    sd = sd * fit_widths(evidence, weights, third)[evidence.leaf, third[evidence.wetland]]
+    largest = panel.area_max_m2[evidence.wetland]
+    low, middle, high = (
+        np.array(
+            [
+                share_at(level, setup.maps.share[i], float(setup.maps.full_m[i]))
+                for level, i in zip(mean + k * WIDTH_90 * sd, evidence.wetland, strict=True)
+            ]
+        )
+        for k in (-1.0, 0.0, 1.0)
+    )
+    out = pd.DataFrame(
+        {
+            "wetland_id": np.array(panel.ids, object)[evidence.wetland].astype(str),
+            "date": panel.dates[evidence.day],
+            "kind": np.where(evidence.from_stage, "logger", "views"),
+            "leaf_state": np.array(LEAF_STATES, object)[evidence.leaf].astype(str),
+            "known_m2": evidence.truth * largest,
+            "known_sd_m2": evidence.truth_sd * largest,
+            "area_m2": middle * largest,
+            "area_lo_m2": low * largest,
+            "area_hi_m2": high * largest,
+        }
+    )
+    return out.sort_values(["wetland_id", "date", "kind"], kind="stable", ignore_index=True)

@@ -67,6 +67,9 @@ class FillOptions:
         Least standard deviation of a view as a share of the largest extent.
     workers : int
         Threads; the result does not depend on it.
+    lasting : (float, float)
+        Standard deviations, from wetland to wetland, of the share of water that views keep missing and of the share of
+        dry ground that they keep calling water: what no number of views of the same wetland averages out.
     """
 
     members: int = 24
@@ -75,6 +78,7 @@ class FillOptions:
     outlier_share: float = 0.02
     min_view_sd: float = 0.01
     workers: int = 1
+    lasting: tuple[float, float] = (0.0, 0.0)
 
 
 @dataclass(frozen=True, slots=True)

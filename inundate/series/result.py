@@ -76,6 +76,11 @@ class SeriesResult:
     area_max_m2 : ndarray, shape (wetland,)
     joint : Joint
     seed : int
+    lasting : (float, float)
+        See ``FillOptions.lasting``; the intervals hold it, and each draw a wetland's own share of it.
+    heldout : DataFrame or None
+        What was hidden and predicted: wetland_id, date, kind (``views`` / ``logger``), leaf_state, known_m2, known_sd_m2,
+        area_m2, area_lo_m2, area_hi_m2.
     """
 
     daily: pd.DataFrame
@@ -89,6 +94,8 @@ class SeriesResult:
     area_max_m2: np.ndarray
     joint: Joint
     seed: int
+    lasting: tuple[float, float] = (0.0, 0.0)
+    heldout: pd.DataFrame | None = None
 
     @property
     def area_m2(self) -> np.ndarray:
@@ -124,7 +131,18 @@ class SeriesResult:
                 self.level_mean_m[i], self.level_sd_m[i], common, own, phi, self.joint.shared,
                 self.maps.share[i], float(self.maps.full_m[i]), float(self.area_max_m2[i]), out,
             )  # fmt: skip
-            yield i, out
+            yield i, self._with_lasting(out, wetland, n)
+
+    def _with_lasting(self, out: np.ndarray, wetland: str, n: int) -> np.ndarray:
+        """Add to each draw (draw, day) what views of this wetland may keep missing or adding, in place."""
+        missed, added = self.lasting
+        if missed > 0 or added > 0:
+            z = rng_for(self.seed, "lasting", wetland).standard_normal((n, 2), dtype=np.float32)
+            largest = np.float32(self.area_max_m2[self.wetland_ids.index(wetland)])
+            wet = out > 0
+            out += np.float32(missed) * z[:, :1] * out + np.float32(added) * z[:, 1:] * (largest - out) * wet
+            np.clip(out, 0.0, largest, out=out)
+        return out
 
     def draws(self, n: int) -> np.ndarray:
         """Return ``n`` plausible landscapes: extent in m2, float32, shape (draw, wetland, day).
