@@ -115,17 +115,22 @@ def write_tables(
     work: Work, inputs: Inputs, layout: Layout, found: Findings, folder: Path, before: Path | None
 ) -> dict[str, Any]:
     """Write every product table, the NetCDF and the layer into ``folder``; return what the summary shows."""
-    from inundate.series import hydroperiod, size_classes  # type: ignore[attr-defined]
+    from inundate.extent import widen_observed
+    from inundate.relation import widen_bands
+    from inundate.series import hydroperiod, size_classes
     from inundate.stage import wetland_daily
 
     settings = work.pipeline.series
     daily = write_product_table(folder, "extent_daily", found.series.daily)
-    observed = write_product_table(folder, "extent_observed", found.observed)
+    lasting = found.series.lasting
+    seen = widen_observed(found.observed, found.wetlands, lasting)
+    observed = write_product_table(folder, "extent_observed", seen)
     stage = wetland_daily(found.stage) if found.stage is not None else _no_stage()
     stage = stage[pd.to_datetime(stage["date"]) <= found.last]
     stage = write_product_table(folder, "stage_daily", stage)
     write_product_table(folder, "relations", found.relations.relations)
-    write_product_table(folder, "relation_table", found.relations.table())
+    bands = widen_bands(found.relations.table(), found.wetlands, lasting)
+    write_product_table(folder, "relation_table", bands)
     write_product_table(folder, "hydroperiod", hydroperiod(found.series, settings.water_year_start_month))
     classes = size_classes(found.series, found.wetlands, settings.size_class_edges_ha)
     write_product_table(folder, "size_classes", classes)

@@ -9,7 +9,7 @@ truth. Sources: Olofsson et al. 2013, 2014 (area corrected by errors); exact are
 
 from inundate.extent.adjust import AdjustedArea, error_adjusted_area, fraction_errors
 from inundate.extent.cells import cell_coverage, elevation_cells, hypsometry, lowest_elevation
-from inundate.extent.combining import apply_decisions, combine_same_day
+from inundate.extent.combining import apply_decisions, combine_same_day, widen_observed
 from inundate.extent.noise import NoiseModel
 from inundate.extent.observer import (
     REASONS,
@@ -42,4 +42,5 @@ __all__ = [
     "pixel_weights",
     "veiled",
     "weights_on_site",
+    "widen_observed",
 ]

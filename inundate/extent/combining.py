@@ -103,3 +103,23 @@ def _combined(group: pd.DataFrame) -> pd.DataFrame:
     for name in ("clear_fraction", "view_fraction"):
         row[name] = float(group[name].max())
     return row
+
+
+def widen_observed(observed: pd.DataFrame, wetlands: pd.DataFrame, lasting: tuple[float, float]) -> pd.DataFrame:
+    """Return observed extents whose standard deviation also holds errors that last in a wetland.
+
+    Such errors do not average out over views, so they are left out where views are weighed against each other, and put in
+    where one view's extent is told by itself.
+
+    Parameters
+    ----------
+    observed : DataFrame
+        ``extent_observed``.
+    wetlands : DataFrame
+        wetland_id, area_max_m2.
+    lasting : (float, float)
+        Standard deviations, from wetland to wetland, of the share of water missed and of dry ground called water.
+    """
+    largest = observed["wetland_id"].map(dict(zip(wetlands["wetland_id"], wetlands["area_max_m2"], strict=True)))
+    missed, added = observed["area_m2"] * lasting[0], (largest - observed["area_m2"]) * lasting[1]
+    return observed.assign(area_sd_m2=np.sqrt(observed["area_sd_m2"] ** 2 + missed**2 + added**2))

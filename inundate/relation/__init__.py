@@ -7,8 +7,17 @@ shifts; :class:`StageAreaRelation` is the same for one wetland as a scikit-learn
 
 from inundate.relation.estimator import StageAreaRelation
 from inundate.relation.fit import fit_relations
+from inundate.relation.lasting import widen_bands
 from inundate.relation.options import RelationOptions
 from inundate.relation.pairs import best_pairs, make_pairs
 from inundate.relation.relations import RelationSet
 
-__all__ = ["RelationOptions", "RelationSet", "StageAreaRelation", "best_pairs", "fit_relations", "make_pairs"]
+__all__ = [
+    "RelationOptions",
+    "RelationSet",
+    "StageAreaRelation",
+    "best_pairs",
+    "fit_relations",
+    "make_pairs",
+    "widen_bands",
+]
