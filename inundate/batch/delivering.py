@@ -153,13 +153,18 @@ def write_tables(
     return {"wetlands": len(found.wetlands), "days": int(daily["date"].nunique()), "changed_days": len(moved)}
 
 
+def _rounded(table: pd.DataFrame) -> pd.DataFrame:
+    """Return a table with numbers to a thousandth, so that a rewritten last digit is no news."""
+    return table.assign(**{c: table[c].round(3) for c in table.columns if pd.api.types.is_float_dtype(table[c])})
+
+
 def _fresh(before: Path | None, name: str, now: pd.DataFrame, keys: tuple[str, ...]) -> set[tuple[str, pd.Timestamp]]:
     """Return (wetland, day) of rows that were not there, or differ from, the last delivery."""
     if before is None or not (before / f"{name}.parquet").exists():
         return set()
     old = pd.read_parquet(before / f"{name}.parquet")
     when = "datetime" if "datetime" in now.columns else "date"
-    mark = lambda t: pd.util.hash_pandas_object(t[list(keys)].round(3), index=False)  # noqa: E731
+    mark = lambda t: pd.util.hash_pandas_object(_rounded(t[list(keys)]), index=False)  # noqa: E731
     new = now[~mark(now).isin(set(mark(old)))]
     days = pd.to_datetime(new[when], utc=True).dt.tz_localize(None).dt.normalize()
     return set(zip(new["wetland_id"], days, strict=True))

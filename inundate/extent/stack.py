@@ -116,7 +116,7 @@ class ExtentOptions:
     levels: int = 64
     good_clear: float = 0.9
     good_view: float = 0.6
-    least_view: float = 0.05
+    least_view: float = 0.3
     ice_share: float = 0.2
     widest_sd: float = 0.25
     sample_wetlands: int = 300
