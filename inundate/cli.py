@@ -16,6 +16,8 @@ from inundate import __version__
 from inundate.common.errors import InundateError
 
 _Command = Callable[..., Any]
+_KINDS = ("scene", "wetland", "logger", "check", "label", "row")
+_SHOWN = 10
 
 
 class _Group(click.Group):
@@ -77,10 +79,15 @@ def _end(result: dict[str, Any], as_json: bool, lines: list[str]) -> int:
     else:
         for line in lines:
             click.echo(line)
-    for item in refused[:20]:
-        click.echo(f"refused {item['kind']} {item['name']}: {item['reason']}", err=True)
-    if len(refused) > 20:
-        click.echo(f"... and {len(refused) - 20} more refused, all in run.json", err=True)
+    shown: dict[str, int] = {}
+    for item in sorted(refused, key=lambda r: _KINDS.index(r["kind"]) if r["kind"] in _KINDS else len(_KINDS)):
+        kind = item["kind"]
+        shown[kind] = shown.get(kind, 0) + 1
+        if shown[kind] <= _SHOWN:
+            click.echo(f"refused {kind} {item['name']}: {item['reason']}", err=True)
+    for kind, count in shown.items():
+        if count > _SHOWN:
+            click.echo(f"... and {count - _SHOWN} more of kind {kind} refused, all in run.json", err=True)
     return 1 if refused else 0
 
 

@@ -110,7 +110,7 @@ def _on_cluster(function: Callable[[Job], Result], jobs: Sequence[Job], address:
             client.submit(_guarded, function, i, job, pure=False, retries=3, key=f"unit-{i}-{id(jobs)}")
             for i, job in enumerate(jobs)
         ]
-        for future in as_completed(futures):
+        for future in as_completed(futures, loop=client.loop):
             if future.status == "finished":
                 yield future.result()
             elif future.status in ("cancelled", "lost"):

@@ -126,8 +126,6 @@ def write_methods(folder: Path, tables: ReportTables) -> Path:
         leaves_fixed=all(
             (settings.get("leaves") or {}).get(k) for k in ("green_up", "leaf_on", "leaf_fall", "leaf_off")
         ),
-        inputs=sorted((tables.run.get("inputs") or {}).items()),
-        versions=sorted((tables.run.get("versions") or {}).items()),
         sources=SOURCES,
     )
     write_text(folder / "methods.html", text)
