@@ -45,6 +45,8 @@ def copy_inputs(demo: Path, folder: Path, threads: int) -> Path:
             text = collection.read_text()
             collection.unlink()
             collection.write_text(text)
+        elif item.is_dir():
+            shutil.copytree(item, folder / item.name)
         else:
             shutil.copy2(item, folder / item.name)
     file = folder / "pipeline.toml"
