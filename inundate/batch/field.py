@@ -35,7 +35,7 @@ def stage_record(work: Work, inputs: Inputs, layout: Layout, month: str | None =
     InputError
         When the registry is wrong as a whole, or names a wetland that the layer does not have.
     """
-    from inundate.stage import LoggerFiles, daily_stage, read_barometer, read_checks, read_registry
+    from inundate.stage import UNUSED_CHECK, LoggerFiles, daily_stage, read_barometer, read_checks, read_registry
 
     files = work.pipeline.input_files()
     if "loggers.registry" not in files:
@@ -53,8 +53,8 @@ def stage_record(work: Work, inputs: Inputs, layout: Layout, month: str | None =
         work.refuse(list(refused))
         readings = LoggerFiles(registry)
         result = daily_stage(registry, readings, barometer, checks, latitudes(layout), weather=inputs.weather)
-        work.refuse(list(result.refused))
-        work.notes.extend(result.notes)
+        work.refuse([r for r in result.refused if r.kind != UNUSED_CHECK])
+        work.notes.extend([*result.notes, *(r.reason for r in result.refused if r.kind == UNUSED_CHECK)])
     if month is not None:
         end = pd.Period(month, "M").end_time
         daily = result.daily[pd.to_datetime(result.daily["date"]) <= end].reset_index(drop=True)

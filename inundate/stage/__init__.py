@@ -18,11 +18,12 @@ from inundate.stage.readings import (
     read_readings,
     read_registry,
 )
-from inundate.stage.record import LoggerRecord, build_record
+from inundate.stage.record import UNUSED_CHECK, LoggerRecord, build_record
 
 __all__ = [
     "FLAGS",
     "QUALITIES",
+    "UNUSED_CHECK",
     "Barometer",
     "LoggerFiles",
     "LoggerRecord",

@@ -120,6 +120,10 @@ def _forget_good(span: Span) -> None:
     span.raw = span.depth = np.empty(0)
 
 
+UNUSED_CHECK = "unused check"
+"""Kind of a field check that is right in itself, but falls in a hole of its logger's record."""
+
+
 def _sd(row: Mapping, name: str, default: float) -> float:
     value = row.get(name, np.nan)
     return default if value is None or pd.isna(value) else float(value)
@@ -141,10 +145,11 @@ def _gather_checks(made: Prepared, checks: pd.DataFrame, options: StageOptions) 
     first, last = (stamp(t) for t in made.hours.time[[0, -1]])
     for row in out[out["depth_m"].isna()].to_dict("records"):
         line = row.get("line", "")
-        where = "in a hole of" if first <= str(row["time"])[:16].replace(" ", "T") <= last else "outside"
+        within = first <= str(row["time"])[:16].replace(" ", "T") <= last
+        where = "in a hole of" if within else "outside"
         refused.append(
             Refusal(
-                "check",
+                UNUSED_CHECK if within else "check",
                 str(line),
                 f"field check{f' at line {line}' if line else ''} of logger {made.logger_id} at {row['time']}: it lies "
                 f"{where} the logger's usable record ({first} to {last}), so it can't be compared; correct its time or "
