@@ -3,21 +3,18 @@
 from __future__ import annotations
 
 import json
-import platform
-from importlib.metadata import version
 from pathlib import Path
 from typing import Any
 
 import pandas as pd
 
-from inundate import __version__
 from inundate.batch.archive import Archive
 from inundate.batch.delivering import Findings
 from inundate.batch.layout import Layout
 from inundate.batch.pipeline import load_pipeline
 from inundate.batch.progress import Progress
 from inundate.batch.report_sources import Extras, extras_of, keep_extras, load_extras, load_site, paint_wetlands, until
-from inundate.batch.work import Inputs, Work, open_work
+from inundate.batch.work import Inputs, Work, open_work, software_versions
 from inundate.common.errors import InputError
 from inundate.common.site import Site
 from inundate.common.writing import plain, write_json
@@ -31,18 +28,6 @@ _TABLES = (
     ("hydroperiod", "hydroperiod"),
     ("size_classes", "size_classes"),
     ("changes", "changes"),
-)
-_LIBRARIES = (
-    "numpy",
-    "pandas",
-    "scipy",
-    "scikit-learn",
-    "lightgbm",
-    "rasterio",
-    "numba",
-    "xarray",
-    "dask",
-    "geopandas",
 )
 
 
@@ -85,15 +70,11 @@ def write_skill_and_report(
             "notes": list(dict.fromkeys(work.notes)),
             "refused": [r.as_dict() for r in work.refused],
             "settings": work.pipeline.model_dump(mode="json", exclude={"file"}),
-            "versions": _versions(),
+            "versions": software_versions(),
             "inputs": inputs.marks,
         }
         _write_pages(work, folder, run, extras, layout.site)
     return scores
-
-
-def _versions() -> dict[str, str]:
-    return {"inundate": __version__, "python": platform.python_version(), **{n: version(n) for n in _LIBRARIES}}
 
 
 def _skill_inputs(work: Work, inputs: Inputs, found: Findings, extras: Extras) -> Any:

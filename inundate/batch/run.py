@@ -9,7 +9,6 @@ from typing import Any
 
 import pandas as pd
 
-from inundate import __version__
 from inundate.batch.delivering import Findings, conclude, keep_archive_tables, write_tables
 from inundate.batch.field import stage_record
 from inundate.batch.imagery import follow_leaves, lay_out, place_labels, read_new
@@ -19,7 +18,7 @@ from inundate.batch.pipeline import Pipeline, load_pipeline
 from inundate.batch.progress import Progress
 from inundate.batch.registering import Registrar, make_registrar
 from inundate.batch.training import train
-from inundate.batch.work import Inputs, Work, code_mark, open_inputs, open_work
+from inundate.batch.work import Inputs, Work, code_mark, open_inputs, open_work, software_versions
 from inundate.common.errors import InputError
 from inundate.common.writing import plain, replacing_folder, write_json
 
@@ -188,32 +187,14 @@ def _delivered_months(work: Work) -> list[str]:
 
 
 def _write_run(work: Work, inputs: Inputs, found: Findings, folder: Path, summary: dict[str, Any]) -> None:
-    import platform
     from datetime import UTC, datetime
-    from importlib.metadata import version
 
-    libraries = (
-        "numpy",
-        "pandas",
-        "scipy",
-        "scikit-learn",
-        "lightgbm",
-        "rasterio",
-        "numba",
-        "xarray",
-        "dask",
-        "geopandas",
-    )
     write_json(
         folder / "run.json",
         {
             **summary,
             "written": datetime.now(UTC).isoformat(timespec="seconds"),
-            "versions": {
-                "inundate": __version__,
-                "python": platform.python_version(),
-                **{n: version(n) for n in libraries},
-            },
+            "versions": software_versions(),
             "settings": work.pipeline.model_dump(mode="json", exclude={"file"}),
             "inputs": inputs.marks,
             "scenes": {"catalog": len(inputs.catalog.scenes), "views": int(found.observed["scene_id"].nunique())},

@@ -51,6 +51,29 @@ def code_mark(*parts: str) -> str:
     return digest.hexdigest()
 
 
+_LIBRARIES = (
+    "numpy",
+    "pandas",
+    "scipy",
+    "scikit-learn",
+    "lightgbm",
+    "rasterio",
+    "numba",
+    "xarray",
+    "dask",
+    "geopandas",
+)
+
+
+def software_versions() -> dict[str, str]:
+    """Return versions of the package, Python and the libraries that results rest on."""
+    import platform
+    from importlib.metadata import version
+
+    own = {"inundate": inundate.__version__, "python": platform.python_version()}
+    return {**own, **{name: version(name) for name in _LIBRARIES}}
+
+
 @dataclass
 class Inputs:
     """Checked inputs of a run; what the pipeline does not name is None."""

@@ -44,7 +44,7 @@ def apply_decisions(observed: pd.DataFrame, decisions: pd.DataFrame) -> pd.DataF
     )
     order = np.argsort((wetland != "").to_numpy(), kind="stable")
     for i in order:
-        mine = (out["scene_id"] == str(decisions["scene_id"].iloc[i])).to_numpy()
+        mine = (out["scene_id"] == str(decisions["scene_id"].iloc[i])).to_numpy(copy=True)
         if wetland.iloc[i]:
             mine &= (out["wetland_id"] == wetland.iloc[i]).to_numpy()
         use = bool(decisions["use"].iloc[i])
