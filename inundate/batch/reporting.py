@@ -77,6 +77,13 @@ def write_skill_and_report(
     return scores
 
 
+def _mapped_water(work: Work) -> float | None:
+    """Return the mean share of water in the maps, weighed by pixels seen."""
+    units = [u.detail for u in work.ledger.all("score").values() if u.detail.get("water_share") is not None]
+    seen = sum(u["seen"] for u in units)
+    return sum(u["seen"] * u["water_share"] for u in units) / seen if seen else None
+
+
 def _skill_inputs(work: Work, inputs: Inputs, found: Findings, extras: Extras) -> Any:
     from inundate.skill import SkillInputs
 
@@ -91,6 +98,8 @@ def _skill_inputs(work: Work, inputs: Inputs, found: Findings, extras: Extras) -
         heldout=extras["heldout"],
         walked=inputs.walked,
         card=json.loads(card.read_text(encoding="utf-8")) if card.exists() else {},
+        probability_sample=work.pipeline.skill.labels_are_probability_sample,
+        mapped_water_share=_mapped_water(work),
     )
 
 

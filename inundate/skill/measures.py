@@ -28,7 +28,8 @@ def wet_dry_measures(known_wet: np.ndarray, seen_wet: np.ndarray) -> Row:
     -------
     dict
         n, both_wet, both_dry, only_seen, only_known (counts), accuracy, omission (of wet), commission (of seen wet),
-        kappa (Cohen), mcc (Matthews); None where a measure is not defined.
+        f1, iou, quantity and allocation disagreement (Pontius & Millones 2011), kappa (Cohen), mcc (Matthews); None where a
+        measure is not defined.
     """
     known, seen = np.asarray(known_wet, bool), np.asarray(seen_wet, bool)
     if not known.size:
@@ -44,6 +45,10 @@ def wet_dry_measures(known_wet: np.ndarray, seen_wet: np.ndarray) -> Row:
         "accuracy": float(metrics.accuracy_score(known, seen)),
         "omission": float(fn / (tp + fn)) if tp + fn else None,
         "commission": float(fp / (tp + fp)) if tp + fp else None,
+        "f1": float(metrics.f1_score(known, seen)) if tp + fp + fn else None,
+        "iou": float(metrics.jaccard_score(known, seen)) if tp + fp + fn else None,
+        "quantity": float(abs(fp - fn) / known.size),
+        "allocation": float(2 * min(fp, fn) / known.size),
         "kappa": float(metrics.cohen_kappa_score(known, seen)) if varied else None,
         "mcc": float(metrics.matthews_corrcoef(known, seen)) if varied else None,
     }

@@ -9,6 +9,7 @@ from typing import Any
 import numpy as np
 import pandas as pd
 
+from inundate.extent import error_adjusted_area
 from inundate.skill.measures import (
     Row,
     area_measures,
@@ -47,6 +48,10 @@ class SkillInputs:
         wetland_id, date, area_m2, sd_m2: measured on the ground.
     card : dict
         Card of the classifier: out-of-fold scores, reliability, counts.
+    probability_sample : bool
+        Whether the labels were drawn by a probability design; only then are design-based estimates given.
+    mapped_water_share : float or None
+        Mean share of water in the maps over pixels seen.
     """
 
     wetlands: pd.DataFrame
@@ -58,6 +63,8 @@ class SkillInputs:
     heldout: pd.DataFrame | None = None
     walked: pd.DataFrame | None = None
     card: dict[str, Any] = field(default_factory=dict)
+    probability_sample: bool = False
+    mapped_water_share: float | None = None
 
 
 def _grouped(table: pd.DataFrame, by: str, measure: Callable[[pd.DataFrame], Row]) -> dict[str, Row]:
@@ -177,6 +184,50 @@ def _by_wetland(inputs: SkillInputs, filled: dict[str, Any], rank: dict[str, Any
     return out
 
 
+def design_based(inputs: SkillInputs) -> dict[str, Any] | None:
+    """Return design-based accuracy with 95 % confidence intervals, from labels that are a probability sample.
+
+    Stratified estimators of Olofsson et al. 2014 (doi:10.1016/j.rse.2014.02.015) with the map's classes as strata; the map's
+    class of a label is the one it was given out of fold. Some intervals are wide where a class has few labels.
+
+    Returns
+    -------
+    dict or None
+        overall, and for water and dry: user and producer accuracy and share of the area, each as [estimate, half-width];
+        None where the labels are no probability sample, or a class of the map has fewer than two labels.
+    """
+    rows = [r for r in inputs.card.get("error_rates", []) if r.get("stratum") == "all" and r.get("leaf_state") == "all"]
+    if not inputs.probability_sample or not rows or inputs.mapped_water_share is None:
+        return None
+    counts = _counts(rows[0])
+    if (counts.sum(axis=1) < 2).any():
+        return None
+    water = float(inputs.mapped_water_share)
+    found = error_adjusted_area(counts, np.array([water, 1.0 - water]))
+    half = 1.96
+    return {
+        "overall": [found.overall, half * found.overall_se],
+        **{
+            name: {
+                "user": [float(found.user[i]), half * float(found.user_se[i])],
+                "producer": [float(found.producer[i]), half * float(found.producer_se[i])],
+                "area_share": [float(found.area[i]), half * float(found.area_se[i])],
+            }
+            for i, name in enumerate(("water", "dry"))
+        },
+    }
+
+
+def _counts(row: dict[str, Any]) -> np.ndarray:
+    """Return the error matrix (map, label; water first) behind a row of omission and commission."""
+    water, dry = float(row["n_water"]), float(row["n_dry"])
+    missed = round(float(row["omission"] or 0.0) * water)
+    right = water - missed
+    commission = float(row["commission"] or 0.0)
+    false = min(round(commission * right / max(1.0 - commission, 1e-9)), dry)
+    return np.array([[right, false], [missed, dry - false]])
+
+
 def score_all(inputs: SkillInputs) -> dict[str, Any]:
     """Return every score of a delivery.
 
@@ -199,7 +250,7 @@ def score_all(inputs: SkillInputs) -> dict[str, Any]:
     filled = _filled(inputs)
     kept = ("error_rates", "reliability", "counts", "n_trees", "n_doubtful", "folds", "features")
     return {
-        "classifier": {k: inputs.card[k] for k in kept if k in inputs.card},
+        "classifier": {k: inputs.card[k] for k in kept if k in inputs.card} | {"design_based": design_based(inputs)},
         "wet_dry": wet_dry,
         "rank": rank or None,
         "relation": _relation(inputs),

@@ -105,3 +105,46 @@ def test_kappa_of_a_published_four_class_table():
     seen = np.repeat([True, True, False, False], [tp, fp, fn, tn])
     assert wet_dry_measures(known, seen)["kappa"] == pytest.approx(by_hand, abs=1e-12)
     assert metrics.cohen_kappa_score(known, seen) == pytest.approx(by_hand, abs=1e-12)
+
+
+@pytest.mark.parametrize(
+    ("counts", "f1", "iou", "quantity", "allocation"),
+    [((90, 10, 20, 380), 0.8571428571, 0.75, 0.02, 0.04), ((20, 5, 10, 15), 0.7272727273, 0.5714285714, 0.10, 0.20)],
+)
+def test_overlap_and_disagreement(counts, f1, iou, quantity, allocation):
+    """Pontius & Millones 2011 (IJRS 32, 4407): quantity |FP - FN| / n, allocation 2 min(FP, FN) / n; their sum is 1 - accuracy."""
+    tp, fp, fn, tn = counts
+    known = np.repeat([True, False, True, False], [tp, fp, fn, tn])
+    seen = np.repeat([True, True, False, False], [tp, fp, fn, tn])
+    found = wet_dry_measures(known, seen)
+    assert found["f1"] == pytest.approx(f1, abs=5e-11)
+    assert found["iou"] == pytest.approx(iou, abs=5e-11)
+    assert found["quantity"] == pytest.approx(quantity, abs=1e-12)
+    assert found["allocation"] == pytest.approx(allocation, abs=1e-12)
+    assert found["quantity"] + found["allocation"] == pytest.approx(1 - found["accuracy"])
+
+
+def test_design_based_accuracy_by_hand():
+    """Olofsson et al. 2014, stratified estimators, worked by hand for two classes.
+
+    Labels: map water 45 right 5 wrong, map dry 10 wrong 90 right; water maps 20 % of the area. User of water 0.9; overall
+    0.2 * 0.9 + 0.8 * 0.9 = 0.9; water's area 0.2 * 0.9 + 0.8 * 0.1 = 0.26; producer of water 0.18 / 0.26.
+    Half-width of the overall: 1.96 sqrt(0.04 * 0.09 / 49 + 0.64 * 0.09 / 99).
+    """
+    import pandas as pd
+
+    from inundate.skill import SkillInputs
+    from inundate.skill.scoring import design_based
+
+    row = {"stratum": "all", "leaf_state": "all", "n_water": 55, "n_dry": 95, "omission": 10 / 55, "commission": 5 / 50}
+    none = pd.DataFrame()
+    inputs = SkillInputs(
+        none, none, none, None, none, none, card={"error_rates": [row]}, probability_sample=True, mapped_water_share=0.2
+    )
+    found = design_based(inputs)
+    assert found["overall"][0] == pytest.approx(0.9)
+    assert found["overall"][1] == pytest.approx(1.96 * np.sqrt(0.04 * 0.09 / 49 + 0.64 * 0.09 / 99))
+    assert found["water"]["user"][0] == pytest.approx(0.9)
+    assert found["water"]["area_share"][0] == pytest.approx(0.26)
+    assert found["water"]["producer"][0] == pytest.approx(0.18 / 0.26)
+    assert design_based(SkillInputs(none, none, none, None, none, none, card={"error_rates": [row]})) is None
