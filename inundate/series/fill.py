@@ -80,7 +80,7 @@ def fill_series(inputs: SeriesInputs, *, options: FillOptions | None = None, see
     everyone = range(len(panel.ids))
     levels = blend([smooth_levels(setup, f, everyone, views, panel.stage, f.posterior) for f in fits], weights)
     wide = _widen(setup, levels, evidence, weights, views)
-    heldout = heldout_table(setup, evidence, weights)
+    heldout = heldout_table(setup, blind, evidence, weights)
     reasons = _reasons(setup, fits, weights, scores, evidence)
     made = _assemble(setup, levels, wide, views, (reasons, _joint(evidence, weights, fits)), options.lasting)
     return replace(made, heldout=heldout)
@@ -282,8 +282,13 @@ def widen_lasting(share: np.ndarray, lasting: tuple[float, float]) -> None:
     share[2] = np.clip(middle + np.hypot(high - middle, reach), middle, 1.0)
 
 
-def heldout_table(setup: Setup, evidence: Evidence | None, weights: np.ndarray) -> pd.DataFrame | None:
-    """Return what was hidden beside what was predicted, in m2, with the calibrated 90 % interval."""
+def heldout_table(
+    setup: Setup, blind: LevelMaps, evidence: Evidence | None, weights: np.ndarray
+) -> pd.DataFrame | None:
+    """Return what was hidden beside what was predicted, in m2, with the calibrated 90 % interval.
+
+    Wetlands whose logger was hidden are read through the maps that they had without it (``blind``).
+    """
     if evidence is None or not evidence.day.size:
         return None
     panel = setup.panel
@@ -294,8 +299,14 @@ def heldout_table(setup: Setup, evidence: Evidence | None, weights: np.ndarray) 
     low, middle, high = (
         np.array(
             [
-                share_at(level, setup.maps.share[i], float(setup.maps.full_m[i]))
-                for level, i in zip(mean + k * WIDTH_90 * sd, evidence.wetland, strict=True)
+                share_at(
+                    level,
+                    (blind if hidden else setup.maps).share[i],
+                    float((blind if hidden else setup.maps).full_m[i]),
+                )
+                for level, i, hidden in zip(
+                    mean + k * WIDTH_90 * sd, evidence.wetland, evidence.from_stage, strict=True
+                )
             ]
         )
         for k in (-1.0, 0.0, 1.0)
