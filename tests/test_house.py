@@ -72,3 +72,9 @@ def test_help_is_light():
     code = "import sys, inundate.cli; print([m for m in ('numpy','pandas','lightgbm','rasterio','numba','dask') if m in sys.modules])"
     out = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=True)
     assert out.stdout.strip() == "[]"
+
+
+def test_compiled_code_may_not_reorder_sums():
+    """No kernel lets the compiler reorder arithmetic: a build from cache would then differ in the last bits from a fresh one."""
+    loose = [str(p.relative_to(PACKAGE)) for p in MODULES if "fastmath" in p.read_text()]
+    assert not loose

@@ -152,7 +152,6 @@ def with_gradients(e: np.ndarray, wetland: WetlandPixels) -> np.ndarray:
 def weigh(views: Views, shape: Shape, wetland: WetlandPixels, noise: NoiseModel) -> tuple[np.ndarray, np.ndarray]:
     """Posterior over steps of area (scene, step), and what :func:`posteriors` says beside it (scene, 4); float64."""
     e = with_gradients(expected_fraction(shape.filling, wetland, noise.blur, noise.bend), wetland)
-    e = np.ascontiguousarray(e.transpose(0, 2, 1))
     strangers = 1.0 + 4.0 * np.minimum(wetland.other, 0.5)
     widen = np.ascontiguousarray(views.widen * strangers[None, :], dtype=np.float32)
     shared = np.array([noise.rho, noise.temper, noise.shift_px])

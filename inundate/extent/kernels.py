@@ -11,49 +11,78 @@ OUTLIER = 9.0
 """Squared standardised residual at which a pixel's pull starts to fade (three standard deviations, common practice)."""
 
 
-@njit(cache=True, nogil=True, fastmath=True, error_model="numpy")
-def _step_sums(
-    pixel: np.ndarray, e: np.ndarray, gx: np.ndarray, gy: np.ndarray, scratch: np.ndarray, out: np.ndarray
-) -> float:
-    """Sums over pixels at one step, into ``out`` (10,): square, pull, and what shared errors need; returns sum of log v.
+@njit(cache=True, nogil=True, error_model="numpy")
+def _residuals(
+    pixel: np.ndarray, e: np.ndarray, weight: np.ndarray, pull: np.ndarray, root: np.ndarray, product: np.ndarray
+) -> None:
+    """Residuals of one pixel at every step: robust weight, weighted residual, one over sd; multiplies variances up.
 
-    ``pixel`` is (6, pixel): fraction, offset, slope, pure variance, mixed variance, 1 where seen (else 0).
+    ``pixel`` is (5,): fraction, offset, slope, pure variance, mixed variance.
     """
     one, tail, scale = np.float32(1.0), np.float32(1.0 / OUTLIER), np.float32(SCALE)
-    s0 = s1 = s2 = s3 = s4 = s5 = s6 = s7 = s8 = s9 = np.float32(0.0)
-    for p in range(e.size):
-        water, slope, seen = e[p], pixel[2, p], pixel[5, p]
-        v = pixel[3, p] + pixel[4, p] * water * (one - water)
-        scratch[p] = one + seen * (v * scale - one)
-        root = one / np.sqrt(v)
-        u = (pixel[0, p] - pixel[1, p] - slope * water) * root
-        z = u * u
-        w = seen / (one + z * tail)
-        x, y = slope * gx[p] * root, slope * gy[p] * root
-        wx, wy, wu = w * x, w * y, w * u
-        s0 += z * w
-        s1 += w
-        s2 += wu
-        s3 += wu * x
-        s4 += wu * y
-        s5 += wx
-        s6 += wy
-        s7 += wx * x
-        s8 += wx * y
-        s9 += wy * y
-    logs, product = 0.0, 1.0
-    for p in range(e.size):
-        product *= np.float64(scratch[p])
-        if p & 63 == 63:
-            logs += np.log(product)
-            product = 1.0
-    logs += np.log(product)
-    out[0], out[1], out[2], out[3], out[4] = s0, s1, s2, s3, s4
-    out[5], out[6], out[7], out[8], out[9] = s5, s6, s7, s8, s9
-    return logs
+    seen, slope, pure, mixed = pixel[0] - pixel[1], pixel[2], pixel[3], pixel[4]
+    for k in range(e.size):
+        water = e[k]
+        v = pure + mixed * water * (one - water)
+        r = one / np.sqrt(v)
+        u = (seen - slope * water) * r
+        w = one / (one + u * u * tail)
+        root[k], weight[k], pull[k] = r, w, w * u
+        product[k] *= v * scale
 
 
-@njit(cache=True, nogil=True, fastmath=True, error_model="numpy")
+@njit(cache=True, nogil=True, error_model="numpy")
+def _add_level(weight: np.ndarray, pull: np.ndarray, sums: np.ndarray) -> None:
+    """Add to ``sums`` (10, step) what the level alone needs: square, weight, weighted residual."""
+    s0, s1, s2 = sums[0], sums[1], sums[2]
+    for k in range(weight.size):
+        s0[k] += pull[k] * pull[k] / weight[k]
+        s1[k] += weight[k]
+        s2[k] += pull[k]
+
+
+@njit(cache=True, nogil=True, error_model="numpy")
+def _add_slope(lean: np.ndarray, weight: np.ndarray, pull: np.ndarray, one: np.ndarray, two: np.ndarray) -> None:
+    """Add products of a shift's lean with the residual (``one``) and with the weight (``two``)."""
+    for k in range(lean.size):
+        one[k] += lean[k] * pull[k]
+        two[k] += lean[k] * weight[k]
+
+
+@njit(cache=True, nogil=True, error_model="numpy")
+def _scaled(slope: float, gradient: np.ndarray, root: np.ndarray, lean: np.ndarray) -> None:
+    for k in range(lean.size):
+        lean[k] = slope * gradient[k] * root[k]
+
+
+@njit(cache=True, nogil=True, error_model="numpy")
+def _add_square(one: np.ndarray, two: np.ndarray, weight: np.ndarray, out: np.ndarray) -> None:
+    for k in range(out.size):
+        out[k] += one[k] * two[k] * weight[k]
+
+
+@njit(cache=True, nogil=True, error_model="numpy")
+def _add_pixel(
+    pixel: np.ndarray, e: np.ndarray, gx: np.ndarray, gy: np.ndarray, scratch: np.ndarray, sums: np.ndarray
+) -> None:
+    """Add one pixel's terms at every step to ``sums`` (11, step): square, pull, what shared errors need, product of v.
+
+    Steps lie side by side and nothing is summed across them, so that the compiler needs no leave to reorder: every build
+    gives the same bits. Short loops over few rows are what it makes vector code of.
+    """
+    weight, pull, root, x, y = scratch[0], scratch[1], scratch[2], scratch[3], scratch[4]
+    _residuals(pixel, e, weight, pull, root, sums[10])
+    _scaled(pixel[2], gx, root, x)
+    _scaled(pixel[2], gy, root, y)
+    _add_level(weight, pull, sums)
+    _add_slope(x, weight, pull, sums[3], sums[5])
+    _add_slope(y, weight, pull, sums[4], sums[6])
+    _add_square(x, x, weight, sums[7])
+    _add_square(x, y, weight, sums[8])
+    _add_square(y, y, weight, sums[9])
+
+
+@njit(cache=True, nogil=True, error_model="numpy")
 def _settle_step(s: np.ndarray, logs: float, rho: float, per_shift: float) -> tuple[float, float, float]:
     """Log-likelihood of one step with its shared errors integrated out, and the most likely shift."""
     left = 1.0 - rho
@@ -77,7 +106,7 @@ def _settle_step(s: np.ndarray, logs: float, rho: float, per_shift: float) -> tu
     return -0.5 * (s[0] / left - gain + logs + s[1] * np.log(left) + spread), x1, x2
 
 
-@njit(cache=True, nogil=True, fastmath=True, error_model="numpy")
+@njit(cache=True, nogil=True, error_model="numpy")
 def posteriors(
     fraction: np.ndarray,
     kind: np.ndarray,
@@ -100,7 +129,7 @@ def posteriors(
         Row of ``noise``; -1 where not seen.
     widen : ndarray of float32, shape (scene, pixel)
         Factor on the variance.
-    expected : ndarray of float32, shape (3, step, pixel)
+    expected : ndarray of float32, shape (3, pixel, step)
         Water fraction of the whole pixel at each step of wetland area, and its change for a shift of one pixel along
         columns and rows.
     noise : ndarray of float64, shape (kind, 4)
@@ -118,29 +147,32 @@ def posteriors(
         prior, up to a constant), shift along columns and along rows, pixels. 0 where nothing is seen.
     """
     scenes, pixels = fraction.shape
-    steps = expected.shape[1]
+    steps = expected.shape[2]
     per_shift = 1.0 / shared[2] ** 2
     post, rest = np.empty((scenes, steps)), np.zeros((scenes, 4))
-    pixel, sums = np.zeros((6, pixels), np.float32), np.empty(10)
-    scratch = np.empty(pixels, np.float32)
-    square, ll, shift = np.zeros(steps), np.empty(steps), np.empty((2, steps))
+    pixel, scratch, sums = np.empty(5, np.float32), np.empty((5, steps), np.float32), np.empty((11, steps), np.float32)
+    square, logs, ll, shift = np.zeros(steps), np.empty(steps), np.empty(steps), np.empty((2, steps))
     for t in range(scenes):
         n = 0
+        sums[:10], sums[10], logs[:] = 0.0, 1.0, 0.0
         for p in range(pixels):
             k = kind[t, p]
-            pixel[3, p], pixel[5, p] = 1.0, 0.0
-            if k >= 0:
-                n += 1
-                pixel[0, p], pixel[1, p], pixel[2, p] = fraction[t, p], noise[k, 0], noise[k, 1]
-                pixel[3, p], pixel[4, p] = noise[k, 2] * widen[t, p], 4.0 * noise[k, 3] * widen[t, p]
-                pixel[5, p] = 1.0
+            if k < 0:
+                continue
+            n += 1
+            pixel[0], pixel[1], pixel[2] = fraction[t, p], noise[k, 0], noise[k, 1]
+            pixel[3], pixel[4] = noise[k, 2] * widen[t, p], 4.0 * noise[k, 3] * widen[t, p]
+            _add_pixel(pixel, expected[0, p], expected[1, p], expected[2, p], scratch, sums)
+            if n % 8 == 0:
+                logs += np.log(sums[10])
+                sums[10] = 1.0
         if n == 0:
             ll[:] = log_prior
         else:
+            logs += np.log(sums[10])
             for k in range(steps):
-                logs = _step_sums(pixel, expected[0, k], expected[1, k], expected[2, k], scratch, sums)
-                value, shift[0, k], shift[1, k] = _settle_step(sums, logs, shared[0], per_shift)
-                square[k] = sums[0]
+                value, shift[0, k], shift[1, k] = _settle_step(sums[:, k], logs[k], shared[0], per_shift)
+                square[k] = sums[0, k]
                 ll[k] = value / shared[1] + log_prior[k]
         top = int(np.argmax(ll))
         post[t] = np.exp(ll - ll[top])
