@@ -11,12 +11,12 @@ import numpy as np
 
 from inundate.batch.archive import Archive, percent, read_view, write_score
 from inundate.batch.seasons import pixel_ndvi
-from inundate.common.codes import ViewCode
+from inundate.common.codes import BAND_ROLES, ViewCode
 from inundate.common.site import Site
 from inundate.products import write_map
 
 UNLIKE_SCALE = 0.2  # a pixel is unlike all examples from one radius on: 20 in the archive's percent
-SCORE_COLUMNS = ("probability", "fraction", "fraction_sd", "unlike", "ndvi", "haze", "code")
+SCORE_COLUMNS = ("probability", "fraction", "fraction_sd", "unlike", "ndvi", "haze", "dark", "code")
 
 
 @dataclass(frozen=True, slots=True)
@@ -101,6 +101,27 @@ def haze_value(code: np.ndarray) -> np.ndarray:
     return np.where(code == 255, np.nan, (code.astype(np.float32) - 100.0) * 0.001)
 
 
+def dark_code(dark: np.ndarray) -> np.ndarray:
+    """Turn darkness -3..2 into uint8 fiftieths above -3, 255 where missing."""
+    code = np.clip(np.nan_to_num(dark) * 50.0 + 150.5, 0, 254).astype(np.uint8)
+    return np.where(np.isfinite(dark), code, np.uint8(255))
+
+
+def dark_value(code: np.ndarray) -> np.ndarray:
+    """Turn fiftieths back into darkness, NaN where 255."""
+    return np.where(code == 255, np.nan, (code.astype(np.float32) - 150.0) * 0.02)
+
+
+def _darkness(job: ScoreJob, bands: tuple[str, ...], reflectance: np.ndarray) -> np.ndarray:
+    from inundate.extent import darkness
+
+    nothing = np.full(reflectance.shape[1], np.nan, np.float32)
+    nir = "nir" if "nir" in bands else "nir08"
+    values = [reflectance[bands.index(b)] if b in bands else nothing for b in (nir, "swir16")]
+    base = [job.ground[BAND_ROLES.index(b)] if job.ground else np.nan for b in (nir, "swir16")]
+    return darkness(values[0], values[1], (float(base[0]), float(base[1])))
+
+
 def score_scene(job: ScoreJob) -> dict[str, Any]:
     """Score one archived view; leaves the scene's scores and map, returns counts.
 
@@ -126,6 +147,7 @@ def score_scene(job: ScoreJob) -> dict[str, Any]:
     columns["ndvi"] = ndvi_code(pixel_ndvi(bands, reflectance, code))
     blue, red = (reflectance[bands.index(b)] if b in bands else np.full(n, np.nan, np.float32) for b in ("blue", "red"))
     columns["haze"] = haze_code(haze_index(blue, red))
+    columns["dark"] = dark_code(np.where(clear, _darkness(job, bands, reflectance), np.nan))
     if seen.size:
         scorer = _scorer(archive.models, job.model_mark)
         owner = job.owner[seen]

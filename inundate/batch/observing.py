@@ -12,7 +12,15 @@ from inundate.batch.archive import ROWS, read_score
 from inundate.batch.compute import run_units
 from inundate.batch.imagery import array_mark
 from inundate.batch.layout import Layout
-from inundate.batch.mapping import SCORE_COLUMNS, UNLIKE_SCALE, ScoreJob, haze_value, ndvi_value, score_scene
+from inundate.batch.mapping import (
+    SCORE_COLUMNS,
+    UNLIKE_SCALE,
+    ScoreJob,
+    dark_value,
+    haze_value,
+    ndvi_value,
+    score_scene,
+)
 from inundate.batch.seasons import ScenePlace
 from inundate.batch.training import Trained
 from inundate.batch.work import Inputs, Work, code_mark, settings_mark, table_mark
@@ -142,9 +150,12 @@ def wetland_groups(work: Work, layout: Layout, n_scenes: int) -> list[tuple[np.n
     -------
     list of (rows of the wetlands table, first site pixel, last site pixel + 1)
     """
-    first = layout.weights.groupby("wetland_id")["pixel"].agg(["min", "max"]).reindex(layout.wetlands["wetland_id"])
-    low = first["min"].fillna(0).to_numpy(np.int64)
-    high = first["max"].fillna(-1).to_numpy(np.int64) + 1
+    n, size = len(layout.wetlands), layout.site.size
+    low, high = np.full(n, size, np.int64), np.zeros(n, np.int64)
+    held = np.flatnonzero(layout.owner >= 0)  # also the pixels around a wetland, which tell of shadow and haze
+    np.minimum.at(low, layout.owner[held], held)
+    np.maximum.at(high, layout.owner[held], held + 1)
+    low = np.minimum(low, high)
     order = np.argsort(low, kind="stable")
     most = max(int(work.pipeline.compute.memory_mb * 0.4e6 / (max(n_scenes, 1) * 16)), 1)
     groups, start = [], 0
@@ -167,19 +178,22 @@ def build_stack(
     share: np.ndarray,
 ) -> SceneStack:
     """Read the scores of a range of site pixels into a stack in time; share is (scene, wetland of the layout)."""
-    from inundate.extent import SceneStack, veiled
+    from inundate.extent import SceneStack, shaded, veiled
 
     group, low, high = where
     n = len(places)
     span = (low // ROWS, -(-high // ROWS))
     cut = slice(low - span[0] * ROWS, high - span[0] * ROWS)
     stack = {name: np.full((n, high - low), 255, np.uint8) for name in SCORE_COLUMNS}
-    names = ("fraction", "fraction_sd", "unlike", "ndvi", "haze", "code")
+    names = ("fraction", "fraction_sd", "unlike", "ndvi", "haze", "dark", "code")
     for i, place in enumerate(places):
         for name, values in zip(names, read_score(work.archive.score(place.scene_id), names, span), strict=True):
             stack[name][i] = values[cut]
     owner = layout.owner[low:high]
+    leafy = share[:, owner] > 0.5
     veil = veiled(haze_value(stack["haze"]), stack["code"], owner)
+    place = np.column_stack([layout.site.rows[low:high], layout.site.cols[low:high]]).astype(float)
+    veil |= shaded(dark_value(stack["dark"]), stack["code"], owner, layout.dry_ground()[low:high], place, leafy)
     stack["code"][veil] = ViewCode.CLOUD
     stack["fraction"][veil] = 255
     view = canopy_view(stack["ndvi"], share[:, owner])

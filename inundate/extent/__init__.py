@@ -17,7 +17,7 @@ from inundate.extent.observer import (
     observe_extents,
 )
 from inundate.extent.stack import ExtentOptions, SceneStack, weights_on_site
-from inundate.extent.veil import haze_index, veiled
+from inundate.extent.veil import darkness, haze_index, shaded, veiled
 from inundate.extent.weights import check_wetlands, other_shares, pixel_weights
 
 __all__ = [
@@ -31,6 +31,7 @@ __all__ = [
     "cell_coverage",
     "check_wetlands",
     "combine_same_day",
+    "darkness",
     "elevation_cells",
     "error_adjusted_area",
     "fraction_errors",
@@ -40,6 +41,7 @@ __all__ = [
     "observe_extents",
     "other_shares",
     "pixel_weights",
+    "shaded",
     "veiled",
     "weights_on_site",
     "widen_observed",
