@@ -114,13 +114,14 @@ def neighbour_mean(values: np.ndarray, wetland: WetlandPixels) -> np.ndarray:
     return out / 8.0
 
 
-def expected_fraction(filling: np.ndarray, wetland: WetlandPixels, blur: float, bend: float = 1.0) -> np.ndarray:
+def expected_fraction(filling: np.ndarray, wetland: WetlandPixels, noise: NoiseModel) -> np.ndarray:
     """Water fraction of whole pixels at each step of area, as scenes show it.
 
     Own part as ``filling`` has it, other wetlands' part as full as this one, then ``blur`` of it exchanged with the eight
-    touching pixels (coarser bands, point spread and shift carry water over the outline). At last mixed pixels show less
-    water than they hold, by ``bend``: the odds of what is shown are the odds of what is there over ``bend`` (shallow margins
-    and what grows at the rim look dry).
+    touching pixels (coarser bands, point spread and shift carry water over the outline). At last mixed pixels show what
+    the larger part is more than it is, and less water than they hold: the logarithm of the odds of what is shown is
+    ``steep`` times that of what is there, less the logarithm of ``bend`` (models lean to the likelier label; shallow
+    margins and what grows at the rim look dry).
 
     Returns
     -------
@@ -129,10 +130,13 @@ def expected_fraction(filling: np.ndarray, wetland: WetlandPixels, blur: float, 
     steps = filling.shape[1]
     fullness = np.linspace(0.0, 1.0, steps)[None, :]
     e = np.clip(wetland.share[:, None] * filling + wetland.other[:, None] * fullness, 0.0, 1.0)
-    if blur != 0.0:
-        e = np.clip(e + blur * (neighbour_mean(e, wetland) - e), 0.0, 1.0)
-    if bend != 1.0:
-        e = e / (e + bend * (1.0 - e))
+    if noise.blur != 0.0:
+        e = np.clip(e + noise.blur * (neighbour_mean(e, wetland) - e), 0.0, 1.0)
+    if noise.steep != 1.0:
+        wet = e**noise.steep
+        e = wet / (wet + noise.bend * (1.0 - e) ** noise.steep)
+    elif noise.bend != 1.0:
+        e = e / (e + noise.bend * (1.0 - e))
     return np.ascontiguousarray(e, dtype=np.float32)
 
 
@@ -151,7 +155,7 @@ def with_gradients(e: np.ndarray, wetland: WetlandPixels) -> np.ndarray:
 
 def weigh(views: Views, shape: Shape, wetland: WetlandPixels, noise: NoiseModel) -> tuple[np.ndarray, np.ndarray]:
     """Posterior over steps of area (scene, step), and what :func:`posteriors` says beside it (scene, 4); float64."""
-    e = with_gradients(expected_fraction(shape.filling, wetland, noise.blur, noise.bend), wetland)
+    e = with_gradients(expected_fraction(shape.filling, wetland, noise), wetland)
     strangers = 1.0 + 4.0 * np.minimum(wetland.other, 0.5)
     widen = np.ascontiguousarray(views.widen * strangers[None, :], dtype=np.float32)
     shared = np.array([noise.rho, noise.temper, noise.shift_px])
@@ -163,7 +167,7 @@ def fitted_fraction(
     post: np.ndarray, rest: np.ndarray, shape: Shape, wetland: WetlandPixels, noise: NoiseModel
 ) -> tuple[np.ndarray, np.ndarray]:
     """Expected water fraction of whole pixels given the posterior: as the ground lies, and as shifted; (scene, pixel)."""
-    e = with_gradients(expected_fraction(shape.filling, wetland, noise.blur, noise.bend), wetland).astype(float)
+    e = with_gradients(expected_fraction(shape.filling, wetland, noise), wetland).astype(float)
     still = post @ e[0].T
     moved = still + rest[:, 2:3] * (post @ e[1].T) + rest[:, 3:4] * (post @ e[2].T)
     return still, np.clip(moved, 0.0, 1.0)

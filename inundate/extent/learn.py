@@ -25,6 +25,7 @@ from inundate.extent.noise import (
     KINDS,
     OPEN_CLASS,
     SHIFTS,
+    STEEPS,
     VIEW_CLASSES,
     NoiseModel,
     NoiseSums,
@@ -139,7 +140,7 @@ def noise_sums(
     level = np.linspace(0, 1, post.shape[1])
     mean = post @ level
     sd = np.sqrt(np.maximum(post @ level**2 - mean**2, 0))
-    expected = expected_fraction(shape.filling, wetland, noise.blur, noise.bend).astype(float)
+    expected = expected_fraction(shape.filling, wetland, noise).astype(float)
     _, e = fitted_fraction(post, rest, shape, wetland, noise)
     row = noise.table[np.maximum(views.kind, 0)]
     fit = row[..., 0] + row[..., 1] * e
@@ -187,9 +188,11 @@ def add_anchor(sums: NoiseSums, views: Views, wetland: WetlandPixels) -> None:
 def blur_evidence(
     views: Views, shape: Shape, wetland: WetlandPixels, noise: NoiseModel, options: ExtentOptions
 ) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
-    """Log evidence of the good views under each candidate of ``BLURS``, ``SHIFTS`` and ``BENDS``; float64 (candidate,)."""
+    """Log evidence of the good views under each candidate of ``BLURS`` with each of ``STEEPS``, ``SHIFTS`` and ``BENDS``."""
     some = pick_views(views, good_views(views, options))
-    blur = [weigh(some, shape, wetland, replace(noise, blur=b))[1][:, 1].sum() for b in BLURS]
+    blur = [
+        [weigh(some, shape, wetland, replace(noise, blur=b, steep=k))[1][:, 1].sum() for k in STEEPS] for b in BLURS
+    ]
     shift = [weigh(some, shape, wetland, replace(noise, shift_px=s))[1][:, 1].sum() for s in SHIFTS]
     bend = [weigh(some, shape, wetland, replace(noise, bend=float(np.exp(b))))[1][:, 1].sum() for b in BENDS]
     return np.array(blur), np.array(shift), np.array(bend)

@@ -25,6 +25,8 @@ BLURS = np.linspace(0.0, 0.5, 6)
 """Candidates for the part of a pixel's water fraction that comes from its neighbours."""
 BENDS = np.linspace(0.0, np.log(3.0), 6)
 """Candidates of the logarithm of ``bend``: a pixel half under water shows at least a quarter (common practice, no source)."""
+STEEPS = np.array([1.0, 1.3, 1.7, 2.2, 2.6, 3.0])
+"""Candidates for how steeply the odds of water shown rise with the odds of water held."""
 SHIFTS = np.array([0.03, 0.08, 0.13, 0.18, 0.23, 0.28, 0.33])
 """Candidates for the sd of a scene's leftover shift, pixels."""
 _HELD = 200.0
@@ -81,6 +83,8 @@ class NoiseModel:
         Standard deviation of the shift that is left in a scene, pixels, each way.
     bend : float
         Factor by which the odds of water shown by a mixed pixel fall short of the odds of water held.
+    steep : float
+        Power of the odds of water held in the odds of water shown.
     """
 
     table: np.ndarray
@@ -94,6 +98,7 @@ class NoiseModel:
     blur: float = 0.0
     shift_px: float = 0.1
     bend: float = 1.0
+    steep: float = 1.0
 
     def to_dict(self) -> dict[str, object]:
         """Return plain values for JSON."""
@@ -109,6 +114,7 @@ class NoiseModel:
             "blur": self.blur,
             "shift_px": self.shift_px,
             "bend": self.bend,
+            "steep": self.steep,
         }
 
     @classmethod
@@ -194,7 +200,7 @@ class NoiseSums:
         self.pairs = np.zeros((3, 2))
         self.area = np.zeros(steps)
         self.anchor = np.zeros((KINDS, 4))
-        self.blur = np.zeros(BLURS.size)
+        self.blur = np.zeros((BLURS.size, STEEPS.size))
         self.shift = np.zeros(SHIFTS.size)
         self.bend = np.zeros(BENDS.size)
         self.shape = {name: np.zeros(2) for name in ("cells", "order", "outline")}
@@ -251,9 +257,10 @@ def renew_noise(old: NoiseModel, sums: NoiseSums, start: NoiseModel) -> NoiseMod
     for name, first in start.shape_var.items():
         total, n = sums.shape[name]
         var[name] = float(np.clip((total + 50 * first) / (n + 50), 0.003, 0.15))
-    blur, shift = _top_of(BLURS, sums.blur), _top_of(SHIFTS, sums.shift)
+    i, j = np.unravel_index(int(np.argmax(sums.blur)), sums.blur.shape)
+    blur, steep, shift = _top_of(BLURS, sums.blur[:, j]), _top_of(STEEPS, sums.blur[i]), _top_of(SHIFTS, sums.shift)
     new = replace(old, table=table, rho=rho, temper=temper, shape_var=var, area_prior=prior)
-    return replace(new, blur=blur, shift_px=shift, bend=float(np.exp(_top_of(BENDS, sums.bend))))
+    return replace(new, blur=blur, steep=steep, shift_px=shift, bend=float(np.exp(_top_of(BENDS, sums.bend))))
 
 
 def _top_of(x: np.ndarray, y: np.ndarray) -> float:
