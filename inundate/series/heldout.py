@@ -166,7 +166,7 @@ def hide_loggers(
 
 def _as_unlogged(setup: Setup, fit: Fitted, prior: Prior, items: np.ndarray, views: Events) -> Levels:
     """Fit and smooth wetlands from views alone, with a departure that views alone support."""
-    none = Events(np.zeros_like(views.start), views.day[:0], views.value[:0], views.sd[:0], views.kind[:0])
+    none = views.keep(np.zeros(views.day.size, bool))
     sd, memory = choose_departures(np.zeros((1, *fit.departure_prior.shape)), fit.departure_prior)
     count = len(setup.panel.ids)
     departure = Departure(np.full(count, sd[0]), np.full(count, memory[0]))

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 import pandas as pd
@@ -14,6 +14,9 @@ from inundate.series.maps import LevelMaps, Relations, build_maps
 SPIN_UP_DAYS = 730
 
 
+_TELLS_VIEW = {"view_fraction", "clear_fraction"}
+
+
 @dataclass(frozen=True, slots=True)
 class SeriesInputs:
     """Tables for :func:`inundate.series.fill_series`.
@@ -23,7 +26,8 @@ class SeriesInputs:
     wetlands : DataFrame
         wetland_id, area_max_m2, cover.
     observed : DataFrame
-        extent_observed: wetland_id, datetime, area_m2, area_sd_m2, leaf_state, used (rows with ``used`` false count nothing).
+        extent_observed: wetland_id, datetime, area_m2, area_sd_m2, leaf_state, used (rows with ``used`` false count nothing)
+        [, view_fraction, clear_fraction].
     stage_daily : DataFrame or None
         Full daily stage: wetland_id, date, stage_m, stage_sd_m, censored.
     relations : Relations or None
@@ -94,6 +98,8 @@ class Events:
         Share of the largest extent (views) or level in m (stage).
     kind : ndarray of int8, shape (event,)
         Leaf state of a view; 1 for a censored stage.
+    open : ndarray of float64, shape (event,)
+        Share of the ground that the canopy let through, where clear; 1 for a stage.
     """
 
     start: np.ndarray
@@ -101,6 +107,7 @@ class Events:
     value: np.ndarray
     sd: np.ndarray
     kind: np.ndarray
+    open: np.ndarray
 
     @property
     def owner(self) -> np.ndarray:
@@ -111,7 +118,7 @@ class Events:
         """Return the events where ``wanted`` is true."""
         counts = np.bincount(self.owner[wanted], minlength=self.start.size - 1)
         start = np.concatenate([[0], np.cumsum(counts)])
-        return Events(start, self.day[wanted], self.value[wanted], self.sd[wanted], self.kind[wanted])
+        return Events(start, *(getattr(self, n)[wanted] for n in ("day", "value", "sd", "kind", "open")))
 
     def certain(self) -> Events:
         """Return stage events that settle the extent: measured, or dry at or below ground."""
@@ -119,7 +126,7 @@ class Events:
 
     def with_sd(self, sd: np.ndarray) -> Events:
         """Return the same events with other standard deviations."""
-        return Events(self.start, self.day, self.value, sd, self.kind)
+        return replace(self, sd=sd)
 
 
 @dataclass(frozen=True, slots=True)
@@ -211,6 +218,7 @@ def _events(frame: pd.DataFrame, wetlands: int, days: int) -> Events:
         frame["value"].to_numpy(np.float64),
         frame["sd"].to_numpy(np.float64),
         frame["kind"].to_numpy(np.int8),
+        frame["open"].to_numpy(np.float64),
     )
 
 
@@ -220,7 +228,7 @@ def _merge_days(frame: pd.DataFrame) -> pd.DataFrame:
     frame = frame.assign(weight=weight, product=weight * frame["value"])
     frame = frame.sort_values(["wetland", "day", "value", "sd"])
     grouped = frame.groupby(["wetland", "day"], as_index=False)
-    out = grouped.agg(weight=("weight", "sum"), product=("product", "sum"), kind=("kind", "max"))
+    out = grouped.agg(weight=("weight", "sum"), product=("product", "sum"), kind=("kind", "max"), open=("open", "max"))
     out["value"] = out["product"] / out["weight"]
     out["sd"] = 1 / np.sqrt(out["weight"])
     return out
@@ -245,12 +253,14 @@ def _views(
     frame["value"] = np.clip(table["area_m2"].to_numpy(float) / largest, 0, 1)
     frame["sd"] = np.maximum(table["area_sd_m2"].to_numpy(float) / largest, least)
     frame["kind"] = table["leaf_state"].astype(str).map({s: k for k, s in enumerate(LEAF_STATES)}).to_numpy()
+    seen = table[["view_fraction", "clear_fraction"]].to_numpy(float) if set(table.columns) >= _TELLS_VIEW else None
+    frame["open"] = 1.0 if seen is None else np.clip(seen[:, 0] / np.maximum(seen[:, 1], 1e-6), 0.0, 1.0)
     return _merge_days(frame)
 
 
 def _stage(table: pd.DataFrame | None, place: dict[str, int], first: pd.Timestamp) -> pd.DataFrame:
     if table is None or not len(table):
-        return pd.DataFrame({c: [] for c in ("wetland", "day", "value", "sd", "kind")}).astype(
+        return pd.DataFrame({c: [] for c in ("wetland", "day", "value", "sd", "kind", "open")}).astype(
             {"wetland": np.int64, "day": np.int64}
         )
     _need(table, "stage_daily", ("wetland_id", "date", "stage_m"))
@@ -262,6 +272,7 @@ def _stage(table: pd.DataFrame | None, place: dict[str, int], first: pd.Timestam
     sd = table["stage_sd_m"].to_numpy(float) if "stage_sd_m" in table else np.full(len(table), 0.02)
     frame["sd"] = np.maximum(np.where(np.isfinite(sd), sd, 0.02), 0.002)
     frame["kind"] = table["censored"].fillna(False).astype(np.int8).to_numpy() if "censored" in table else 0
+    frame["open"] = 1.0
     # A day with a measured value outranks a censored one of a second logger.
     measured = frame.groupby(["wetland", "day"])["kind"].transform("min")
     return _merge_days(frame[frame["kind"] == measured])

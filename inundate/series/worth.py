@@ -7,8 +7,8 @@ import numpy as np
 from inundate.series.heldout import Evidence
 from inundate.series.inputs import Events
 
-# Bounds between sharp, middling and blunt views (claimed sd, share of the largest extent).
-_SHARP, _BLUNT = 0.1, 0.2
+# Bounds between classes of views under leaves by the share of ground that the canopy lets through (common practice).
+_OPENNESS = (0.4, 0.6)
 # Without loggers a view under leaves counts with this factor on its sd; and the pooled weight, in wetland-years, of a
 # coarser group beside a finer one. Common practice, no source.
 _UNPROVEN, _SHRINK = 3.0, 4.0
@@ -69,9 +69,9 @@ def _gain(error: np.ndarray, news: np.ndarray, cluster: np.ndarray) -> tuple[flo
 def worth_of_views(views: Events, evidence: Evidence | None) -> np.ndarray:
     """Return the factor on each view's standard deviation, from what it proved worth at loggers hidden for the purpose.
 
-    In a group of views (leaf state, claimed sharpness) the gain ``g`` is the regression of the prediction's error on view minus
+    In a group of views (leaf state, openness of the canopy) the gain ``g`` is the regression of the prediction's error on view minus
     prediction; with error variance ``V`` of the prediction the view's own is ``V (1 - g) / g``. Gains are shrunk from
-    sharpness groups to leaf states to what an unproven view would have. Errors under leaves persist, so crowded views
+    openness groups to leaf states to what an unproven view would have. Errors under leaves persist, so crowded views
     count less.
 
     Parameters
@@ -90,7 +90,7 @@ def worth_of_views(views: Events, evidence: Evidence | None) -> np.ndarray:
     out[leafy] = _UNPROVEN
     if evidence is not None:
         table = _gains(views, evidence)
-        bins = np.digitize(views.sd, [_SHARP, _BLUNT])
+        bins = np.digitize(views.open, _OPENNESS)
         out[leafy] = table[views.kind[leafy].astype(int), bins[leafy]]
     crowd = _crowding_by_wetland(views, leafy)
     out[leafy] *= np.sqrt(crowd[leafy])
@@ -98,18 +98,19 @@ def worth_of_views(views: Events, evidence: Evidence | None) -> np.ndarray:
 
 
 def _gains(views: Events, evidence: Evidence) -> np.ndarray:
-    """Return factors (leaf state, sharpness)."""
+    """Return factors (leaf state, openness)."""
     key_v = views.owner * 1_000_000 + views.day
     key_e = evidence.wetland * 1_000_000 + evidence.day
     at_v, at_e = np.intersect1d(key_v, key_e, return_indices=True)[1:]
     error = evidence.truth[at_e] - evidence.share[0, at_e]
     news = views.value[at_v] - evidence.share[0, at_e]
     cluster = evidence.wetland[at_e] * 1000 + evidence.block[at_e]
-    kind, bins = views.kind[at_v], np.digitize(views.sd[at_v], [_SHARP, _BLUNT])
+    kind, bins = views.kind[at_v], np.digitize(views.open[at_v], _OPENNESS)
     factors = np.full((4, 3), _UNPROVEN)
-    typical = np.array([0.07, 0.15, 0.3])
+    all_bins = np.digitize(views.open, _OPENNESS)
     variance = max(float(np.mean(error**2)), 1e-4) if error.size else 0.01
     for leaf in (1, 2, 3):
+        typical = np.array([_usual_sd(views.sd[(views.kind == leaf) & (all_bins == size)]) for size in range(3)])
         base = variance / (variance + (_UNPROVEN * typical) ** 2)
         in_leaf = kind == leaf
         whole, blocks = _gain(error[in_leaf], news[in_leaf], cluster[in_leaf]) if in_leaf.any() else (0.0, 0.0)
@@ -124,6 +125,11 @@ def _gains(views: Events, evidence: Evidence) -> np.ndarray:
             g = float(np.clip(g, 1e-4, 0.999))
             factors[leaf, size] = max(np.sqrt(variance * (1 - g) / g) / sd, 1.0)
     return factors
+
+
+def _usual_sd(sd: np.ndarray) -> float:
+    """Root mean square of claimed sds; that of a middling view where there is none."""
+    return float(np.sqrt(np.mean(sd**2))) if sd.size else 0.15
 
 
 def _crowding_by_wetland(views: Events, leafy: np.ndarray) -> np.ndarray:
