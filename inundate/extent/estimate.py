@@ -29,6 +29,8 @@ class Shape:
         Variance of a half-full pixel's water about ``filling``.
     n_views : int
         Good views that taught it.
+    gain : ndarray of float32, shape (pixel,), or None
+        Part of its water that each pixel shows when wet (plants that stand in it hide some); None: all of it.
     """
 
     prior: np.ndarray
@@ -36,6 +38,7 @@ class Shape:
     source: str
     departure_var: float
     n_views: int
+    gain: np.ndarray | None = None
 
 
 @dataclass(frozen=True, slots=True)
@@ -114,19 +117,20 @@ def neighbour_mean(values: np.ndarray, wetland: WetlandPixels) -> np.ndarray:
     return out / 8.0
 
 
-def expected_fraction(filling: np.ndarray, wetland: WetlandPixels, noise: NoiseModel) -> np.ndarray:
+def expected_fraction(shape: Shape, wetland: WetlandPixels, noise: NoiseModel) -> np.ndarray:
     """Water fraction of whole pixels at each step of area, as scenes show it.
 
-    Own part as ``filling`` has it, other wetlands' part as full as this one, then ``blur`` of it exchanged with the eight
+    Own part as the shape's ``filling`` has it, other wetlands' part as full as this one, then ``blur`` of it exchanged with the eight
     touching pixels (coarser bands, point spread and shift carry water over the outline). At last mixed pixels show what
     the larger part is more than it is, and less water than they hold: the logarithm of the odds of what is shown is
     ``steep`` times that of what is there, less the logarithm of ``bend`` (models lean to the likelier label; shallow
-    margins and what grows at the rim look dry).
+    margins and what grows at the rim look dry), times the pixel's own ``gain``.
 
     Returns
     -------
     ndarray of float32, shape (pixel, step)
     """
+    filling = shape.filling
     steps = filling.shape[1]
     fullness = np.linspace(0.0, 1.0, steps)[None, :]
     e = np.clip(wetland.share[:, None] * filling + wetland.other[:, None] * fullness, 0.0, 1.0)
@@ -137,6 +141,8 @@ def expected_fraction(filling: np.ndarray, wetland: WetlandPixels, noise: NoiseM
         e = wet / (wet + noise.bend * (1.0 - e) ** noise.steep)
     elif noise.bend != 1.0:
         e = e / (e + noise.bend * (1.0 - e))
+    if shape.gain is not None:
+        e = e * shape.gain[:, None]
     return np.ascontiguousarray(e, dtype=np.float32)
 
 
@@ -155,7 +161,7 @@ def with_gradients(e: np.ndarray, wetland: WetlandPixels) -> np.ndarray:
 
 def weigh(views: Views, shape: Shape, wetland: WetlandPixels, noise: NoiseModel) -> tuple[np.ndarray, np.ndarray]:
     """Posterior over steps of area (scene, step), and what :func:`posteriors` says beside it (scene, 4); float64."""
-    e = with_gradients(expected_fraction(shape.filling, wetland, noise), wetland)
+    e = with_gradients(expected_fraction(shape, wetland, noise), wetland)
     strangers = 1.0 + 4.0 * np.minimum(wetland.other, 0.5)
     widen = np.ascontiguousarray(views.widen * strangers[None, :], dtype=np.float32)
     shared = np.array([noise.rho, noise.temper, noise.shift_px])
@@ -167,7 +173,7 @@ def fitted_fraction(
     post: np.ndarray, rest: np.ndarray, shape: Shape, wetland: WetlandPixels, noise: NoiseModel
 ) -> tuple[np.ndarray, np.ndarray]:
     """Expected water fraction of whole pixels given the posterior: as the ground lies, and as shifted; (scene, pixel)."""
-    e = with_gradients(expected_fraction(shape.filling, wetland, noise), wetland).astype(float)
+    e = with_gradients(expected_fraction(shape, wetland, noise), wetland).astype(float)
     still = post @ e[0].T
     moved = still + rest[:, 2:3] * (post @ e[1].T) + rest[:, 3:4] * (post @ e[2].T)
     return still, np.clip(moved, 0.0, 1.0)
@@ -210,7 +216,8 @@ def areas(views: Views, shape: Shape, wetland: WetlandPixels, noise: NoiseModel)
     own = shape.departure_var * mixed * wetland.share[None, :] ** 2
     gain = np.where(views.kind >= 0, own / (own + error), 0.0)
     cell = wetland.area_m2 / np.maximum(wetland.share, 1e-12) / wetland.area_max_m2
-    move = gain * np.clip(value - e, -1.0, 1.0) * (1.0 - wetland.other[None, :])
+    shown = 1.0 if shape.gain is None else shape.gain[None, :]
+    move = gain * np.clip((value - e) / shown, -1.0, 1.0) * (1.0 - wetland.other[None, :])
     area = mean + move @ cell
     var += 2.0 * (own * (1 - gain)) @ cell**2
     var += noise.steady_var * (4 * mean * (1 - mean) * 0.9 + 0.1)

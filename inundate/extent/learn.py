@@ -35,6 +35,9 @@ from inundate.extent.stack import NEAR_STEPS, ExtentOptions, WetlandPixels
 
 FEW_VIEWS = 4
 """Views below which a ranking by wetness is not tried; common practice, no source."""
+GAIN_ROUNDS = 4
+GAIN_SD = 0.1
+"""Belief about the part of its water that a pixel hides, before views are looked at; common practice, no source."""
 LONGEST_BRIDGE = 8.0
 """Longest bridge, d1 d2 / (d1 + d2) days, in checks of views against their neighbours."""
 NEAR_DAYS = 30.0
@@ -84,7 +87,7 @@ def renew_shape(views: Views, shape: Shape, wetland: WetlandPixels, noise: Noise
     teach = (views.clear_fraction >= 0.7) & (views.view_fraction >= 0.8 * options.good_view) & (views.ice < 0.02)
     prior_var = noise.shape_var[shape.source]
     if teach.sum() < 2:
-        return Shape(shape.prior, shape.prior, shape.source, prior_var, int(teach.sum()))
+        return replace(shape, filling=shape.prior, departure_var=prior_var, n_views=int(teach.sum()))
     some = pick_views(views, teach)
     post, rest = weigh(some, shape, wetland, noise)
     filled = post @ shape.filling.T.astype(float)
@@ -92,11 +95,38 @@ def renew_shape(views: Views, shape: Shape, wetland: WetlandPixels, noise: Noise
     value, error, _ = pixel_terms(some, noise, e)
     share = np.maximum(wetland.share, 1e-3)[None, :]
     error = error * np.clip(rest[:, 0], 1.0, 4.0)[:, None] + LEFT_OVER * prior_var * share**2
-    precision = np.where(some.kind >= 0, share**2 / error, 0.0)
-    filling = refine_shape(shape.prior, 1.0 / prior_var, wetland, post, filled + (value - e) / share, precision)
+    shown = 1.0 if shape.gain is None else shape.gain[None, :]
+    precision = np.where(some.kind >= 0, (share * shown) ** 2 / error, 0.0)
+    filling = refine_shape(
+        shape.prior, 1.0 / prior_var, wetland, post, filled + (value - e) / (share * shown), precision
+    )
     taught = float(np.average(precision.sum(axis=0), weights=wetland.area_m2)) / 4.0
     departure = 1.0 / (1.0 / prior_var + taught) + LEFT_OVER * prior_var
-    return Shape(shape.prior, filling, shape.source, min(departure, prior_var), int(good_views(views, options).sum()))
+    n_views = int(good_views(views, options).sum())
+    return replace(shape, filling=filling, departure_var=min(departure, prior_var), n_views=n_views)
+
+
+def learn_gain(views: Views, shape: Shape, wetland: WetlandPixels, noise: NoiseModel, options: ExtentOptions) -> Shape:
+    """Learn how much of its water each pixel shows when wet, 0.4 to 1.
+
+    Only where an elevation model tells the order in which pixels fill: there a pixel that shows half while higher ones
+    show all has plants in its water. Levels and gains take turns; a pixel's gain is the slope of what it shows on what its
+    level expects, over good views that expect it more than half wet, held towards 1.
+    """
+    good = good_views(views, options)
+    if shape.source != "cells" or good.sum() < FEW_VIEWS:
+        return shape
+    some = pick_views(views, good)
+    bare = np.maximum(expected_fraction(replace(shape, gain=None), wetland, noise).astype(float), 0.0)
+    for _ in range(GAIN_ROUNDS):
+        post, _ = weigh(some, shape, wetland, noise)
+        e = post @ bare.T
+        value, error, _ = pixel_terms(some, noise, e)
+        w = np.where((some.kind >= 0) & (e > 0.5), 1.0 / error, 0.0)
+        belief = 1.0 / GAIN_SD**2
+        gain = ((w * value * e).sum(axis=0) + belief) / ((w * e**2).sum(axis=0) + belief)
+        shape = replace(shape, gain=np.clip(gain, 0.4, 1.0).astype(np.float32))
+    return shape
 
 
 def reference_levels(
@@ -140,7 +170,7 @@ def noise_sums(
     level = np.linspace(0, 1, post.shape[1])
     mean = post @ level
     sd = np.sqrt(np.maximum(post @ level**2 - mean**2, 0))
-    expected = expected_fraction(shape.filling, wetland, noise).astype(float)
+    expected = expected_fraction(shape, wetland, noise).astype(float)
     _, e = fitted_fraction(post, rest, shape, wetland, noise)
     row = noise.table[np.maximum(views.kind, 0)]
     fit = row[..., 0] + row[..., 1] * e

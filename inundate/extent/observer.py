@@ -18,6 +18,7 @@ from inundate.extent.learn import (
     blur_evidence,
     first_shape,
     fit_drift,
+    learn_gain,
     masked_checks,
     neighbour_checks,
     noise_sums,
@@ -184,6 +185,7 @@ class ExtentObserver(BaseEstimator):
         """Shape of one wetland under a noise model: depends on nothing else."""
         views = self._views(stack, wetland)
         shape = first_shape(self.cells_.get(wetland.name), wetland, views, noise, options)
+        shape = learn_gain(views, shape, wetland, noise, options)
         for _ in range(2):
             shape = renew_shape(views, shape, wetland, noise, options)
         return shape
