@@ -35,6 +35,8 @@ from inundate.extent.stack import NEAR_STEPS, ExtentOptions, WetlandPixels
 
 FEW_VIEWS = 4
 """Views below which a ranking by wetness is not tried; common practice, no source."""
+EVIDENCE_VIEWS = 24
+"""Most views of a wetland, evenly spaced in time, on which candidates of blur, steepness, shift and bend are weighed."""
 GAIN_ROUNDS = 4
 GAIN_SD = 0.1
 """Belief about the part of its water that a pixel hides, before views are looked at; common practice, no source."""
@@ -219,7 +221,10 @@ def blur_evidence(
     views: Views, shape: Shape, wetland: WetlandPixels, noise: NoiseModel, options: ExtentOptions
 ) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
     """Log evidence of the good views under each candidate of ``BLURS`` with each of ``STEEPS``, ``SHIFTS`` and ``BENDS``."""
-    some = pick_views(views, good_views(views, options))
+    good = np.flatnonzero(good_views(views, options))
+    some = pick_views(
+        views, good[np.unique(np.linspace(0, max(good.size - 1, 0), EVIDENCE_VIEWS).astype(int))] if good.size else good
+    )
     blur = [
         [weigh(some, shape, wetland, replace(noise, blur=b, steep=k))[1][:, 1].sum() for k in STEEPS] for b in BLURS
     ]

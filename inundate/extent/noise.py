@@ -21,13 +21,13 @@ BAND_EDGES = (0.3, 0.5, 0.7, 0.9)
 _SLOPE = (0.2, 0.4, 0.65, 0.9, 1.0)
 _PURE = (0.08, 0.07, 0.05, 0.025, 0.01)
 _MIXED = 0.02
-BLURS = np.linspace(0.0, 0.5, 6)
+BLURS = np.linspace(0.0, 0.45, 4)
 """Candidates for the part of a pixel's water fraction that comes from its neighbours."""
-BENDS = np.linspace(0.0, np.log(3.0), 6)
+BENDS = np.linspace(0.0, np.log(3.0), 4)
 """Candidates of the logarithm of ``bend``: a pixel half under water shows at least a quarter (common practice, no source)."""
-STEEPS = np.array([1.0, 1.3, 1.7, 2.2, 2.6, 3.0])
+STEEPS = np.linspace(1.0, 3.0, 4)
 """Candidates for how steeply the odds of water shown rise with the odds of water held."""
-SHIFTS = np.array([0.03, 0.08, 0.13, 0.18, 0.23, 0.28, 0.33])
+SHIFTS = np.linspace(0.03, 0.33, 4)
 """Candidates for the sd of a scene's leftover shift, pixels."""
 _HELD = 200.0
 """Pixels that the starting values of a kind weigh."""

@@ -87,15 +87,14 @@ def darkness(near_infrared: np.ndarray, short_wave: np.ndarray, ground: tuple[fl
     ndarray of float32, shape (pixel,)
         0 as bright as the ground, below 0 darker; NaN where neither band is known.
     """
-    parts = []
+    total, count = np.zeros(np.shape(near_infrared)), np.zeros(np.shape(near_infrared))
     for values, base in ((near_infrared, ground[0]), (short_wave, ground[1])):
         if np.isfinite(base) and base > _FLOOR:
-            parts.append(np.log(np.maximum(values, _FLOOR) / base))
-    if not parts:
-        return np.full(np.shape(near_infrared), np.nan, np.float32)
-    with warnings.catch_warnings():
-        warnings.simplefilter("ignore", RuntimeWarning)
-        return np.nanmean(np.array(parts), axis=0).astype(np.float32)
+            known = np.isfinite(values)
+            total += np.where(known, np.log(np.maximum(np.where(known, values, base), _FLOOR) / base), 0.0)
+            count += known
+    with np.errstate(invalid="ignore"):
+        return (total / count).astype(np.float32)
 
 
 def shaded(
