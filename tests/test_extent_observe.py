@@ -12,8 +12,10 @@ from inundate.extent import (
     SceneStack,
     apply_decisions,
     combine_same_day,
+    darkness,
     haze_index,
     other_shares,
+    shaded,
     veiled,
 )
 
@@ -172,3 +174,60 @@ def test_too_few_views_tell_no_veil():
     haze = np.zeros((7, 4), np.float32)
     haze[0] = 1.0
     assert not veiled(haze, np.zeros(haze.shape, np.uint8), np.zeros(4, int)).any()
+
+
+def test_darkness_by_hand():
+    """Mean of the logarithms of both ratios; one band serves alone, none gives NaN, and so does unknown ground."""
+    nir, swir = np.array([0.1, 0.2, np.nan], "f4"), np.array([0.1, np.nan, np.nan], "f4")
+    out = darkness(nir, swir, (0.2, 0.4))
+    assert out[:2] == pytest.approx([(np.log(0.5) + np.log(0.25)) / 2, 0.0], abs=1e-6)
+    assert np.isnan(out[2])
+    assert np.isnan(darkness(nir, swir, (np.nan, np.nan))).all()
+
+
+def _pond(rng, scenes=20, side=9):
+    """Return darkness of a pond of 5 x 5 pixels in a block of 9 x 9, and the arguments of ``shaded`` beside it."""
+    rows, cols = (v.ravel() for v in np.mgrid[0:side, 0:side])
+    ring = (np.abs(rows - 4) > 2) | (np.abs(cols - 4) > 2)
+    dark = rng.normal(0.0, 0.05, (scenes, side * side)).astype(np.float32)
+    place = np.column_stack([rows, cols]).astype(float)
+    return dark, np.zeros(dark.shape, np.uint8), np.zeros(side * side, int), ring, place, np.zeros(dark.shape, bool)
+
+
+@given(st.integers(0, 1000), st.integers(0, 19))
+@settings(max_examples=25, deadline=None)
+def test_a_missed_shadow_is_told_by_the_ground_around(seed, scene):
+    """A scene whose ground lies in shadow is masked; a scene in which only the pond is dark (water) is not."""
+    dark, code, *rest = _pond(np.random.default_rng(seed))
+    ring = rest[1]
+    dark[scene] -= 1.2
+    dark[(scene + 7) % 20, ~ring] -= 2.0
+    out = shaded(dark, code, *rest)
+    assert out[scene].all()
+    assert not np.delete(out, scene, axis=0).any()
+
+
+def test_half_a_shadow_takes_its_side_only():
+    """Shadow over the eastern third of the ring: pixels there are masked, those in the west are not."""
+    dark, code, owner, ring, place, leafy = _pond(np.random.default_rng(1))
+    dark[3, place[:, 1] >= 6] -= 1.2
+    out = shaded(dark, code, owner, ring, place, leafy)[3]
+    assert out[place[:, 1] >= 7].all()
+    assert not out[place[:, 1] <= 3].any()
+
+
+def test_plants_that_hide_water_do_not_shrink_a_full_bowl():
+    """Half of the pixels in the deep middle show half of their water: the area of full views is told within 5 %."""
+    levels = np.clip(0.7 + 0.5 * np.sin(np.arange(40) / 3), 0, 1)
+    weights, wetlands, cells, stack, truth = bowl(levels)
+    rows, cols = (v.ravel() for v in np.mgrid[0:SIZE, 0:SIZE])
+    grown = (np.hypot(rows - 6, cols - 6) < 4) & ((rows + cols) % 2 == 0)
+    hidden = np.where(grown[None, :], 0.5 * stack.fraction, stack.fraction).astype(np.float32)
+    changed = SceneStack(stack.scene_id, stack.datetime, hidden, stack.code, stack.wetland_id, stack.leaf_state)
+    observer = ExtentObserver(weights, wetlands, 100.0, cells=cells).fit(changed)
+    error = (observer.observe(changed)["area_m2"].to_numpy() - truth) / wetlands["area_max_m2"][0]
+    gain = observer.shapes_["a"].gain
+    inside = pd.Series(gain, index=observer.pixels_["a"].pixel)
+    assert inside[np.flatnonzero(grown)].mean() < 0.75
+    assert inside.drop(np.flatnonzero(grown)).mean() > 0.9
+    assert np.abs(error[levels > 0.95]).max() < 0.05
