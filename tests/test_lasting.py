@@ -7,6 +7,7 @@ from hypothesis import strategies as st
 
 from inundate.extent import widen_observed
 from inundate.pixels import between_sd, lasting_errors
+from inundate.pixels.lasting import UNKNOWN
 from inundate.relation import widen_bands
 from inundate.series.fill import widen_lasting
 
@@ -25,11 +26,13 @@ def test_between_sd_recovers_the_spread_it_was_made_with():
 
 
 def test_no_spread_gives_none():
-    """Rows of one distribution give a spread near 0, and too few groups give exactly 0."""
+    """Rows of one distribution give a spread near 0; too few groups tell nothing, and then the stated belief serves."""
     rng = np.random.default_rng(1)
     group = np.repeat(np.arange(50), 20)
     assert between_sd(rng.normal(0, 0.3, group.size), group) < 0.05
-    assert between_sd(np.arange(4.0), np.array([0, 0, 1, 1])) == 0.0
+    assert between_sd(np.arange(4.0), np.array([0, 0, 1, 1])) is None
+    none = np.zeros(4, bool)
+    assert lasting_errors(np.full(4, 0.5), none, np.array(list("aabb")), ~none) == UNKNOWN
 
 
 def test_missed_and_added_are_told_apart():

@@ -6,7 +6,11 @@ import numpy as np
 import pandas as pd
 
 
-def between_sd(value: np.ndarray, group: np.ndarray) -> float:
+UNKNOWN = (0.15, 0.1)
+"""Missed and added where own labels cannot tell: a belief, common practice, no source."""
+
+
+def between_sd(value: np.ndarray, group: np.ndarray) -> float | None:
     """Return the standard deviation of group means beyond that which their own scatter gives.
 
     The method-of-moments estimate of DerSimonian & Laird (1986, Controlled Clinical Trials 7:177), with each group's
@@ -19,14 +23,14 @@ def between_sd(value: np.ndarray, group: np.ndarray) -> float:
 
     Returns
     -------
-    float
-        0 with fewer than three groups of two rows or more.
+    float or None
+        None with fewer than three groups of two rows or more.
     """
     table = pd.DataFrame({"value": np.asarray(value, float), "group": np.asarray(group).astype(str)})
     sums = table.groupby("group")["value"].agg(["mean", "size"])
     sums = sums[sums["size"] >= 2]
     if len(sums) < 3:
-        return 0.0
+        return None
     rows = table[table["group"].isin(sums.index)]
     left = rows["value"] - rows["group"].map(sums["mean"])
     within = float((left**2).sum()) / max(len(rows) - len(sums), 1)
@@ -57,9 +61,10 @@ def lasting_errors(
     -------
     (float, float)
         Standard deviation between wetlands of mean missed probability over water labels, and of mean probability over
-        dry labels.
+        dry labels; ``UNKNOWN`` where labels of fewer than three wetlands cannot tell.
     """
     p, is_water, who = np.asarray(probability, float), np.asarray(water, bool), np.asarray(wetland).astype(str)
     good = np.asarray(chosen, bool) & np.isfinite(p)
     wet, dry = good & is_water, good & ~is_water
-    return between_sd(1.0 - p[wet], who[wet]), between_sd(p[dry], who[dry])
+    missed, added = between_sd(1.0 - p[wet], who[wet]), between_sd(p[dry], who[dry])
+    return UNKNOWN[0] if missed is None else missed, UNKNOWN[1] if added is None else added
