@@ -192,8 +192,8 @@ def build_stack(
     owner = layout.owner[low:high]
     leafy = share[:, owner] > 0.5
     veil = veiled(haze_value(stack["haze"]), stack["code"], owner)
-    place = np.column_stack([layout.site.rows[low:high], layout.site.cols[low:high]]).astype(float)
-    veil |= shaded(dark_value(stack["dark"]), stack["code"], owner, layout.dry_ground()[low:high], place, leafy)
+    spot = np.column_stack([layout.site.rows[low:high], layout.site.cols[low:high]]).astype(float)
+    veil |= shaded(dark_value(stack["dark"]), stack["code"], owner, layout.dry_ground()[low:high], spot, leafy)
     stack["code"][veil] = ViewCode.CLOUD
     stack["fraction"][veil] = 255
     view = canopy_view(stack["ndvi"], share[:, owner])

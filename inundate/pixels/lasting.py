@@ -5,7 +5,6 @@ from __future__ import annotations
 import numpy as np
 import pandas as pd
 
-
 UNKNOWN = (0.15, 0.1)
 """Missed and added where own labels cannot tell: a belief, common practice, no source."""
 

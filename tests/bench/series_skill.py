@@ -1,7 +1,7 @@
 """Skill of the filled series against truth, beside two plain ways: ``python -m tests.bench.series_skill SOURCE ...``.
 
-SOURCE is ``world:SEED`` (the tests' own landscape), ``truth:FOLDER`` (a reserve's folder; views, stage and relations are
-simulated from its truth) or ``products:RESERVE_FOLDER:PRODUCTS_FOLDER`` (what the real steps made of it).
+SOURCE is ``world:SEED`` (the tests' own landscape) or ``truth:FOLDER`` (a reserve's folder; views, stage and relations are
+simulated from its truth). What the real steps make of a demo is scored by ``tests.bench.demo_skill``.
 """
 
 from __future__ import annotations
@@ -40,10 +40,7 @@ def load(source: str) -> Case:
         return world_case(int(rest))
     from tests.bench import series_sources
 
-    if kind == "truth":
-        return series_sources.truth_case(Path(rest))
-    reserve, _, products = rest.partition(":")
-    return series_sources.products_case(Path(reserve), Path(products))
+    return series_sources.truth_case(Path(rest))
 
 
 def interpolated(inputs: SeriesInputs, dates: np.ndarray, area_max: pd.Series) -> np.ndarray:

@@ -171,39 +171,3 @@ def _case(
     table = wetlands[["wetland_id", "area_max_m2", "cover"]]
     inputs = SeriesInputs(table, observed, stage, relations, hyps, weather, frame, dates[0], dates[-1])  # type: ignore[arg-type]
     return Case(folder.name, inputs, share, logged)
-
-
-def products_case(reserve: Path, products: Path) -> Case:
-    """Real steps' tables: extent_observed, stage_daily (full), wetlands, leaf_daily, hypsometry; relations fitted anew."""
-    from inundate.relation import fit_relations, make_pairs
-
-    observed = pd.read_parquet(products / "extent_observed.parquet")
-    stage = pd.read_parquet(products / "stage_full.parquet")
-    hyps = (
-        pd.read_parquet(products / "hypsometry.parquet")
-        if (products / "hypsometry.parquet").exists()
-        else hypsometry_of(reserve)
-    )
-    truth_wetlands, dates, share, _ = truth_share(reserve)
-    wetlands = (
-        pd.read_parquet(products / "wetlands.parquet")
-        if (products / "wetlands.parquet").exists()
-        else truth_wetlands[["wetland_id", "area_max_m2", "cover"]]
-    )
-    wetlands = wetlands.sort_values("wetland_id", ignore_index=True)
-    relations = fit_relations(make_pairs(observed, stage), wetlands, hyps, seed=0)
-    if (products / "leaf_daily.parquet").exists():
-        leaf_daily = pd.read_parquet(products / "leaf_daily.parquet")
-    else:
-        leaf = true_leaf(reserve, truth_wetlands, dates)
-        leaf_daily = pd.DataFrame(
-            {
-                "wetland_id": np.repeat(truth_wetlands["wetland_id"].to_numpy(), len(dates)),
-                "date": np.tile(dates, len(truth_wetlands)),
-                "leaf_state": STATES[leaf.ravel()],
-            }
-        )
-    weather = pd.read_csv(reserve / "inputs/weather.csv", parse_dates=["date"])
-    logged = wetlands["wetland_id"].isin(stage["wetland_id"].unique()).to_numpy()
-    inputs = SeriesInputs(wetlands, observed, stage, relations, hyps, weather, leaf_daily, dates[0], dates[-1])
-    return Case(products.name, inputs, share, logged)
