@@ -3,18 +3,21 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, field, replace
+from functools import reduce
 from itertools import product
 
 import numpy as np
 
 YEAR_NS = 365.25 * 86400e9
-#: What may be: sd of a linear drift and of a random walk (m a year), survey and sensor accuracy as multiples of what is
-#: told, checks likewise.
+#: What may be: sd of a linear drift and of a random walk (m a year); errors of survey, checks and sensor zero as multiples
+#: of what is told: they may be worse, but never better, than somebody says. (A dry sensor tells its zero and so how good
+#: the sensor is, but nothing of the survey; so each has a multiple of its own.)
 _SLOPES = np.array([0.0, 0.01, 0.05])
 _WANDER = np.array([0.0, 0.01, 0.04])
-_SURVEY = np.array([0.1, 0.3, 1.0, 3.0, 10.0])
+_SURVEY = np.array([1.0, 3.0, 10.0])
 _CHECKS = np.array([1.0, 1.6, 3.0])
-_MODELS = np.array(list(product(_SLOPES, _WANDER, _SURVEY, _CHECKS)))
+_SENSOR = np.array([1.0, 4.0])
+_MODELS = np.array(list(product(_SLOPES, _WANDER, _SURVEY, _CHECKS, _SENSOR)))
 
 
 @dataclass(frozen=True, slots=True)
@@ -23,7 +26,7 @@ class Priors:
 
     Attributes
     ----------
-    slope, wander, survey, checks : tuple of float
+    slope, wander, survey, checks, sensor : tuple of float
         Weights that sum to one. The defaults are common practice, no source: most sensors drift by well under 1 cm a
         year, few by several; most surveys and checks are as good as told, few are several times worse.
     zero_sd_m : float
@@ -32,14 +35,17 @@ class Priors:
 
     slope: tuple[float, ...] = (0.60, 0.25, 0.15)
     wander: tuple[float, ...] = (0.70, 0.20, 0.10)
-    survey: tuple[float, ...] = (0.10, 0.20, 0.60, 0.08, 0.02)
+    survey: tuple[float, ...] = (0.85, 0.12, 0.03)
     checks: tuple[float, ...] = (0.60, 0.25, 0.15)
+    sensor: tuple[float, ...] = (0.85, 0.15)
     zero_sd_m: float = 0.003
 
     def log_weights(self) -> np.ndarray:
         """Return log weights of all models, shape (model,)."""
-        parts = [np.log(np.array(p)) for p in (self.slope, self.wander, self.survey, self.checks)]
-        return np.add.outer(np.add.outer(np.add.outer(parts[0], parts[1]), parts[2]), parts[3]).ravel()
+        return reduce(np.add.outer, [np.log(np.array(p)) for p in self._axes()]).ravel()
+
+    def _axes(self) -> tuple[tuple[float, ...], ...]:
+        return self.slope, self.wander, self.survey, self.checks, self.sensor
 
     def learn(self, offsets: list[Offset], strength: float = 2.0) -> Priors:
         """Return the weights that the loggers of an area show, the present ones counting as ``strength`` loggers.
@@ -60,7 +66,7 @@ class Priors:
         told = [o.weights for o in offsets if (~o.evidence.zero).sum() >= 3]
         if not told:
             return self
-        axes = (self.slope, self.wander, self.survey, self.checks)
+        axes = self._axes()
         shape = tuple(len(a) for a in axes)
         likelihood = np.array(told) / np.exp(self.log_weights())
         new = self
@@ -68,11 +74,10 @@ class Priors:
             weights = likelihood * np.exp(new.log_weights())
             share = (weights / weights.sum(axis=1, keepdims=True)).sum(axis=0).reshape(shape)
             counts = [
-                strength * np.array(own) + share.sum(axis=tuple(i for i in range(4) if i != axis))
+                strength * np.array(own) + share.sum(axis=tuple(i for i in range(len(axes)) if i != axis))
                 for axis, own in enumerate(axes)
             ]
-            slope, wander, survey, checks = (tuple((count / count.sum()).tolist()) for count in counts)
-            new = Priors(slope, wander, survey, checks, self.zero_sd_m)
+            new = Priors(*(tuple((count / count.sum()).tolist()) for count in counts), zero_sd_m=self.zero_sd_m)
         return replace(new, zero_sd_m=self._learn_zero(offsets))
 
     def _learn_zero(self, offsets: list[Offset]) -> float:
@@ -270,12 +275,12 @@ def _basis(
 
 def _variances(model: np.ndarray, e: Evidence, steps: tuple[Step, ...]) -> np.ndarray:
     """Prior variances of the columns: shape (column,), or (model, column) for several models."""
-    slope, survey = model[..., 0, None], model[..., 2, None]
+    slope, survey, sensor = model[..., 0, None], model[..., 2, None], model[..., 4, None]
     known = np.ones((*model.shape[:-1], 1))
     return np.concatenate(
         [
             (survey * np.array(e.height_sd_m)) ** 2,
-            (survey * e.sensor_sd_m) ** 2,
+            (sensor * e.sensor_sd_m) ** 2,
             slope**2,
             known * np.array([s.sd_m**2 for s in steps]),
         ],
