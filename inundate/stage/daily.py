@@ -145,14 +145,22 @@ def _wet(hours: Hours, wet: np.ndarray) -> Hours:
 def _share_slow_errors(found: dict[str, Found]) -> None:
     """Give each logger the scatter that it shows when dry, or the middle one of the others.
 
-    No logger's is more than the scatter of its own daily means about a smooth course.
+    No logger's is more than the scatter of its own daily means about a smooth course. What the noise of single
+    readings adds to either is taken out: it is counted apart.
     """
-    seen = [f.settled.dryness.day_spread_m for f in found.values()]
+    seen = [_beyond_noise(f, f.settled.dryness.day_spread_m) for f in found.values()]
     known = [s for s in seen if np.isfinite(s)]
     usual = float(np.median(known)) if known else SLOW_SD_M
     for one, own in zip(found.values(), seen, strict=True):
-        most = day_noise(one.settled.hours)
+        most = _beyond_noise(one, day_noise(one.settled.hours))
         one.settled.slow_m = max(own if np.isfinite(own) else min(usual, most), 5e-4)
+
+
+def _beyond_noise(found: Found, spread_m: float) -> float:
+    """Scatter of daily means without that of single readings; NaN stays."""
+    hours = found.settled.hours
+    per_day = max(float(hours.n.sum()) / max(np.unique(hours.hour // 24).size, 1), 1.0)
+    return float(np.sqrt(np.maximum(spread_m**2 - found.settled.noise**2 / per_day, 0.0)))
 
 
 def _shared_clock(ready: dict[str, Prepared]) -> list[str]:

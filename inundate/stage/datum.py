@@ -8,6 +8,8 @@ from itertools import product
 
 import numpy as np
 
+from inundate.stage.mixture import stated_sd
+
 YEAR_NS = 365.25 * 86400e9
 #: What may be: sd of a linear drift and of a random walk (m a year); errors of survey, checks and sensor zero as multiples
 #: of what is told: they may be worse, but never better, than somebody says. (A dry sensor tells its zero and so how good
@@ -27,15 +29,16 @@ class Priors:
     Attributes
     ----------
     slope, wander, survey, checks, sensor : tuple of float
-        Weights that sum to one. The defaults are common practice, no source: most sensors drift by well under 1 cm a
-        year, few by several; most surveys and checks are as good as told, few are several times worse.
+        Weights that sum to one. The defaults are common practice, no source: most sensors drift by less than 1 cm a year
+        (0.1 % of a 10 m range), one in twenty by several; most surveys and checks are as good as told, one in
+        twenty surveys is three times worse and one in a hundred grossly wrong.
     zero_sd_m : float
         How well a dry sensor tells its zero under water, besides the scatter of its readings.
     """
 
-    slope: tuple[float, ...] = (0.60, 0.25, 0.15)
-    wander: tuple[float, ...] = (0.70, 0.20, 0.10)
-    survey: tuple[float, ...] = (0.85, 0.12, 0.03)
+    slope: tuple[float, ...] = (0.60, 0.35, 0.05)
+    wander: tuple[float, ...] = (0.75, 0.20, 0.05)
+    survey: tuple[float, ...] = (0.94, 0.05, 0.01)
     checks: tuple[float, ...] = (0.60, 0.25, 0.15)
     sensor: tuple[float, ...] = (0.85, 0.15)
     zero_sd_m: float = 0.003
@@ -77,7 +80,8 @@ class Priors:
                 strength * np.array(own) + share.sum(axis=tuple(i for i in range(len(axes)) if i != axis))
                 for axis, own in enumerate(axes)
             ]
-            new = Priors(*(tuple((count / count.sum()).tolist()) for count in counts), zero_sd_m=self.zero_sd_m)
+            slope, wander, survey, checks, sensor = (tuple((count / count.sum()).tolist()) for count in counts)
+            new = Priors(slope, wander, survey, checks, sensor, self.zero_sd_m)
         return replace(new, zero_sd_m=self._learn_zero(offsets))
 
     def _learn_zero(self, offsets: list[Offset]) -> float:
@@ -203,7 +207,7 @@ class Offset:
         return [(float(self.weights[k] / total), _MODELS[k], self.inverse[k], self.pull[k]) for k in keep]
 
     def at(self, time: np.ndarray, span: np.ndarray, *, part: str = "all") -> tuple[np.ndarray, np.ndarray]:
-        """Return offset and its standard deviation.
+        """Return offset and its standard deviation (``mixture.stated_sd`` over the models).
 
         Parameters
         ----------
@@ -219,38 +223,35 @@ class Offset:
         offset_m, sd_m : ndarray of float64, shape (n,)
         """
         e = self.evidence
-        mean = np.zeros(time.size)
-        second = np.zeros(time.size)
         basis, prior_mean = _basis(time, span, part != "zero", part != "height", e, self.steps)
         seen, _ = _basis(e.time, e.span, ~e.zero, np.ones(e.time.size, bool), e, self.steps)
         years, seen_years = (time - e.start) / YEAR_NS, (e.time - e.start) / YEAR_NS
-        for weight, model, inverse, pull in self._leading():
+        leading = self._leading()
+        means, sds = np.empty((len(leading), time.size)), np.empty((len(leading), time.size))
+        for i, (_, model, inverse, pull) in enumerate(leading):
             var = _variances(model, e, self.steps)
             cross = (basis * var) @ seen.T
             own = (basis**2) @ var
             if model[1] and part != "height":
                 cross += model[1] ** 2 * np.minimum(years[:, None], seen_years[None, :])
                 own += model[1] ** 2 * years
-            m = basis @ prior_mean + cross @ pull
-            v = np.maximum(own - ((cross @ inverse) * cross).sum(axis=1), 0.0)
-            mean += weight * m
-            second += weight * (v + m**2)
-        return mean, np.sqrt(np.maximum(second - mean**2, 0.0))
+            means[i] = basis @ prior_mean + cross @ pull
+            sds[i] = np.sqrt(np.maximum(own - ((cross @ inverse) * cross).sum(axis=1), 0.0))
+        return stated_sd(np.array([weight for weight, *_ in leading]), means, sds)
 
     def sizes(self) -> list[tuple[float, float]]:
         """Return what every step added to the offset (m): mean and standard deviation."""
         e, first = self.evidence, len(self.evidence.height_sd_m) + 2
         seen, prior_mean = _basis(e.time, e.span, ~e.zero, np.ones(e.time.size, bool), e, self.steps)
-        out = []
-        for i in range(first, first + len(self.steps)):
-            mean = second = 0.0
-            for weight, model, inverse, pull in self._leading():
-                var = _variances(model, e, self.steps)[i]
-                m = float(prior_mean[i] + var * (seen[:, i] @ pull))
-                v = max(float(var - var**2 * (seen[:, i] @ inverse @ seen[:, i])), 0.0)
-                mean, second = mean + weight * m, second + weight * (v + m**2)
-            out.append((mean, float(np.sqrt(max(second - mean**2, 0.0)))))
-        return out
+        leading = self._leading()
+        means, sds = np.empty((len(leading), len(self.steps))), np.empty((len(leading), len(self.steps)))
+        for k, (_, model, inverse, pull) in enumerate(leading):
+            var = _variances(model, e, self.steps)[first:]
+            column = seen[:, first:]
+            means[k] = prior_mean[first:] + var * (pull @ column)
+            sds[k] = np.sqrt(np.maximum(var - var**2 * ((inverse @ column) * column).sum(axis=0), 0.0))
+        mean, sd = stated_sd(np.array([weight for weight, *_ in leading]), means, sds)
+        return list(zip(mean.tolist(), sd.tolist(), strict=True))
 
 
 def _basis(

@@ -107,9 +107,9 @@ def flag_ice(
     """Flag readings of a frozen sensor; changes ``flag`` in place.
 
     Water is never colder than 0, so a sensor under -0.3 is in ice, or in air (then it reads no more than 5 cm and
-    falls under ``dry``). In a cold spell (within 0.3 of freezing,
-    or ``frost`` where the logger has no temperature) everything from the first to the last sudden change of level is
-    flagged: ice presses and lifts.
+    falls under ``dry``). In a cold spell (within 0.3 of freezing, or ``frost`` where the logger has no temperature; up to
+    a day of thaw in between) and the day after it, everything from the first to the last sudden change of level is
+    flagged: ice presses and lifts, and lets go when it thaws.
 
     Parameters
     ----------
@@ -139,10 +139,11 @@ def flag_ice(
     change = np.diff(hours.mean)
     limit = max(10.0 * spread(change), 0.01)
     jump_hours = hours.hour[1:][np.abs(change) > limit]
-    edge = np.flatnonzero(np.diff(np.r_[0, cold.astype(np.int8), 0]))
     hour = time // HOUR_NS
-    for a, b in zip(edge[::2], edge[1::2], strict=True):
-        inside = jump_hours[(jump_hours >= hour[a]) & (jump_hours <= hour[b - 1])]
+    at = hour[cold]
+    cut = np.flatnonzero(np.diff(at) > 24)
+    for first, last in zip(at[np.r_[0, cut + 1]], at[np.r_[cut, -1]], strict=True):
+        inside = jump_hours[(jump_hours >= first) & (jump_hours <= last + 24)]
         if inside.size >= 2:
             lo, hi = np.searchsorted(hour, [inside[0], inside[-1] + 1])
             _set(flag, lo, hi, "ice")
