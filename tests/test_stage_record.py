@@ -118,20 +118,22 @@ def test_daily_columns_and_order(result):
     assert (result.daily["period"] == 1).all()
 
 
-def test_result_does_not_depend_on_the_order_of_inputs_or_kept_flags(made, result):
-    """Shuffled registry, checks and mapping; flags kept or not: the same bytes."""
+def test_result_does_not_depend_on_the_order_of_inputs(made, result):
+    """Shuffled registry, checks and mapping: the same bytes, also of readings whose flags are made when asked for."""
     other = daily_stage(
         made.registry.iloc[::-1],
         dict(reversed(made.readings.items())),
         made.barometer,
         made.checks.sample(frac=1, random_state=1),
         made.latitudes,
-        StageOptions(keep_flagged=False),
         weather=made.weather,
     )
     pd.testing.assert_frame_equal(result.daily, other.daily, check_exact=True)
     pd.testing.assert_frame_equal(result.corrections, other.corrections, check_exact=True)
-    assert other.flagged == {}
+    assert sorted(other.flagged) == ["L1", "L2", "L3", "L4"]
+    for name, frame in other.flagged.items():
+        pd.testing.assert_frame_equal(frame, result.flagged[name], check_exact=True)
+    assert "L9" not in other.flagged
 
 
 def test_stage_worked_by_hand():
@@ -437,7 +439,7 @@ def test_stated_sd_is_calibrated_where_errors_are_as_told():
     shares = []
     for seed in (11, 12):
         many = make(seed, years=0.8, n=10, survey_sd_m=0.01, zero_sd_m=0.005)
-        table = score(many, run(many, keep_flagged=False).daily)
+        table = score(many, run(many).daily)
         shares.append(table[["within1", "within2"]].mean())
     within1, within2 = pd.concat(shares, axis=1).mean(axis=1)
     # 20 loggers, each wrong by nearly one constant: two standard errors of a share of 0.68 are 0.21

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Iterator, Mapping
 from dataclasses import dataclass, field
 
 import numpy as np
@@ -10,7 +10,7 @@ import pandas as pd
 
 from inundate.common.errors import InputError, Refusal
 from inundate.stage.datum import Priors
-from inundate.stage.days import CORRECTION_COLUMNS, DAILY_COLUMNS, SLOW_SD_M
+from inundate.stage.days import CORRECTION_COLUMNS, DAILY_COLUMNS, SLOW_SD_M, Settled, flagged_frame
 from inundate.stage.options import QUALITIES, StageOptions
 from inundate.stage.readings import Barometer, Readings
 from inundate.stage.record import (
@@ -43,15 +43,57 @@ class StageResult:
         What an analyst should know.
     refused : list of Refusal
         Loggers and checks set aside.
-    flagged : dict of str to DataFrame
-        By logger_id every reading: time, raw_value, depth_m, stage_m, flag (empty where ``keep_flagged`` is off).
+    flagged : mapping of str to DataFrame
+        By logger_id every reading: time, raw_value, depth_m, stage_m, flag. Made from the readings when asked for and not
+        kept, since a network's readings may be many millions.
     """
 
     daily: pd.DataFrame
     corrections: pd.DataFrame
     notes: list[str] = field(default_factory=list)
     refused: list[Refusal] = field(default_factory=list)
-    flagged: dict[str, pd.DataFrame] = field(default_factory=dict)
+    flagged: Mapping[str, pd.DataFrame] = field(default_factory=dict)
+
+
+@dataclass(frozen=True, slots=True)
+class _Source:
+    """What a logger is prepared from."""
+
+    registry: pd.DataFrame
+    readings: Mapping[str, Readings]
+    barometer: Barometer | None
+    latitudes: Mapping[str, float]
+    options: StageOptions
+    frost: np.ndarray | None
+
+    def prepare(self, logger_id: str, *, whole: bool = False) -> Prepared:
+        """Prepare one logger."""
+        rows = self.registry[self.registry["logger_id"] == logger_id]
+        if logger_id not in self.readings:
+            message = f"logger {logger_id}: no readings; give its file in the registry"
+            raise InputError(message)
+        read = self.readings[logger_id]
+        return prepare_logger(rows, read, self.barometer, self.latitudes, self.options, frost=self.frost, whole=whole)
+
+
+class FlaggedReadings(Mapping[str, pd.DataFrame]):
+    """Every reading of each logger with its flag, made anew when asked for: a mapping of logger_id to DataFrame."""
+
+    def __init__(self, source: _Source, settled: dict[str, Settled]) -> None:
+        self._source = source
+        self._settled = settled
+
+    def __getitem__(self, logger_id: str) -> pd.DataFrame:
+        return flagged_frame(self._settled[logger_id], self._source.prepare(logger_id, whole=True).spans)
+
+    def __contains__(self, logger_id: object) -> bool:
+        return logger_id in self._settled
+
+    def __iter__(self) -> Iterator[str]:
+        return iter(self._settled)
+
+    def __len__(self) -> int:
+        return len(self._settled)
 
 
 def daily_stage(
@@ -71,7 +113,7 @@ def daily_stage(
     registry : DataFrame
         From ``read_registry``.
     readings : mapping of logger_id to Readings
-        May read on demand (``LoggerFiles``); each logger is asked for once.
+        May read on demand (``LoggerFiles``); each logger is asked for once, and again when its ``flagged`` is.
     barometer : Barometer, optional
         Needed by absolute loggers.
     checks : DataFrame, optional
@@ -96,19 +138,14 @@ def daily_stage(
     if latitudes is None:
         message = "daily_stage: latitudes is None; give the latitude of every wetland, degrees"
         raise InputError(message)
-    frost = frost_days(weather)
+    source = _Source(registry, readings, barometer, latitudes, options, frost_days(weather))
     ready: dict[str, Prepared] = {}
     refused: list[Refusal] = []
-    for logger_id, rows in registry.groupby("logger_id", sort=True):
+    for logger_id in sorted(set(registry["logger_id"])):
         try:
-            if logger_id not in readings:
-                message = f"logger {logger_id}: no readings; give its file in the registry"
-                raise InputError(message)
-            ready[str(logger_id)] = prepare_logger(
-                rows, readings[str(logger_id)], barometer, latitudes, options, frost=frost
-            )
+            ready[logger_id] = source.prepare(logger_id)
         except InputError as fault:
-            refused.append(Refusal("logger", str(logger_id), str(fault)))
+            refused.append(Refusal("logger", logger_id, str(fault)))
     if refused and not ready:
         message = f"none of {len(refused)} loggers can be used; the first: {refused[0].reason}"
         raise InputError(message)
@@ -134,8 +171,10 @@ def daily_stage(
                 refused.append(Refusal("logger", logger_id, str(fault)))
     around.levels = {}
     _share_slow_errors(found)
-    made = {k: make_record(f, options) for k, f in found.items()}
-    return _gather(made, refused, _shared_clock(ready))
+    made = {k: make_record(f) for k, f in found.items()}
+    out = _gather(made, refused, _shared_clock(ready))
+    out.flagged = FlaggedReadings(source, {k: f.settled for k, f in found.items()})
+    return out
 
 
 def _wet(hours: Hours, wet: np.ndarray) -> Hours:
@@ -183,7 +222,6 @@ def _gather(made: dict[str, LoggerRecord], refused: list[Refusal], notes: list[s
         changed.sort_values(["logger_id", "start", "kind"], kind="stable", ignore_index=True),
         notes + [n for r in made.values() for n in r.notes],
         refused + [f for r in made.values() for f in r.refused],
-        {k: r.flagged for k, r in made.items() if r.flagged is not None},
     )
 
 

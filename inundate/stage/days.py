@@ -249,12 +249,14 @@ def _refused_rows(name: str, span: Span) -> list[tuple]:
     return rows
 
 
-def flagged_frame(settled: Settled) -> pd.DataFrame:
+def flagged_frame(settled: Settled, spans: list[Span]) -> pd.DataFrame:
     """Return every reading with its raw value, depth, corrected stage and flag.
 
     Parameters
     ----------
     settled : Settled
+    spans : list of Span
+        With every reading; their flags are filled in where the sensor is dry.
 
     Returns
     -------
@@ -263,7 +265,7 @@ def flagged_frame(settled: Settled) -> pd.DataFrame:
         elevation where dry), flag (categorical).
     """
     frames = []
-    for k, span in enumerate(settled.spans):
+    for k, span in enumerate(spans):
         time = span.time
         days = np.unique(np.r_[time[:1], np.arange(time[0], time[-1], DAY_NS), time[-1:]])
         grid = np.unique(

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 import pandas as pd
@@ -28,17 +28,17 @@ class LoggerRecord:
     ----------
     daily, corrections : DataFrame
         Rows of ``StageResult.daily`` and ``StageResult.corrections``.
-    flagged : DataFrame or None
-        Every reading: time, raw_value, depth_m, stage_m, flag.
     notes : list of str
     refused : list of Refusal
+    flagged : DataFrame
+        Every reading: time, raw_value, depth_m, stage_m, flag; without rows where ``make_record`` made the record.
     """
 
     daily: pd.DataFrame
     corrections: pd.DataFrame
-    flagged: pd.DataFrame | None
     notes: list[str] = field(default_factory=list)
     refused: list[Refusal] = field(default_factory=list)
+    flagged: pd.DataFrame = field(default_factory=pd.DataFrame)
 
 
 @dataclass(slots=True)
@@ -71,6 +71,7 @@ def prepare_logger(
     options: StageOptions,
     *,
     frost: np.ndarray | None = None,
+    whole: bool = False,
 ) -> Prepared:
     """Prepare every registry row of one logger and join them.
 
@@ -83,6 +84,8 @@ def prepare_logger(
     latitudes : mapping of wetland_id to degrees
     options : StageOptions
     frost : ndarray of int64, optional
+    whole : bool
+        Whether spans keep every reading. Otherwise only those refused: hours hold what the days need of the good ones.
 
     Returns
     -------
@@ -102,7 +105,7 @@ def prepare_logger(
             )
             raise InputError(message)
         spans.append(prepare_span(row, readings, barometer, latitudes[row["wetland_id"]], options, frost=frost))
-        if not options.keep_flagged:
+        if not whole:
             _forget_good(spans[-1])
     parts = [s.hours for s in spans]
     hours = Hours(
@@ -114,7 +117,7 @@ def prepare_logger(
 
 
 def _forget_good(span: Span) -> None:
-    """Keep the time and flag of refused readings only: hours hold what is needed of the good ones."""
+    """Keep the time and flag of refused readings only."""
     odd = np.flatnonzero(span.flag)
     span.time, span.flag = span.time[odd], span.flag[odd]
     span.raw = span.depth = np.empty(0)
@@ -281,13 +284,12 @@ def _first_dry(made: Prepared, checks: pd.DataFrame, options: StageOptions, prio
     return find_dry(made.hours, *first_zero(made.hours, *_zero_by(prior, made), noise), noise)
 
 
-def make_record(found: Found, options: StageOptions) -> LoggerRecord:
+def make_record(found: Found) -> LoggerRecord:
     """Make the tables of a logger that is set on its datum.
 
     Parameters
     ----------
     found : Found
-    options : StageOptions
 
     Returns
     -------
@@ -298,7 +300,6 @@ def make_record(found: Found, options: StageOptions) -> LoggerRecord:
     return LoggerRecord(
         daily_rows(settled),
         correction_rows(settled),
-        flagged_frame(settled) if options.keep_flagged else None,
         notes,
         found.refused,
     )
@@ -378,9 +379,9 @@ def build_record(
     """
     options = options or StageOptions()
     latitudes = dict.fromkeys(rows["wetland_id"], latitude_deg)
-    made = prepare_logger(rows, readings, barometer, latitudes, options, frost=frost_days(weather))
-    around = Surroundings(sky_table(weather), {})
-    return make_record(find_datum(made, own_checks(checks, made.logger_id), around, options), options)
+    made = prepare_logger(rows, readings, barometer, latitudes, options, frost=frost_days(weather), whole=True)
+    found = find_datum(made, own_checks(checks, made.logger_id), Surroundings(sky_table(weather), {}), options)
+    return replace(make_record(found), flagged=flagged_frame(found.settled, made.spans))
 
 
 def own_checks(checks: pd.DataFrame | None, logger_id: str) -> pd.DataFrame:

@@ -18,7 +18,7 @@ from pathlib import Path
 import numpy as np
 import pandas as pd
 
-from inundate.stage import StageOptions, daily_stage
+from inundate.stage import daily_stage
 from inundate.stage.physics import gravity, water_density
 from tests.bench import stage_skill
 from tests.stage_reserve import write_ground_data
@@ -188,7 +188,6 @@ def main() -> None:
                 made.barometer,
                 made.checks,
                 made.latitudes,
-                StageOptions(keep_flagged=False),
                 weather=made.weather,
             )
             table = score(made, result.daily)
