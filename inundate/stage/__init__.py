@@ -6,6 +6,7 @@ takes and returns tables. ``daily_stage`` makes the record of all loggers, ``bui
 A record made after the event from small loggers is no basis for flood warning, dam safety or a legal boundary.
 """
 
+from inundate.stage.checks import UNUSED_CHECK
 from inundate.stage.daily import StageResult, daily_stage, wetland_daily
 from inundate.stage.options import FLAGS, QUALITIES, StageOptions
 from inundate.stage.readings import (
@@ -18,7 +19,7 @@ from inundate.stage.readings import (
     read_readings,
     read_registry,
 )
-from inundate.stage.record import UNUSED_CHECK, LoggerRecord, build_record
+from inundate.stage.record import LoggerRecord, build_record
 
 __all__ = [
     "FLAGS",

@@ -9,6 +9,7 @@ import numpy as np
 import pandas as pd
 
 from inundate.common.errors import InputError, Refusal
+from inundate.stage.checks import own_checks
 from inundate.stage.datum import Priors
 from inundate.stage.days import CORRECTION_COLUMNS, DAILY_COLUMNS, SLOW_SD_M, Settled, flagged_frame
 from inundate.stage.options import QUALITIES, StageOptions
@@ -20,7 +21,6 @@ from inundate.stage.record import (
     find_datum,
     frost_days,
     make_record,
-    own_checks,
     prepare_logger,
 )
 from inundate.stage.signals import Hours, day_noise
@@ -172,7 +172,7 @@ def daily_stage(
     around.levels = {}
     _share_slow_errors(found)
     made = {k: make_record(f) for k, f in found.items()}
-    out = _gather(made, refused, _shared_clock(ready))
+    out = _gather(made, refused, _barometer_note(barometer) + _shared_clock(ready))
     out.flagged = FlaggedReadings(source, {k: f.settled for k, f in found.items()})
     return out
 
@@ -202,13 +202,26 @@ def _beyond_noise(found: Found, spread_m: float) -> float:
     return float(np.sqrt(np.maximum(spread_m**2 - found.settled.noise**2 / per_day, 0.0)))
 
 
+def _barometer_note(barometer: Barometer | None) -> list[str]:
+    if barometer is None or not barometer.n_refused:
+        return []
+    lines = "; ".join(f"{f} line {n}: {text!r}" for f, n, text in barometer.refused_rows)
+    shown = f" ({lines})" if lines else ""
+    return [
+        f"barometer {barometer.name}: {barometer.n_refused} readings are no air pressure in kPa and were left out{shown}"
+    ]
+
+
 def _shared_clock(ready: dict[str, Prepared]) -> list[str]:
     absolute = [p for p in ready.values() if any(s.row["kind"] == "absolute" for s in p.spans)]
     off = [p for p in absolute if any(s.clock for s in p.spans)]
     hours = {s.clock[0].hours for p in off for s in p.spans if s.clock}
     if len(absolute) >= 2 and len(off) == len(absolute) and len(hours) == 1:
         only = hours.pop()
-        return [f"all {len(off)} absolute loggers seem {-only:+d} h off the barometer: likelier its clock is wrong"]
+        return [
+            f"all {len(off)} absolute loggers are {-only:+d} h off the barometer alike and were set by it; its clock may be "
+            "the wrong one: look at utc_offset of the loggers and at the barometer's times"
+        ]
     return []
 
 

@@ -306,5 +306,11 @@ def _remark(span: Span, readings: Readings, place: str) -> None:
             f"{spell.hours:+d} h added (log likelihood gain {spell.gain:.0f})"
         )
     counts = np.bincount(span.flag, minlength=11)
+    if counts[FLAG["implausible"]]:
+        first = int(np.flatnonzero(span.flag == FLAG["implausible"])[0])
+        span.notes.append(
+            f"{place}: {counts[FLAG['implausible']]} readings can't be water and were left out "
+            f"(the first {span.raw[first]:g} {span.row['unit']} at {stamp(span.time[first])})"
+        )
     if counts[FLAG["no_barometer"]]:
         span.notes.append(f"{place}: {counts[FLAG['no_barometer']]} readings have no air pressure within reach")
