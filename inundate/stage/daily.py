@@ -146,9 +146,7 @@ def daily_stage(
             ready[logger_id] = source.prepare(logger_id)
         except InputError as fault:
             refused.append(Refusal("logger", logger_id, str(fault)))
-    if refused and not ready:
-        message = f"none of {len(refused)} loggers can be used; the first: {refused[0].reason}"
-        raise InputError(message)
+    _some_left(ready, refused)
     around = Surroundings(sky_table(weather), {k: _wet(p.hours, p.hours.mean > 0.02) for k, p in ready.items()})
     found: dict[str, Found] = {}
     priors = Priors()
@@ -169,12 +167,19 @@ def daily_stage(
             except InputError as fault:
                 del ready[logger_id]
                 refused.append(Refusal("logger", logger_id, str(fault)))
+        _some_left(ready, refused)
     around.levels = {}
     _share_slow_errors(found)
     made = {k: make_record(f) for k, f in found.items()}
     out = _gather(made, refused, _barometer_note(barometer) + _shared_clock(ready))
     out.flagged = FlaggedReadings(source, {k: f.settled for k, f in found.items()})
     return out
+
+
+def _some_left(ready: dict[str, Prepared], refused: list[Refusal]) -> None:
+    if refused and not ready:
+        message = f"none of {len(refused)} loggers can be used; the first: {refused[0].reason}"
+        raise InputError(message)
 
 
 def _wet(hours: Hours, wet: np.ndarray) -> Hours:

@@ -279,7 +279,8 @@ def _flag_all(
     with np.errstate(invalid="ignore"):
         flag[(depth < lo - 0.5) | (depth > hi + 10)] = FLAG["implausible"]
     good = flag == FLAG["good"]
-    flag_flat(time, raw, air, depth, flag)
+    step_pa = 0.0 if air is None else resolution(raw) * float(convert(np.ones(1), row["unit"], row["kind"])[0])
+    flag_flat(time, raw, air, depth, flag, step_pa)
     noise = noise_of(depth[good], resolution(depth[good][:2000]))
     flag_spikes(time, depth, flag, noise)
     flag_ice(time, warmth, depth, flag, frost)
