@@ -1,4 +1,6 @@
-"""How honest the stated sd of stage is, over many loggers: ``python -m tests.bench.stage_honesty [SEEDS [demo|made]]``.
+"""How honest the stated sd of stage is, over many loggers.
+
+``python -m tests.bench.stage_honesty [SEEDS [demo|made|clock]]``; ``clock`` measures how well wrong clocks are found.
 
 Two sorts of records. *demo*: the loggers of the invented reserve without its scenes, of many seeds (11 loggers each).
 *made*: records of ``tests/stage_scenario.py`` with a survey error of 1 cm and a sensor zero of 5 mm (sd, as the tool takes
@@ -18,8 +20,10 @@ from pathlib import Path
 import numpy as np
 import pandas as pd
 
-from inundate.stage import daily_stage
+from inundate.stage import LoggerFiles, daily_stage, read_barometer, read_registry
+from inundate.stage.clock import clock_spells
 from inundate.stage.physics import gravity, water_density
+from inundate.stage.signals import HOUR_NS
 from tests.bench import stage_skill
 from tests.stage_reserve import write_ground_data
 from tests.stage_scenario import LATITUDE, Made, make, score
@@ -170,14 +174,44 @@ def demo(seeds: int) -> None:
         print(f"{'demo, ' + word:24s} {pool([every[part]])}", flush=True)
 
 
+def clock(seeds: int) -> None:
+    """How well summer time left in a clock is found in the reserve's loggers, and how often a right clock is changed."""
+    right, false, number = [], 0, 0
+    with tempfile.TemporaryDirectory() as name:
+        for seed in range(1, seeds + 1):
+            folder = Path(name) / str(seed)
+            write_ground_data(folder, seed)
+            registry = read_registry(folder / "inputs/loggers.csv")
+            barometer = read_barometer(folder / "inputs/barometer.csv")
+            air = (barometer.time.view(np.int64), barometer.pressure_kpa * 1000)
+            for got in LoggerFiles(registry).values():
+                number += 1
+                time, pascal = got.time.view(np.int64), got.value * 1000
+                false += len(clock_spells(time, pascal, *air))
+                summer = np.isin(pd.DatetimeIndex(got.time).month, range(4, 11))
+                told = time + np.where(summer, HOUR_NS, 0)
+                order = np.argsort(told, kind="stable")
+                order = order[np.r_[True, np.diff(told[order]) > 0]]
+                added = np.zeros(order.size)
+                for spell in clock_spells(told[order], pascal[order], *air):
+                    added[(told[order] >= spell.start) & (told[order] <= spell.end)] = spell.hours
+                right.append(float(((added == -1) == summer[order]).mean()))
+    print(
+        f"demo, clock: {number} loggers; right clocks changed: {false} spells; summer time: {100 * np.mean(right):.1f} % of hours "
+        f"right, {100 * min(right):.1f} % in the worst"
+    )
+
+
 def main() -> None:
     """Print a line for each sort of record."""
     seeds = int(sys.argv[1]) if len(sys.argv) > 1 else 8
     which = sys.argv[2] if len(sys.argv) > 2 else ""
-    if which != "made":
+    if which in ("", "clock"):
+        clock(seeds)
+    if which in ("", "demo"):
         demo(seeds)
     for word, variant in VARIANTS.items():
-        if which == "demo" or (which not in ("", "made") and which not in word):
+        if which in ("demo", "clock") or (which not in ("", "made") and which not in word):
             continue
         tables = []
         for seed in range(seeds):
