@@ -17,6 +17,7 @@ from inundate.common.errors import InputError
 
 _NULLS = ["", "NA", "N/A", "NaN", "nan", "null", "NULL", "-"]
 _OFFSET = re.compile(r"(?:[Zz]|[+-]\d\d(?::?\d\d)?)$")
+_TEXT = re.compile(rb"\S")
 _HEADER_SEARCH = 200
 Zone = float | ZoneInfo
 
@@ -306,14 +307,14 @@ def read_columns(
         When the columns are not there or no row can be read.
     """
     raw = decode(raw)
-    if not raw.strip():
+    if _TEXT.search(raw) is None:
         message = f"{place}: the file is empty; export it again or take it out of the registry"
         raise InputError(message)
     required = tuple(theirs for ours, theirs in columns.items() if ours not in optional)
     layout = find_layout(raw, required, place)
     places = {ours: _match(layout.names, theirs) for ours, theirs in columns.items()}
     places = {ours: at for ours, at in places.items() if at >= 0}
-    if not raw[layout.start :].strip():
+    if _TEXT.search(raw, layout.start) is None:
         message = f"{place}: none of its 0 rows can be read (nothing stands under the header line)"
         raise InputError(message)
     out = _quick(raw, layout, places, zone) if time_format is None else None

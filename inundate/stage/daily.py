@@ -13,6 +13,7 @@ from inundate.stage.checks import own_checks
 from inundate.stage.datum import Priors
 from inundate.stage.days import CORRECTION_COLUMNS, DAILY_COLUMNS, SLOW_SD_M, Settled, flagged_frame
 from inundate.stage.options import QUALITIES, StageOptions
+from inundate.stage.prepare import Span
 from inundate.stage.readings import Barometer, Readings
 from inundate.stage.record import (
     Found,
@@ -66,14 +67,22 @@ class _Source:
     options: StageOptions
     frost: np.ndarray | None
 
-    def prepare(self, logger_id: str, *, whole: bool = False) -> Prepared:
-        """Prepare one logger."""
+    def prepare(self, logger_id: str, before: list[Span] | None = None) -> Prepared:
+        """Prepare one logger: what its days need, or every reading where it was prepared before."""
         rows = self.registry[self.registry["logger_id"] == logger_id]
         if logger_id not in self.readings:
             message = f"logger {logger_id}: no readings; give its file in the registry"
             raise InputError(message)
-        read = self.readings[logger_id]
-        return prepare_logger(rows, read, self.barometer, self.latitudes, self.options, frost=self.frost, whole=whole)
+        return prepare_logger(
+            rows,
+            self.readings[logger_id],
+            self.barometer,
+            self.latitudes,
+            self.options,
+            frost=self.frost,
+            whole=before is not None,
+            before=before,
+        )
 
 
 class FlaggedReadings(Mapping[str, pd.DataFrame]):
@@ -84,7 +93,8 @@ class FlaggedReadings(Mapping[str, pd.DataFrame]):
         self._settled = settled
 
     def __getitem__(self, logger_id: str) -> pd.DataFrame:
-        return flagged_frame(self._settled[logger_id], self._source.prepare(logger_id, whole=True).spans)
+        settled = self._settled[logger_id]
+        return flagged_frame(settled, self._source.prepare(logger_id, settled.spans).spans)
 
     def __contains__(self, logger_id: object) -> bool:
         return logger_id in self._settled

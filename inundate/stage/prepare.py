@@ -145,19 +145,17 @@ def _window(row: Mapping, time: np.ndarray) -> slice:
 
 
 def _set_clock(
-    readings: Readings, row: Mapping, air: Barometer | None
+    readings: Readings, row: Mapping, air: Barometer | None, known: list[ClockSpell] | None
 ) -> tuple[np.ndarray, np.ndarray | None, list[ClockSpell]]:
     time = readings.time.astype("datetime64[ns]", copy=False).view(np.int64)
     if row["kind"] != "absolute" or air is None:
         return time, None, []
-    good = np.isfinite(readings.value)
-    pressure = convert(readings.value[good], row["unit"], row["kind"])
-    spells = clock_spells(
-        time[good],
-        pressure,
-        air.time.astype("datetime64[ns]").view(np.int64),
-        air.pressure_kpa * 1000.0,
-    )
+    spells = known
+    if spells is None:
+        good = np.isfinite(readings.value)
+        pressure = convert(readings.value[good], row["unit"], row["kind"])
+        told = air.time.astype("datetime64[ns]").view(np.int64)
+        spells = clock_spells(time[good], pressure, told, air.pressure_kpa * 1000.0)
     if not spells:
         return time, None, []
     fixed, order = set_clock(time, spells)
@@ -172,6 +170,7 @@ def prepare_span(
     options: StageOptions,
     *,
     frost: np.ndarray | None = None,
+    clock: list[ClockSpell] | None = None,
 ) -> Span:
     """Turn one registry row's readings into flagged depth above the sensor.
 
@@ -187,6 +186,8 @@ def prepare_span(
     options : StageOptions
     frost : ndarray of int64, optional
         Days since 1970 of lasting frost (see ``quality.flag_ice``).
+    clock : list of ClockSpell, optional
+        Where the clock is off, if that was found before.
 
     Returns
     -------
@@ -203,7 +204,7 @@ def prepare_span(
     if kind == "absolute" and barometer is None:
         message = f"{place}: kind absolute needs air pressure; give a barometer or set kind to vented or level"
         raise InputError(message)
-    time, order, spells = _set_clock(readings, row, barometer)
+    time, order, spells = _set_clock(readings, row, barometer, clock)
     raw = readings.value if order is None else readings.value[order]
     warmth = readings.temperature_c
     warmth = warmth if order is None or warmth is None else warmth[order]

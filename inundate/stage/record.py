@@ -73,6 +73,7 @@ def prepare_logger(
     *,
     frost: np.ndarray | None = None,
     whole: bool = False,
+    before: list[Span] | None = None,
 ) -> Prepared:
     """Prepare every registry row of one logger and join them.
 
@@ -87,6 +88,8 @@ def prepare_logger(
     frost : ndarray of int64, optional
     whole : bool
         Whether spans keep every reading. Otherwise only those refused: hours hold what the days need of the good ones.
+    before : list of Span, optional
+        The same spans prepared before, whose clock holds.
 
     Returns
     -------
@@ -98,14 +101,16 @@ def prepare_logger(
         See ``prepare.prepare_span``; also where a wetland's latitude is not given.
     """
     spans = []
-    for row in rows.to_dict("records"):
+    for k, row in enumerate(rows.to_dict("records")):
         if row["wetland_id"] not in latitudes:
             message = (
                 f"logger {row['logger_id']}: its wetland {row['wetland_id']!r} is not among the wetlands; "
                 "correct wetland_id in the registry"
             )
             raise InputError(message)
-        spans.append(prepare_span(row, readings, barometer, latitudes[row["wetland_id"]], options, frost=frost))
+        clock = None if before is None else before[k].clock
+        latitude = latitudes[row["wetland_id"]]
+        spans.append(prepare_span(row, readings, barometer, latitude, options, frost=frost, clock=clock))
         if not whole:
             _forget_good(spans[-1])
     parts = [s.hours for s in spans]
