@@ -2,7 +2,8 @@
 
 ``read_registry``, ``LoggerFiles`` (or ``read_readings``), ``read_barometer`` and ``read_checks`` open files; all else
 takes and returns tables. ``daily_stage`` makes the record of all loggers, ``build_record`` that of one,
-``wetland_daily`` one row a wetland and date; each change and each refused reading is in ``corrections`` and ``flagged``.
+``wetland_daily`` one row a wetland and date, ``plots.plot_logger`` a picture of a logger; each change and each refused
+reading is in ``corrections`` and ``flagged``.
 A record made after the event from small loggers is no basis for flood warning, dam safety or a legal boundary.
 """
 
