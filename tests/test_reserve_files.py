@@ -15,7 +15,8 @@ from pystac.validation.stac_validator import JsonSchemaSTACValidator
 
 from inundate.common.codes import BAND_ROLES, ViewCode
 from inundate.common.errors import InputError
-from inundate.reserve import make_reserve
+from inundate.reserve import loggers, make_reserve
+from tests.stage_reserve import bare_land, write_ground_data
 
 
 def _digests(folder: Path) -> dict[str, str]:
@@ -64,7 +65,8 @@ def test_every_input_that_the_pipeline_names_is_there(small_reserve):
 def test_tables_have_the_columns_of_the_contract(small_reserve):
     inputs = small_reserve / "inputs"
     registry = pd.read_csv(inputs / "loggers.csv")
-    need = ["logger_id", "wetland_id", "file", "kind", "unit", "height_m", "valid_from", "valid_to", "utc_offset"]
+    need = ["logger_id", "wetland_id", "file", "kind", "unit", "height_m", "height_sd_m"]
+    need += ["valid_from", "valid_to", "utc_offset"]
     assert list(registry.columns) == need
     wetlands = gpd.read_file(inputs / "wetlands.gpkg")
     assert wetlands.crs.to_epsg() == 32633
@@ -217,7 +219,8 @@ def test_loggers_measure_the_true_stage_where_nothing_is_wrong(small_reserve):
         values = pd.read_csv(inputs / row.file)
         time = pd.to_datetime(values.time) - pd.Timedelta(hours=hours)
         level = pd.Series(values["value"].to_numpy(), time) - air
-        level = level[level.abs() > 0.35] * 1000 / (999.7 * 9.8045) + row.height_m
+        survey = float(mine.loc[mine.fault == "survey", "size_m"].iloc[0])
+        level = level[level.abs() > 0.35] * 1000 / (999.7 * 9.8045) + row.height_m - survey
         daily = level.groupby(level.index.floor("D")).agg(["median", "size"])
         daily = daily[daily["size"] >= 20]["median"]
         error = daily - stage.loc[row.wetland_id].reindex(daily.index)
@@ -235,3 +238,33 @@ def test_faults_of_the_loggers_are_all_in_the_truth(small_reserve):
     assert move.size_m.abs().between(0.05, 0.12).all()
     assert faults[faults.fault == "drift"].size_m.abs().between(0.02, 0.05).all()
     assert (faults.fault == "download").sum() >= 6
+
+
+def test_heights_and_checks_carry_the_errors_that_they_state():
+    """Over 20 seeds: survey errors have mean 0 and the stated sd, checks too, within what chance allows (4 sd)."""
+    survey, check = [], []
+    for seed in range(20):
+        land = bare_land(seed, "small")
+        stages = dict(zip([b.wetland_id for b in land.bowls], land.water.hourly, strict=True))
+        made = loggers.make_loggers(land)
+        truth = made.truth
+        survey += truth.loc[truth.fault == "survey", "size_m"].tolist()
+        assert (made.registry.height_sd_m == loggers.SURVEY_SD_M).all()
+        for row in made.checks.merge(made.registry[["logger_id", "wetland_id"]], on="logger_id").itertuples():
+            at = (pd.Timestamp(row.time).tz_localize(None) - land.plan.days[0]) / pd.Timedelta(hours=1)
+            own = stages[row.wetland_id]
+            check.append((row.stage_m - np.interp(at, np.arange(own.size), own)) / row.sd_m)
+    for errors, sd in ((survey, loggers.SURVEY_SD_M), (check, 1.0)):
+        n = len(errors)
+        assert abs(np.mean(errors)) < 4 * sd / np.sqrt(n)
+        assert abs(np.std(errors) / sd - 1) < 4 / np.sqrt(2 * n)
+
+
+def test_ground_data_alone_are_those_of_the_whole_reserve(small_reserve, tmp_path):
+    """The bench that tries many seeds without scenes reads the very same files."""
+    seed = json.loads((small_reserve / "truth" / "about.json").read_text())["seed"]
+    write_ground_data(tmp_path, seed, "small")
+    mine = _digests(tmp_path / "inputs")
+    whole = _digests(small_reserve / "inputs")
+    assert "loggers.csv" in mine
+    assert {k: whole[k] for k in mine} == mine

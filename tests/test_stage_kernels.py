@@ -9,6 +9,7 @@ from hypothesis import strategies as st
 
 from inundate.stage.choosing import choose_steps, evidence_with
 from inundate.stage.datum import YEAR_NS, Evidence, Step, fit_offset
+from inundate.stage.mixture import stated_sd
 from inundate.stage.signals import HOUR_NS, best_path, hourly, interpolate, noise_of, outliers
 
 floats = st.floats(-5, 5, allow_nan=False)
@@ -168,3 +169,21 @@ def test_order_of_checks_does_not_matter(order):
     other = fit_offset(told.take(np.array(order))).at(at, np.zeros(2, np.int64))
     np.testing.assert_allclose(mean, other[0], atol=1e-10)
     np.testing.assert_allclose(sd, other[1], atol=1e-10)
+
+
+def test_the_stated_sd_keeps_the_promises_of_a_gaussian():
+    """One Gaussian gives its own sd; of a mixture at least 68.3 % lie within one and 95.4 % within two, and no less sd does."""
+    mean, sd = stated_sd(np.ones(1), np.array([[3.0, -1.0]]), np.array([[0.2, 5.0]]))
+    np.testing.assert_allclose(mean, [3.0, -1.0])
+    np.testing.assert_allclose(sd, [0.2, 5.0], rtol=4e-3)
+    rng = np.random.default_rng(1)
+    weight, means, sds = np.array([0.6, 0.3, 0.1]), np.array([[0.0], [1.0], [-4.0]]), np.array([[1.0], [0.3], [3.0]])
+    mean, sd = stated_sd(weight, means, sds)
+    assert mean[0] == pytest.approx(-0.1)
+    pick = rng.choice(3, 400_000, p=weight)
+    drawn = np.abs(rng.normal(means[pick, 0], sds[pick, 0]) - mean[0])
+    one, two = (drawn < sd[0]).mean(), (drawn < 2 * sd[0]).mean()
+    # sampling error of the shares is under 0.1 %
+    assert min(one - 0.683, two - 0.954) == pytest.approx(0.0, abs=0.003)
+    assert one > 0.68
+    assert two > 0.951

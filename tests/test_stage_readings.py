@@ -148,7 +148,7 @@ def test_order_of_rows_and_cut_into_files_do_not_matter(tmp_path_factory, order,
         ("time,value\n", r"none of its 0 rows can be read \(nothing stands under"),
         ("time,value\nx,y\n", r"none of its 1 rows can be read \(line 2: 'x y'\)"),
         ("when,what\n2024-03-01,1\n", r"no line among the first 200 names the columns time, value; .* 'when,what'"),
-        ("", r"no line among the first 200 names"),
+        ("", r"the file is empty"),
         ("time,value\n2024-03-01T00:00,\n", r"none of its 1 rows can be read \(no value in any row\)"),
     ],
 )

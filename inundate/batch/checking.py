@@ -14,8 +14,6 @@ from inundate.batch.pipeline import Pipeline, load_pipeline
 from inundate.batch.progress import Progress
 from inundate.common.errors import InputError, Refusal
 
-HOLE_HOURS = 3
-
 
 class _Report:
     """Rows of what was found, and refusals."""
@@ -174,45 +172,37 @@ def _check_loggers(report: _Report, pipeline: Pipeline, shapes: Any, times: tupl
     if "loggers.registry" not in files:
         report.none("loggers", "no wetland has stage; fills rest on views, weather and season")
         return
-    from inundate.stage import LoggerFiles, read_barometer, read_checks, read_registry
+    from inundate.batch.field import latitudes_of, make_stage
+    from inundate.stage import UNUSED_CHECK, read_checks, read_registry
 
     registry = read_registry(files["loggers.registry"])
-    strange = registry[~registry["wetland_id"].isin(set(shapes["wetland_id"]))]
-    if len(strange):
-        first = strange.iloc[0]
-        message = f"{files['loggers.registry']}: logger '{first['logger_id']}' stands in wetland '{first['wetland_id']}', which {files['area.wetlands']} does not have; correct wetland_id"
-        raise InputError(message)
     logged = registry["wetland_id"].nunique()
     report.good("loggers", f"{registry['logger_id'].nunique()} loggers in {logged} of {len(shapes)} wetlands")
-    readings = LoggerFiles(registry)
-    for logger_id in readings:
-        try:
-            series = readings[logger_id]
-        except InputError as err:
-            report.refused.append(Refusal("logger", str(logger_id), str(err)))
-            continue
-        span = pd.to_datetime(pd.Series(series.time)).agg(["min", "max"])
-        if span["max"] < times[0] or span["min"] > times[1]:
-            report.odd(
-                "loggers",
-                f"{logger_id}: readings {span['min']:%Y-%m-%d} to {span['max']:%Y-%m-%d} lie outside the scenes' dates",
-            )
-    _check_barometer(report, files, registry)
+    _check_barometer(report, pipeline, registry)
+    weather = read_weather(files["weather.daily"]) if "weather.daily" in files else None
+    stage = make_stage(pipeline, latitudes_of(shapes), weather)
+    for logger_id, days in stage.daily.groupby("logger_id")["date"]:
+        first, last = days.min(), days.max()
+        report.good("stage", f"{logger_id}: {len(days)} days, {first:%Y-%m-%d} to {last:%Y-%m-%d}")
+        if last < times[0] or first > times[1]:
+            report.odd("stage", f"{logger_id}: its readings lie outside the scenes' dates")
+    for words in (*stage.notes, *(r.reason for r in stage.refused if r.kind == UNUSED_CHECK)):
+        report.odd("stage", words)
+    report.refused += [r for r in stage.refused if r.kind != UNUSED_CHECK]
     if "loggers.checks" in files:
-        checks, refused = read_checks(files["loggers.checks"], registry)
-        report.refused += list(refused)
+        checks, _ = read_checks(files["loggers.checks"], registry)
         bare = sorted(set(registry["logger_id"]) - set(checks["logger_id"]))
         report.good("field checks", f"{len(checks)} readings of {checks['logger_id'].nunique()} loggers")
         if bare:
             report.odd("field checks", f"none for {', '.join(bare[:5])}: their datum and drift cannot be checked")
     else:
         report.none("field checks", "datum and drift of loggers cannot be checked")
-    _ = read_barometer
 
 
-def _check_barometer(report: _Report, files: dict[str, str], registry: pd.DataFrame) -> None:
+def _check_barometer(report: _Report, pipeline: Pipeline, registry: pd.DataFrame) -> None:
     from inundate.stage import read_barometer
 
+    files = pipeline.input_files()
     absolute = registry[registry["kind"] == "absolute"]
     if "loggers.barometer" not in files:
         if len(absolute):
@@ -221,16 +211,17 @@ def _check_barometer(report: _Report, files: dict[str, str], registry: pd.DataFr
             raise InputError(message)
         report.none("barometer", "not needed: no logger measures absolute pressure")
         return
-    barometer = read_barometer(files["loggers.barometer"])
+    barometer = read_barometer(files["loggers.barometer"], pipeline.stage.barometer_utc_offset)
     time = pd.to_datetime(pd.Series(barometer.time)).reset_index(drop=True)
     gap = time.diff()
-    holes = gap > pd.Timedelta(hours=HOLE_HOURS)
+    hours = pipeline.stage.barometer_hole_h
+    holes = gap > pd.Timedelta(hours=hours)
     report.good("barometer", f"{len(time)} readings, {time.min():%Y-%m-%d} to {time.max():%Y-%m-%d}")
     if holes.any():
         longest = gap.max() / pd.Timedelta(days=1)
         report.odd(
             "barometer",
-            f"{int(holes.sum())} holes over {HOLE_HOURS} h, the longest {longest:.1f} days: no stage there for absolute loggers",
+            f"{int(holes.sum())} holes over {hours:g} h, the longest {longest:.1f} days: no stage there for absolute loggers",
         )
 
 

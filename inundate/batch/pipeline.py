@@ -64,6 +64,17 @@ class Loggers(_Section):
     checks: str | None = None
 
 
+class Stage(_Section):
+    """``[stage]``: from readings to stage; sds serve where the registry or the checks say nothing."""
+
+    height_sd_m: float = Field(default=0.01, gt=0, le=1)
+    sensor_sd_m: float = Field(default=0.005, gt=0, le=1)
+    check_sd_m: float = Field(default=0.01, gt=0, le=1)
+    barometer_elevation_m: float | None = Field(default=None, ge=-430, le=9000)
+    barometer_hole_h: float = Field(default=3.0, gt=0, le=48)
+    barometer_utc_offset: str = ""
+
+
 class Weather(_Section):
     """``[weather]``: daily weather of the area."""
 
@@ -162,6 +173,7 @@ class Pipeline(_Section):
     scenes: Scenes
     labels: Labels = Labels()
     loggers: Loggers = Loggers()
+    stage: Stage = Stage()
     weather: Weather = Weather()
     output: Output = Output()
     leaves: Leaves = Leaves()

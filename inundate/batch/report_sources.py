@@ -62,7 +62,7 @@ def thin_record(flagged: pd.DataFrame, height_m: float) -> pd.DataFrame:
     level = (flagged["depth_m"].astype(float) + height_m).to_numpy()
     out = pd.DataFrame({"time": flagged["time"].to_numpy("datetime64[ns]"), "level_m": level})
     out["stage_m"] = flagged["stage_m"].to_numpy(float)
-    out["flag"] = flagged["flag"].astype(str).to_numpy()
+    out["flag"] = flagged["flag"].array
     sound = out["flag"].isin(["good", "at_or_below_sensor"]).to_numpy()
     place = np.flatnonzero(sound)
     if place.size > LOGGER_POINTS:
@@ -74,7 +74,8 @@ def thin_record(flagged: pd.DataFrame, height_m: float) -> pd.DataFrame:
     left = np.flatnonzero(~sound)
     if left.size > LEFT_OUT_POINTS:
         left = left[np.unique(np.linspace(0, left.size - 1, LEFT_OUT_POINTS).astype(int))]
-    return out.iloc[np.sort(np.r_[place, left])].reset_index(drop=True)
+    out = out.iloc[np.sort(np.r_[place, left])].reset_index(drop=True)
+    return out.assign(flag=out["flag"].astype(str))
 
 
 def _field_tables(work: Work, found: Findings) -> tuple[pd.DataFrame | None, pd.DataFrame | None]:

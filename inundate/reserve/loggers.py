@@ -25,6 +25,10 @@ FAULTS = (
     ("gap", "spikes"),
 )
 """Planted faults by logger; a longer network repeats them."""
+SURVEY_SD_M = 0.01
+"""Error (sd) of the registry's heights: levelling over soft ground. Common practice, no source."""
+CHECK_SD_M = 0.01
+"""Error (sd) of a field check: a staff read in rippled water. Common practice, no source."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -38,7 +42,7 @@ class LoggerSet:
     readings : dict of str to DataFrame
         Logger readings by logger_id: time, value, temperature_c.
     truth : DataFrame
-        logger_id, fault, start, end, size_m.
+        logger_id, fault, start, end, size_m; ``survey`` is what the registry's height says too much.
     """
 
     registry: pd.DataFrame
@@ -171,12 +175,19 @@ def _plant(log: _Log, faults: tuple[str, ...], rng: np.random.Generator, visits:
 
 
 def _checks(plan: Plan, rng: np.random.Generator, name: str, stage: np.ndarray, hours: list[int]) -> pd.DataFrame:
-    """Field readings of stage, 40 minutes before the sensor is lifted for download, standard deviation 1 cm."""
+    """Field readings of stage, 40 minutes before the sensor is lifted for download, with the error that they state."""
     rows = []
     for hour in hours:
         when = plan.days[0] + pd.Timedelta(hours=hour - 1, minutes=20)
-        seen = 0.5 * (stage[max(hour - 1, 0)] + stage[hour]) + rng.normal(0, 0.01)
-        rows.append({"logger_id": name, "time": f"{when:%Y-%m-%dT%H:%M:%SZ}", "stage_m": round(seen, 3), "sd_m": 0.01})
+        seen = 0.5 * (stage[max(hour - 1, 0)] + stage[hour]) + rng.normal(0, CHECK_SD_M)
+        rows.append(
+            {
+                "logger_id": name,
+                "time": f"{when:%Y-%m-%dT%H:%M:%SZ}",
+                "stage_m": round(seen, 3),
+                "sd_m": CHECK_SD_M,
+            }
+        )
     return pd.DataFrame(rows)
 
 
@@ -219,6 +230,9 @@ def _one_logger(
     real = [r for r in log.rows if r["fault"] not in ("download", "dry")]
     if not real and "dry" not in faults:
         log.rows.append({"fault": "none", "start": 0, "end": n - 1, "size_m": np.nan})
+    # a stream of its own, so that readings and checks do not depend on it
+    told = round(height + float(rng_for(plan.seed, "survey", name).normal(0, SURVEY_SD_M)), 3)
+    log.rows.append({"fault": "survey", "start": 0, "end": n - 1, "size_m": told - height})
     truth = pd.DataFrame(log.rows)
     truth.insert(0, "logger_id", name)
     for key in ("start", "end"):
@@ -229,7 +243,8 @@ def _one_logger(
         "file": f"readings/{name}.csv",
         "kind": "absolute",
         "unit": "kPa",
-        "height_m": height,
+        "height_m": told,
+        "height_sd_m": SURVEY_SD_M,
         "valid_from": f"{plan.days[0]:%Y-%m-%d}",
         "valid_to": "",
         "utc_offset": f"+0{shift_h}:00",

@@ -17,6 +17,7 @@ from inundate.common.errors import InputError
 
 _NULLS = ["", "NA", "N/A", "NaN", "nan", "null", "NULL", "-"]
 _OFFSET = re.compile(r"(?:[Zz]|[+-]\d\d(?::?\d\d)?)$")
+_TEXT = re.compile(rb"\S")
 _HEADER_SEARCH = 200
 Zone = float | ZoneInfo
 
@@ -155,7 +156,9 @@ def find_layout(raw: bytes, required: tuple[str, ...], place: str) -> Layout:
     raise InputError(message)
 
 
-def _arrow(raw: bytes, layout: Layout, types: dict[str, pa.DataType], bad: list[tuple[int, str]]) -> pa.Table:
+def _arrow(
+    raw: bytes, layout: Layout, types: dict[str, pa.DataType], bad: list[tuple[int, str]], quote: str | bool = '"'
+) -> pa.Table:
     names = [f"{i}" for i in range(len(layout.names))]
 
     def note(row: pc.InvalidRow) -> str:
@@ -165,7 +168,9 @@ def _arrow(raw: bytes, layout: Layout, types: dict[str, pa.DataType], bad: list[
     return pc.read_csv(
         io.BytesIO(memoryview(raw)[layout.start :]),
         read_options=pc.ReadOptions(use_threads=False, column_names=names, block_size=1 << 22),
-        parse_options=pc.ParseOptions(delimiter=layout.delimiter, ignore_empty_lines=False, invalid_row_handler=note),
+        parse_options=pc.ParseOptions(
+            delimiter=layout.delimiter, quote_char=quote, ignore_empty_lines=False, invalid_row_handler=note
+        ),
         convert_options=pc.ConvertOptions(
             column_types=types,
             include_columns=list(types),
@@ -195,11 +200,17 @@ def _quick(raw: bytes, layout: Layout, places: dict[str, int], zone: Zone) -> Co
     except pa.ArrowInvalid:
         return None
     first = table.column(str(places["time"]))
-    if bad or first.null_count:
+    if bad or first.null_count or _swallowed(raw, layout, len(first)):
         return None
     time = first.to_numpy().astype("datetime64[ns]", copy=False)
     values = {name: table.column(str(i)).to_numpy() for name, i in places.items() if name != "time"}
     return Columns(time if zoned else to_utc(time, zone), values, n_rows=len(time))
+
+
+def _swallowed(raw: bytes, layout: Layout, rows: int) -> bool:
+    """Whether fewer rows were read than there are lines: a quote that is never closed takes lines into its cell."""
+    body = raw.count(b"\n", layout.start)
+    return rows < body + (not raw.endswith(b"\n"))
 
 
 def _times(texts: pd.Series, zone: Zone, time_format: str | None) -> np.ndarray:
@@ -221,7 +232,11 @@ def _times(texts: pd.Series, zone: Zone, time_format: str | None) -> np.ndarray:
 def _careful(raw: bytes, layout: Layout, places: dict[str, int], zone: Zone, time_format: str | None) -> Columns:
     """Read all rows as text, keep what can be understood and list what cannot."""
     bad: list[tuple[int, str]] = []
-    table = _arrow(raw, layout, {str(i): pa.string() for i in places.values()}, bad)
+    types = {str(i): pa.string() for i in places.values()}
+    table = _arrow(raw, layout, types, bad)
+    if _swallowed(raw, layout, len(table) + len(bad)):
+        bad.clear()
+        table = _arrow(raw, layout, types, bad, False)
     frame = pd.DataFrame(
         {name: pd.Series(table.column(str(i)).to_pandas(), dtype="object") for name, i in places.items()}
     )
@@ -292,11 +307,14 @@ def read_columns(
         When the columns are not there or no row can be read.
     """
     raw = decode(raw)
+    if _TEXT.search(raw) is None:
+        message = f"{place}: the file is empty; export it again or take it out of the registry"
+        raise InputError(message)
     required = tuple(theirs for ours, theirs in columns.items() if ours not in optional)
     layout = find_layout(raw, required, place)
     places = {ours: _match(layout.names, theirs) for ours, theirs in columns.items()}
     places = {ours: at for ours, at in places.items() if at >= 0}
-    if not raw[layout.start :].strip():
+    if _TEXT.search(raw, layout.start) is None:
         message = f"{place}: none of its 0 rows can be read (nothing stands under the header line)"
         raise InputError(message)
     out = _quick(raw, layout, places, zone) if time_format is None else None
@@ -308,7 +326,7 @@ def read_columns(
         shown = "; ".join(f"line {n}: {text!r}" for n, text in out.refused[:2])
         message = (
             f"{place}: none of its {out.n_rows} rows can be read ({shown or 'no value in any row'}); a row needs an "
-            "ISO 8601 time and a number in the columns that the registry names"
+            "ISO 8601 time (or one as the registry's time_format says) and a number in the columns that the registry names"
         )
         raise InputError(message)
     return out

@@ -2,16 +2,18 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Iterator, Mapping
 from dataclasses import dataclass, field
 
 import numpy as np
 import pandas as pd
 
 from inundate.common.errors import InputError, Refusal
+from inundate.stage.checks import own_checks
 from inundate.stage.datum import Priors
-from inundate.stage.days import CORRECTION_COLUMNS, DAILY_COLUMNS, SLOW_SD_M
+from inundate.stage.days import CORRECTION_COLUMNS, DAILY_COLUMNS, SLOW_SD_M, Settled, flagged_frame
 from inundate.stage.options import QUALITIES, StageOptions
+from inundate.stage.prepare import Span
 from inundate.stage.readings import Barometer, Readings
 from inundate.stage.record import (
     Found,
@@ -20,7 +22,6 @@ from inundate.stage.record import (
     find_datum,
     frost_days,
     make_record,
-    own_checks,
     prepare_logger,
 )
 from inundate.stage.signals import Hours, day_noise
@@ -43,15 +44,66 @@ class StageResult:
         What an analyst should know.
     refused : list of Refusal
         Loggers and checks set aside.
-    flagged : dict of str to DataFrame
-        By logger_id every reading: time, raw_value, depth_m, stage_m, flag (empty where ``keep_flagged`` is off).
+    flagged : mapping of str to DataFrame
+        By logger_id every reading: time, raw_value, depth_m, stage_m, flag. Made from the readings when asked for and not
+        kept, since a network's readings may be many millions.
     """
 
     daily: pd.DataFrame
     corrections: pd.DataFrame
     notes: list[str] = field(default_factory=list)
     refused: list[Refusal] = field(default_factory=list)
-    flagged: dict[str, pd.DataFrame] = field(default_factory=dict)
+    flagged: Mapping[str, pd.DataFrame] = field(default_factory=dict)
+
+
+@dataclass(frozen=True, slots=True)
+class _Source:
+    """What a logger is prepared from."""
+
+    registry: pd.DataFrame
+    readings: Mapping[str, Readings]
+    barometer: Barometer | None
+    latitudes: Mapping[str, float]
+    options: StageOptions
+    frost: np.ndarray | None
+
+    def prepare(self, logger_id: str, before: list[Span] | None = None) -> Prepared:
+        """Prepare one logger: what its days need, or every reading where it was prepared before."""
+        rows = self.registry[self.registry["logger_id"] == logger_id]
+        if logger_id not in self.readings:
+            message = f"logger {logger_id}: no readings; give its file in the registry"
+            raise InputError(message)
+        return prepare_logger(
+            rows,
+            self.readings[logger_id],
+            self.barometer,
+            self.latitudes,
+            self.options,
+            frost=self.frost,
+            whole=before is not None,
+            before=before,
+        )
+
+
+class FlaggedReadings(Mapping[str, pd.DataFrame]):
+    """Every reading of each logger with its flag, made anew when asked for: a mapping of logger_id to DataFrame."""
+
+    def __init__(self, source: _Source, settled: dict[str, Settled]) -> None:
+        self._source = source
+        self._settled = settled
+
+    def __getitem__(self, logger_id: str) -> pd.DataFrame:
+        settled = self._settled[logger_id]
+        return flagged_frame(settled, self._source.prepare(logger_id, settled.spans).spans)
+
+    def __contains__(self, logger_id: object) -> bool:
+        return logger_id in self._settled
+
+    def __iter__(self) -> Iterator[str]:
+        return iter(self._settled)
+
+    def __len__(self) -> int:
+        return len(self._settled)
 
 
 def daily_stage(
@@ -71,7 +123,7 @@ def daily_stage(
     registry : DataFrame
         From ``read_registry``.
     readings : mapping of logger_id to Readings
-        May read on demand (``LoggerFiles``); each logger is asked for once.
+        May read on demand (``LoggerFiles``); each logger is asked for once, and again when its ``flagged`` is.
     barometer : Barometer, optional
         Needed by absolute loggers.
     checks : DataFrame, optional
@@ -96,22 +148,15 @@ def daily_stage(
     if latitudes is None:
         message = "daily_stage: latitudes is None; give the latitude of every wetland, degrees"
         raise InputError(message)
-    frost = frost_days(weather)
+    source = _Source(registry, readings, barometer, latitudes, options, frost_days(weather))
     ready: dict[str, Prepared] = {}
     refused: list[Refusal] = []
-    for logger_id, rows in registry.groupby("logger_id", sort=True):
+    for logger_id in sorted(set(registry["logger_id"])):
         try:
-            if logger_id not in readings:
-                message = f"logger {logger_id}: no readings; give its file in the registry"
-                raise InputError(message)
-            ready[str(logger_id)] = prepare_logger(
-                rows, readings[str(logger_id)], barometer, latitudes, options, frost=frost
-            )
+            ready[logger_id] = source.prepare(logger_id)
         except InputError as fault:
-            refused.append(Refusal("logger", str(logger_id), str(fault)))
-    if refused and not ready:
-        message = f"none of {len(refused)} loggers can be used; the first: {refused[0].reason}"
-        raise InputError(message)
+            refused.append(Refusal("logger", logger_id, str(fault)))
+    _some_left(ready, refused)
     around = Surroundings(sky_table(weather), {k: _wet(p.hours, p.hours.mean > 0.02) for k, p in ready.items()})
     found: dict[str, Found] = {}
     priors = Priors()
@@ -132,10 +177,19 @@ def daily_stage(
             except InputError as fault:
                 del ready[logger_id]
                 refused.append(Refusal("logger", logger_id, str(fault)))
+        _some_left(ready, refused)
     around.levels = {}
     _share_slow_errors(found)
-    made = {k: make_record(f, options) for k, f in found.items()}
-    return _gather(made, refused, _shared_clock(ready))
+    made = {k: make_record(f) for k, f in found.items()}
+    out = _gather(made, refused, _barometer_note(barometer) + _shared_clock(ready))
+    out.flagged = FlaggedReadings(source, {k: f.settled for k, f in found.items()})
+    return out
+
+
+def _some_left(ready: dict[str, Prepared], refused: list[Refusal]) -> None:
+    if refused and not ready:
+        message = f"none of {len(refused)} loggers can be used; the first: {refused[0].reason}"
+        raise InputError(message)
 
 
 def _wet(hours: Hours, wet: np.ndarray) -> Hours:
@@ -145,14 +199,32 @@ def _wet(hours: Hours, wet: np.ndarray) -> Hours:
 def _share_slow_errors(found: dict[str, Found]) -> None:
     """Give each logger the scatter that it shows when dry, or the middle one of the others.
 
-    No logger's is more than the scatter of its own daily means about a smooth course.
+    No logger's is more than the scatter of its own daily means about a smooth course. What the noise of single
+    readings adds to either is taken out: it is counted apart.
     """
-    seen = [f.settled.dryness.day_spread_m for f in found.values()]
+    seen = [_beyond_noise(f, f.settled.dryness.day_spread_m) for f in found.values()]
     known = [s for s in seen if np.isfinite(s)]
     usual = float(np.median(known)) if known else SLOW_SD_M
     for one, own in zip(found.values(), seen, strict=True):
-        most = day_noise(one.settled.hours)
+        most = _beyond_noise(one, day_noise(one.settled.hours))
         one.settled.slow_m = max(own if np.isfinite(own) else min(usual, most), 5e-4)
+
+
+def _beyond_noise(found: Found, spread_m: float) -> float:
+    """Scatter of daily means without that of single readings; NaN stays."""
+    hours = found.settled.hours
+    per_day = max(float(hours.n.sum()) / max(np.unique(hours.hour // 24).size, 1), 1.0)
+    return float(np.sqrt(np.maximum(spread_m**2 - found.settled.noise**2 / per_day, 0.0)))
+
+
+def _barometer_note(barometer: Barometer | None) -> list[str]:
+    if barometer is None or not barometer.n_refused:
+        return []
+    lines = "; ".join(f"{f} line {n}: {text!r}" for f, n, text in barometer.refused_rows)
+    shown = f" ({lines})" if lines else ""
+    return [
+        f"barometer {barometer.name}: {barometer.n_refused} readings are no air pressure in kPa and were left out{shown}"
+    ]
 
 
 def _shared_clock(ready: dict[str, Prepared]) -> list[str]:
@@ -161,7 +233,10 @@ def _shared_clock(ready: dict[str, Prepared]) -> list[str]:
     hours = {s.clock[0].hours for p in off for s in p.spans if s.clock}
     if len(absolute) >= 2 and len(off) == len(absolute) and len(hours) == 1:
         only = hours.pop()
-        return [f"all {len(off)} absolute loggers seem {-only:+d} h off the barometer: likelier its clock is wrong"]
+        return [
+            f"all {len(off)} absolute loggers are {-only:+d} h off the barometer alike and were set by it; its clock may be "
+            "the wrong one: look at utc_offset of the loggers and at the barometer's times"
+        ]
     return []
 
 
@@ -175,7 +250,6 @@ def _gather(made: dict[str, LoggerRecord], refused: list[Refusal], notes: list[s
         changed.sort_values(["logger_id", "start", "kind"], kind="stable", ignore_index=True),
         notes + [n for r in made.values() for n in r.notes],
         refused + [f for r in made.values() for f in r.refused],
-        {k: r.flagged for k, r in made.items() if r.flagged is not None},
     )
 
 

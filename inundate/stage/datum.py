@@ -3,18 +3,23 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, field, replace
+from functools import reduce
 from itertools import product
 
 import numpy as np
 
+from inundate.stage.mixture import stated_sd
+
 YEAR_NS = 365.25 * 86400e9
-#: What may be: sd of a linear drift and of a random walk (m a year), survey and sensor accuracy as multiples of what is
-#: told, checks likewise.
+#: What may be: sd of a linear drift and of a random walk (m a year); errors of survey, checks and sensor zero as multiples
+#: of what is told: they may be worse, but never better, than somebody says. (A dry sensor tells its zero and so how good
+#: the sensor is, but nothing of the survey; so each has a multiple of its own.)
 _SLOPES = np.array([0.0, 0.01, 0.05])
 _WANDER = np.array([0.0, 0.01, 0.04])
-_SURVEY = np.array([0.1, 0.3, 1.0, 3.0, 10.0])
+_SURVEY = np.array([1.0, 3.0, 10.0])
 _CHECKS = np.array([1.0, 1.6, 3.0])
-_MODELS = np.array(list(product(_SLOPES, _WANDER, _SURVEY, _CHECKS)))
+_SENSOR = np.array([1.0, 4.0])
+_MODELS = np.array(list(product(_SLOPES, _WANDER, _SURVEY, _CHECKS, _SENSOR)))
 
 
 @dataclass(frozen=True, slots=True)
@@ -23,23 +28,27 @@ class Priors:
 
     Attributes
     ----------
-    slope, wander, survey, checks : tuple of float
-        Weights that sum to one. The defaults are common practice, no source: most sensors drift by well under 1 cm a
-        year, few by several; most surveys and checks are as good as told, few are several times worse.
+    slope, wander, survey, checks, sensor : tuple of float
+        Weights that sum to one. The defaults are common practice, no source: most sensors drift by less than 1 cm a year
+        (0.1 % of a 10 m range), one in twenty by several; most surveys and checks are as good as told, one in
+        twenty surveys is three times worse and one in a hundred grossly wrong.
     zero_sd_m : float
         How well a dry sensor tells its zero under water, besides the scatter of its readings.
     """
 
-    slope: tuple[float, ...] = (0.60, 0.25, 0.15)
-    wander: tuple[float, ...] = (0.70, 0.20, 0.10)
-    survey: tuple[float, ...] = (0.10, 0.20, 0.60, 0.08, 0.02)
+    slope: tuple[float, ...] = (0.60, 0.35, 0.05)
+    wander: tuple[float, ...] = (0.75, 0.20, 0.05)
+    survey: tuple[float, ...] = (0.94, 0.05, 0.01)
     checks: tuple[float, ...] = (0.60, 0.25, 0.15)
+    sensor: tuple[float, ...] = (0.85, 0.15)
     zero_sd_m: float = 0.003
 
     def log_weights(self) -> np.ndarray:
         """Return log weights of all models, shape (model,)."""
-        parts = [np.log(np.array(p)) for p in (self.slope, self.wander, self.survey, self.checks)]
-        return np.add.outer(np.add.outer(np.add.outer(parts[0], parts[1]), parts[2]), parts[3]).ravel()
+        return reduce(np.add.outer, [np.log(np.array(p)) for p in self._axes()]).ravel()
+
+    def _axes(self) -> tuple[tuple[float, ...], ...]:
+        return self.slope, self.wander, self.survey, self.checks, self.sensor
 
     def learn(self, offsets: list[Offset], strength: float = 2.0) -> Priors:
         """Return the weights that the loggers of an area show, the present ones counting as ``strength`` loggers.
@@ -60,7 +69,7 @@ class Priors:
         told = [o.weights for o in offsets if (~o.evidence.zero).sum() >= 3]
         if not told:
             return self
-        axes = (self.slope, self.wander, self.survey, self.checks)
+        axes = self._axes()
         shape = tuple(len(a) for a in axes)
         likelihood = np.array(told) / np.exp(self.log_weights())
         new = self
@@ -68,11 +77,11 @@ class Priors:
             weights = likelihood * np.exp(new.log_weights())
             share = (weights / weights.sum(axis=1, keepdims=True)).sum(axis=0).reshape(shape)
             counts = [
-                strength * np.array(own) + share.sum(axis=tuple(i for i in range(4) if i != axis))
+                strength * np.array(own) + share.sum(axis=tuple(i for i in range(len(axes)) if i != axis))
                 for axis, own in enumerate(axes)
             ]
-            slope, wander, survey, checks = (tuple((count / count.sum()).tolist()) for count in counts)
-            new = Priors(slope, wander, survey, checks, self.zero_sd_m)
+            slope, wander, survey, checks, sensor = (tuple((count / count.sum()).tolist()) for count in counts)
+            new = Priors(slope, wander, survey, checks, sensor, self.zero_sd_m)
         return replace(new, zero_sd_m=self._learn_zero(offsets))
 
     def _learn_zero(self, offsets: list[Offset]) -> float:
@@ -198,7 +207,7 @@ class Offset:
         return [(float(self.weights[k] / total), _MODELS[k], self.inverse[k], self.pull[k]) for k in keep]
 
     def at(self, time: np.ndarray, span: np.ndarray, *, part: str = "all") -> tuple[np.ndarray, np.ndarray]:
-        """Return offset and its standard deviation.
+        """Return offset and its standard deviation (``mixture.stated_sd`` over the models).
 
         Parameters
         ----------
@@ -214,38 +223,35 @@ class Offset:
         offset_m, sd_m : ndarray of float64, shape (n,)
         """
         e = self.evidence
-        mean = np.zeros(time.size)
-        second = np.zeros(time.size)
         basis, prior_mean = _basis(time, span, part != "zero", part != "height", e, self.steps)
         seen, _ = _basis(e.time, e.span, ~e.zero, np.ones(e.time.size, bool), e, self.steps)
         years, seen_years = (time - e.start) / YEAR_NS, (e.time - e.start) / YEAR_NS
-        for weight, model, inverse, pull in self._leading():
+        leading = self._leading()
+        means, sds = np.empty((len(leading), time.size)), np.empty((len(leading), time.size))
+        for i, (_, model, inverse, pull) in enumerate(leading):
             var = _variances(model, e, self.steps)
             cross = (basis * var) @ seen.T
             own = (basis**2) @ var
             if model[1] and part != "height":
                 cross += model[1] ** 2 * np.minimum(years[:, None], seen_years[None, :])
                 own += model[1] ** 2 * years
-            m = basis @ prior_mean + cross @ pull
-            v = np.maximum(own - ((cross @ inverse) * cross).sum(axis=1), 0.0)
-            mean += weight * m
-            second += weight * (v + m**2)
-        return mean, np.sqrt(np.maximum(second - mean**2, 0.0))
+            means[i] = basis @ prior_mean + cross @ pull
+            sds[i] = np.sqrt(np.maximum(own - ((cross @ inverse) * cross).sum(axis=1), 0.0))
+        return stated_sd(np.array([weight for weight, *_ in leading]), means, sds)
 
     def sizes(self) -> list[tuple[float, float]]:
         """Return what every step added to the offset (m): mean and standard deviation."""
         e, first = self.evidence, len(self.evidence.height_sd_m) + 2
         seen, prior_mean = _basis(e.time, e.span, ~e.zero, np.ones(e.time.size, bool), e, self.steps)
-        out = []
-        for i in range(first, first + len(self.steps)):
-            mean = second = 0.0
-            for weight, model, inverse, pull in self._leading():
-                var = _variances(model, e, self.steps)[i]
-                m = float(prior_mean[i] + var * (seen[:, i] @ pull))
-                v = max(float(var - var**2 * (seen[:, i] @ inverse @ seen[:, i])), 0.0)
-                mean, second = mean + weight * m, second + weight * (v + m**2)
-            out.append((mean, float(np.sqrt(max(second - mean**2, 0.0)))))
-        return out
+        leading = self._leading()
+        means, sds = np.empty((len(leading), len(self.steps))), np.empty((len(leading), len(self.steps)))
+        for k, (_, model, inverse, pull) in enumerate(leading):
+            var = _variances(model, e, self.steps)[first:]
+            column = seen[:, first:]
+            means[k] = prior_mean[first:] + var * (pull @ column)
+            sds[k] = np.sqrt(np.maximum(var - var**2 * ((inverse @ column) * column).sum(axis=0), 0.0))
+        mean, sd = stated_sd(np.array([weight for weight, *_ in leading]), means, sds)
+        return list(zip(mean.tolist(), sd.tolist(), strict=True))
 
 
 def _basis(
@@ -270,12 +276,12 @@ def _basis(
 
 def _variances(model: np.ndarray, e: Evidence, steps: tuple[Step, ...]) -> np.ndarray:
     """Prior variances of the columns: shape (column,), or (model, column) for several models."""
-    slope, survey = model[..., 0, None], model[..., 2, None]
+    slope, survey, sensor = model[..., 0, None], model[..., 2, None], model[..., 4, None]
     known = np.ones((*model.shape[:-1], 1))
     return np.concatenate(
         [
             (survey * np.array(e.height_sd_m)) ** 2,
-            (survey * e.sensor_sd_m) ** 2,
+            (sensor * e.sensor_sd_m) ** 2,
             slope**2,
             known * np.array([s.sd_m**2 for s in steps]),
         ],

@@ -77,7 +77,7 @@ def daily_rows(settled: Settled) -> pd.DataFrame:
 
     The variance of a day is that of the offset (survey, sensor zero, drift, steps, checks), of slow errors that a day
     does not average out, of reading noise over n, of the
-    hours that are missing, and 0.15 % of depth where density had no temperature.
+    hours that are not seen (by how much the level changes from day to day then), and 0.15 % of depth where density had no temperature.
 
     Parameters
     ----------
@@ -107,11 +107,13 @@ def daily_rows(settled: Settled) -> pd.DataFrame:
     censored = share >= 0.5
     usual = max(float(np.median(count)), 1.0)
     missing = np.clip(1.0 - count / usual, 0.0, 1.0)
-    swing = spread(np.diff(mean)) if mean.size > 2 else 0.0
+    swing = _day_swing(mean)
     slow = settled.slow_m
     cold = np.array([not s.warm for s in settled.spans])[settled.span[start]]
     warm = 0.0015 * cold * np.maximum(np.add.reduceat(hours.mean, start) / count, 0.0)
-    var = sd**2 + slow**2 + settled.noise**2 / n + (missing * swing) ** 2 + warm**2
+    # a day is seen but for its missing hours, and a few readings a day lie up to half their distance off its middle
+    unseen = np.maximum(missing, 0.5 / count)
+    var = sd**2 + slow**2 + settled.noise**2 / n + (unseen * swing) ** 2 + warm**2
     var = np.where(censored, tall_sd**2 + slow**2, var)
     period = 1 + np.searchsorted(_period_starts(settled), grid[:-1], side="right")
     wetland = np.array([s.row["wetland_id"] for s in settled.spans], object)[settled.span[start]]
@@ -130,6 +132,14 @@ def daily_rows(settled: Settled) -> pd.DataFrame:
             "period": period,
         }
     ).drop_duplicates("date", keep="last", ignore_index=True)
+
+
+def _day_swing(mean: np.ndarray) -> np.ndarray:
+    """How much the level changes within each day: its neighbours' half difference, at least the usual day's change."""
+    if mean.size < 3:
+        return np.zeros(mean.size)
+    change = np.abs(np.diff(mean))
+    return np.maximum(np.maximum(np.r_[change[:1], change], np.r_[change, change[-1:]]) / 2, spread(change))
 
 
 def _hourly_shift(settled: Settled, start: np.ndarray, count: np.ndarray, shift: np.ndarray) -> np.ndarray:
@@ -249,12 +259,14 @@ def _refused_rows(name: str, span: Span) -> list[tuple]:
     return rows
 
 
-def flagged_frame(settled: Settled) -> pd.DataFrame:
+def flagged_frame(settled: Settled, spans: list[Span]) -> pd.DataFrame:
     """Return every reading with its raw value, depth, corrected stage and flag.
 
     Parameters
     ----------
     settled : Settled
+    spans : list of Span
+        With every reading; their flags are filled in where the sensor is dry.
 
     Returns
     -------
@@ -263,7 +275,7 @@ def flagged_frame(settled: Settled) -> pd.DataFrame:
         elevation where dry), flag (categorical).
     """
     frames = []
-    for k, span in enumerate(settled.spans):
+    for k, span in enumerate(spans):
         time = span.time
         days = np.unique(np.r_[time[:1], np.arange(time[0], time[-1], DAY_NS), time[-1:]])
         grid = np.unique(

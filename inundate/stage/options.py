@@ -48,8 +48,6 @@ class StageOptions:
         Smallest sudden change of level that is looked at as a moved sensor.
     check_reach_h : float
         A check is compared with readings at most so far from it (hours).
-    keep_flagged : bool
-        Whether every reading's flag and corrected value is kept in the result.
     """
 
     barometer_hole_h: float = 3.0
@@ -60,4 +58,3 @@ class StageOptions:
     check_sd_m: float = 0.01
     least_step_m: float = 0.015
     check_reach_h: float = 3.0
-    keep_flagged: bool = True

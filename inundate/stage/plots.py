@@ -64,7 +64,9 @@ def _levels(axes: Axes, flagged: pd.DataFrame, height_m: float) -> None:
         if len(part):
             label = f"{name.replace('_', ' ')} ({len(part)})"
             level = part["level_m"].clip(bottom, top)
-            axes.scatter(part["time"], level, marker=mark, s=22, color=colour, lw=1.0, label=label, zorder=4)
+            axes.scatter(
+                part["time"], level, marker=mark, s=22, color=colour, lw=1.0, label=label, zorder=4, clip_on=False
+            )
     axes.set_ylim(bottom, top)
 
 

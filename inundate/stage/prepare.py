@@ -145,19 +145,17 @@ def _window(row: Mapping, time: np.ndarray) -> slice:
 
 
 def _set_clock(
-    readings: Readings, row: Mapping, air: Barometer | None
+    readings: Readings, row: Mapping, air: Barometer | None, known: list[ClockSpell] | None
 ) -> tuple[np.ndarray, np.ndarray | None, list[ClockSpell]]:
     time = readings.time.astype("datetime64[ns]", copy=False).view(np.int64)
     if row["kind"] != "absolute" or air is None:
         return time, None, []
-    good = np.isfinite(readings.value)
-    pressure = convert(readings.value[good], row["unit"], row["kind"])
-    spells = clock_spells(
-        time[good],
-        pressure,
-        air.time.astype("datetime64[ns]").view(np.int64),
-        air.pressure_kpa * 1000.0,
-    )
+    spells = known
+    if spells is None:
+        good = np.isfinite(readings.value)
+        pressure = convert(readings.value[good], row["unit"], row["kind"])
+        told = air.time.astype("datetime64[ns]").view(np.int64)
+        spells = clock_spells(time[good], pressure, told, air.pressure_kpa * 1000.0)
     if not spells:
         return time, None, []
     fixed, order = set_clock(time, spells)
@@ -172,6 +170,7 @@ def prepare_span(
     options: StageOptions,
     *,
     frost: np.ndarray | None = None,
+    clock: list[ClockSpell] | None = None,
 ) -> Span:
     """Turn one registry row's readings into flagged depth above the sensor.
 
@@ -187,6 +186,8 @@ def prepare_span(
     options : StageOptions
     frost : ndarray of int64, optional
         Days since 1970 of lasting frost (see ``quality.flag_ice``).
+    clock : list of ClockSpell, optional
+        Where the clock is off, if that was found before.
 
     Returns
     -------
@@ -203,7 +204,7 @@ def prepare_span(
     if kind == "absolute" and barometer is None:
         message = f"{place}: kind absolute needs air pressure; give a barometer or set kind to vented or level"
         raise InputError(message)
-    time, order, spells = _set_clock(readings, row, barometer)
+    time, order, spells = _set_clock(readings, row, barometer, clock)
     raw = readings.value if order is None else readings.value[order]
     warmth = readings.temperature_c
     warmth = warmth if order is None or warmth is None else warmth[order]
@@ -279,7 +280,8 @@ def _flag_all(
     with np.errstate(invalid="ignore"):
         flag[(depth < lo - 0.5) | (depth > hi + 10)] = FLAG["implausible"]
     good = flag == FLAG["good"]
-    flag_flat(time, raw, air, depth, flag)
+    step_pa = 0.0 if air is None else resolution(raw) * float(convert(np.ones(1), row["unit"], row["kind"])[0])
+    flag_flat(time, raw, air, depth, flag, step_pa)
     noise = noise_of(depth[good], resolution(depth[good][:2000]))
     flag_spikes(time, depth, flag, noise)
     flag_ice(time, warmth, depth, flag, frost)
@@ -306,5 +308,11 @@ def _remark(span: Span, readings: Readings, place: str) -> None:
             f"{spell.hours:+d} h added (log likelihood gain {spell.gain:.0f})"
         )
     counts = np.bincount(span.flag, minlength=11)
+    if counts[FLAG["implausible"]]:
+        first = int(np.flatnonzero(span.flag == FLAG["implausible"])[0])
+        span.notes.append(
+            f"{place}: {counts[FLAG['implausible']]} readings can't be water and were left out "
+            f"(the first {span.raw[first]:g} {span.row['unit']} at {stamp(span.time[first])})"
+        )
     if counts[FLAG["no_barometer"]]:
         span.notes.append(f"{place}: {counts[FLAG['no_barometer']]} readings have no air pressure within reach")

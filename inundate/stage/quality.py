@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 
 from inundate.stage.options import FLAG
-from inundate.stage.signals import DAY_NS, HOUR_NS, hourly, interpolate, noise_of, outliers, resolution, spread
+from inundate.stage.signals import DAY_NS, HOUR_NS, Hours, hourly, interpolate, noise_of, outliers, resolution, spread
 
 _REACH = 5
 
@@ -56,11 +56,17 @@ def _around(hours: np.ndarray) -> np.ndarray:
 
 
 def flag_flat(
-    time: np.ndarray, raw: np.ndarray, air_pa: np.ndarray | None, depth: np.ndarray, flag: np.ndarray
+    time: np.ndarray,
+    raw: np.ndarray,
+    air_pa: np.ndarray | None,
+    depth: np.ndarray,
+    flag: np.ndarray,
+    step_pa: float = 0.0,
 ) -> None:
     """Flag runs of the very same raw value that water or air can't give; changes ``flag`` in place.
 
-    For an absolute sensor: six hours and more while the air's pressure (``air_pa``) moved by more than 50 Pa. For others: two days
+    For an absolute sensor: six hours and more while the air's pressure (``air_pa``) moved by more than 50 Pa, and by more
+    than five steps of the barometer's resolution and of the sensor's (``step_pa``). For others: two days
     and more, ten times longer than its long runs elsewhere, away from zero depth.
 
     Parameters
@@ -71,6 +77,8 @@ def flag_flat(
     depth : ndarray of float64, shape (reading,)
         m.
     flag : ndarray of uint8, shape (reading,)
+    step_pa : float
+        Smallest step between readings of an absolute sensor, Pa.
     """
     if raw.size < 6:
         return
@@ -81,7 +89,7 @@ def flag_flat(
         for i in np.flatnonzero((length >= 6 * HOUR_NS) & (stop - start >= 6)):
             air = air_pa[start[i] : stop[i]]
             air = air[np.isfinite(air)]
-            if air.size and np.ptp(air) > max(50.0, 5.0 * resolution(air)):
+            if air.size and np.ptp(air) > max(50.0, 5.0 * resolution(air), 5.0 * step_pa):
                 _set(flag, start[i], stop[i], "flat")
         return
     several = length[stop - start > 1]
@@ -107,9 +115,10 @@ def flag_ice(
     """Flag readings of a frozen sensor; changes ``flag`` in place.
 
     Water is never colder than 0, so a sensor under -0.3 is in ice, or in air (then it reads no more than 5 cm and
-    falls under ``dry``). In a cold spell (within 0.3 of freezing,
-    or ``frost`` where the logger has no temperature) everything from the first to the last sudden change of level is
-    flagged: ice presses and lifts.
+    falls under ``dry``). In a cold spell (within 0.3 of freezing, or ``frost`` where the logger has no temperature; up to
+    a day of thaw in between) and the day after it, everything from the first to the last sudden change of level is
+    flagged: ice presses and lifts, and lets go when it thaws. So is a cold spell of three days and more in which the level
+    moves more than five times as much as in the rest of the record: water under ice is calm.
 
     Parameters
     ----------
@@ -136,16 +145,41 @@ def flag_ice(
     hours = hourly(time[good], depth[good])
     if not cold.any() or hours.hour.size < 48:
         return
+    restless = _restless_spells(hours, np.unique(time[cold] // HOUR_NS))
     change = np.diff(hours.mean)
     limit = max(10.0 * spread(change), 0.01)
     jump_hours = hours.hour[1:][np.abs(change) > limit]
-    edge = np.flatnonzero(np.diff(np.r_[0, cold.astype(np.int8), 0]))
     hour = time // HOUR_NS
-    for a, b in zip(edge[::2], edge[1::2], strict=True):
-        inside = jump_hours[(jump_hours >= hour[a]) & (jump_hours <= hour[b - 1])]
+    for first, last in _spells(hour[cold]):
+        if (first, last) in restless:
+            lo, hi = np.searchsorted(hour, [first, last + 1])
+            _set(flag, lo, hi, "ice")
+        inside = jump_hours[(jump_hours >= first) & (jump_hours <= last + 24)]
         if inside.size >= 2:
             lo, hi = np.searchsorted(hour, [inside[0], inside[-1] + 1])
             _set(flag, lo, hi, "ice")
+
+
+def _spells(hours: np.ndarray) -> list[tuple[int, int]]:
+    """First and last of runs of hours that are at most a day apart."""
+    cut = np.flatnonzero(np.diff(hours) > 24)
+    return list(zip(hours[np.r_[0, cut + 1]].tolist(), hours[np.r_[cut, -1]].tolist(), strict=True))
+
+
+def _restless_spells(hours: Hours, cold: np.ndarray) -> set[tuple[int, int]]:
+    """Cold spells in which six-hourly changes scatter over five times as much as elsewhere, and over 1 cm."""
+    later = np.searchsorted(hours.hour, hours.hour + 6)
+    here = np.flatnonzero(later < hours.hour.size)
+    here = here[hours.hour[later[here]] == hours.hour[here] + 6]
+    change, start = hours.mean[later[here]] - hours.mean[here], hours.hour[here]
+    usual = spread(change[~np.isin(start, cold)])
+    limit = max(5.0 * usual, 0.01) if np.isfinite(usual) else np.inf
+    out = set()
+    for first, last in _spells(cold):
+        inside = change[(start >= first) & (start + 6 <= last)]
+        if last - first >= 72 and inside.size >= 24 and spread(inside) > limit:
+            out.add((first, last))
+    return out
 
 
 def flag_noise(time: np.ndarray, depth: np.ndarray, flag: np.ndarray) -> float:

@@ -3,12 +3,13 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 import pandas as pd
 
 from inundate.common.errors import InputError, Refusal
+from inundate.stage.checks import doubtful_check, gather_checks, own_checks, refuse_gross, told_sd
 from inundate.stage.choosing import choose_steps, doubtful_evidence, false_zeros
 from inundate.stage.datum import Evidence, Offset, Priors, Step, fit_offset
 from inundate.stage.days import Settled, correction_rows, daily_rows, flagged_frame
@@ -16,7 +17,7 @@ from inundate.stage.dry import Dryness, find_dry, first_zero
 from inundate.stage.options import StageOptions
 from inundate.stage.prepare import Span, prepare_span
 from inundate.stage.readings import Barometer, Readings
-from inundate.stage.signals import DAY_NS, HOUR_NS, Hours, interpolate, stamp
+from inundate.stage.signals import DAY_NS, Hours, stamp
 from inundate.stage.steps import Surroundings, hidden_candidates, jump_candidates, sky_table
 
 
@@ -28,17 +29,17 @@ class LoggerRecord:
     ----------
     daily, corrections : DataFrame
         Rows of ``StageResult.daily`` and ``StageResult.corrections``.
-    flagged : DataFrame or None
-        Every reading: time, raw_value, depth_m, stage_m, flag.
     notes : list of str
     refused : list of Refusal
+    flagged : DataFrame
+        Every reading: time, raw_value, depth_m, stage_m, flag; without rows where ``make_record`` made the record.
     """
 
     daily: pd.DataFrame
     corrections: pd.DataFrame
-    flagged: pd.DataFrame | None
     notes: list[str] = field(default_factory=list)
     refused: list[Refusal] = field(default_factory=list)
+    flagged: pd.DataFrame = field(default_factory=pd.DataFrame)
 
 
 @dataclass(slots=True)
@@ -71,6 +72,8 @@ def prepare_logger(
     options: StageOptions,
     *,
     frost: np.ndarray | None = None,
+    whole: bool = False,
+    before: list[Span] | None = None,
 ) -> Prepared:
     """Prepare every registry row of one logger and join them.
 
@@ -83,6 +86,10 @@ def prepare_logger(
     latitudes : mapping of wetland_id to degrees
     options : StageOptions
     frost : ndarray of int64, optional
+    whole : bool
+        Whether spans keep every reading. Otherwise only those refused: hours hold what the days need of the good ones.
+    before : list of Span, optional
+        The same spans prepared before, whose clock holds.
 
     Returns
     -------
@@ -94,15 +101,17 @@ def prepare_logger(
         See ``prepare.prepare_span``; also where a wetland's latitude is not given.
     """
     spans = []
-    for row in rows.to_dict("records"):
+    for k, row in enumerate(rows.to_dict("records")):
         if row["wetland_id"] not in latitudes:
             message = (
                 f"logger {row['logger_id']}: its wetland {row['wetland_id']!r} is not among the wetlands; "
                 "correct wetland_id in the registry"
             )
             raise InputError(message)
-        spans.append(prepare_span(row, readings, barometer, latitudes[row["wetland_id"]], options, frost=frost))
-        if not options.keep_flagged:
+        clock = None if before is None else before[k].clock
+        latitude = latitudes[row["wetland_id"]]
+        spans.append(prepare_span(row, readings, barometer, latitude, options, frost=frost, clock=clock))
+        if not whole:
             _forget_good(spans[-1])
     parts = [s.hours for s in spans]
     hours = Hours(
@@ -114,49 +123,10 @@ def prepare_logger(
 
 
 def _forget_good(span: Span) -> None:
-    """Keep the time and flag of refused readings only: hours hold what is needed of the good ones."""
+    """Keep the time and flag of refused readings only."""
     odd = np.flatnonzero(span.flag)
     span.time, span.flag = span.time[odd], span.flag[odd]
     span.raw = span.depth = np.empty(0)
-
-
-UNUSED_CHECK = "unused check"
-"""Kind of a field check that is right in itself, but falls in a hole of its logger's record."""
-
-
-def _sd(row: Mapping, name: str, default: float) -> float:
-    value = row.get(name, np.nan)
-    return default if value is None or pd.isna(value) else float(value)
-
-
-def _gather_checks(made: Prepared, checks: pd.DataFrame, options: StageOptions) -> tuple[pd.DataFrame, list[Refusal]]:
-    """Match checks with the record: add raw stage, depth and span; refuse what lies outside it."""
-    time = checks["time"].to_numpy("datetime64[ns]").view(np.int64)
-    usual = int(np.median(np.diff(made.hours.time[:5000]))) if made.hours.time.size > 2 else HOUR_NS
-    reach = max(int(options.check_reach_h * HOUR_NS), int(1.5 * usual))
-    order = np.argsort(time, kind="stable")
-    checks, time = checks.iloc[order].reset_index(drop=True), time[order]
-    depth = interpolate(time, made.hours.time, made.hours.mean, 2 * reach)
-    near = np.clip(np.searchsorted(made.hours.time, time), 0, max(made.hours.time.size - 1, 0))
-    edge = np.abs(made.hours.time[near] - time) <= HOUR_NS
-    depth = np.where(np.isnan(depth) & edge, made.hours.mean[near], depth)
-    out = checks.assign(depth_m=depth, raw_m=depth + made.height_m[near], span=made.span[near], ns=time)
-    refused = []
-    first, last = (stamp(t) for t in made.hours.time[[0, -1]])
-    for row in out[out["depth_m"].isna()].to_dict("records"):
-        line = row.get("line", "")
-        within = first <= str(row["time"])[:16].replace(" ", "T") <= last
-        where = "in a hole of" if within else "outside"
-        refused.append(
-            Refusal(
-                UNUSED_CHECK if within else "check",
-                str(line),
-                f"field check{f' at line {line}' if line else ''} of logger {made.logger_id} at {row['time']}: it lies "
-                f"{where} the logger's usable record ({first} to {last}), so it can't be compared; correct its time or "
-                "leave it",
-            )
-        )
-    return out[out["depth_m"].notna()].reset_index(drop=True), refused
 
 
 def _evidence(
@@ -180,8 +150,8 @@ def _evidence(
         np.r_[np.zeros(used.size, bool), np.ones(len(spells), bool)],
         np.r_[checks["span"].to_numpy(np.int64)[used], zero_span],
         int(made.hours.time[0]),
-        tuple(_sd(s.row, "height_sd_m", options.height_sd_m) for s in made.spans),
-        _sd(row, "sensor_sd_m", options.sensor_sd_m),
+        tuple(told_sd(s.row, "height_sd_m", options.height_sd_m) for s in made.spans),
+        told_sd(row, "sensor_sd_m", options.sensor_sd_m),
         np.r_[np.zeros(used.size), [min((b - a) / (5 * DAY_NS) - 1.0, 4.0) for a, b, *_ in spells]],
     ), used
 
@@ -246,13 +216,14 @@ def find_datum(
     Raises
     ------
     InputError
-        When no reading is left.
+        When no reading is left, or when the checks stand farther off than any survey can be wrong.
     """
     if not made.hours.time.size:
         message = f"logger {made.logger_id}: no usable reading is left after quality control; look at its file"
         raise InputError(message)
     noise = max(s.noise for s in made.spans)
-    matched, refused = _gather_checks(made, checks, options)
+    matched, refused = gather_checks(made, checks, options)
+    refuse_gross(made, matched, options)
     priors = priors or Priors()
     dryness = start or _first_dry(made, matched, options, priors)
     candidates: list[Step] = []
@@ -268,7 +239,7 @@ def find_datum(
         before, dryness = dryness, _dry_by(offset, made, noise)
         if (before.dry == dryness.dry).all():
             break
-    refused += [_doubt(made.logger_id, matched.iloc[i]) for i in doubtful]
+    refused += [doubtful_check(made.logger_id, matched.iloc[i]) for i in doubtful]
     settled = Settled(made.logger_id, made.spans, made.hours, made.span, made.height_m, offset, dryness, noise)
     return Found(settled, candidates, refused)
 
@@ -281,24 +252,23 @@ def _first_dry(made: Prepared, checks: pd.DataFrame, options: StageOptions, prio
     return find_dry(made.hours, *first_zero(made.hours, *_zero_by(prior, made), noise), noise)
 
 
-def make_record(found: Found, options: StageOptions) -> LoggerRecord:
+def make_record(found: Found) -> LoggerRecord:
     """Make the tables of a logger that is set on its datum.
 
     Parameters
     ----------
     found : Found
-    options : StageOptions
 
     Returns
     -------
     LoggerRecord
     """
     settled = found.settled
-    notes = [n for s in settled.spans for n in s.notes] + _step_notes(settled, found.candidates)
+    notes = [n for s in settled.spans for n in s.notes] + _datum_note(settled)
+    notes += _step_notes(settled, found.candidates)
     return LoggerRecord(
         daily_rows(settled),
         correction_rows(settled),
-        flagged_frame(settled) if options.keep_flagged else None,
         notes,
         found.refused,
     )
@@ -314,14 +284,24 @@ def _candidates(
     return jumps + hidden_candidates(made.hours, dryness.dry, checks["ns"].to_numpy(np.int64))
 
 
-def _doubt(logger_id: str, row: pd.Series) -> Refusal:
-    return Refusal(
-        "check",
-        str(row.get("line", "")),
-        f"field check of logger {logger_id} at {row['time']}: {row['stage_m']:.3f} m is "
-        f"{(row['stage_m'] - row['raw_m']) * 100:+.1f} cm off the raw record and contradicted by the checks about it; "
-        "it is not used; look at the field notes",
-    )
+def _datum_note(settled: Settled) -> list[str]:
+    """Tell of a datum that lies farther off than survey and sensor are told to be wrong."""
+    out = []
+    for k, row in enumerate(s.row for s in settled.spans):
+        mine = np.flatnonzero(settled.span == k)
+        if not mine.size:
+            continue
+        first = settled.hours.time[mine[:1]]
+        added = float(settled.offset.at(first, np.array([k]))[0][0])
+        e = settled.offset.evidence
+        told = float(np.hypot(e.height_sd_m[k], e.sensor_sd_m))
+        if abs(added) > max(3.0 * told, 0.02):
+            out.append(
+                f"logger {settled.logger_id}: {added * 100:+.1f} cm are added to it from {stamp(int(first[0]))}, "
+                f"{abs(added) / told:.0f} times what survey and sensor are told to be wrong ({told * 100:.1f} cm); look at "
+                f"height_m ({row['height_m']:g} m), the sensor's zero and the barometer's elevation"
+            )
+    return out
 
 
 def _step_notes(settled: Settled, candidates: list[Step]) -> list[str]:
@@ -378,19 +358,9 @@ def build_record(
     """
     options = options or StageOptions()
     latitudes = dict.fromkeys(rows["wetland_id"], latitude_deg)
-    made = prepare_logger(rows, readings, barometer, latitudes, options, frost=frost_days(weather))
-    around = Surroundings(sky_table(weather), {})
-    return make_record(find_datum(made, own_checks(checks, made.logger_id), around, options), options)
-
-
-def own_checks(checks: pd.DataFrame | None, logger_id: str) -> pd.DataFrame:
-    """Return one logger's checks with all columns, also where there are none."""
-    if checks is None:
-        checks = pd.DataFrame(columns=["logger_id", "time", "stage_m"])
-    out = checks[checks["logger_id"] == logger_id].copy()
-    if "sd_m" not in out:
-        out["sd_m"] = np.nan
-    return out.astype({"time": "datetime64[ns]", "stage_m": float, "sd_m": float})
+    made = prepare_logger(rows, readings, barometer, latitudes, options, frost=frost_days(weather), whole=True)
+    found = find_datum(made, own_checks(checks, made.logger_id), Surroundings(sky_table(weather), {}), options)
+    return replace(make_record(found), flagged=flagged_frame(found.settled, made.spans))
 
 
 def frost_days(weather: pd.DataFrame | None) -> np.ndarray | None:

@@ -16,6 +16,12 @@ _SIDE = 6
 _REACH_NS = 12 * HOUR_NS
 
 
+def _reach(hours: Hours) -> int:
+    """Widest distance (ns) of neighbouring hours: 12 h, or one and a half usual steps of a sparse record."""
+    usual = int(np.median(np.diff(hours.time))) if hours.time.size > 1 else 0
+    return max(_REACH_NS, usual * 3 // 2)
+
+
 @numba.njit(cache=True, nogil=True)
 def _sides(time: np.ndarray, x: np.ndarray, at: np.ndarray, side: int, reach: int) -> tuple[np.ndarray, np.ndarray]:
     """Medians of up to ``side`` values before and after the step between at and at + 1."""
@@ -117,30 +123,44 @@ def jump_candidates(
     list of Step
         Largest by significance first, at most 16.
     """
-    x, time = hours.mean, hours.time
+    x, time, reach = hours.mean, hours.time, _reach(hours)
     if x.size < 2 * _SIDE:
         return []
     change = np.diff(x)
-    close = np.diff(time) <= _REACH_NS
+    whole = _whole_change(change, hours.n)
+    close = np.diff(time) <= reach
     usual = max(spread(change[close]), noise)
     limit = max(least, 6.0 * usual)
-    at = np.flatnonzero((np.abs(change) >= 0.6 * limit) & close & wet[1:] & wet[:-1])
+    at = np.flatnonzero((np.abs(whole) >= 0.6 * limit) & close & wet[1:] & wet[:-1])
     if not at.size:
         return []
-    before, after = _sides(time, x, at, _SIDE, _REACH_NS)
+    before, after = _sides(time, x, at, _SIDE, reach)
     size = after - before
-    sharp = (np.abs(size) >= limit) & (np.abs(change[at]) >= 0.6 * np.abs(size)) & (change[at] * size > 0)
+    sharp = (np.abs(size) >= limit) & (np.abs(whole[at]) >= 0.6 * np.abs(size)) & (change[at] * size > 0)
     out: list[Step] = []
     order = sorted(np.flatnonzero(sharp), key=lambda k: -abs(size[k]))
     for k in order:
         moment = int(time[at[k] + 1])
-        if all(abs(s.time - moment) > _REACH_NS for s in out):
+        if all(abs(s.time - moment) > reach for s in out):
             odds, why = _odds(logger_id, moment, float(size[k]), around)
             sd = float(np.hypot(usual * np.sqrt(2.0), 0.003))
             out.append(Step(moment, float(size[k]), sd, odds, "jump", why))
         if len(out) >= 16:
             break
     return out
+
+
+def _whole_change(change: np.ndarray, n: np.ndarray) -> np.ndarray:
+    """Change from hour to hour, with that of the next hour where a sudden one inside an hour is shared by the two.
+
+    Only where hours hold several readings, and both changes have one sign.
+    """
+    if change.size < 2 or np.median(n) < 2:
+        return change
+    after: np.ndarray = np.r_[change[1:], 0.0]
+    before: np.ndarray = np.r_[0.0, change[:-1]]
+    other = np.where(np.abs(after) > np.abs(before), after, before)
+    return np.where(other * change > 0, change + other, change)
 
 
 def _odds(logger_id: str, time: int, size: float, around: Surroundings) -> tuple[float, str]:
@@ -183,7 +203,7 @@ def hidden_candidates(hours: Hours, dry: np.ndarray, checks: np.ndarray) -> list
         Size 0 with a wide sd (15 cm): checks alone must size it.
     """
     out: list[Step] = []
-    hole = np.flatnonzero(np.diff(hours.time) > _REACH_NS)
+    hole = np.flatnonzero(np.diff(hours.time) > _reach(hours))
     for i in sorted(hole, key=lambda i: hours.time[i] - hours.time[i + 1])[:10]:
         out.append(Step(int(hours.time[i + 1]), 0.0, 0.15, -5.0, "gap", "in a hole of the record"))
     edge = np.flatnonzero(np.diff(np.r_[0, dry.astype(np.int8), 0]))

@@ -1,7 +1,7 @@
 """Speed and memory of the stage part: ``python -m tests.bench.stage_speed [LOGGERS] [READINGS]`` (24 and 1 000 000).
 
-Files are written first (not timed), then read and made into days in a fresh process, whose peak memory is printed. The
-plain way beside it: pandas' default reader and a running median by ``rolling`` on one logger.
+Files are written first (not timed), then read and made into days in a fresh process, whose peak memory is printed: first
+the days alone, then as the batch does it, with every flagged reading looked at and thinned for the report. The plain way beside it: pandas' default reader and a running median by ``rolling`` on one logger.
 """
 
 from __future__ import annotations
@@ -53,9 +53,10 @@ def write(folder: Path, loggers: int, readings: int) -> None:
     pd.DataFrame(checks, columns=["logger_id", "time", "stage_m", "sd_m"]).to_csv(folder / "checks.csv", index=False)
 
 
-def work(folder: Path, keep: bool) -> None:
+def work(folder: Path, flags: bool) -> None:
     """Read and make days; print seconds and peak memory."""
-    from inundate.stage import LoggerFiles, StageOptions, daily_stage, read_barometer, read_checks, read_registry
+    from inundate.batch.report_sources import thin_record
+    from inundate.stage import LoggerFiles, daily_stage, read_barometer, read_checks, read_registry
 
     began, worked = time.perf_counter(), time.process_time()
     registry = read_registry(folder / "loggers.csv")
@@ -63,13 +64,15 @@ def work(folder: Path, keep: bool) -> None:
     barometer = read_barometer(folder / "barometer.csv")
     checks, _ = read_checks(folder / "checks.csv", registry)
     latitudes = dict.fromkeys(registry["wetland_id"], LATITUDE)
-    result = daily_stage(registry, files, barometer, checks, latitudes, StageOptions(keep_flagged=keep))
+    result = daily_stage(registry, files, barometer, checks, latitudes)
+    thinned = [thin_record(result.flagged[name], 0.0) for name in result.flagged] if flags else []
     took = time.perf_counter() - began
     # not ru_maxrss: that of a child starts at its parent's
     status = Path("/proc/self/status").read_text(encoding="ascii")
     peak = int(status.split("VmHWM:")[1].split()[0]) / 1024
     print(
-        f"keep_flagged={keep}: {len(registry)} loggers, {len(result.daily)} days, {took:.1f} s "
+        f"{f'days and {sum(map(len, thinned))} points for the report' if flags else 'days'}: "
+        f"{len(registry)} loggers, {len(result.daily)} days, {took:.1f} s "
         f"({time.process_time() - worked:.1f} s of processor), peak {peak:.0f} MB, {len(result.refused)} refused"
     )
 
@@ -89,7 +92,7 @@ def plain(folder: Path) -> None:
 def main() -> None:
     """Write the files, then measure in fresh processes (compiled code is cached by a small run before)."""
     if len(sys.argv) > 1 and sys.argv[1] == "work":
-        work(Path(sys.argv[2]), sys.argv[3] == "keep")
+        work(Path(sys.argv[2]), sys.argv[3] == "flags")
         return
     loggers = int(sys.argv[1]) if len(sys.argv) > 1 else 24
     readings = int(sys.argv[2]) if len(sys.argv) > 2 else 1_000_000
@@ -100,8 +103,8 @@ def main() -> None:
             write(folder, n, m)
         base = [sys.executable, "-m", "tests.bench.stage_speed", "work"]
         for folder in (small, large):
-            for keep in ("drop", "keep"):
-                subprocess.run([*base, str(folder), keep], check=True, env=os.environ)
+            for what in ("days", "flags"):
+                subprocess.run([*base, str(folder), what], check=True, env=os.environ)
         plain(large)
 
 
