@@ -2,13 +2,14 @@
 
 import numpy as np
 import pandas as pd
+import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
 from inundate.extent import widen_observed
 from inundate.pixels import between_sd, lasting_errors
 from inundate.pixels.lasting import UNKNOWN
-from inundate.relation import widen_bands
+from inundate.relation import fit_relations, leaf_factors, widen_bands
 from inundate.series.fill import widen_lasting
 
 WETLANDS = pd.DataFrame({"wetland_id": ["a", "b"], "area_max_m2": [100.0, 1000.0]})
@@ -49,7 +50,7 @@ def test_missed_and_added_are_told_apart():
 
 def test_observed_sd_grows_by_hand():
     """Worked by hand: area 60 of 100, sd 3, 10 % missed and 5 % added: sqrt(9 + 36 + 4)."""
-    observed = pd.DataFrame({"wetland_id": ["a"], "area_m2": [60.0], "area_sd_m2": [3.0]})
+    observed = pd.DataFrame({"wetland_id": ["a"], "area_m2": [60.0], "area_sd_m2": [3.0], "leaf_state": ["leaf_off"]})
     assert widen_observed(observed, WETLANDS, (0.1, 0.05))["area_sd_m2"].iloc[0] == 7.0
 
 
@@ -83,3 +84,34 @@ def test_bands_and_intervals_keep_their_bounds(seed, missed, added):
     assert (share[2] >= before[2] - 1e-12).all()
     assert ((share >= 0) & (share <= 1)).all()
     assert (share[:, before[2] == 0] == 0).all()
+
+
+def test_leaf_factors_are_what_makes_nine_in_ten_views_fit():
+    """Views under leaves err four times as much as they say: the factor is near four; unseen states take the largest."""
+    rng = np.random.default_rng(3)
+    wetlands = pd.DataFrame({"wetland_id": [f"w{i}" for i in range(8)], "area_max_m2": 1000.0, "cover": "open"})
+    rows = []
+    for w in wetlands["wetland_id"]:
+        stage = rng.uniform(0.05, 0.5, 60)
+        leafy = np.arange(60) % 2 == 0
+        area = 1000 * np.clip((stage / 0.5) ** 1.2 + rng.normal(0, np.where(leafy, 0.08, 0.02)), 0, 1)
+        state = np.where(leafy, "leaf_on", "leaf_off")
+        rows.append(pd.DataFrame({"wetland_id": w, "stage_m": stage, "area_m2": area, "leaf_state": state}))
+    pairs = pd.concat(rows, ignore_index=True).assign(
+        date=pd.date_range("2031-01-01", periods=480).to_numpy(), area_sd_m2=20.0, stage_sd_m=0.005, censored=False
+    )
+    relations = fit_relations(pairs[pairs["leaf_state"] == "leaf_off"], wetlands)
+    factors = leaf_factors(pairs, relations, wetlands, (0.0, 0.0))
+    assert 3.2 < factors["leaf_on"] < 5.0
+    assert factors["green_up"] == factors["leaf_on"]
+    observed = pd.DataFrame(
+        {
+            "wetland_id": ["w0"] * 2,
+            "area_m2": [500.0] * 2,
+            "area_sd_m2": [20.0] * 2,
+            "leaf_state": ["leaf_on", "leaf_off"],
+        }
+    )
+    wide = widen_observed(observed, wetlands, (0.0, 0.0), factors)["area_sd_m2"].to_numpy()
+    assert wide[0] == pytest.approx(20 * factors["leaf_on"])
+    assert wide[1] == 20.0

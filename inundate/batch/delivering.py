@@ -116,14 +116,15 @@ def write_tables(
 ) -> dict[str, Any]:
     """Write every product table, the NetCDF and the layer into ``folder``; return what the summary shows."""
     from inundate.extent import widen_observed
-    from inundate.relation import widen_bands
+    from inundate.relation import leaf_factors, widen_bands
     from inundate.series import hydroperiod, size_classes
     from inundate.stage import wetland_daily
 
     settings = work.pipeline.series
     daily = write_product_table(folder, "extent_daily", found.series.daily)
     lasting = found.series.lasting
-    seen = widen_observed(found.observed, found.wetlands, lasting)
+    leafy = leaf_factors(found.pairs, found.relations, found.wetlands, lasting)
+    seen = widen_observed(found.observed, found.wetlands, lasting, leafy)
     observed = write_product_table(folder, "extent_observed", seen)
     stage = wetland_daily(found.stage) if found.stage is not None else _no_stage()
     stage = stage[pd.to_datetime(stage["date"]) <= found.last]

@@ -105,8 +105,10 @@ def _combined(group: pd.DataFrame) -> pd.DataFrame:
     return row
 
 
-def widen_observed(observed: pd.DataFrame, wetlands: pd.DataFrame, lasting: tuple[float, float]) -> pd.DataFrame:
-    """Return observed extents whose standard deviation also holds errors that last in a wetland.
+def widen_observed(
+    observed: pd.DataFrame, wetlands: pd.DataFrame, lasting: tuple[float, float], leafy: dict[str, float] | None = None
+) -> pd.DataFrame:
+    """Return observed extents whose standard deviation also holds errors that last in a wetland, or that leaves bring.
 
     Such errors do not average out over views, so they are left out where views are weighed against each other, and put in
     where one view's extent is told by itself.
@@ -119,7 +121,10 @@ def widen_observed(observed: pd.DataFrame, wetlands: pd.DataFrame, lasting: tupl
         wetland_id, area_max_m2.
     lasting : (float, float)
         Standard deviations, from wetland to wetland, of the share of water missed and of dry ground called water.
+    leafy : dict of str to float, optional
+        Factor on the view's own sd by leaf state (see relation.leaf_factors); 1 where not given.
     """
+    own = observed["area_sd_m2"] * observed["leaf_state"].map(leafy or {}).fillna(1.0).astype(float)
     largest = observed["wetland_id"].map(dict(zip(wetlands["wetland_id"], wetlands["area_max_m2"], strict=True)))
     missed, added = observed["area_m2"] * lasting[0], (largest - observed["area_m2"]) * lasting[1]
-    return observed.assign(area_sd_m2=np.sqrt(observed["area_sd_m2"] ** 2 + missed**2 + added**2))
+    return observed.assign(area_sd_m2=np.sqrt(own**2 + missed**2 + added**2))

@@ -7,7 +7,7 @@ shifts; :class:`StageAreaRelation` is the same for one wetland as a scikit-learn
 
 from inundate.relation.estimator import StageAreaRelation
 from inundate.relation.fit import fit_relations
-from inundate.relation.lasting import widen_bands
+from inundate.relation.lasting import leaf_factors, widen_bands
 from inundate.relation.options import RelationOptions
 from inundate.relation.pairs import best_pairs, make_pairs
 from inundate.relation.relations import RelationSet
@@ -18,6 +18,7 @@ __all__ = [
     "StageAreaRelation",
     "best_pairs",
     "fit_relations",
+    "leaf_factors",
     "make_pairs",
     "widen_bands",
 ]
