@@ -13,7 +13,7 @@ from inundate.relation.families import ELEVATION, FAMILY_SIZE, N_PARAM, full_sta
 from inundate.relation.pairs import stack_tables
 from inundate.relation.reading import Drawn, Ground
 
-N_GRID = 241
+N_GRID = 141
 AREA_LO, AREA_HI, AREA_SD, VOLUME, VOLUME_LO, VOLUME_HI = range(6)
 
 

@@ -122,8 +122,8 @@ def bands(drawn: Drawn, ground: Ground, grid: np.ndarray, centre: np.ndarray, ta
     steps = grid.shape[1]
     out = np.zeros((units, 6, steps))
     works = np.zeros((n, N_WORK))
-    column, last, volume = np.zeros(n), np.zeros(n), np.zeros(n)
-    place = np.array([tail * (n - 1), (1.0 - tail) * (n - 1)])
+    last, volume, ends = np.zeros(n), np.zeros(n), np.empty((2, n))
+    place = tail * (n - 1)
     for u in range(units):
         t = max(ground.which[u], 0)
         table, span = ground.tables[t], ground.spans[t]
@@ -140,20 +140,34 @@ def bands(drawn: Drawn, ground: Ground, grid: np.ndarray, centre: np.ndarray, ta
                 volume[d] += 0.5 * width * (value + last[d])
                 last[d] = value
                 square += (value - centre[u, g]) ** 2
-            column[:] = last
-            column.sort()
-            out[u, 0, g] = _quantile(column, place[0])
-            out[u, 1, g] = _quantile(column, place[1])
+            out[u, 0, g], out[u, 1, g] = _both_quantiles(last, place, ends)
             out[u, 2, g] = np.sqrt(square / n)
-            column[:] = volume
-            column.sort()
             out[u, 3, g] = out[u, 3, g - 1] + 0.5 * width * (centre[u, g] + centre[u, g - 1])
-            out[u, 4, g] = _quantile(column, place[0])
-            out[u, 5, g] = _quantile(column, place[1])
+            out[u, 4, g], out[u, 5, g] = _both_quantiles(volume, place, ends)
     return out
 
 
 @nb.njit(cache=True, nogil=True)
-def _quantile(rising: np.ndarray, place: float) -> float:
-    i = min(int(place), rising.size - 2)
-    return rising[i] + (place - i) * (rising[i + 1] - rising[i])
+def _both_quantiles(values: np.ndarray, place: float, ends: np.ndarray) -> tuple[float, float]:
+    """Interpolated quantiles as far from either end: at position ``place`` of the rising and of the falling order.
+
+    Only the ends are put in order; ``ends`` (2, at least ``int(place) + 2``) is room for them.
+    """
+    k = min(int(place), values.size - 2) + 2
+    low, high = ends[0], ends[1]
+    low[:k], high[:k] = np.inf, -np.inf
+    for value in values:
+        if value < low[k - 1]:
+            j = k - 1
+            while j > 0 and low[j - 1] > value:
+                low[j] = low[j - 1]
+                j -= 1
+            low[j] = value
+        if value > high[k - 1]:
+            j = k - 1
+            while j > 0 and high[j - 1] < value:
+                high[j] = high[j - 1]
+                j -= 1
+            high[j] = value
+    part = place - (k - 2)
+    return low[k - 2] + part * (low[k - 1] - low[k - 2]), high[k - 2] + part * (high[k - 1] - high[k - 2])
