@@ -125,6 +125,15 @@ def test_same_bytes_with_other_workers(delivered, small_reserve, tmp_path):
         assert digests(tmp_path / "out" / part) == digests(delivered[0] / "out" / part)
 
 
+def test_an_earlier_month_refuses_nothing_that_came_later(small_reserve, tmp_path):
+    """Labels and scenes after the month are left out in silence; nothing else is refused, and the series ends with the month."""
+    file = copy_inputs(small_reserve, tmp_path, "[compute]\nworkers = 1\n")
+    result = run_month(file, month="2032-06", progress=QUIET)
+    assert result["refused"] == []
+    daily = pd.read_parquet(Path(result["products"]) / "extent_daily.parquet")
+    assert str(daily["date"].max())[:10] == "2032-06-30"
+
+
 @pytest.fixture
 def again(delivered, tmp_path):
     """A copy of the delivery that a test may change."""

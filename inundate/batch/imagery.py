@@ -82,7 +82,7 @@ def place_labels(work: Work, inputs: Inputs, scenes: list[Scene]) -> LabelPixels
     bounds = tuple(inputs.labels.total_bounds)
     grid = area_grid(scenes, inputs.profile, work.pipeline.area.crs, bounds, margin_m=10 * inputs.profile.step_m)
     try:
-        labels = check_labels(inputs.labels)
+        labels = _until_last(check_labels(inputs.labels), inputs, scenes)
         pixels, off = label_pixels(labels, grid)
         if pixels.empty:
             message = "labels: none lies inside the area of the scenes; check coordinates and reference system"
@@ -94,6 +94,17 @@ def place_labels(work: Work, inputs: Inputs, scenes: list[Scene]) -> LabelPixels
         raise InputError(message) from err
     work.refuse([*off, *late])
     return LabelPixels(matched, grid)
+
+
+def _until_last(labels: pd.DataFrame, inputs: Inputs, scenes: list[Scene]) -> pd.DataFrame:
+    """Return checked labels without those of scenes after the delivered month; nothing is wrong with them."""
+    known = {s.scene_id for s in scenes}
+    later = [s for s in inputs.catalog.scenes if s.scene_id not in known]
+    if not later:
+        return labels
+    first = min(pd.Timestamp(s.datetime).tz_localize(None) for s in later).normalize()
+    out = labels["scene_id"].astype(str).isin([s.scene_id for s in later]) | (labels["date"] >= first)
+    return labels[~out] if not out.all() else labels
 
 
 def read_new(

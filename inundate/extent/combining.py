@@ -126,6 +126,6 @@ def widen_observed(
     """
     own = observed["area_sd_m2"] * observed["leaf_state"].map(leafy or {}).fillna(1.0).astype(float)
     largest = observed["wetland_id"].map(dict(zip(wetlands["wetland_id"], wetlands["area_max_m2"], strict=True)))
-    own = np.minimum(own, 0.5 * largest)  # no view is worse than not knowing at all
+    own = own.clip(upper=0.5 * largest)  # no view is worse than not knowing at all
     missed, added = observed["area_m2"] * lasting[0], (largest - observed["area_m2"]) * lasting[1]
     return observed.assign(area_sd_m2=np.sqrt(own**2 + missed**2 + added**2))

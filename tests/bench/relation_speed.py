@@ -84,9 +84,13 @@ def main() -> None:
     slow = (time.perf_counter() - start) / SAMPLE * count
     peak = resource.getrusage(resource.RUSAGE_SELF).ru_maxrss / 1024
     print(f"{count} wetlands x {PAIRS} pairs, {draws} draws")
-    print(f"power law with bands and tables: {alone:.1f} s; curve_fit with as many refits: {slow:.0f} s; {slow / alone:.0f} times")
+    print(
+        f"power law with bands and tables: {alone:.1f} s; curve_fit with as many refits: {slow:.0f} s; {slow / alone:.0f} times"
+    )
     print(f"all families, choice by held-out blocks, pooling, bands, tables: {whole:.1f} s; {slow / whole:.0f} times")
-    print(f"curves differ by at most {max(gaps):.3f} of the largest extent; bands are {np.median(wide):.2f} times as wide")
+    print(
+        f"curves differ by at most {max(gaps):.3f} of the largest extent; bands are {np.median(wide):.2f} times as wide"
+    )
     print(f"peak memory {peak:.0f} MB")
 
 
