@@ -15,6 +15,7 @@ _LIMIT = 5.0
 _LEAST_VIEWS = 8
 _DARK = 0.5
 """Fall of the logarithm of brightness from which ground may be in shadow: 40 % darker (common practice, no source)."""
+_DARK_LIMIT = 3.0
 _LEAST_RING = 6
 _FLOOR = 1e-3
 
@@ -103,9 +104,9 @@ def shaded(
     """Tell which clear pixels lie in a cloud shadow that the mask missed, from the dry ground around their wetland.
 
     Water is dark, and so is shadow; but shadow darkens the ground around a wetland as well. Each pixel of that ring is held
-    against its own median over clear views of the same half of the leaf year; it is in shadow when it is darker by five
+    against its own median over clear views of the same half of the leaf year; it is in shadow when it is darker by three
     of its ring's spreads and by 40 %. A wetland's pixels share the lot of the nearest ring pixel, or of the whole ring where
-    half of it is in shadow; a ring of which less than a tenth is dark tells of no shadow.
+    half of it is in shadow; a ring of which less than a fifth is dark tells of no shadow.
 
     Parameters
     ----------
@@ -142,7 +143,7 @@ def shaded(
         count = np.maximum(seen.sum(axis=1), 1)
         share = fallen.sum(axis=1) / count
         near = cKDTree(place[mine]).query(place[at])[1]
-        lot = fallen[:, near] & (share >= 0.1)[:, None]
+        lot = fallen[:, near] & (share >= 0.2)[:, None]
         out[:, at] = (lot | (share >= 0.5)[:, None]) & (code[:, at] == ViewCode.CLEAR)
     return out
 
@@ -157,4 +158,4 @@ def _fallen(dark: np.ndarray, seen: np.ndarray) -> np.ndarray:
     if not np.isfinite(spread):
         return np.zeros(dark.shape, bool)
     with np.errstate(invalid="ignore"):
-        return above < -max(_LIMIT * float(spread), _DARK)
+        return above < -max(_DARK_LIMIT * float(spread), _DARK)
