@@ -69,7 +69,9 @@ def through_outlets(
     Returns
     -------
     pairs : DataFrame
-        Extents of wetlands with an outlet over the part that is shown, at most the largest extent.
+        Extents of wetlands with an outlet, raised so that a full one shows full: by the whole of what is missed there, less
+        so the less water there is (what hides water or blurs its edge in a full wetland lies dry in an emptier one); at
+        most the largest extent.
     told : DataFrame
         wetland_id, level_m, days, shown (part of the water, 0.5..1) of the wetlands that were scaled.
     """
@@ -89,6 +91,7 @@ def through_outlets(
         if missed <= 0:
             continue
         shown = 1.0 - min(missed, _LARGEST)
-        out.loc[mine, "area_m2"] = np.minimum(pairs.loc[mine, "area_m2"] / shown, largest)
+        area = pairs.loc[mine, "area_m2"]
+        out.loc[mine, "area_m2"] = np.minimum(area * (1.0 + (1.0 / shown - 1.0) * area / (seen * largest)), largest)
         told.append((row["wetland_id"], row["level_m"], row["days"], shown))
     return out, pd.DataFrame(told, columns=["wetland_id", "level_m", "days", "shown"])
