@@ -16,7 +16,7 @@ from inundate.common.codes import ViewCode
 from inundate.common.errors import InputError
 from inundate.common.grid import Grid, Window
 from inundate.common.site import make_site
-from inundate.scenes import SceneError, SiteGather, area_grid, context_windows, load_profile, open_catalog, read_view
+from inundate.scenes import SceneError, SceneReader, area_grid, context_windows, load_profile, open_catalog, read_view
 from inundate.scenes.planning import MAX_READ_PX, plan_reads
 
 S2 = load_profile("sentinel-2-l2a")
@@ -257,19 +257,49 @@ def test_same_pixels_whatever_the_windows(scene):
         np.testing.assert_array_equal(block.code, whole.code[block.window.slices])
 
 
-def test_site_pixels_are_taken_from_their_blocks(scene):
+def test_site_pixels_are_taken_from_their_own_windows(scene):
     rng = np.random.default_rng(1)
     site = make_site(GRID, rng.integers(0, 120, 60), rng.integers(0, 120, 60), margin=2, block=32)
-    grown = [w.grow(3, 120, 120) for w in site.windows]
-    for windows in (site.windows, grown):
-        view = read_view(scene, S2, GRID, windows)
-        reflectance, code = SiteGather(site, windows).take(view)
-        assert (code == 0).all()
-        x, y = GRID.centres(site.rows, site.cols)
-        want = (2000.0 + 0.5 * (x - WEST) + 0.3 * (NORTH - y)) * 1e-4
-        np.testing.assert_allclose(reflectance[0], want, atol=1.1e-4)
-    with pytest.raises(ValueError, match="read with other windows"):
-        SiteGather(site, site.windows).take(view)
+    x, y = GRID.centres(site.rows, site.cols)
+    want = (2000.0 + 0.5 * (x - WEST) + 0.3 * (NORTH - y)) * 1e-4
+    assert len(site.windows) > 4
+    np.testing.assert_array_equal(np.sort(site.order), np.arange(site.size))
+    for windows in (site.windows, [w.grow(3, 120, 120) for w in site.windows]):
+        got = np.full(site.size, np.nan)
+        for number, block in enumerate(read_view(scene, S2, GRID, windows).blocks):
+            got[site.place(number)] = site.pick(number, block.window, block.reflectance)[0]
+        np.testing.assert_allclose(got, want, atol=1.1e-4)
+
+
+def test_a_scene_read_in_parts_equals_one_read_at_once(scene):
+    windows = [Window(5, 40, 60, 100), Window(38, 90, 3, 50), Window(0, 12, 0, 12)]
+    whole = read_view(scene, S2, GRID, windows)
+    with SceneReader(scene, S2, GRID) as reader:
+        parts = [reader.read([w]).blocks[0] for w in windows]
+        reader.check()
+    for one, other in zip(whole.blocks, parts, strict=True):
+        np.testing.assert_array_equal(one.reflectance, other.reflectance)
+        np.testing.assert_array_equal(one.code, other.code)
+
+
+def test_a_warped_scene_does_not_depend_on_how_its_windows_are_cut(tmp_path):
+    rng = np.random.default_rng(3)
+    assets = {}
+    for key, step in {"B02": 10, "B03": 10, "B04": 10, "B08": 10, "B11": 20, "B12": 20, "SCL": 20}.items():
+        n = 6000 // step
+        data = np.full((n, n), 4, np.uint8) if key == "SCL" else rng.integers(500, 4000, (n, n)).astype(np.uint16)
+        write_tif(tmp_path / f"{key}.tif", data, west=WEST - 2000, north=NORTH + 2000, step=float(step), nodata=0)
+        assets[key] = {"href": f"{key}.tif"}
+    warped = open_catalog(write_item(tmp_path / "s.json", "S", assets), S2).scenes[0]
+    x, y = Transformer.from_crs(CRS, "EPSG:32632", always_xy=True).transform(WEST + 500, NORTH - 500)
+    grid = Grid("EPSG:32632", round(x, -1), round(y, -1), 10.0, 150, 150)
+    whole = read_view(warped, S2, grid, [Window(0, 150, 0, 150)]).blocks[0]
+    cut = [Window(r, min(r + 37, 150), c, min(c + 53, 150)) for r in range(0, 150, 37) for c in range(0, 150, 53)]
+    assert (whole.code == ViewCode.CLEAR).mean() > 0.5
+    for one in cut:
+        block = read_view(warped, S2, grid, [one]).blocks[0]
+        np.testing.assert_array_equal(block.reflectance, whole.reflectance[:, *one.slices])
+        np.testing.assert_array_equal(block.code, whole.code[one.slices])
 
 
 boxes = st.lists(

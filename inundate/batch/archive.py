@@ -90,9 +90,12 @@ def write_view(path: Path, bands: tuple[str, ...], reflectance: np.ndarray, code
     int
         Bytes written.
     """
-    scaled = np.where(np.isfinite(reflectance), np.clip(np.round(reflectance * _SCALE), -32767, 32767), _MISSING)
-    scaled = scaled.astype(np.int16)
-    return _write(path, {**{b: scaled[i] for i, b in enumerate(bands)}, "code": code})
+    return _write(path, {**{b: _scaled(reflectance[i]) for i, b in enumerate(bands)}, "code": code})
+
+
+def _scaled(plane: np.ndarray) -> np.ndarray:
+    whole = np.clip(np.round(plane * _SCALE), -32767, 32767)
+    return np.where(np.isfinite(plane), whole, _MISSING).astype(np.int16)
 
 
 def read_view(path: Path, groups: tuple[int, int] | None = None) -> tuple[tuple[str, ...], np.ndarray, np.ndarray]:
@@ -105,6 +108,12 @@ def read_view(path: Path, groups: tuple[int, int] | None = None) -> tuple[tuple[
     values = raw.astype(np.float32) * np.float32(1.0 / _SCALE)
     values[raw == _MISSING] = np.nan
     return bands, values, table.column("code").to_numpy().astype(np.uint8)
+
+
+def row_groups(path: Path) -> int:
+    """Return the number of row groups of a file, each of ``ROWS`` site pixels but the last."""
+    with pq.ParquetFile(path) as file:
+        return int(file.num_row_groups)
 
 
 def _read(path: Path, groups: tuple[int, int] | None) -> pa.Table:

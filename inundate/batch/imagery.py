@@ -27,6 +27,8 @@ LEAF_STEP = (
     0.1  # leaf share is given to the classifier in tenths, and a settled tenth moves only when it is off by more
 )
 
+BATCH_SHARE = 0.1  # of the memory setting, for blocks read together: they are sharpened and moved one by one beside it
+
 
 def array_mark(*arrays: np.ndarray) -> str:
     """Return a hash of arrays' bytes."""
@@ -127,6 +129,7 @@ def read_new(
         detail=registrar.detail,
         normalise=work.pipeline.extent.normalisation,
         shift_limit_px=work.pipeline.extent.shift_limit_px,
+        batch_bytes=int(BATCH_SHARE * work.pipeline.compute.memory_mb * 1e6 / work.pipeline.compute.workers),
     )
     common = {
         "site": array_mark(

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterator
 from dataclasses import dataclass
 from functools import lru_cache
 from pathlib import Path
@@ -9,9 +10,10 @@ from typing import Any
 
 import numpy as np
 
-from inundate.batch.archive import Archive, percent, read_view, write_score
+from inundate.batch.archive import ROWS, Archive, percent, read_view, row_groups, write_score
 from inundate.batch.seasons import pixel_ndvi
 from inundate.common.codes import BAND_ROLES, ViewCode
+from inundate.common.grid import Window
 from inundate.common.site import Site
 from inundate.products import write_map
 
@@ -134,14 +136,41 @@ def score_scene(job: ScoreJob) -> dict[str, Any]:
     dict
         seen (pixels), water_share (mean probability over seen pixels), bytes.
     """
+    archive = Archive(job.out)
+    view = archive.view(job.scene_id)
+    columns = {name: np.full(job.site.size, 255, np.uint8) for name in SCORE_COLUMNS}
+    for group in range(row_groups(view)):
+        bands, reflectance, code = read_view(view, (group, group + 1))
+        part = slice(group * ROWS, group * ROWS + code.size)
+        for name, values in _score_part(job, archive, bands, reflectance, code, job.owner[part]).items():
+            columns[name][part] = values
+    nbytes = write_score(archive.score(job.scene_id), columns)
+    blocks = _blocks(job.site, columns["probability"])
+    tags = {"SCENE_ID": job.scene_id, "CONTENT": "water probability, percent; 255 = not seen"}
+    write_map(archive.map(job.scene_id), job.site.grid, blocks, tags)
+    water = columns["probability"][columns["probability"] != 255]
+    return {
+        "seen": int(water.size),
+        "water_share": float(water.mean() / 100.0) if water.size else None,
+        "bytes": nbytes,
+    }
+
+
+def _score_part(
+    job: ScoreJob,
+    archive: Archive,
+    bands: tuple[str, ...],
+    reflectance: np.ndarray,
+    code: np.ndarray,
+    owner: np.ndarray,
+) -> dict[str, np.ndarray]:
+    """Score a run of site pixels; reflectance is (band, pixel), code and owner are (pixel,)."""
     from inundate.extent import haze_index
     from inundate.pixels import features
 
-    archive = Archive(job.out)
-    bands, reflectance, code = read_view(archive.view(job.scene_id))
+    n = code.size
     clear = code == ViewCode.CLEAR
     seen = np.flatnonzero(clear & np.isfinite(reflectance).any(axis=0))
-    n = code.size
     columns = {name: np.full(n, 255, np.uint8) for name in SCORE_COLUMNS}
     columns["code"] = code
     columns["ndvi"] = ndvi_code(pixel_ndvi(bands, reflectance, code))
@@ -150,32 +179,19 @@ def score_scene(job: ScoreJob) -> dict[str, Any]:
     columns["dark"] = dark_code(np.where(clear, _darkness(job, bands, reflectance), np.nan))
     if seen.size:
         scorer = _scorer(archive.models, job.model_mark)
-        owner = job.owner[seen]
-        leaf = job.leaf_share[owner].astype(np.float32)
+        leaf = job.leaf_share[owner[seen]].astype(np.float32)
         context = np.array(job.ground, np.float32) if job.ground else None
         table = features(np.ascontiguousarray(reflectance[:, seen]), bands, leaf, job.sun_elevation_deg, context)
         ones = np.ones(seen.size, bool)
-        for name, values in scorer.score(table, job.leaf_state[owner]).items():
+        for name, values in scorer.score(table, job.leaf_state[owner[seen]]).items():
             columns[name][seen] = percent(values, ones)
-    nbytes = write_score(archive.score(job.scene_id), columns)
-    blocks = _blocks(job.site, columns["probability"])
-    tags = {"SCENE_ID": job.scene_id, "CONTENT": "water probability, percent; 255 = not seen"}
-    write_map(archive.map(job.scene_id), job.site.grid, blocks, tags)
-    water = columns["probability"][seen]
-    return {"seen": int(seen.size), "water_share": float(water.mean() / 100.0) if seen.size else None, "bytes": nbytes}
+    return columns
 
 
-def _blocks(site: Site, values: np.ndarray) -> list[tuple[Any, np.ndarray]]:
-    """Spread site values over the site's windows, 255 elsewhere."""
-    out = []
-    for window in site.windows:
+def _blocks(site: Site, values: np.ndarray) -> Iterator[tuple[Window, np.ndarray]]:
+    """Spread site values over the site's windows, one after the other, 255 elsewhere."""
+    for number, window in enumerate(site.windows):
         block = np.full(window.shape, 255, np.uint8)
-        inside = np.flatnonzero(
-            (site.rows >= window.row0)
-            & (site.rows < window.row1)
-            & (site.cols >= window.col0)
-            & (site.cols < window.col1)
-        )
-        block[site.rows[inside] - window.row0, site.cols[inside] - window.col0] = values[inside]
-        out.append((window, block))
-    return out
+        place = site.place(number)
+        block[site.rows[place] - window.row0, site.cols[place] - window.col0] = values[place]
+        yield window, block

@@ -14,7 +14,7 @@ from inundate.common.grid import Window
 from inundate.common.site import Site
 
 if TYPE_CHECKING:
-    from inundate.scenes import Scene, SensorProfile, View
+    from inundate.scenes import Scene, SceneReader, SensorProfile, View
 
 MARGIN_PX = 6  # pixels around windows that shifting and lending detail need
 
@@ -40,6 +40,8 @@ class ReadPlan:
     normalise : bool
         Bring scenes to the reference's gain too.
     shift_limit_px : float
+    batch_bytes : int
+        Most that the blocks of windows that are read together hold; what is left in the archive does not depend on it.
     """
 
     profile: SensorProfile
@@ -51,11 +53,26 @@ class ReadPlan:
     detail: Any = None
     normalise: bool = False
     shift_limit_px: float = 2.0
+    batch_bytes: int = 100_000_000
 
     @property
     def windows(self) -> tuple[Window, ...]:
         """Windows of the site, with a margin where pixels will be shifted."""
         return grown(self.site, self.reference is not None)
+
+    def batches(self, bands: int) -> list[tuple[int, ...]]:
+        """Return numbers of the site's windows that are read together; the first with the context windows beside them."""
+        pixel = 4 * bands + 1
+        held = sum(w.shape[0] * w.shape[1] for w in self.context) * pixel
+        out: list[list[int]] = [[]]
+        for number, window in enumerate(self.windows):
+            size = window.shape[0] * window.shape[1] * pixel
+            if held and held + size > self.batch_bytes:
+                out.append([])
+                held = 0
+            out[-1].append(number)
+            held += size
+        return [tuple(batch) for batch in out]
 
 
 @dataclass(frozen=True, slots=True)
@@ -97,38 +114,101 @@ def read_scene(job: ReadJob) -> dict[str, Any]:
     InputError
         When it lies further off than the limit.
     """
+    from inundate.scenes import SceneReader
+
+    plan, scene = job.plan, job.scene
+    detail: dict[str, Any] = {"read_bytes": 0}
+    shift = gain = None
+    if job.want_view or plan.context:
+        with SceneReader(scene, plan.profile, plan.site.grid) as reader:
+            batches: list[tuple[int, ...]] = plan.batches(len(reader.roles)) if job.want_view else [()]
+            own = plan.windows
+            first = reader.read((*(own[i] for i in batches[0]), *plan.context))
+            detail["read_bytes"] = _held(first)
+            if plan.reference is not None:
+                shift, gain = _place(plan, first, detail)
+            if job.want_view:
+                _keep_view(job, reader, batches, first, (shift, gain), detail)
+            else:
+                reader.check()
+    if job.label_site is not None:
+        _keep_sample(job, job.label_site, (shift, gain))
+    return detail
+
+
+def _held(view: View) -> int:
+    return int(sum(block.reflectance.nbytes for block in view.blocks))
+
+
+def _place(plan: ReadPlan, view: View, detail: dict[str, Any]) -> tuple[Any, Any]:
+    """Return shift and gain (None unless asked for) of a view that holds the context windows; notes both."""
     from inundate.common.errors import InputError
+
+    shift = plan.reference.shift(view)
+    detail["shift"] = shift.as_dict()
+    if shift.outcome == "beyond":
+        message = f"scene {view.scene_id}: lies {np.hypot(shift.dx_px, shift.dy_px):.1f} pixels off the other scenes, over the limit of {plan.shift_limit_px:g}; it is set aside (key 'extent.shift_limit_px')"
+        raise InputError(message)
+    if not plan.normalise:
+        return shift, None
+    gain = plan.reference.gain(view, shift)
+    detail["gain"] = gain.as_dict()
+    return shift, gain
+
+
+def _keep_view(
+    job: ReadJob,
+    reader: SceneReader,
+    batches: list[tuple[int, ...]],
+    view: View,
+    settle: tuple[Any, Any],
+    detail: dict[str, Any],
+) -> None:
+    """Collect the site pixels batch by batch of windows, the first of which is read, and write the scene's view."""
     from inundate.pixels import scene_context
+
+    plan, own = job.plan, job.plan.windows
+    reflectance, code = _empty(plan.site, reader.roles)
+    for turn, batch in enumerate(batches):
+        if turn:
+            view = reader.read([own[i] for i in batch])
+            detail["read_bytes"] += _held(view)
+        _collect(plan, plan.site, batch, view, settle, (reflectance, code))
+    reader.check()
+    detail["ground"] = [float(v) for v in scene_context(reflectance, reader.roles, code, plan.ground)]
+    detail["clear"] = float(np.mean(code == ViewCode.CLEAR))
+    detail["bytes"] = write_view(Archive(plan.out).view(job.scene.scene_id), reader.roles, reflectance, code)
+
+
+def _keep_sample(job: ReadJob, site: Site, settle: tuple[Any, Any]) -> None:
+    """Read the pixels under a scene's labels, and write the scene's sample."""
     from inundate.scenes import read_view
 
-    plan, archive, scene = job.plan, Archive(job.plan.out), job.scene
-    own = plan.windows if job.want_view else ()
-    view = read_view(scene, plan.profile, plan.site.grid, (*own, *plan.context)) if own or plan.context else None
-    detail: dict[str, Any] = {"read_bytes": 0 if view is None else int(sum(b.reflectance.nbytes for b in view.blocks))}
-    shift = gain = None
-    if plan.reference is not None and view is not None:
-        shift = plan.reference.shift(view)
-        detail["shift"] = shift.as_dict()
-        if shift.outcome == "beyond":
-            message = f"scene {scene.scene_id}: lies {np.hypot(shift.dx_px, shift.dy_px):.1f} pixels off the other scenes, over the limit of {plan.shift_limit_px:g}; it is set aside (key 'extent.shift_limit_px')"
-            raise InputError(message)
-        if plan.normalise:
-            gain = plan.reference.gain(view, shift)
-            detail["gain"] = gain.as_dict()
-    if job.want_view and view is not None:
-        kept = type(view)(view.scene_id, view.bands, view.blocks[: len(own)])
-        kept = _settled(kept, plan.detail, shift, gain)
-        reflectance, code = _gather(plan.site, kept)
-        context = scene_context(reflectance, kept.bands, code, plan.ground)
-        detail["ground"] = [float(v) for v in context]
-        detail["clear"] = float(np.mean(code == ViewCode.CLEAR))
-        detail["bytes"] = write_view(archive.view(scene.scene_id), kept.bands, reflectance, code)
-    if job.label_site is not None:
-        windows = grown(job.label_site, plan.reference is not None)
-        under = _settled(read_view(scene, plan.profile, job.label_site.grid, windows), plan.detail, shift, gain)
-        reflectance, code = _gather(job.label_site, under)
-        write_view(archive.sample(scene.scene_id), under.bands, reflectance, code)
-    return detail
+    plan = job.plan
+    view = read_view(job.scene, plan.profile, site.grid, grown(site, plan.reference is not None))
+    reflectance, code = _empty(site, view.bands)
+    _collect(plan, site, tuple(range(len(site.windows))), view, settle, (reflectance, code))
+    write_view(Archive(plan.out).sample(job.scene.scene_id), view.bands, reflectance, code)
+
+
+def _empty(site: Site, roles: tuple[str, ...]) -> tuple[np.ndarray, np.ndarray]:
+    return np.full((len(roles), site.size), np.nan, np.float32), np.full(site.size, int(ViewCode.FILL), np.uint8)
+
+
+def _collect(
+    plan: ReadPlan,
+    site: Site,
+    numbers: tuple[int, ...],
+    view: View,
+    settle: tuple[Any, Any],
+    out: tuple[np.ndarray, np.ndarray],
+) -> None:
+    """Settle the blocks of some of a site's windows one by one, and take the site's pixels out of each."""
+    for number, block in zip(numbers, view.blocks, strict=False):
+        (settled,) = _settled(type(view)(view.scene_id, view.bands, (block,)), plan.detail, *settle).blocks
+        place = site.place(number)
+        out[0][:, place] = site.pick(number, settled.window, settled.reflectance)
+        out[1][place] = site.pick(number, settled.window, settled.code)
 
 
 def grown(site: Site, shifting: bool) -> tuple[Window, ...]:
@@ -146,9 +226,3 @@ def _settled(view: View, detail: Any, shift: Any, gain: Any) -> View:
     if gain is not None:
         view = apply_gain(view, gain)
     return view if shift is None else apply_shift(view, shift)
-
-
-def _gather(site: Site, view: View) -> tuple[np.ndarray, np.ndarray]:
-    reflectance = site.gather(((b.window, b.reflectance) for b in view.blocks), np.nan, np.dtype(np.float32))
-    code = site.gather(((b.window, b.code) for b in view.blocks), int(ViewCode.FILL), np.dtype(np.uint8))
-    return reflectance, code

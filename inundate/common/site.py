@@ -2,13 +2,15 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 
 import numpy as np
-from scipy import ndimage
 
 from inundate.common.grid import Grid, Window
+
+
+def _none() -> np.ndarray:
+    return np.zeros(0, np.int64)
 
 
 @dataclass(frozen=True, slots=True)
@@ -21,12 +23,18 @@ class Site:
     rows, cols : ndarray of int32, shape (pixel,)
     windows : tuple of Window
         Disjoint windows that together hold every site pixel (and some others).
+    order : ndarray of int64, shape (pixel,)
+        Positions sorted by window; see :meth:`place`.
+    starts : ndarray of int64, shape (window + 1,)
+        Where each window's positions begin in ``order``.
     """
 
     grid: Grid
     rows: np.ndarray
     cols: np.ndarray
     windows: tuple[Window, ...]
+    order: np.ndarray = field(default_factory=_none)
+    starts: np.ndarray = field(default_factory=_none)
 
     @property
     def size(self) -> int:
@@ -43,39 +51,32 @@ class Site:
         hit = (key[place] == wanted) & self.grid.inside(rows, cols) if key.size else np.zeros(wanted.shape, bool)
         return np.where(hit, place, -1)
 
-    def gather(self, blocks: Iterable[tuple[Window, np.ndarray]], fill: float, dtype: np.dtype) -> np.ndarray:
-        """Collect site pixels from blocks.
+    def place(self, number: int) -> np.ndarray:
+        """Return positions (int64, ascending) of the site pixels of one window."""
+        return self.order[self.starts[number] : self.starts[number + 1]]
+
+    def pick(self, number: int, window: Window, values: np.ndarray) -> np.ndarray:
+        """Take the site pixels of one window out of an array over it.
 
         Parameters
         ----------
-        blocks : iterable of (Window, ndarray)
-            Arrays of shape (..., row, column) over windows; windows may lie outside the site's.
-        fill : float
-            Value of site pixels that no block holds.
-        dtype : numpy dtype
-            Type of the result.
+        number : int
+            Which of the site's windows.
+        window : Window
+            What ``values`` spans: the site's window, or a wider one around it.
+        values : ndarray, shape (..., row, column)
 
         Returns
         -------
         ndarray, shape (..., pixel)
+            In the order of :meth:`place`.
         """
-        out: np.ndarray | None = None
-        for window, values in blocks:
-            if out is None:
-                out = np.full((*values.shape[:-2], self.size), fill, dtype=dtype)
-            inside = (
-                (self.rows >= window.row0)
-                & (self.rows < window.row1)
-                & (self.cols >= window.col0)
-                & (self.cols < window.col1)
-            )
-            place = np.flatnonzero(inside)
-            out[..., place] = values[..., self.rows[place] - window.row0, self.cols[place] - window.col0]
-        return np.full(self.size, fill, dtype=dtype) if out is None else out
+        place = self.place(number)
+        return values[..., self.rows[place] - window.row0, self.cols[place] - window.col0]
 
 
 def make_site(grid: Grid, rows: np.ndarray, cols: np.ndarray, *, margin: int = 0, block: int = 256) -> Site:
-    """Build a site from grid cells.
+    """Build a site from grid cells, in time and memory of the cells, not of the grid.
 
     Parameters
     ----------
@@ -92,16 +93,24 @@ def make_site(grid: Grid, rows: np.ndarray, cols: np.ndarray, *, margin: int = 0
     -------
     Site
     """
-    rows, cols = np.asarray(rows, np.int64), np.asarray(cols, np.int64)
-    keep = grid.inside(rows, cols)
-    wanted = np.zeros((grid.height, grid.width), bool)
-    wanted[rows[keep], cols[keep]] = True
+    r, c = np.asarray(rows, np.int64).ravel(), np.asarray(cols, np.int64).ravel()
+    r, c = _distinct(grid, r, c)
     if margin > 0:
-        wanted = ndimage.binary_dilation(wanted, np.ones((2 * margin + 1, 2 * margin + 1), bool))
-    r, c = np.nonzero(wanted)
-    windows = []
+        steps = np.arange(-margin, margin + 1)
+        r, c = _distinct(grid, (r[:, None] + steps).ravel(), np.repeat(c, steps.size))
+        r, c = _distinct(grid, np.repeat(r, steps.size), (c[:, None] + steps).ravel())
     label = (r // block) * (grid.width // block + 1) + c // block
-    for one in np.unique(label):
-        mine = label == one
-        windows.append(Window(int(r[mine].min()), int(r[mine].max()) + 1, int(c[mine].min()), int(c[mine].max()) + 1))
-    return Site(grid, r.astype(np.int32), c.astype(np.int32), tuple(windows))
+    order = np.argsort(label, kind="stable")
+    first = np.flatnonzero(np.diff(label[order], prepend=-1))
+    edges = (
+        [f.reduceat(v[order], first) for v in (r, c) for f in (np.minimum, np.maximum)] if order.size else [first] * 4
+    )
+    windows = tuple(Window(int(a), int(b) + 1, int(d), int(e) + 1) for a, b, d, e in zip(*edges, strict=True))
+    return Site(grid, r.astype(np.int32), c.astype(np.int32), windows, order, np.append(first, order.size))
+
+
+def _distinct(grid: Grid, rows: np.ndarray, cols: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+    """Return the distinct cells on the grid, row-major."""
+    keep = grid.inside(rows, cols)
+    key = np.unique(rows[keep] * grid.width + cols[keep])
+    return key // grid.width, key % grid.width

@@ -11,12 +11,12 @@ from inundate.scenes.elevation import read_elevation
 from inundate.scenes.looks import ShiftOptions
 from inundate.scenes.masks import MaskRule, MaskRules
 from inundate.scenes.normalise import Gain, apply_gain
-from inundate.scenes.reading import read_view
+from inundate.scenes.reading import SceneReader, read_view
 from inundate.scenes.reference import CHANNELS, NO_SHIFT, Reference, Shift
 from inundate.scenes.scene import BandSource, MaskSource, Scene, SceneError, fingerprint
 from inundate.scenes.sensors import SHIPPED_PROFILES, SensorProfile, load_profile
 from inundate.scenes.shifting import apply_shift
-from inundate.scenes.view import Block, SiteGather, View
+from inundate.scenes.view import Block, View
 
 __all__ = [
     "CHANNELS",
@@ -33,10 +33,10 @@ __all__ = [
     "Reference",
     "Scene",
     "SceneError",
+    "SceneReader",
     "SensorProfile",
     "Shift",
     "ShiftOptions",
-    "SiteGather",
     "View",
     "add_detail",
     "apply_gain",

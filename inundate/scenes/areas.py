@@ -10,8 +10,8 @@ from rasterio.errors import CRSError, RasterioError
 
 from inundate.common.errors import InputError
 from inundate.common.grid import Grid, Window
+from inundate.scenes.files import parse_crs
 from inundate.scenes.places import gdal_name
-from inundate.scenes.reading import parse_crs
 from inundate.scenes.scene import Scene
 from inundate.scenes.sensors import SensorProfile
 

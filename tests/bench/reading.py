@@ -20,7 +20,7 @@ import rasterio
 
 from inundate.common.grid import Window
 from inundate.common.site import make_site
-from inundate.scenes import Reference, SiteGather, apply_shift, area_grid, load_profile, open_catalog, read_view
+from inundate.scenes import Reference, apply_shift, area_grid, load_profile, open_catalog, read_view
 from inundate.scenes.scene import Scene
 
 sys.path.insert(0, str(Path(__file__).parents[1]))
@@ -139,7 +139,9 @@ def one_tile(place: Path, count: int) -> None:
     start = time.process_time()
     view = read_view(scene, PROFILE, grid, windows)
     spent = time.process_time() - start
-    SiteGather(site, windows).take(view)
+    taken = np.full((len(view.bands), site.size), np.nan, np.float32)
+    for number, block in enumerate(view.blocks):
+        taken[:, site.place(number)] = site.pick(number, block.window, block.reflectance)
     after = peak_kb()
     held = sum(block.reflectance.nbytes + block.code.nbytes for block in view.blocks)
     print(f"  {grid.width} px wide, {len(windows)} windows, blocks hold {held / 1e6:.0f} MB: {spent:.2f} s", end="")
