@@ -3,12 +3,14 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Iterator, Sequence
+from contextlib import suppress
 from dataclasses import dataclass
 from typing import Any, TypeVar
 
 from inundate.batch.pipeline import Compute
 from inundate.common.errors import InputError
 
+IN_FLIGHT = 4  # units on their way for each thread of the workers
 Job = TypeVar("Job")
 Result = TypeVar("Result")
 
@@ -82,7 +84,7 @@ def _locally(
     import dask
 
     scheduler = "processes" if compute.scheduler == "processes" else "threads"
-    batch = compute.workers * 4
+    batch = compute.workers * IN_FLIGHT
     for start in range(0, len(todo), batch):
         units = [dask.delayed(_guarded, pure=False)(function, i, jobs[i]) for i in todo[start : start + batch]]
         yield from dask.compute(*units, scheduler=scheduler, num_workers=compute.workers)
@@ -106,15 +108,21 @@ def _on_cluster(function: Callable[[Job], Result], jobs: Sequence[Job], address:
         message = f"compute.scheduler: no cluster answers at {address!r} ({err}); start it, or use 'threads'"
         raise InputError(message) from err
     try:
-        futures = [
-            client.submit(_guarded, function, i, job, pure=False, retries=3, key=f"unit-{i}-{id(jobs)}")
-            for i, job in enumerate(jobs)
-        ]
-        for future in as_completed(futures, loop=client.loop):
+        flight = IN_FLIGHT * max(sum(client.nthreads().values()), 1)  # jobs hold arrays: few on their way at a time
+        waiting = iter(enumerate(jobs))
+
+        def submit() -> Any:
+            i, job = next(waiting)
+            return client.submit(_guarded, function, i, job, pure=False, retries=3, key=f"unit-{i}-{id(jobs)}")
+
+        ended = as_completed([submit() for _ in range(min(flight, len(jobs)))], loop=client.loop)
+        for future in ended:
             if future.status == "finished":
                 yield future.result()
+                with suppress(StopIteration):
+                    ended.add(submit())
             elif future.status in ("cancelled", "lost"):
-                message = f"unit {futures.index(future)} {future.status}"
+                message = f"{future.key} {future.status}"
                 raise _ClusterLostError(message)
             else:
                 from distributed.scheduler import KilledWorker

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import warnings
+from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -12,25 +13,22 @@ from inundate.batch.archive import ROWS, read_score
 from inundate.batch.compute import run_units
 from inundate.batch.imagery import array_mark
 from inundate.batch.layout import Layout
-from inundate.batch.mapping import (
-    SCORE_COLUMNS,
-    UNLIKE_SCALE,
-    ScoreJob,
-    dark_value,
-    haze_value,
-    ndvi_value,
-    score_scene,
-)
+from inundate.batch.mapping import UNLIKE_SCALE, ScoreJob, dark_value, haze_value, ndvi_value, score_scene
 from inundate.batch.seasons import ScenePlace
 from inundate.batch.training import Trained
 from inundate.batch.work import Inputs, Work, code_mark, settings_mark, table_mark
 from inundate.common.codes import LeafCode, ViewCode
+from inundate.common.seeds import seed_for
 from inundate.common.writing import write_table
 
 if TYPE_CHECKING:
-    from inundate.extent import SceneStack
+    from inundate.extent import ExtentObserver, SceneStack
+    from inundate.extent.noise import NoiseModel
     from inundate.leaves import LeafCalendar
 
+STACK_SHARE = 0.4  # of the memory setting, for the stack of one group of wetlands
+STACK_BYTES = 16  # of a pixel in a scene while a stack is built, the veil's floats beside it
+SAMPLE_BYTES = 200e6  # of the stack that noise is learnt from, whatever the memory setting
 Leaves = tuple["LeafCalendar", pd.DataFrame]
 
 
@@ -113,118 +111,150 @@ def observe(
     return table
 
 
+@dataclass(frozen=True, slots=True)
+class Group:
+    """Wetlands that are observed together.
+
+    Attributes
+    ----------
+    rows : ndarray of int64, shape (wetland,)
+        Rows of the wetlands table, ascending.
+    pixels : ndarray of int64, shape (pixel,)
+        Positions of their site pixels, ascending: those with a share in them, and all of every wetland that owns one.
+    """
+
+    rows: np.ndarray
+    pixels: np.ndarray
+
+
 def _observe_groups(
     work: Work, inputs: Inputs, layout: Layout, places: list[ScenePlace], code: np.ndarray, share: np.ndarray
 ) -> pd.DataFrame:
+    """Learn noise from a sample of wetlands, then observe group by group; how they are grouped changes no value."""
     from inundate.extent import ExtentObserver, other_shares
 
-    errors = None
     weights = layout.weights.copy()
     weights["row"] = layout.site.rows[weights["pixel"]]
     weights["col"] = layout.site.cols[weights["pixel"]]
     weights["other_share"] = other_shares(weights["pixel"].to_numpy(), weights["share"].to_numpy())
-    tables, noise = [], None
-    for group, low, high in wetland_groups(work, layout, len(places)):
-        wetlands = layout.wetlands.iloc[group]
-        mine = weights[weights["wetland_id"].isin(wetlands["wetland_id"])].copy()
-        mine["pixel"] -= low
-        cells = layout.cells
-        if cells is not None:
-            cells = cells[cells["wetland_id"].isin(wetlands["wetland_id"])].copy()
-            cells["pixel"] -= low
-        stack = build_stack(work, layout, places, (group, low, high), code[:, group], share)
-        observer = ExtentObserver(
-            mine, wetlands, pixel_area_m2=layout.grid.pixel_area_m2, cells=cells, errors=errors, noise=noise
-        ).fit(stack)
-        noise = observer.noise_
+
+    def learnt(group: Group, noise: NoiseModel | None) -> tuple[ExtentObserver, SceneStack]:
+        wetlands = layout.wetlands.iloc[group.rows]
+        mine = _onto(weights, wetlands, group)
+        cells = None if layout.cells is None else _onto(layout.cells, wetlands, group)
+        stack = build_stack(work, layout, places, group, code, share)
+        observer = ExtentObserver(mine, wetlands, pixel_area_m2=layout.grid.pixel_area_m2, cells=cells, noise=noise)
+        return observer.fit(stack), stack
+
+    pixel_bytes = STACK_BYTES * max(len(places), 1)
+    groups = wetland_groups(layout, int(STACK_SHARE * work.pipeline.compute.memory_mb * 1e6 / pixel_bytes))
+    sample = noise_sample(layout, int(SAMPLE_BYTES / pixel_bytes))
+    noise = None
+    if len(groups) > 1 or sample.size < len(layout.wetlands):
+        noise = learnt(_group(layout, sample), None)[0].noise_
+    tables = []
+    for group in groups:
+        observer, stack = learnt(group, noise)
         tables.append(observer.observe(stack, inputs.decisions))
+        del observer, stack  # before the next is built
     return (
         pd.concat(tables, ignore_index=True).sort_values(["wetland_id", "datetime", "scene_id"]).reset_index(drop=True)
     )
 
 
-def wetland_groups(work: Work, layout: Layout, n_scenes: int) -> list[tuple[np.ndarray, int, int]]:
-    """Split wetlands into groups whose stacks keep to the memory bound.
+def _onto(table: pd.DataFrame, wetlands: pd.DataFrame, group: Group) -> pd.DataFrame:
+    """Return the rows of a group's wetlands, with ``pixel`` counted in the group's pixels."""
+    mine = table[table["wetland_id"].isin(wetlands["wetland_id"])].copy()
+    mine["pixel"] = np.searchsorted(group.pixels, mine["pixel"].to_numpy())
+    return mine
 
-    Returns
-    -------
-    list of (rows of the wetlands table, first site pixel, last site pixel + 1)
+
+def noise_sample(layout: Layout, most_pixels: int, most_wetlands: int = 300) -> np.ndarray:
+    """Return rows (ascending) of the wetlands that noise is learnt from: by lot of their names, until there are enough.
+
+    The sample depends on no setting of memory or workers, so that values do not either.
     """
-    n, size = len(layout.wetlands), layout.site.size
-    low, high = np.full(n, size, np.int64), np.zeros(n, np.int64)
-    held = np.flatnonzero(layout.owner >= 0)  # also the pixels around a wetland, which tell of shadow and haze
-    np.minimum.at(low, layout.owner[held], held)
-    np.maximum.at(high, layout.owner[held], held + 1)
-    low = np.minimum(low, high)
-    order = np.argsort(low, kind="stable")
-    most = max(int(work.pipeline.compute.memory_mb * 0.4e6 / (max(n_scenes, 1) * 16)), 1)
-    groups, start = [], 0
-    while start < order.size:
-        stop = start + 1
-        while stop < order.size and high[order[start : stop + 1]].max() - low[order[start]] <= most:
-            stop += 1
-        rows = np.sort(order[start:stop])
-        groups.append((rows, int(low[rows].min()), int(high[rows].max())))
-        start = stop
-    return groups
+    ids = layout.wetlands["wetland_id"].to_numpy()
+    size = np.bincount(layout.owner[layout.owner >= 0], minlength=ids.size)
+    lot = sorted(range(ids.size), key=lambda i: seed_for(0, "noise", ids[i]))
+    order = np.array([i for i in lot if size[i]], np.int64)[:most_wetlands]
+    enough = max(int(np.searchsorted(np.cumsum(size[order]), most_pixels, side="right")), 1)
+    return np.sort(order[:enough])
+
+
+def wetland_groups(layout: Layout, most_pixels: int) -> list[Group]:
+    """Split wetlands, by the row of their first pixel, into groups of so many site pixels at most (or one wetland)."""
+    count = len(layout.wetlands)
+    size = np.bincount(layout.owner[layout.owner >= 0], minlength=count)
+    first = layout.weights.groupby("wetland_id")["pixel"].min().reindex(layout.wetlands["wetland_id"])
+    order = np.argsort(first.fillna(-1).to_numpy(), kind="stable")
+    groups, start, held = [], 0, 0
+    for stop, row in enumerate(order):
+        if stop > start and held + size[row] > most_pixels:
+            groups.append(_group(layout, np.sort(order[start:stop])))
+            start, held = stop, 0
+        held += size[row]
+    return [*groups, _group(layout, np.sort(order[start:]))]
+
+
+def _group(layout: Layout, rows: np.ndarray) -> Group:
+    ids = layout.wetlands["wetland_id"].iloc[rows]
+    shared = layout.weights.loc[layout.weights["wetland_id"].isin(ids), "pixel"].to_numpy()
+    owners = np.union1d(rows, layout.owner[shared])
+    return Group(rows, np.union1d(shared, np.flatnonzero(np.isin(layout.owner, owners))))
 
 
 def build_stack(
-    work: Work,
-    layout: Layout,
-    places: list[ScenePlace],
-    where: tuple[np.ndarray, int, int],
-    code: np.ndarray,
-    share: np.ndarray,
+    work: Work, layout: Layout, places: list[ScenePlace], group: Group, code: np.ndarray, share: np.ndarray
 ) -> SceneStack:
-    """Read the scores of a range of site pixels into a stack in time; share is (scene, wetland of the layout)."""
+    """Read the scores of a group's pixels into a stack in time; code and share are (scene, wetland of the layout)."""
     from inundate.extent import SceneStack, shaded, veiled
 
-    group, low, high = where
-    n = len(places)
-    span = (low // ROWS, -(-high // ROWS))
-    cut = slice(low - span[0] * ROWS, high - span[0] * ROWS)
-    stack = {name: np.full((n, high - low), 255, np.uint8) for name in SCORE_COLUMNS}
+    n, pixels = len(places), group.pixels
+    span = (int(pixels[0]) // ROWS, int(pixels[-1]) // ROWS + 1) if pixels.size else (0, 1)
     names = ("fraction", "fraction_sd", "unlike", "ndvi", "haze", "dark", "code")
+    stack = {name: np.full((n, pixels.size), 255, np.uint8) for name in names}
     for i, place in enumerate(places):
         for name, values in zip(names, read_score(work.archive.score(place.scene_id), names, span), strict=True):
-            stack[name][i] = values[cut]
-    owner = layout.owner[low:high]
+            stack[name][i] = values[pixels - span[0] * ROWS]
+    owner = layout.owner[pixels]
     leafy = share[:, owner] > 0.5
-    veil = veiled(haze_value(stack["haze"]), stack["code"], owner)
-    spot = np.column_stack([layout.site.rows[low:high], layout.site.cols[low:high]]).astype(float)
-    veil |= shaded(dark_value(stack["dark"]), stack["code"], owner, layout.dry_ground()[low:high], spot, leafy)
+    veil = veiled(haze_value(stack.pop("haze")), stack["code"], owner)
+    spot = np.column_stack([layout.site.rows[pixels], layout.site.cols[pixels]]).astype(float)
+    veil |= shaded(dark_value(stack.pop("dark")), stack["code"], owner, layout.dry_ground()[pixels], spot, leafy)
     stack["code"][veil] = ViewCode.CLOUD
     stack["fraction"][veil] = 255
-    view = canopy_view(stack["ndvi"], share[:, owner])
+    view = canopy_view(stack.pop("ndvi"), share, owner)
     return SceneStack(
         scene_id=np.array([p.scene_id for p in places], object),
         datetime=np.array([p.datetime for p in places], "datetime64[ns]"),
         fraction=stack["fraction"],
         code=stack["code"],
-        wetland_id=layout.wetlands["wetland_id"].to_numpy()[group],
-        leaf_state=code,
+        wetland_id=layout.wetlands["wetland_id"].to_numpy()[group.rows],
+        leaf_state=code[:, group.rows],
         view=view,
         fraction_sd=stack["fraction_sd"],
         unlike=(stack["unlike"] > 100 * UNLIKE_SCALE) & (stack["unlike"] != 255) & (stack["code"] == ViewCode.CLEAR),
     )
 
 
-def canopy_view(ndvi: np.ndarray, leaf_share: np.ndarray) -> np.ndarray:
+def canopy_view(ndvi: np.ndarray, leaf_share: np.ndarray, owner: np.ndarray) -> np.ndarray:
     """Return the share of each pixel's ground that its canopy lets through, percent (scene, pixel), from its own greenness.
 
     Parameters
     ----------
     ndvi : ndarray of uint8, shape (scene, pixel)
         0..200, 255 missing (see mapping.ndvi_code).
-    leaf_share : ndarray of float32, shape (scene, pixel)
+    leaf_share : ndarray of float32, shape (scene, wetland)
+    owner : ndarray of int, shape (pixel,)
+        Wetland of each pixel.
     """
     from inundate.leaves import view_fraction
 
     out = np.empty(ndvi.shape, np.uint8)
     for start in range(0, ndvi.shape[1], 4096):
         part = slice(start, start + 4096)
-        values, leaf = ndvi_value(ndvi[:, part]), leaf_share[:, part]
+        values, leaf = ndvi_value(ndvi[:, part]), leaf_share[:, owner[part]]
         with warnings.catch_warnings():
             warnings.simplefilter("ignore", RuntimeWarning)
             peak = np.nanpercentile(np.where(leaf >= 0.9, values, np.nan), 80, axis=0)

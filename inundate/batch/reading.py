@@ -14,7 +14,7 @@ from inundate.common.grid import Window
 from inundate.common.site import Site
 
 if TYPE_CHECKING:
-    from inundate.scenes import Scene, SceneReader, SensorProfile, View
+    from inundate.scenes import Scene, SensorProfile, View
 
 MARGIN_PX = 6  # pixels around windows that shifting and lending detail need
 
@@ -114,30 +114,40 @@ def read_scene(job: ReadJob) -> dict[str, Any]:
     InputError
         When it lies further off than the limit.
     """
-    from inundate.scenes import SceneReader
-
-    plan, scene = job.plan, job.scene
     detail: dict[str, Any] = {"read_bytes": 0}
-    shift = gain = None
-    if job.want_view or plan.context:
-        with SceneReader(scene, plan.profile, plan.site.grid) as reader:
-            batches: list[tuple[int, ...]] = plan.batches(len(reader.roles)) if job.want_view else [()]
-            own = plan.windows
-            first = reader.read((*(own[i] for i in batches[0]), *plan.context))
-            detail["read_bytes"] = _held(first)
-            if plan.reference is not None:
-                shift, gain = _place(plan, first, detail)
-            if job.want_view:
-                _keep_view(job, reader, batches, first, (shift, gain), detail)
-            else:
-                reader.check()
+    settle: tuple[Any, Any] = (None, None)
+    if job.want_view or job.plan.context:
+        settle = _read_windows(job, detail)
     if job.label_site is not None:
-        _keep_sample(job, job.label_site, (shift, gain))
+        _keep_sample(job, job.label_site, settle)
     return detail
 
 
-def _held(view: View) -> int:
-    return int(sum(block.reflectance.nbytes for block in view.blocks))
+def _read_windows(job: ReadJob, detail: dict[str, Any]) -> tuple[Any, Any]:
+    """Read context and site windows batch by batch; return shift and gain, and leave the view where it is wanted."""
+    from inundate.pixels import scene_context
+    from inundate.scenes import SceneReader
+
+    plan, own = job.plan, job.plan.windows
+    settle: tuple[Any, Any] = (None, None)
+    with SceneReader(job.scene, plan.profile, plan.site.grid) as reader:
+        batches: list[tuple[int, ...]] = plan.batches(len(reader.roles)) if job.want_view else [()]
+        out = _empty(plan.site, reader.roles) if job.want_view else None
+        for turn, batch in enumerate(batches):
+            view = reader.read([*(own[i] for i in batch), *(() if turn else plan.context)])
+            detail["read_bytes"] += int(sum(block.reflectance.nbytes for block in view.blocks))
+            if turn == 0 and plan.reference is not None:
+                settle = _place(plan, view, detail)
+            if out is not None:
+                _collect(plan, plan.site, batch, view, settle, out)
+            del view  # before the next batch is read
+        reader.check()
+    if out is not None:
+        reflectance, code = out
+        detail["ground"] = [float(v) for v in scene_context(reflectance, reader.roles, code, plan.ground)]
+        detail["clear"] = float(np.mean(code == ViewCode.CLEAR))
+        detail["bytes"] = write_view(Archive(plan.out).view(job.scene.scene_id), reader.roles, reflectance, code)
+    return settle
 
 
 def _place(plan: ReadPlan, view: View, detail: dict[str, Any]) -> tuple[Any, Any]:
@@ -154,30 +164,6 @@ def _place(plan: ReadPlan, view: View, detail: dict[str, Any]) -> tuple[Any, Any
     gain = plan.reference.gain(view, shift)
     detail["gain"] = gain.as_dict()
     return shift, gain
-
-
-def _keep_view(
-    job: ReadJob,
-    reader: SceneReader,
-    batches: list[tuple[int, ...]],
-    view: View,
-    settle: tuple[Any, Any],
-    detail: dict[str, Any],
-) -> None:
-    """Collect the site pixels batch by batch of windows, the first of which is read, and write the scene's view."""
-    from inundate.pixels import scene_context
-
-    plan, own = job.plan, job.plan.windows
-    reflectance, code = _empty(plan.site, reader.roles)
-    for turn, batch in enumerate(batches):
-        if turn:
-            view = reader.read([own[i] for i in batch])
-            detail["read_bytes"] += _held(view)
-        _collect(plan, plan.site, batch, view, settle, (reflectance, code))
-    reader.check()
-    detail["ground"] = [float(v) for v in scene_context(reflectance, reader.roles, code, plan.ground)]
-    detail["clear"] = float(np.mean(code == ViewCode.CLEAR))
-    detail["bytes"] = write_view(Archive(plan.out).view(job.scene.scene_id), reader.roles, reflectance, code)
 
 
 def _keep_sample(job: ReadJob, site: Site, settle: tuple[Any, Any]) -> None:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
@@ -20,6 +21,7 @@ if TYPE_CHECKING:
     from inundate.scenes import Scene, SensorProfile, View
 
 MOST_VIEWS = 32  # views looked at for the reference, the least cloudy of each quarter of the year
+NEEDED = ("blue", "green", "red", "nir", "nir08", "swir16", "swir22")  # by shifts, greenness and detail
 REGROWTH = 3  # the reference is built again when the archive holds this many times the scenes it was chosen from
 
 
@@ -44,13 +46,14 @@ class ContextJob:
     profile: SensorProfile
     grid: Grid
     windows: tuple[Window, ...]
+    bands: tuple[str, ...] | None
 
 
 def read_context(job: ContextJob) -> View:
     """Read the context windows of a scene."""
     from inundate.scenes import read_view
 
-    return read_view(job.scene, job.profile, job.grid, job.windows, all_windows=True)
+    return read_view(job.scene, job.profile, job.grid, job.windows, bands=job.bands, all_windows=True)
 
 
 def make_registrar(work: Work, inputs: Inputs, layout: Layout, scenes: list[Scene]) -> Registrar:
@@ -72,11 +75,12 @@ def make_registrar(work: Work, inputs: Inputs, layout: Layout, scenes: list[Scen
             layout.grid.width,
         ],
         "limit": work.pipeline.extent.shift_limit_px,
+        "every band": work.pipeline.extent.normalisation,  # gains are told for every band
         "code": code_mark("scenes"),
     }
     unit = work.ledger.get("reference", "all")
     there = unit is not None and (unit.state == "set_aside" or path.exists())
-    if unit is not None and there and {k: unit.parts[k] for k in fixed} == fixed:
+    if unit is not None and there and {k: unit.parts.get(k) for k in fixed} == fixed:
         used = unit.parts["scenes"]
         if all(marks.get(k) == v for k, v in used.items()) and len(scenes) < REGROWTH * unit.detail["of"]:
             if unit.state == "set_aside":
@@ -87,16 +91,20 @@ def make_registrar(work: Work, inputs: Inputs, layout: Layout, scenes: list[Scen
     windows = context_windows(layout.grid)
     chosen = choose_scenes(scenes)
     with work.progress.step("co-registration reference", len(chosen)) as advance:
-        jobs = [ContextJob(s, inputs.profile, layout.grid, windows) for s in chosen]
+        bands = None if fixed["every band"] else tuple(r for r in inputs.profile.roles if r in NEEDED)
+        jobs = [
+            ContextJob(s, inputs.profile, layout.grid, windows, bands and tuple(b for b in bands if b in s.bands))
+            for s in chosen
+        ]
         views: list[View] = []
         for outcome in run_units(read_context, jobs, work.pipeline.compute, work.progress.say):
             if outcome.error is None:
                 views.append(outcome.result)
             advance()
         views.sort(key=lambda v: v.scene_id)
-        reference, bare = _build(work, views, ShiftOptions(limit_px=work.pipeline.extent.shift_limit_px))
-        detail = lend_detail(chosen, bare, layout.grid)
         parts = {**fixed, "scenes": {v.scene_id: marks[v.scene_id] for v in views}}
+        options = ShiftOptions(limit_px=work.pipeline.extent.shift_limit_px)
+        reference, detail = _build(work, views, options, lambda bare: lend_detail(chosen, bare, layout.grid))
         if reference is None:
             work.ledger.put("reference", "all", parts, state="set_aside", detail={"of": len(scenes)})
             return Registrar()
@@ -143,26 +151,29 @@ def choose_scenes(scenes: list[Scene], most: int = MOST_VIEWS) -> list[Scene]:
     return sorted(out, key=lambda s: (s.datetime, s.scene_id))
 
 
-def _build(work: Work, views: list[View], options: Any) -> tuple[Any, list[View]]:
-    """Return the reference (None where there cannot be one) and the leafless views."""
+def _build(work: Work, views: list[View], options: Any, lend: Callable[[list[View]], Any]) -> tuple[Any, Any]:
+    """Return the reference and the detail, either None where there cannot be one; uses the list of views up."""
     from inundate.common.errors import InputError
     from inundate.scenes import Reference
 
     usable = [v for v in views if v.clear_fraction() > 0.3]
+    views.clear()
     if len(usable) < 3:
         work.notes.append(
             f"co-registration: only {len(usable)} views are clear enough for a reference; scenes are used as they lie"
         )
-        return None, []
+        return None, None
     green = np.array([greenness(v) for v in usable])
     middle = np.nanmean(np.nanpercentile(green, [10, 90]))
     groups = {v.scene_id: "green" if g > middle else "bare" for v, g in zip(usable, green, strict=True)}
-    bare = [v for v in usable if groups[v.scene_id] == "bare"]
+    detail = lend([v for v in usable if groups[v.scene_id] == "bare"])
+    usable.reverse()
+    one_by_one = (usable.pop() for _ in range(len(usable)))
     try:
-        return Reference.from_views(usable, groups=groups, options=options), bare
+        return Reference.from_views(one_by_one, groups=groups, options=options), detail
     except InputError as err:
         work.notes.append(f"co-registration: {err}; scenes are used as they lie")
-        return None, bare
+        return None, detail
 
 
 def greenness(view: View) -> float:

@@ -17,7 +17,7 @@ from rasterio.warp import transform_bounds
 from rasterio.windows import Window as FileWindow
 
 from inundate.common.grid import Grid, Window
-from inundate.scenes.places import gdal_name, with_retries
+from inundate.scenes.places import gdal_name, is_remote, with_retries
 from inundate.scenes.planning import Box, plan_reads
 from inundate.scenes.scene import Scene, SceneError
 
@@ -30,9 +30,9 @@ _GDAL = {
     "GDAL_HTTP_MERGE_CONSECUTIVE_RANGES": "YES",
     "GDAL_HTTP_MAX_RETRY": "3",
     "GDAL_HTTP_RETRY_DELAY": "0.5",
-    "VSI_CACHE": "TRUE",
     "GDAL_CACHEMAX": 64_000_000,
 }
+_REMOTE = {"VSI_CACHE": "TRUE", "VSI_CACHE_SIZE": "4000000"}  # one for each file; local files are cached by the system
 
 
 @dataclass(frozen=True, slots=True)
@@ -80,7 +80,8 @@ class SceneFiles:
         self._sources: dict[tuple[str, int, bool], Source] = {}
 
     def __enter__(self) -> SceneFiles:
-        self._stack.enter_context(rasterio.Env(**_GDAL))
+        remote = any(is_remote(href) for href in self.scene.files)
+        self._stack.enter_context(rasterio.Env(**_GDAL, **(_REMOTE if remote else {})))
         return self
 
     def __exit__(self, *error: object) -> None:
