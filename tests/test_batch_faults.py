@@ -116,6 +116,45 @@ def test_killed_at_thirty_moments_then_resumed(whole, tmp_path):
     assert not left
 
 
+def test_killed_while_a_standing_delivery_is_replaced(whole, tmp_path):
+    """Kill -9 at moments of a run that adds a scene: what stands under the month's name is the old delivery or the new.
+
+    Each time every byte of one of the two is there, and the last run's delivery equals that of an undisturbed one.
+    """
+    folder, _, _, _ = whole
+    for name in ("calm", "killed"):
+        shutil.copytree(folder, tmp_path / name, copy_function=shutil.copy2)
+        path = tmp_path / name / "inputs" / "scenes" / "collection.json"
+        told = json.loads(path.read_text())
+        have = {link["href"] for link in told["links"]}
+        fresh = sorted(f"./{p.parent.name}/{p.name}" for p in path.parent.glob("*/*.json"))
+        more = next(h for h in fresh if h not in have)
+        path.write_text(json.dumps({**told, "links": [*told["links"], {"rel": "item", "href": more}]}))
+    start = time.perf_counter()
+    calm = run_month(tmp_path / "calm" / "inputs" / "pipeline.toml", month=None, progress=Progress(quiet=True))
+    seconds = time.perf_counter() - start
+    old, new = digests(folder / "out" / "products"), digests(tmp_path / "calm" / "out" / "products")
+    assert old.keys() == new.keys()
+    assert old != new
+    file = tmp_path / "killed" / "inputs" / "pipeline.toml"
+    stood = []
+    for moment in np.linspace(0.15, 0.97, 5) * seconds:
+        run = start_run(file)
+        run.stdin.write("\n")
+        run.stdin.flush()
+        time.sleep(float(moment))
+        run.send_signal(signal.SIGKILL)
+        run.communicate()
+        names = sorted(p for p in (tmp_path / "killed" / "out" / "products").iterdir() if not p.name.startswith("."))
+        here = {f"{n.name}/{k}": v for n in names for k, v in digests(n).items()}
+        assert here in (old, new)
+        stood.append(here == old)
+    assert stood[0]
+    last = run_month(file, month=None, progress=Progress(quiet=True))
+    assert digests(Path(last["products"]).parent) == new
+    assert last["month"] == calm["month"]
+
+
 def test_second_run_names_the_first(whole):
     """While one run holds the archive a second ends with status 2 and says who holds it."""
     folder, file, _, _ = whole
@@ -204,3 +243,29 @@ def test_output_that_cannot_be_written(whole, tmp_path):
     done = CliRunner().invoke(main, ["run", str(file), "--quiet"])
     assert done.exit_code == 2
     assert "key 'output.folder' is" in done.stderr
+
+
+def test_output_on_a_read_only_file_system(whole, tmp_path):
+    """Nothing can be written where a delivery stands: one sentence with the key, status 2, every byte as it was."""
+    if os.geteuid() != 0:
+        pytest.skip("mounting needs root")
+    folder, _, _, _ = whole
+    disk = tmp_path / "disk"
+    disk.mkdir()
+    if subprocess.run(["mount", "-t", "tmpfs", "tmpfs", str(disk)], capture_output=True, check=False).returncode:
+        pytest.skip("this machine does not let a test mount a file system")
+    try:
+        shutil.copytree(folder / "out", disk / "out", copy_function=shutil.copy2)
+        shutil.copytree(folder / "inputs", tmp_path / "inputs")
+        file = tmp_path / "inputs" / "pipeline.toml"
+        file.write_text(file.read_text().replace('folder = "../out"', f'folder = "{disk}/out"'))
+        before = digests(disk / "out")
+        if subprocess.run(["mount", "-o", "remount,ro", str(disk)], capture_output=True, check=False).returncode:
+            pytest.skip("this machine does not let a test mount a file system read-only")
+        done = CliRunner().invoke(main, ["run", str(file), "--quiet"])
+        assert done.exit_code == 2, done.stderr
+        assert "key 'output.folder' is" in done.stderr
+        assert "Read-only file system" in done.stderr
+        assert digests(disk / "out") == before
+    finally:
+        subprocess.run(["umount", "-l", str(disk)], check=False)

@@ -8,7 +8,6 @@ from typing import Any
 import numpy as np
 import pandas as pd
 
-from inundate.batch.archive import Archive
 from inundate.batch.inputs import read_decisions, read_labels, read_walked, read_weather, read_wetlands
 from inundate.batch.pipeline import Pipeline, load_pipeline
 from inundate.batch.progress import Progress
@@ -76,6 +75,8 @@ def check_pipeline(file: str | Path, *, why: bool, progress: Progress) -> dict[s
         "refused": [r.as_dict() for r in report.refused],
     }
     if why:
+        from inundate.batch.reasons import why_lines
+
         result["why"] = why_lines(pipeline, catalog)
     return result
 
@@ -257,59 +258,6 @@ def _check_output(report: _Report, pipeline: Pipeline) -> None:
     report.good(
         "output", f"{pipeline.out}: " + (f"deliveries {months[0]} to {months[-1]}" if months else "no delivery yet")
     )
-
-
-def why_lines(pipeline: Pipeline, catalog: Any) -> list[str]:
-    """Return, in words, what the next run would do and why."""
-    from inundate.batch.ledger import Ledger
-    from inundate.scenes import fingerprint as scene_mark
-
-    archive = Archive(pipeline.out)
-    if not (archive.folder / "ledger.sqlite").exists():
-        return [f"{len(catalog.scenes)} scenes to read: nothing was done yet"]
-    ledger = Ledger(archive.folder / "ledger.sqlite")
-    try:
-        lines = []
-        for scene in catalog.scenes:
-            unit = ledger.get("view", scene.scene_id)
-            if unit is None:
-                lines.append(f"scene {scene.scene_id}: new, to be read")
-            elif unit.parts.get("scene") != scene_mark(scene):
-                lines.append(f"scene {scene.scene_id}: its files, scaling or mask rules changed, to be read again")
-            elif unit.state == "done" and not archive.view(scene.scene_id).exists():
-                lines.append(f"scene {scene.scene_id}: its view is gone from the archive, to be read again")
-            elif unit.state == "set_aside":
-                lines.append(
-                    f"scene {scene.scene_id}: stays set aside until its files change: {unit.detail.get('reason')}"
-                )
-        lines += _changed_inputs(pipeline, ledger)
-        return lines or ["nothing changed: a run would leave the delivery as it stands"]
-    finally:
-        ledger.close()
-
-
-def _changed_inputs(pipeline: Pipeline, ledger: Any) -> list[str]:
-    from inundate.batch.field import logger_marks
-    from inundate.batch.run import ALL_PARTS
-    from inundate.batch.work import code_mark, input_marks
-
-    unit = ledger.get("delivery", "newest")
-    if unit is None:
-        return ["no delivery was finished yet"]
-    now = {**input_marks(pipeline), **logger_marks(pipeline)}
-    old = unit.parts.get("inputs", {})
-    lines = [
-        f"{key}: changed; what depends on it is done again"
-        for key in sorted({*now, *old})
-        if now.get(key) != old.get(key)
-    ]
-    settings = pipeline.model_dump(mode="json", exclude={"file", "compute"})
-    for section in sorted(settings):
-        if settings[section] != unit.parts.get("settings", {}).get(section):
-            lines.append(f"settings of [{section}]: changed; what depends on them is done again")
-    if unit.parts.get("code") != code_mark(*ALL_PARTS):
-        lines.append("the program's own code changed; steps whose code differs are done again")
-    return lines
 
 
 def check_lines(result: dict[str, Any]) -> list[str]:

@@ -2,7 +2,9 @@
 
 from __future__ import annotations
 
+import os
 from dataclasses import replace
+from pathlib import Path
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -103,11 +105,12 @@ def make_stage(pipeline: Pipeline, latitude: dict[str, float], weather: pd.DataF
 
 
 def logger_marks(pipeline: Pipeline) -> dict[str, str]:
-    """Return marks (size and time of change) of every logger file that the registry names."""
+    """Return marks (size and time of change) of every logger file that the registry names, by path from its folder."""
     from inundate.stage import logger_paths, read_registry
 
     files = pipeline.input_files()
     if "loggers.registry" not in files:
         return {}
-    registry = read_registry(files["loggers.registry"])
-    return {f"logger file {path}": stat_mark(str(path)) for path in logger_paths(registry) if path.is_file()}
+    registry, folder = read_registry(files["loggers.registry"]), Path(files["loggers.registry"]).parent
+    found = [path for path in logger_paths(registry) if path.is_file()]
+    return {f"logger file {os.path.relpath(path, folder)}": stat_mark(str(path)) for path in found}

@@ -135,11 +135,10 @@ def read_new(
         "site": array_mark(
             layout.site.rows, layout.site.cols, np.array([layout.grid.west, layout.grid.north, layout.grid.step])
         ),
-        "sensor": inputs.marks["scenes.sensor"],
         "reference": registrar.mark,
         "normalisation": work.pipeline.extent.normalisation,
         "ground": array_mark(layout.dry_ground()),
-        "code": code_mark("scenes"),
+        "code": code_mark("scenes", "batch/reading.py"),
     }
     jobs, parts_of = [], []
     for scene in scenes:

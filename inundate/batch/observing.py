@@ -56,7 +56,7 @@ def map_new(work: Work, layout: Layout, places: list[ScenePlace], leaves: Leaves
             "leaf share": array_mark(share, state),
             "classifier": trained.mark,
             "wetlands": owner,
-            "code": code_mark("pixels"),
+            "code": code_mark("pixels", "batch/mapping.py"),
         }
         score, made = archive.score(place.scene_id), archive.map(place.scene_id)
         why = ledger.why("score", place.scene_id, parts, score)
@@ -99,7 +99,7 @@ def observe(
         "leaf states": array_mark(code, np.round(share, 3)),
         "wetlands": table_mark(layout.weights, layout.wetlands, layout.cells),
         "decisions": table_mark(inputs.decisions),
-        "code": code_mark("extent", "leaves"),
+        "code": code_mark("extent", "leaves", "batch/observing.py"),
         **settings_mark(work.pipeline, "extent"),
     }
     with work.progress.step("observed extent"):

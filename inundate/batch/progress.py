@@ -20,8 +20,22 @@ def give_back() -> None:
         trim(0)
 
 
+def _moved() -> tuple[int, int]:
+    """Return bytes that this process has read and written so far; zeros where the system does not tell."""
+    import psutil
+
+    if not hasattr(psutil.Process, "io_counters"):
+        return 0, 0
+    count = psutil.Process().io_counters()
+    read, written = (getattr(count, f"{k}_chars", getattr(count, f"{k}_bytes")) for k in ("read", "write"))
+    return int(read), int(written)
+
+
 class Progress:
-    """Reports steps and keeps their account (seconds, items, bytes).
+    """Reports steps and keeps their account.
+
+    Of each step: ``seconds``; ``items`` done; ``bytes_read`` and ``bytes_written`` by this process, as the system counts
+    them; ``bytes`` that its items held (pixels decoded, scores left), wherever they were done, or else read and written.
 
     Parameters
     ----------
@@ -45,7 +59,9 @@ class Progress:
     def step(self, name: str, total: int | None = None) -> Iterator[Any]:
         """Account one step; yields ``advance(n=1, nbytes=0)``."""
         start = time.perf_counter()
-        entry = self.account.setdefault(name, {"seconds": 0.0, "items": 0, "bytes": 0})
+        blank = {"seconds": 0.0, "items": 0, "bytes": 0, "bytes_read": 0, "bytes_written": 0}
+        entry = self.account.setdefault(name, blank)
+        before = _moved()
         live = None if self.quiet or not self.stream.isatty() or not total else self._bar(name, total)
         last = [start]
 
@@ -66,6 +82,11 @@ class Progress:
             if live is not None:
                 live[0].stop()
             give_back()
+            now = _moved()
+            entry["bytes_read"] += now[0] - before[0]
+            entry["bytes_written"] += now[1] - before[1]
+            if not total:
+                entry["bytes"] = entry["bytes_read"] + entry["bytes_written"]
             entry["seconds"] = round(entry["seconds"] + time.perf_counter() - start, 3)
             count = f", {entry['items']} items" if entry["items"] else ""
             self.say(f"{name}: {entry['seconds']:.1f} s{count}")

@@ -11,7 +11,7 @@ import pandas as pd
 
 from inundate.batch.compute import run_units
 from inundate.batch.layout import Layout
-from inundate.batch.ledger import fingerprint
+from inundate.batch.ledger import Unit, fingerprint
 from inundate.batch.work import Inputs, Work, code_mark
 from inundate.common.codes import ViewCode
 from inundate.common.grid import Grid, Window
@@ -22,6 +22,7 @@ if TYPE_CHECKING:
 
 MOST_VIEWS = 32  # views looked at for the reference, the least cloudy of each quarter of the year
 NEEDED = ("blue", "green", "red", "nir", "nir08", "swir16", "swir22")  # by shifts, greenness and detail
+MOVED_SHARE = 0.25  # of the reference's scenes: with more of them changed or gone it is built again
 REGROWTH = 3  # the reference is built again when the archive holds this many times the scenes it was chosen from
 
 
@@ -57,14 +58,14 @@ def read_context(job: ContextJob) -> View:
 
 
 def make_registrar(work: Work, inputs: Inputs, layout: Layout, scenes: list[Scene]) -> Registrar:
-    """Load the area's reference, or build it where there is none, its scenes changed, or the archive has outgrown it."""
+    """Load the area's reference, or build it where there is none, many of its scenes changed, or the archive outgrew it."""
     from inundate.scenes import Detail, Reference, ShiftOptions, context_windows
     from inundate.scenes import fingerprint as scene_mark
 
     if not work.pipeline.extent.co_registration:
         return Registrar()
     path = work.archive.folder / "reference.npz"
-    marks = {s.scene_id: scene_mark(s) for s in scenes}
+    marks = {s.scene_id: scene_mark(s) for s in inputs.catalog.scenes}
     fixed = {
         "grid": [
             layout.grid.crs,
@@ -76,18 +77,17 @@ def make_registrar(work: Work, inputs: Inputs, layout: Layout, scenes: list[Scen
         ],
         "limit": work.pipeline.extent.shift_limit_px,
         "every band": work.pipeline.extent.normalisation,  # gains are told for every band
-        "code": code_mark("scenes"),
+        "code": code_mark("scenes", "batch/registering.py"),
     }
     unit = work.ledger.get("reference", "all")
     there = unit is not None and (unit.state == "set_aside" or path.exists())
-    if unit is not None and there and {k: unit.parts.get(k) for k in fixed} == fixed:
-        used = unit.parts["scenes"]
-        if all(marks.get(k) == v for k, v in used.items()) and len(scenes) < REGROWTH * unit.detail["of"]:
-            if unit.state == "set_aside":
-                return Registrar()
-            with np.load(path, allow_pickle=False) as arrays:
-                detail = Detail.from_arrays(arrays) if "slopes" in arrays else None
-                return Registrar(Reference.from_arrays(arrays), context_windows(layout.grid), unit.fingerprint, detail)
+    same = unit is not None and there and {k: unit.parts.get(k) for k in fixed} == fixed
+    if unit is not None and same and not outdated(unit, marks, len(scenes)):
+        if unit.state == "set_aside":
+            return Registrar()
+        with np.load(path, allow_pickle=False) as arrays:
+            detail = Detail.from_arrays(arrays) if "slopes" in arrays else None
+            return Registrar(Reference.from_arrays(arrays), context_windows(layout.grid), unit.fingerprint, detail)
     windows = context_windows(layout.grid)
     chosen = choose_scenes(scenes)
     with work.progress.step("co-registration reference", len(chosen)) as advance:
@@ -100,7 +100,7 @@ def make_registrar(work: Work, inputs: Inputs, layout: Layout, scenes: list[Scen
         for outcome in run_units(read_context, jobs, work.pipeline.compute, work.progress.say):
             if outcome.error is None:
                 views.append(outcome.result)
-            advance()
+            advance(1, sum(b.reflectance.nbytes for b in outcome.result.blocks) if outcome.error is None else 0)
         views.sort(key=lambda v: v.scene_id)
         parts = {**fixed, "scenes": {v.scene_id: marks[v.scene_id] for v in views}}
         options = ShiftOptions(limit_px=work.pipeline.extent.shift_limit_px)
@@ -112,6 +112,27 @@ def make_registrar(work: Work, inputs: Inputs, layout: Layout, scenes: list[Scen
             np.savez_compressed(stream, **reference.to_arrays(), **({} if detail is None else detail.to_arrays()))
         work.ledger.put("reference", "all", parts, detail={"of": len(scenes), "anchor_sd_px": reference.anchor_sd_px})
     return Registrar(reference, windows, fingerprint(parts), detail)
+
+
+def outdated(unit: Unit, marks: dict[str, str], scenes: int) -> str:
+    """Return in words why the reference must be built again; empty where it stands.
+
+    Parameters
+    ----------
+    unit : Unit
+        The reference as the ledger holds it.
+    marks : dict of scene_id to text
+        Marks of the catalog's scenes.
+    scenes : int
+        Scenes that the run is about.
+    """
+    used = unit.parts["scenes"]
+    moved = sum(marks.get(k) != v for k, v in used.items())
+    if moved > MOVED_SHARE * len(used):
+        return f"{moved} of the {len(used)} scenes that it was built from changed or are gone"
+    if scenes >= REGROWTH * unit.detail["of"]:
+        return f"it was chosen from {unit.detail['of']} scenes, and there are {scenes}"
+    return ""
 
 
 def lend_detail(scenes: list[Scene], bare: list[View], grid: Grid) -> Any:

@@ -40,11 +40,12 @@ FREE_BYTES = 256_000  # with less than this free, a failed write is put down to 
 
 @lru_cache(maxsize=16)
 def code_mark(*parts: str) -> str:
-    """Return a hash of the source of the named parts of the package: the code version in fingerprints."""
+    """Return a hash of the source of the named parts (folders or modules) of the package: the code version in fingerprints."""
     root = Path(inundate.__file__).parent
     digest = hashlib.blake2b(digest_size=8)
     for part in sorted({*parts, "common"}):
-        for file in sorted((root / part).rglob("*")):
+        place = root / part
+        for file in [place] if place.is_file() else sorted(place.rglob("*")):
             if file.suffix in (".py", ".toml", ".parquet") and file.is_file():
                 digest.update(file.name.encode())
                 digest.update(file.read_bytes())

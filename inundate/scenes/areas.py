@@ -5,13 +5,11 @@ from __future__ import annotations
 from collections.abc import Sequence
 
 import numpy as np
-import rasterio
 from rasterio.errors import CRSError, RasterioError
 
 from inundate.common.errors import InputError
 from inundate.common.grid import Grid, Window
-from inundate.scenes.files import parse_crs
-from inundate.scenes.places import gdal_name
+from inundate.scenes.files import open_file, parse_crs
 from inundate.scenes.scene import Scene
 from inundate.scenes.sensors import SensorProfile
 
@@ -77,7 +75,7 @@ def _origin(scenes: Sequence[Scene], profile: SensorProfile, crs: str) -> tuple[
             break
         for role in [one for one in profile.roles if one in scene.bands]:
             try:
-                with rasterio.open(gdal_name(scene.bands[role].href)) as data:
+                with open_file(scene.bands[role].href) as data:
                     affine, told = data.transform, data.crs
             except RasterioError:
                 break
@@ -136,7 +134,7 @@ def band_steps(scenes: Sequence[Scene]) -> dict[str, float]:
         steps = {}
         try:
             for role, source in scene.bands.items():
-                with rasterio.open(gdal_name(source.href)) as data:
+                with open_file(source.href) as data:
                     steps[role] = abs(float(data.transform.a))
         except RasterioError:
             continue

@@ -9,12 +9,12 @@ from typing import Any
 
 import numpy as np
 import pandas as pd
-import rasterio
 from rasterio.errors import RasterioError
 
 from inundate.common.codes import BAND_ROLES
 from inundate.common.errors import InputError, Refusal
-from inundate.scenes.places import file_stamp, gdal_name, is_remote, resolve_href
+from inundate.scenes.files import open_file
+from inundate.scenes.places import file_stamp, is_remote, resolve_href
 from inundate.scenes.scene import BandSource, MaskSource, Scene, SceneError, band_source, find_baseline
 from inundate.scenes.sensors import SHIPPED_PROFILES, SensorProfile, load_profile
 from inundate.scenes.stac import stac_scenes
@@ -179,7 +179,7 @@ def _row_places(row: dict[str, str], href: str, profile: SensorProfile) -> dict[
 def _image_bands(name: str, image: str, profile: SensorProfile) -> dict[str, int]:
     """Return the band number of each role in a multi-band image: by band descriptions, else in the profile's order."""
     try:
-        with rasterio.open(gdal_name(image)) as data:
+        with open_file(image) as data:
             told = [str(one or "").lower() for one in data.descriptions]
             count = data.count
     except RasterioError as error:

@@ -14,7 +14,8 @@ from rasterio.vrt import WarpedVRT
 from rasterio.windows import Window as FileWindow
 
 from inundate.common.errors import InputError
-from inundate.scenes.places import gdal_name, with_retries
+from inundate.scenes.files import open_file
+from inundate.scenes.places import with_retries
 
 
 def read_elevation(
@@ -56,7 +57,7 @@ def read_elevation(
     href = str(path)
     try:
         target = CRS.from_user_input(crs)
-        with with_retries(lambda: rasterio.open(gdal_name(href), sharing=False), href) as data:
+        with open_file(href) as data:
             if data.crs is None or data.transform.is_identity:
                 message = f"elevation {href}: has no georeference; write it with its reference system and transform"
                 raise InputError(message)

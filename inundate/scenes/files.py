@@ -28,10 +28,11 @@ _CELL = 128
 _GDAL = {
     "GDAL_DISABLE_READDIR_ON_OPEN": "EMPTY_DIR",
     "GDAL_HTTP_MERGE_CONSECUTIVE_RANGES": "YES",
-    "GDAL_HTTP_MAX_RETRY": "3",
+    "GDAL_HTTP_MAX_RETRY": "4",
     "GDAL_HTTP_RETRY_DELAY": "0.5",
     "GDAL_CACHEMAX": 64_000_000,
 }
+"""GDAL's own retries (each waits longer) are what helps: it remembers a failed open, and would not ask again later."""
 _REMOTE = {"VSI_CACHE": "TRUE", "VSI_CACHE_SIZE": "4000000"}  # one for each file; local files are cached by the system
 
 
@@ -68,6 +69,21 @@ class Source:
         )
 
 
+def gdal_settings(*hrefs: str) -> dict[str, object]:
+    """Return the settings that GDAL opens and reads files with."""
+    return {**_GDAL, **(_REMOTE if any(is_remote(href) for href in hrefs) else {})}
+
+
+@contextmanager
+def open_file(href: str) -> Iterator[rasterio.io.DatasetReader]:
+    """Open one raster, local or remote (retried); raises OSError or RasterioError."""
+    with (
+        rasterio.Env(**gdal_settings(href)),
+        with_retries(lambda: rasterio.open(gdal_name(href), sharing=False), href) as data,
+    ):
+        yield data
+
+
 class SceneFiles:
     """The scene's files, each opened once, closed together."""
 
@@ -80,8 +96,7 @@ class SceneFiles:
         self._sources: dict[tuple[str, int, bool], Source] = {}
 
     def __enter__(self) -> SceneFiles:
-        remote = any(is_remote(href) for href in self.scene.files)
-        self._stack.enter_context(rasterio.Env(**_GDAL, **(_REMOTE if remote else {})))
+        self._stack.enter_context(rasterio.Env(**gdal_settings(*self.scene.files)))
         return self
 
     def __exit__(self, *error: object) -> None:

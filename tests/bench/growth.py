@@ -1,0 +1,116 @@
+"""How the batch grows: whole runs and monthly re-runs over wetlands, scenes and workers.
+
+Run: ``python -m tests.bench.growth [--quick] [--scratch FOLDER]``. Prints, for each archive, seconds of the first whole run, of a
+re-run with one new scene and of one with nothing new, peak memory, bytes of the archive and products, and seconds by step.
+Pixel sizes are scaled down: scenes are just large enough to hold their wetlands. Every run is a process of its own; seconds
+are of its work, without loading the libraries. A run before the first compiles what is compiled once a machine.
+"""
+
+from __future__ import annotations
+
+import argparse
+import json
+import shutil
+import subprocess
+import sys
+import tempfile
+from pathlib import Path
+
+from tests.bench.batch_world import World, told
+
+RUN = """
+import json, sys, time
+from pathlib import Path
+from inundate.batch import run as batch
+from inundate.batch.progress import Progress
+import inundate.batch.reporting, inundate.pixels, inundate.extent, inundate.relation, inundate.series
+import inundate.stage, inundate.scenes, inundate.leaves, inundate.skill, dask
+start, used = time.perf_counter(), time.process_time()
+result = batch.run_month(sys.argv[1], month=None, progress=Progress(quiet=True))
+text = Path("/proc/self/status").read_text()
+mark = int(next(line.split()[1] for line in text.splitlines() if line.startswith("VmHWM")))
+spent = {"seconds": time.perf_counter() - start, "cpu": time.process_time() - used, "peak_mb": mark / 1024}
+print(json.dumps({**spent, "done": result["done"], "days": result["days"]}))
+"""
+PARTS = {
+    "read": ("co-registration reference", "reading scenes"),
+    "leaves": ("leaf states",),
+    "map": ("classifier", "mapping water"),
+    "extent": ("observed extent",),
+    "relation": ("stage-area relations",),
+    "series": ("filling the series",),
+    "write": ("products", "archive tables"),
+    "report": ("skill", "report"),
+}
+CASES = ((10, 30), (100, 30), (1000, 30), (10, 300), (100, 300), (1000, 300))
+
+
+def run(world: World) -> dict:
+    """Run a world's pipeline in a process of its own."""
+    line = [sys.executable, "-c", RUN, str(world.pipeline)]
+    done = subprocess.run(line, capture_output=True, text=True, check=False)
+    if done.returncode:
+        raise RuntimeError(done.stderr[-2000:])
+    out = json.loads(done.stdout.splitlines()[-1])
+    steps = told(world.folder.parent)["steps"]
+    out["parts"] = {p: sum(steps.get(s, {"seconds": 0.0})["seconds"] for s in names) for p, names in PARTS.items()}
+    return out
+
+
+def size_mb(folder: Path) -> float:
+    """Bytes of all files below a folder, MB."""
+    return sum(p.stat().st_size for p in folder.rglob("*") if p.is_file()) / 1e6
+
+
+def settings(workers: int) -> str:
+    return f"[classifier]\ntrees = 60\n[compute]\nworkers = {workers}\n"
+
+
+def one_case(scratch: Path, wetlands: int, scenes: int, workers: int) -> None:
+    """Measure one archive: first run, one new scene, nothing new; print its line."""
+    side = max(int(-(-(wetlands**0.5) * 24 // 8) * 8), 160)
+    folder = scratch / f"{wetlands}x{scenes}x{workers}"
+    world = World(folder, side, wetlands, step_days=10, loggers=min(4, wetlands), settings=settings(workers))
+    world.grow(scenes - 1)
+    first = run(world)
+    world.grow(scenes)
+    more = run(world)
+    none = run(world)
+    out = folder / "out"
+    parts = "".join(f"{first['parts'][p]:9.1f}" for p in PARTS)
+    again = "".join(f"{more['parts'][p]:9.1f}" for p in PARTS)
+    head = f"{wetlands:9d}{scenes:8d}{workers:9d}"
+    print(
+        f"{head}  first     {first['seconds']:8.1f}{first['cpu']:8.1f}{first['peak_mb']:8.0f}"
+        f"{size_mb(out / 'archive'):9.1f}{size_mb(out / 'products'):9.1f}{parts}",
+        flush=True,
+    )
+    print(f"{head}  one more  {more['seconds']:8.1f}{more['cpu']:8.1f}{more['peak_mb']:8.0f}{'':18}{again}", flush=True)
+    print(f"{head}  nothing   {none['seconds']:8.2f}{none['cpu']:8.2f}{none['peak_mb']:8.0f}", flush=True)
+    shutil.rmtree(folder)
+
+
+def main() -> None:
+    """Print the table."""
+    parser = argparse.ArgumentParser(description=__doc__)
+    parser.add_argument("--quick", action="store_true", help="10 and 100 wetlands, 30 scenes only")
+    parser.add_argument("--scratch", type=Path)
+    asked = parser.parse_args()
+    scratch = Path(tempfile.mkdtemp(dir=asked.scratch))
+    try:
+        warm = World(scratch / "warm", 160, 10, settings=settings(2))
+        warm.grow(12)
+        run(warm)
+        names = "".join(f"{p:>9}" for p in PARTS)
+        print(
+            f"{'wetlands':>9}{'scenes':>8}{'workers':>9}  {'run':<10}{'s':>8}{'cpu s':>8}{'peakMB':>8}{'archMB':>9}{'prodMB':>9}{names}"
+        )
+        for wetlands, scenes in CASES[:2] if asked.quick else CASES:
+            for workers in (1, 2):
+                one_case(scratch, wetlands, scenes, workers)
+    finally:
+        shutil.rmtree(scratch)
+
+
+if __name__ == "__main__":
+    main()
