@@ -16,7 +16,7 @@ import rasterio
 from click.testing import CliRunner
 
 import inundate.scenes
-from inundate.batch import observing
+from inundate.batch import extents
 from inundate.batch.progress import Progress
 from inundate.batch.run import run_month
 from inundate.cli import main
@@ -233,12 +233,11 @@ def test_groups_of_wetlands_leave_no_trace(again, monkeypatch):
     want = table(again, "extent_observed")
     (again / "out" / "archive" / "tables" / "extent_observed.parquet").unlink()
     shutil.rmtree(again / "out" / "products")
-    monkeypatch.setattr(observing, "STACK_SHARE", 1e-9)
-    sizes = []
-    groups = observing.wetland_groups
-    monkeypatch.setattr(
-        observing, "wetland_groups", lambda *a: sizes.extend(g.rows.size for g in groups(*a)) or groups(*a)
-    )
+    monkeypatch.setattr(extents, "STACK_SHARE", 1e-9)
+    monkeypatch.setattr(extents, "holds_all", lambda *_: False)
+    groups, sizes = extents.wetland_groups, []
+    spy = lambda *a: sizes.extend(g.rows.size for g in groups(*a)) or groups(*a)  # noqa: E731
+    monkeypatch.setattr(extents, "wetland_groups", spy)
     run(again)
     assert sizes == [1] * want["wetland_id"].nunique()
     pd.testing.assert_frame_equal(table(again, "extent_observed"), want, check_exact=True)

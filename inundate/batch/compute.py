@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Iterator, Sequence
-from contextlib import suppress
+from contextlib import contextmanager, suppress
 from dataclasses import dataclass
 from typing import Any, TypeVar
 
@@ -83,11 +83,24 @@ def _locally(
         return
     import dask
 
-    scheduler = "processes" if compute.scheduler == "processes" else "threads"
-    batch = compute.workers * IN_FLIGHT
-    for start in range(0, len(todo), batch):
-        units = [dask.delayed(_guarded, pure=False)(function, i, jobs[i]) for i in todo[start : start + batch]]
-        yield from dask.compute(*units, scheduler=scheduler, num_workers=compute.workers)
+    with _pool(compute) as how:
+        batch = compute.workers * IN_FLIGHT
+        for start in range(0, len(todo), batch):
+            units = [dask.delayed(_guarded, pure=False)(function, i, jobs[i]) for i in todo[start : start + batch]]
+            yield from dask.compute(*units, **how)
+
+
+@contextmanager
+def _pool(compute: Compute) -> Iterator[dict[str, Any]]:
+    """Give dask's settings for local work; processes are started once for all units, since each loads the libraries."""
+    if compute.scheduler != "processes":
+        yield {"scheduler": "threads", "num_workers": compute.workers}
+        return
+    from concurrent.futures import ProcessPoolExecutor
+    from multiprocessing import get_context
+
+    with ProcessPoolExecutor(compute.workers, mp_context=get_context("spawn")) as pool:
+        yield {"scheduler": "processes", "pool": pool}
 
 
 class _ClusterLostError(Exception):

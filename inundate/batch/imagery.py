@@ -30,6 +30,24 @@ LEAF_STEP = (
 BATCH_SHARE = 0.1  # of the memory setting, for blocks read together: they are sharpened and moved one by one beside it
 
 
+@dataclass(frozen=True, slots=True)
+class Settled:
+    """Leaf share that each wetland is scored with in each scene, in tenths.
+
+    Attributes
+    ----------
+    row : dict of scene_id to int
+    tenths : ndarray of uint8, shape (scene, wetland)
+    """
+
+    row: dict[str, int]
+    tenths: np.ndarray
+
+    def share(self, scene_id: str) -> np.ndarray:
+        """Return one scene's leaf shares, float32, shape (wetland,)."""
+        return (self.tenths[self.row[scene_id]] / 10.0).astype(np.float32)
+
+
 def array_mark(*arrays: np.ndarray) -> str:
     """Return a hash of arrays' bytes."""
     digest = hashlib.blake2b(digest_size=12)
@@ -196,16 +214,13 @@ def _standing(work: Work, scenes: list[Scene]) -> list[ScenePlace]:
     return sorted(places, key=lambda p: (p.datetime, p.scene_id))
 
 
-def follow_leaves(
-    work: Work, inputs: Inputs, layout: Layout, places: list[ScenePlace]
-) -> tuple[LeafCalendar, pd.DataFrame]:
+def follow_leaves(work: Work, inputs: Inputs, layout: Layout, places: list[ScenePlace]) -> tuple[LeafCalendar, Settled]:
     """Fit the leaf calendar and settle each scene's leaf share.
 
     Returns
     -------
     calendar : LeafCalendar
-    settled : DataFrame
-        One row a scene (index scene_id), one column a wetland: leaf share in tenths.
+    settled : Settled
     """
     from inundate.leaves import LeafCalendar
 
@@ -232,22 +247,24 @@ def follow_leaves(
         return calendar, _settle(work, layout, calendar, places)
 
 
-def _settle(work: Work, layout: Layout, calendar: LeafCalendar, places: list[ScenePlace]) -> pd.DataFrame:
+def _settle(work: Work, layout: Layout, calendar: LeafCalendar, places: list[ScenePlace]) -> Settled:
     """Round each scene's leaf share to tenths; a tenth settled earlier stays unless it is off by more than a tenth.
 
     So a month of new views, which moves the calendar a little, does not make the whole archive be scored anew.
     """
     ids = layout.wetlands["wetland_id"].to_numpy()
-    n, m = len(places), len(ids)
-    dates = np.repeat(np.array([p.datetime.normalize() for p in places], "datetime64[ns]"), m)
-    _, share = calendar.states(np.tile(ids, n), dates)
-    fresh = pd.DataFrame(share.reshape(n, m).astype(np.float64), index=[p.scene_id for p in places], columns=ids)
-    rounded = (fresh / LEAF_STEP).round() * LEAF_STEP
-    path = work.archive.table("leaf_share")
-    if path.exists():
-        old = pd.read_parquet(path).set_index("scene_id").reindex(index=fresh.index, columns=ids)
-        rounded = old.where((old - fresh).abs() <= LEAF_STEP, rounded)
-    rounded = rounded.round(1)
-    rounded.index.name = "scene_id"
-    write_table(path, rounded.reset_index())
-    return rounded
+    _, share = calendar.grid(ids, np.array([p.datetime.normalize() for p in places], "datetime64[ns]"))
+    path = work.archive.table("leaf_tenths")
+    old = pd.read_parquet(path).set_index("wetland_id").reindex(ids) if path.exists() else pd.DataFrame(index=ids)
+    tenths = np.empty(share.shape, np.uint8)
+    for i, place in enumerate(places):
+        fresh = share[i].astype(np.float64)
+        tenths[i] = (fresh / LEAF_STEP).round()
+        if place.scene_id in old.columns:
+            kept = old[place.scene_id].to_numpy(np.float64)
+            stays = np.abs(kept / 10.0 - fresh) <= LEAF_STEP
+            tenths[i, stays] = kept[stays]
+    table = pd.DataFrame(tenths.T, columns=[p.scene_id for p in places])
+    table.insert(0, "wetland_id", ids)
+    write_table(path, table)
+    return Settled({p.scene_id: i for i, p in enumerate(places)}, tenths)

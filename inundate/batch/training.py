@@ -9,7 +9,7 @@ import numpy as np
 import pandas as pd
 
 from inundate.batch.archive import read_view
-from inundate.batch.imagery import LabelPixels, array_mark
+from inundate.batch.imagery import LabelPixels, Settled, array_mark
 from inundate.batch.layout import Layout
 from inundate.batch.seasons import ScenePlace
 from inundate.batch.work import Work, code_mark, settings_mark, table_mark
@@ -35,7 +35,7 @@ def train(
     layout: Layout,
     labels: LabelPixels | None,
     places: list[ScenePlace],
-    leaves: tuple[LeafCalendar, pd.DataFrame],
+    leaves: tuple[LeafCalendar, Settled],
 ) -> Trained:
     """Train the classifier and the fraction model where labels, samples, settings or code changed."""
     from inundate.pixels import train_models
@@ -96,7 +96,7 @@ def _examples(
     layout: Layout,
     labels: LabelPixels | None,
     places: list[ScenePlace],
-    leaves: tuple[LeafCalendar, pd.DataFrame],
+    leaves: tuple[LeafCalendar, Settled],
 ) -> ExampleSet:
     from inundate.pixels import ViewState, make_examples, starter_examples
 
@@ -120,7 +120,7 @@ def _examples(
         clear[where] = code[at] == ViewCode.CLEAR
     owner = _nearest(table, labels, layout)
     calendar, settled = leaves
-    share = settled.to_numpy()[settled.index.get_indexer(pd.Index(list(table["scene_id"]))), owner]
+    share = settled.tenths[table["scene_id"].map(settled.row).to_numpy(np.int64), owner] / 10.0
     state, _ = calendar.states(layout.wetlands["wetland_id"].to_numpy()[owner], table["date"].to_numpy())
     sun = table["scene_id"].map({p.scene_id: p.sun_elevation_deg for p in places}).to_numpy(float)
     return make_examples(

@@ -164,6 +164,10 @@ class LeafCalendar(BaseEstimator):
             raise InputError(message)
         unique, inverse = np.unique(names, return_inverse=True)
         place = np.array([self._place.get(str(u), len(self._place)) for u in unique], np.int64)[inverse.ravel()]
+        return self._look_up(place, when)
+
+    def _look_up(self, place: np.ndarray, when: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+        """Code and leaf share of wetlands, by their place among the fitted ones, on dates paired with them."""
         year, day = season_time(when, self.offset_days_)
         row = np.where((year >= self._year0) & (year < self._year0 + self._years), year - self._year0, self._years)
         place, row, day = np.broadcast_arrays(place, row, day)
@@ -172,6 +176,28 @@ class LeafCalendar(BaseEstimator):
         codes, share = _read(knots, day)
         codes = np.where(evergreen, np.uint8(LeafCode.LEAF_ON), codes).astype(np.uint8)
         return codes, np.where(evergreen, 1.0, share).astype(np.float32)
+
+    def grid(self, wetland_ids: object, dates: object) -> tuple[np.ndarray, np.ndarray]:
+        """Leaf state and leaf share of every wetland on every date, date by date: :meth:`states` for many of both.
+
+        Parameters
+        ----------
+        wetland_ids : array-like, shape (wetland,)
+        dates : array-like of dates, shape (date,)
+
+        Returns
+        -------
+        codes : ndarray of uint8, shape (date, wetland)
+        leaf_share : ndarray of float32, shape (date, wetland)
+        """
+        check_is_fitted(self, "seasons_")
+        names, when = np.asarray(wetland_ids).astype(str), check_dates(dates, "dates")
+        place = np.array([self._place.get(str(n), len(self._place)) for n in names], np.int64)
+        codes = np.empty((when.size, names.size), np.uint8)
+        share = np.empty(codes.shape, np.float32)
+        for i in range(when.size):
+            codes[i], share[i] = self._look_up(place, when[i : i + 1])
+        return codes, share
 
     def daily(self, dates: object) -> pd.DataFrame:
         """Leaf state and share of every fitted wetland on each date.
