@@ -16,6 +16,8 @@ import sys
 import tempfile
 from pathlib import Path
 
+import pandas as pd
+
 from tests.bench.batch_world import World, told
 
 RUN = """
@@ -62,6 +64,21 @@ def size_mb(folder: Path) -> float:
     return sum(p.stat().st_size for p in folder.rglob("*") if p.is_file()) / 1e6
 
 
+def row_bytes(out: Path, wetlands: int, scenes: int) -> str:
+    """Bytes of a row, in memory and in its file, of the tables that hold the whole area; bytes of a wetland in a scene."""
+    (product,) = (out / "products").glob("????-??")
+    words = []
+    for file in (
+        *(product / f"{name}.parquet" for name in ("extent_daily", "extent_observed", "relation_table")),
+        out / "archive" / "tables" / "greenness.parquet",
+    ):
+        table = pd.read_parquet(file)
+        held, kept = table.memory_usage(deep=True, index=False).sum(), file.stat().st_size
+        words.append(f"{file.stem} {held / len(table):.0f} / {kept / len(table):.0f} B a row")
+    pixels = size_mb(out / "archive" / "views") + size_mb(out / "archive" / "scores")
+    return ", ".join(words) + f"; views and scores {1e3 * pixels / wetlands / scenes:.2f} kB a wetland and scene"
+
+
 def settings(workers: int) -> str:
     return f"[classifier]\ntrees = 60\n[compute]\nworkers = {workers}\n"
 
@@ -80,6 +97,7 @@ def one_case(scratch: Path, wetlands: int, scenes: int, workers: int, *, again: 
         f"{size_mb(out / 'archive'):9.1f}{size_mb(out / 'products'):9.1f}{parts}",
         flush=True,
     )
+    print(f"{'':28}  in memory / on disk: {row_bytes(out, wetlands, scenes - 1)}", flush=True)
     if again:
         world.grow(scenes)
         more = run(world)
