@@ -1,6 +1,6 @@
 """How the batch grows: whole runs and monthly re-runs over wetlands, scenes and workers.
 
-Run: ``python -m tests.bench.growth [--quick] [--scratch FOLDER]``. Prints, for each archive, seconds of the first whole run, of a
+Run: ``python -m tests.bench.growth [--quick] [--long] [--case W S K] [--scheduler NAME] [--scratch FOLDER]``. Prints, for each archive, seconds of the first whole run, of a
 re-run with one new scene and of one with nothing new, peak memory, bytes of the archive and products, and seconds by step.
 Pixel sizes are scaled down: scenes are just large enough to hold their wetlands. Every run is a process of its own; seconds
 are of its work, without loading the libraries. A run before the first compiles what is compiled once a machine.
@@ -79,15 +79,16 @@ def row_bytes(out: Path, wetlands: int, scenes: int) -> str:
     return ", ".join(words) + f"; views and scores {1e3 * pixels / wetlands / scenes:.2f} kB a wetland and scene"
 
 
-def settings(workers: int) -> str:
-    return f"[classifier]\ntrees = 60\n[compute]\nworkers = {workers}\n"
+def settings(workers: int, scheduler: str = "threads") -> str:
+    return f'[classifier]\ntrees = 60\n[compute]\nworkers = {workers}\nscheduler = "{scheduler}"\n'
 
 
-def one_case(scratch: Path, wetlands: int, scenes: int, workers: int, *, again: bool = True) -> None:
+def one_case(scratch: Path, case: tuple[int, int, int], scheduler: str, *, again: bool = True) -> None:
     """Measure one archive: first run, one new scene, nothing new; print its line."""
+    wetlands, scenes, workers = case
     side = max(int(-(-(wetlands**0.5) * 24 // 8) * 8), 160)
     folder = scratch / f"{wetlands}x{scenes}x{workers}"
-    world = World(folder, side, wetlands, step_days=10, loggers=min(4, wetlands), settings=settings(workers))
+    world = World(folder, side, wetlands, step_days=10, loggers=min(4, wetlands), settings=settings(workers, scheduler))
     world.grow(scenes - 1)
     first, out = run(world), folder / "out"
     parts = "".join(f"{first['parts'][p]:9.1f}" for p in PARTS)
@@ -116,6 +117,8 @@ def main() -> None:
     parser = argparse.ArgumentParser(description=__doc__)
     parser.add_argument("--quick", action="store_true", help="10 and 100 wetlands, 30 scenes only")
     parser.add_argument("--long", action="store_true", help="also 1,000 wetlands x 300 scenes, two workers, first run")
+    parser.add_argument("--case", type=int, nargs=3, metavar=("WETLANDS", "SCENES", "WORKERS"), help="one case only")
+    parser.add_argument("--scheduler", default="threads")
     parser.add_argument("--scratch", type=Path)
     asked = parser.parse_args()
     scratch = Path(tempfile.mkdtemp(dir=asked.scratch))
@@ -127,11 +130,11 @@ def main() -> None:
         print(
             f"{'wetlands':>9}{'scenes':>8}{'workers':>9}  {'run':<10}{'s':>8}{'cpu s':>8}{'peakMB':>8}{'archMB':>9}{'prodMB':>9}{names}"
         )
-        for wetlands, scenes in CASES[:2] if asked.quick else CASES:
-            for workers in (1, 2):
-                one_case(scratch, wetlands, scenes, workers)
+        cases = [(w, s, k) for w, s in (CASES[:2] if asked.quick else CASES) for k in (1, 2)]
+        for case in [tuple(asked.case)] if asked.case else cases:
+            one_case(scratch, case, asked.scheduler)
         if asked.long:
-            one_case(scratch, 1000, 300, 2, again=False)
+            one_case(scratch, (1000, 300, 2), asked.scheduler, again=False)
     finally:
         shutil.rmtree(scratch)
 
