@@ -26,6 +26,7 @@ SECTIONS = {
     "leaves": "the leaf calendar is fitted again; scenes whose leaf share differs are mapped again",
     "classifier": "the classifier is trained again, scenes are mapped again",
     "extent": f"scenes are read again where registration or normalisation differ; {_EXTENTS}",
+    "stage": f"the stage record is built again; {_SERIES}",
     "relation": _SERIES,
     "series": "series are made again",
     "skill": "scores and report are made again",
