@@ -59,7 +59,7 @@ def make_bowl(rng: np.random.Generator, area: float, west: float, north: float, 
     radius *= np.sqrt(area / (0.5 * np.sum(radius**2) * (theta[1] - theta[0])))
     mid = size * FINE / 2 + rng.uniform(-5, 5, 2)
     xy = np.column_stack([mid[0] + radius * np.cos(theta), mid[1] + radius * np.sin(theta)])
-    polygon = shapely.Polygon([*xy, west, north - size * FINE])
+    polygon = shapely.Polygon(xy + np.array([west, north - size * FINE]))
     at = (np.arange(size) + 0.5) * FINE
     x, y = np.meshgrid(at, size * FINE - at)
     dx, dy = x - mid[0], y - mid[1]
