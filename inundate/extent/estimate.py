@@ -136,11 +136,9 @@ def expected_fraction(shape: Shape, wetland: WetlandPixels, noise: NoiseModel) -
     e = np.clip(wetland.share[:, None] * filling + wetland.other[:, None] * fullness, 0.0, 1.0)
     if noise.blur != 0.0:
         e = np.clip(e + noise.blur * (neighbour_mean(e, wetland) - e), 0.0, 1.0)
-    if noise.steep != 1.0:
+    if noise.steep != 1.0 or noise.bend != 1.0:
         wet = e**noise.steep
         e = wet / (wet + noise.bend * (1.0 - e) ** noise.steep)
-    elif noise.bend != 1.0:
-        e = e / (e + noise.bend * (1.0 - e))
     if shape.gain is not None:
         e = e * shape.gain[:, None]
     return np.ascontiguousarray(e, dtype=np.float32)

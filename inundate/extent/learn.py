@@ -20,12 +20,9 @@ from inundate.extent.estimate import (
     weigh,
 )
 from inundate.extent.noise import (
-    BENDS,
-    BLURS,
     KINDS,
     OPEN_CLASS,
     SHIFTS,
-    STEEPS,
     VIEW_CLASSES,
     NoiseModel,
     NoiseSums,
@@ -36,7 +33,7 @@ from inundate.extent.stack import NEAR_STEPS, ExtentOptions, WetlandPixels
 FEW_VIEWS = 4
 """Views below which a ranking by wetness is not tried; common practice, no source."""
 EVIDENCE_VIEWS = 24
-"""Most views of a wetland, evenly spaced in time, on which candidates of blur, steepness, shift and bend are weighed."""
+"""Most views of a wetland, evenly spaced in time, on which candidates of the leftover shift are weighed."""
 GAIN_ROUNDS = 4
 GAIN_SD = 0.1
 """Belief about the part of its water that a pixel hides, before views are looked at; common practice, no source."""
@@ -217,20 +214,15 @@ def add_anchor(sums: NoiseSums, views: Views, wetland: WetlandPixels) -> None:
     sums.anchor[:, 3] += np.bincount(views.kind[top], weights=views.fraction[top], minlength=KINDS)
 
 
-def blur_evidence(
+def shift_evidence(
     views: Views, shape: Shape, wetland: WetlandPixels, noise: NoiseModel, options: ExtentOptions
-) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
-    """Log evidence of the good views under each candidate of ``BLURS`` with each of ``STEEPS``, ``SHIFTS`` and ``BENDS``."""
+) -> np.ndarray:
+    """Log evidence of some good views under each candidate of ``SHIFTS``; float64 (candidate,)."""
     good = np.flatnonzero(good_views(views, options))
-    some = pick_views(
-        views, good[np.unique(np.linspace(0, max(good.size - 1, 0), EVIDENCE_VIEWS).astype(int))] if good.size else good
-    )
-    blur = [
-        [weigh(some, shape, wetland, replace(noise, blur=b, steep=k))[1][:, 1].sum() for k in STEEPS] for b in BLURS
-    ]
-    shift = [weigh(some, shape, wetland, replace(noise, shift_px=s))[1][:, 1].sum() for s in SHIFTS]
-    bend = [weigh(some, shape, wetland, replace(noise, bend=float(np.exp(b))))[1][:, 1].sum() for b in BENDS]
-    return np.array(blur), np.array(shift), np.array(bend)
+    if good.size:
+        good = good[np.unique(np.linspace(0, good.size - 1, EVIDENCE_VIEWS).astype(int))]
+    some = pick_views(views, good)
+    return np.array([weigh(some, shape, wetland, replace(noise, shift_px=s))[1][:, 1].sum() for s in SHIFTS])
 
 
 def _add_pairs(sums: NoiseSums, u: np.ndarray, seen: np.ndarray, wetland: WetlandPixels) -> None:

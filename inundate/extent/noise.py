@@ -21,12 +21,6 @@ BAND_EDGES = (0.3, 0.5, 0.7, 0.9)
 _SLOPE = (0.2, 0.4, 0.65, 0.9, 1.0)
 _PURE = (0.08, 0.07, 0.05, 0.025, 0.01)
 _MIXED = 0.02
-BLURS = np.linspace(0.0, 0.45, 4)
-"""Candidates for the part of a pixel's water fraction that comes from its neighbours."""
-BENDS = np.linspace(0.0, np.log(3.0), 4)
-"""Candidates of the logarithm of ``bend``: a pixel half under water shows at least a quarter (common practice, no source)."""
-STEEPS = np.linspace(1.0, 3.0, 4)
-"""Candidates for how steeply the odds of water shown rise with the odds of water held."""
 SHIFTS = np.linspace(0.03, 0.33, 4)
 """Candidates for the sd of a scene's leftover shift, pixels."""
 _HELD = 200.0
@@ -200,14 +194,12 @@ class NoiseSums:
         self.pairs = np.zeros((3, 2))
         self.area = np.zeros(steps)
         self.anchor = np.zeros((KINDS, 4))
-        self.blur = np.zeros((BLURS.size, STEEPS.size))
         self.shift = np.zeros(SHIFTS.size)
-        self.bend = np.zeros(BENDS.size)
         self.shape = {name: np.zeros(2) for name in ("cells", "order", "outline")}
 
     def add(self, other: NoiseSums) -> None:
         """Add the sums of another wetland."""
-        for name in ("dry", "wet", "half", "line", "pairs", "area", "anchor", "blur", "shift", "bend"):
+        for name in ("dry", "wet", "half", "line", "pairs", "area", "anchor", "shift"):
             getattr(self, name)[...] += getattr(other, name)
         for name, value in other.shape.items():
             self.shape[name] += value
@@ -257,10 +249,8 @@ def renew_noise(old: NoiseModel, sums: NoiseSums, start: NoiseModel) -> NoiseMod
     for name, first in start.shape_var.items():
         total, n = sums.shape[name]
         var[name] = float(np.clip((total + 50 * first) / (n + 50), 0.003, 0.15))
-    i, j = np.unravel_index(int(np.argmax(sums.blur)), sums.blur.shape)
-    blur, steep, shift = _top_of(BLURS, sums.blur[:, j]), _top_of(STEEPS, sums.blur[i]), _top_of(SHIFTS, sums.shift)
-    new = replace(old, table=table, rho=rho, temper=temper, shape_var=var, area_prior=prior)
-    return replace(new, blur=blur, steep=steep, shift_px=shift, bend=float(np.exp(_top_of(BENDS, sums.bend))))
+    shift = _top_of(SHIFTS, sums.shift)
+    return replace(old, table=table, rho=rho, temper=temper, shape_var=var, area_prior=prior, shift_px=shift)
 
 
 def _top_of(x: np.ndarray, y: np.ndarray) -> float:

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
 import pandas as pd
 from sklearn.base import BaseEstimator
@@ -15,7 +17,6 @@ from inundate.extent.estimate import Shape, Views, areas, band_of, look
 from inundate.extent.learn import (
     LONGEST_BRIDGE,
     add_anchor,
-    blur_evidence,
     first_shape,
     fit_drift,
     learn_gain,
@@ -23,8 +24,10 @@ from inundate.extent.learn import (
     neighbour_checks,
     noise_sums,
     renew_shape,
+    shift_evidence,
 )
 from inundate.extent.noise import BAND_EDGES, NoiseModel, NoiseSums, anchor_noise, renew_noise, start_noise
+from inundate.extent.response import full_pixels, settle_response
 from inundate.extent.stack import ExtentOptions, SceneStack, WetlandPixels, split_wetlands
 
 REASONS = (
@@ -204,7 +207,10 @@ class ExtentObserver(BaseEstimator):
         anchors = NoiseSums(steps)
         for wetland in sample:
             add_anchor(anchors, self._views(stack, wetland), wetland)
-        start = noise = anchor_noise(start, anchors, self.errors)
+        start = anchor_noise(start, anchors, self.errors)
+        full = [full_pixels(self._views(stack, w), w, start) for w in sample]
+        blur, steep, bend = settle_response(full)
+        noise = start = replace(start, blur=blur, steep=steep, bend=bend)
         for turn in range(options.rounds):
             sums = NoiseSums(steps)
             for wetland in sample:
@@ -212,10 +218,10 @@ class ExtentObserver(BaseEstimator):
                 shape = first_shape(self.cells_.get(wetland.name), wetland, views, noise, options)
                 before = noise_sums(views, shape, wetland, noise, days, options)
                 if turn:
-                    before.blur, before.shift, before.bend = blur_evidence(views, shape, wetland, noise, options)
+                    before.shift = shift_evidence(views, shape, wetland, noise, options)
                     shape = renew_shape(views, shape, wetland, noise, options)
                 mine = noise_sums(views, shape, wetland, noise, days, options)
-                mine.shape, mine.blur, mine.shift, mine.bend = before.shape, before.blur, before.shift, before.bend
+                mine.shape, mine.shift = before.shape, before.shift
                 sums.add(mine)
             noise = renew_noise(noise, sums, start)
         return self._scale(stack, sample, noise, options)

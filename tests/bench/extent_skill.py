@@ -83,7 +83,9 @@ def _observe(name: str, world: World, with_cells: bool) -> pd.DataFrame:
     print(f"{name}, elevation {with_cells}: {time.perf_counter() - start:.1f} s")
     n = observer.noise_
     shape = {k: round(v, 3) for k, v in n.shape_var.items()}
-    print(f"  rho {n.rho:.3f} temper {n.temper:.2f} shape {shape} scale {np.round(n.scale, 2)} blur {n.blur:.3f}")
+    print(
+        f"  rho {n.rho:.3f} temper {n.temper:.2f} shape {shape} scale {np.round(n.scale, 2)} blur {n.blur:.2f} steep {n.steep:.2f} bend {n.bend:.2f}"
+    )
     print(f"  shift {n.shift_px:.3f} drift sd {n.drift_var**0.5:.4f} steady sd {n.steady_var**0.5:.4f}")
     print("  noise (leaf-off, view >= 0.9):", np.round(n.table[8], 3), "near cloud", np.round(n.table[9], 3))
     print("  noise leaf-on by view:", np.round(n.table[[20, 22, 24, 26, 28]], 3).tolist())
