@@ -5,7 +5,7 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
-from inundate.extent.response import UNKNOWN, settle_response, shown
+from inundate.extent.response import UNKNOWN, possible_responses, shown
 
 
 def made(blur: float, steep: float, bend: float, noise: float = 0.03, seed: int = 0) -> list[np.ndarray]:
@@ -29,21 +29,25 @@ def test_shown_by_hand():
 
 
 @pytest.mark.parametrize("planted", [(0.0, 1.0, 1.0), (0.4, 1.6, 1.7), (0.3, 1.0, 3.0), (0.5, 2.5, 1.3)])
-def test_a_planted_response_is_found(planted):
-    """The settled response predicts what the planted one does (within 0.08, mean 0.03), whatever trades off in between."""
-    blur, steep, bend = settle_response(made(*planted))
+def test_a_planted_response_is_among_the_possible_ones(planted):
+    """The best candidate predicts what the planted response does (within 0.1, mean 0.03), and all stay near it."""
+    found = possible_responses(made(*planted))
     x, y = np.meshgrid(np.linspace(0, 1, 11), np.linspace(0, 1, 11))
     near = np.abs(x - y) < 0.5
-    a = shown((1 - blur) * x + blur * y, steep, bend)
     b = shown((1 - planted[0]) * x + planted[0] * y, planted[1], planted[2])
-    assert np.abs(a - b)[near].max() < 0.08
-    assert np.abs(a - b)[near].mean() < 0.03
+    for place, (blur, steep, bend) in enumerate(found):
+        gap = np.abs(shown((1 - blur) * x + blur * y, steep, bend) - b)[near]
+        assert gap.mean() < 0.05
+        if place == 0:
+            assert gap.max() < 0.1
+            assert gap.mean() < 0.03
+    assert (np.abs(found - np.array(planted)).max(axis=1) < 0.05).any()
 
 
 def test_without_full_wetlands_a_little_of_each():
     """Too few mixed pixels tell nothing."""
-    assert settle_response([]) == UNKNOWN
-    assert settle_response([made(0.4, 1.6, 1.7)[0][:, :60]]) == UNKNOWN
+    assert possible_responses([]) is UNKNOWN
+    assert possible_responses([made(0.4, 1.6, 1.7)[0][:, :60]]) is UNKNOWN
 
 
 @given(st.floats(1, 3), st.floats(1, 3))

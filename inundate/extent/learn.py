@@ -22,7 +22,6 @@ from inundate.extent.estimate import (
 from inundate.extent.noise import (
     KINDS,
     OPEN_CLASS,
-    SHIFTS,
     VIEW_CLASSES,
     NoiseModel,
     NoiseSums,
@@ -33,7 +32,7 @@ from inundate.extent.stack import NEAR_STEPS, ExtentOptions, WetlandPixels
 FEW_VIEWS = 4
 """Views below which a ranking by wetness is not tried; common practice, no source."""
 EVIDENCE_VIEWS = 24
-"""Most views of a wetland, evenly spaced in time, on which candidates of the leftover shift are weighed."""
+"""Most views of a wetland, evenly spaced in time, on which noise models are weighed against each other."""
 GAIN_ROUNDS = 4
 GAIN_SD = 0.1
 """Belief about the part of its water that a pixel hides, before views are looked at; common practice, no source."""
@@ -214,15 +213,15 @@ def add_anchor(sums: NoiseSums, views: Views, wetland: WetlandPixels) -> None:
     sums.anchor[:, 3] += np.bincount(views.kind[top], weights=views.fraction[top], minlength=KINDS)
 
 
-def shift_evidence(
-    views: Views, shape: Shape, wetland: WetlandPixels, noise: NoiseModel, options: ExtentOptions
+def evidence(
+    views: Views, shape: Shape, wetland: WetlandPixels, trials: list[NoiseModel], options: ExtentOptions
 ) -> np.ndarray:
-    """Log evidence of some good views under each candidate of ``SHIFTS``; float64 (candidate,)."""
+    """Log evidence of some good views, evenly spaced in time, under each noise model; float64 (trial,)."""
     good = np.flatnonzero(good_views(views, options))
     if good.size:
         good = good[np.unique(np.linspace(0, good.size - 1, EVIDENCE_VIEWS).astype(int))]
     some = pick_views(views, good)
-    return np.array([weigh(some, shape, wetland, replace(noise, shift_px=s))[1][:, 1].sum() for s in SHIFTS])
+    return np.array([weigh(some, shape, wetland, trial)[1][:, 1].sum() for trial in trials])
 
 
 def _add_pairs(sums: NoiseSums, u: np.ndarray, seen: np.ndarray, wetland: WetlandPixels) -> None:

@@ -186,7 +186,7 @@ def anchor_noise(start: NoiseModel, sums: NoiseSums, errors: pd.DataFrame | None
 class NoiseSums:
     """Sums over wetlands from which a noise model is renewed; the order of wetlands does not matter to the result."""
 
-    def __init__(self, steps: int) -> None:
+    def __init__(self, steps: int, responses: int = 1) -> None:
         self.dry = np.zeros((KINDS, 3))
         self.wet = np.zeros((KINDS, 3))
         self.half = np.zeros((KINDS, 2))
@@ -195,11 +195,12 @@ class NoiseSums:
         self.area = np.zeros(steps)
         self.anchor = np.zeros((KINDS, 4))
         self.shift = np.zeros(SHIFTS.size)
+        self.response = np.zeros(responses)
         self.shape = {name: np.zeros(2) for name in ("cells", "order", "outline")}
 
     def add(self, other: NoiseSums) -> None:
         """Add the sums of another wetland."""
-        for name in ("dry", "wet", "half", "line", "pairs", "area", "anchor", "shift"):
+        for name in ("dry", "wet", "half", "line", "pairs", "area", "anchor", "shift", "response"):
             getattr(self, name)[...] += getattr(other, name)
         for name, value in other.shape.items():
             self.shape[name] += value

@@ -17,6 +17,7 @@ from inundate.extent.estimate import Shape, Views, areas, band_of, look
 from inundate.extent.learn import (
     LONGEST_BRIDGE,
     add_anchor,
+    evidence,
     first_shape,
     fit_drift,
     learn_gain,
@@ -24,10 +25,9 @@ from inundate.extent.learn import (
     neighbour_checks,
     noise_sums,
     renew_shape,
-    shift_evidence,
 )
-from inundate.extent.noise import BAND_EDGES, NoiseModel, NoiseSums, anchor_noise, renew_noise, start_noise
-from inundate.extent.response import full_pixels, settle_response
+from inundate.extent.noise import BAND_EDGES, SHIFTS, NoiseModel, NoiseSums, anchor_noise, renew_noise, start_noise
+from inundate.extent.response import full_pixels, possible_responses, with_response
 from inundate.extent.stack import ExtentOptions, SceneStack, WetlandPixels, split_wetlands
 
 REASONS = (
@@ -209,21 +209,25 @@ class ExtentObserver(BaseEstimator):
             add_anchor(anchors, self._views(stack, wetland), wetland)
         start = anchor_noise(start, anchors, self.errors)
         full = [full_pixels(self._views(stack, w), w, start) for w in sample]
-        blur, steep, bend = settle_response(full)
-        noise = start = replace(start, blur=blur, steep=steep, bend=bend)
+        responses = possible_responses(full)
+        noise = start = with_response(start, responses[0])
         for turn in range(options.rounds):
-            sums = NoiseSums(steps)
+            sums = NoiseSums(steps, len(responses))
             for wetland in sample:
                 views = self._views(stack, wetland)
                 shape = first_shape(self.cells_.get(wetland.name), wetland, views, noise, options)
                 before = noise_sums(views, shape, wetland, noise, days, options)
                 if turn:
-                    before.shift = shift_evidence(views, shape, wetland, noise, options)
+                    trials = [replace(noise, shift_px=float(s)) for s in SHIFTS]
+                    before.shift = evidence(views, shape, wetland, trials, options)
+                    if len(responses) > 1:
+                        trials = [with_response(noise, r) for r in responses]
+                        before.response = evidence(views, shape, wetland, trials, options)
                     shape = renew_shape(views, shape, wetland, noise, options)
                 mine = noise_sums(views, shape, wetland, noise, days, options)
-                mine.shape, mine.shift = before.shape, before.shift
+                mine.shape, mine.shift, mine.response = before.shape, before.shift, before.response
                 sums.add(mine)
-            noise = renew_noise(noise, sums, start)
+            noise = with_response(renew_noise(noise, sums, start), responses[int(np.argmax(sums.response))])
         return self._scale(stack, sample, noise, options)
 
     def _scale(

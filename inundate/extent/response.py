@@ -2,12 +2,13 @@
 
 Bands blur over neighbours, and models lean to the likelier label: what a pixel shows is not its water fraction. When a wetland
 is full its outline tells every pixel's fraction without an elevation model's errors, so such views say which responses can
-be; the mean of those that they cannot tell apart serves.
+be; among those that they cannot tell apart the evidence of all views decides (see ``learn.evidence``).
 """
 
 from __future__ import annotations
 
 import itertools
+from dataclasses import replace
 
 import numpy as np
 
@@ -20,12 +21,12 @@ GRID = np.array(
     list(itertools.product(np.linspace(0.0, 0.6, 7), (1.0, 1.3, 1.6, 2.0, 2.5, 3.0), (1.0, 1.3, 1.7, 2.2, 3.0))), float
 )
 """Candidates (blur, steep, bend); see :class:`inundate.extent.noise.NoiseModel`. Bounds: common practice, no source."""
-UNKNOWN = (0.2, 1.1, 1.1)
-"""Response where no wetland is seen full: a little of each (common practice, no source)."""
+UNKNOWN = np.array([[0.0, 1.0, 1.0], [0.2, 1.1, 1.1], [0.3, 1.3, 1.3]])
+"""Candidates where no wetland is seen full: none, or a little of each (common practice, no source)."""
 _FULL = 0.92
 """Least mean of what all pixels inside the outline show in a wetland's wettest views when it may be full."""
 _LEAST_VIEWS, _LEAST_MIXED = 10, 60
-_CLOSE = 1.02
+_CLOSE, _MOST = 1.06, 40  # common practice, no source
 
 
 def shown(held: np.ndarray, steep: float, bend: float) -> np.ndarray:
@@ -68,8 +69,8 @@ def full_pixels(views: Views, wetland: WetlandPixels, noise: NoiseModel) -> np.n
     return np.stack([share, beside, value[top].mean(axis=0)])[:, seen]
 
 
-def settle_response(parts: list[np.ndarray]) -> tuple[float, float, float]:
-    """Return the response under which full wetlands show what they do.
+def possible_responses(parts: list[np.ndarray]) -> np.ndarray:
+    """Return the responses under which full wetlands show what they do, best first.
 
     Parameters
     ----------
@@ -78,13 +79,19 @@ def settle_response(parts: list[np.ndarray]) -> tuple[float, float, float]:
 
     Returns
     -------
-    blur, steep, bend : float
-        Mean of the candidates of ``GRID`` whose root mean square error lies within 2 % of the least; ``UNKNOWN`` with fewer
-        than 60 mixed pixels.
+    ndarray of float64, shape (candidate, 3)
+        Of ``GRID`` those whose root mean square error lies within 6 % of the least, at most 40; ``UNKNOWN`` with fewer than 60
+        mixed pixels.
     """
     share, beside, value = np.concatenate([np.empty((3, 0)), *parts], axis=1)
     if ((share > 0.05) & (share < 0.95)).sum() < _LEAST_MIXED:
         return UNKNOWN
     error = np.array([np.sqrt(np.mean((value - shown((1 - b) * share + b * beside, k, c)) ** 2)) for b, k, c in GRID])
-    blur, steep, bend = GRID[error <= _CLOSE * error.min()].mean(axis=0)
-    return float(blur), float(steep), float(bend)
+    order = np.argsort(error, kind="stable")
+    return GRID[order[error[order] <= _CLOSE * error[order[0]]][:_MOST]]
+
+
+def with_response(noise: NoiseModel, response: np.ndarray) -> NoiseModel:
+    """Return a noise model with the given blur, steep and bend, shape (3,)."""
+    blur, steep, bend = (float(v) for v in response)
+    return replace(noise, blur=blur, steep=steep, bend=bend)
