@@ -2,11 +2,11 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
-from inundate.common.codes import ViewCode
+from inundate.common.codes import LeafCode, ViewCode
 from inundate.extent.kernels import near_cloud, posteriors
 from inundate.extent.noise import BAND_EDGES, NoiseModel, kind_of
 from inundate.extent.stack import SceneStack, WetlandPixels, as_fraction
@@ -157,23 +157,43 @@ def with_gradients(e: np.ndarray, wetland: WetlandPixels) -> np.ndarray:
     return out
 
 
+def seasons(views: Views, noise: NoiseModel) -> list[tuple[NoiseModel, np.ndarray]]:
+    """Return the noise model of leaf-off scenes and that of all others, each with its scenes.
+
+    Full wetlands teach ``bend`` with leaves off; under leaves, where canopies look like water as often as the reverse, it does
+    not hold.
+    """
+    bare = views.leaf == int(LeafCode.LEAF_OFF)
+    if noise.bend == 1.0 or bare.all():
+        return [(noise, np.arange(bare.size))]
+    return [(noise, np.flatnonzero(bare)), (replace(noise, bend=1.0), np.flatnonzero(~bare))]
+
+
 def weigh(views: Views, shape: Shape, wetland: WetlandPixels, noise: NoiseModel) -> tuple[np.ndarray, np.ndarray]:
     """Posterior over steps of area (scene, step), and what :func:`posteriors` says beside it (scene, 4); float64."""
-    e = with_gradients(expected_fraction(shape, wetland, noise), wetland)
     strangers = 1.0 + 4.0 * np.minimum(wetland.other, 0.5)
     widen = np.ascontiguousarray(views.widen * strangers[None, :], dtype=np.float32)
     shared = np.array([noise.rho, noise.temper, noise.shift_px])
     fraction = np.ascontiguousarray(views.fraction, dtype=np.float32)
-    return posteriors(fraction, views.kind, widen, e, noise.table, shared, np.log(noise.area_prior))
+    post, rest = np.empty((fraction.shape[0], shape.filling.shape[1])), np.empty((fraction.shape[0], 4))
+    for one, at in seasons(views, noise):
+        e = with_gradients(expected_fraction(shape, wetland, one), wetland)
+        post[at], rest[at] = posteriors(
+            fraction[at], views.kind[at], widen[at], e, noise.table, shared, np.log(noise.area_prior)
+        )
+    return post, rest
 
 
 def fitted_fraction(
-    post: np.ndarray, rest: np.ndarray, shape: Shape, wetland: WetlandPixels, noise: NoiseModel
+    views: Views, found: tuple[np.ndarray, np.ndarray], shape: Shape, wetland: WetlandPixels, noise: NoiseModel
 ) -> tuple[np.ndarray, np.ndarray]:
-    """Expected water fraction of whole pixels given the posterior: as the ground lies, and as shifted; (scene, pixel)."""
-    e = with_gradients(expected_fraction(shape, wetland, noise), wetland).astype(float)
-    still = post @ e[0].T
-    moved = still + rest[:, 2:3] * (post @ e[1].T) + rest[:, 3:4] * (post @ e[2].T)
+    """Expected water fraction of whole pixels given what :func:`weigh` found: as the ground lies, and as shifted."""
+    post, rest = found
+    still, moved = np.empty(views.fraction.shape), np.empty(views.fraction.shape)
+    for one, at in seasons(views, noise):
+        e = with_gradients(expected_fraction(shape, wetland, one), wetland).astype(float)
+        still[at] = post[at] @ e[0].T
+        moved[at] = still[at] + rest[at, 2:3] * (post[at] @ e[1].T) + rest[at, 3:4] * (post[at] @ e[2].T)
     return still, np.clip(moved, 0.0, 1.0)
 
 
@@ -208,7 +228,7 @@ def areas(views: Views, shape: Shape, wetland: WetlandPixels, noise: NoiseModel)
     var = np.maximum(post @ level**2 - mean**2, 0.0) + 1.0 / (12.0 * (steps - 1) ** 2)
     var *= np.clip(rest[:, 0], 1.0, 4.0)
     filled = post @ shape.filling.T.astype(float)
-    _, e = fitted_fraction(post, rest, shape, wetland, noise)
+    _, e = fitted_fraction(views, (post, rest), shape, wetland, noise)
     value, error, _ = pixel_terms(views, noise, e)
     mixed = 0.9 * 4 * filled * (1 - filled) + 0.02
     own = shape.departure_var * mixed * wetland.share[None, :] ** 2

@@ -89,7 +89,7 @@ def renew_shape(views: Views, shape: Shape, wetland: WetlandPixels, noise: Noise
     some = pick_views(views, teach)
     post, rest = weigh(some, shape, wetland, noise)
     filled = post @ shape.filling.T.astype(float)
-    _, e = fitted_fraction(post, rest, shape, wetland, noise)
+    _, e = fitted_fraction(some, (post, rest), shape, wetland, noise)
     value, error, _ = pixel_terms(some, noise, e)
     share = np.maximum(wetland.share, 1e-3)[None, :]
     error = error * np.clip(rest[:, 0], 1.0, 4.0)[:, None] + LEFT_OVER * prior_var * share**2
@@ -169,7 +169,7 @@ def noise_sums(
     mean = post @ level
     sd = np.sqrt(np.maximum(post @ level**2 - mean**2, 0))
     expected = expected_fraction(shape, wetland, noise).astype(float)
-    _, e = fitted_fraction(post, rest, shape, wetland, noise)
+    _, e = fitted_fraction(views, (post, rest), shape, wetland, noise)
     row = noise.table[np.maximum(views.kind, 0)]
     fit = row[..., 0] + row[..., 1] * e
     var = row[..., 2] + row[..., 3] * 4 * e * (1 - e)
