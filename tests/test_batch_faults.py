@@ -8,6 +8,8 @@ import signal
 import subprocess
 import sys
 import time
+from collections.abc import Iterator
+from contextlib import contextmanager
 from pathlib import Path
 
 import geopandas as gpd
@@ -206,18 +208,27 @@ def test_bad_scene_is_set_aside_and_tried_again_when_its_file_changes(whole, tmp
     assert set(views[0]["scene_id"]) == set(views[1]["scene_id"])
 
 
-def test_full_disk_is_told_and_costs_nothing(whole, tmp_path):
-    """On a small file system that fills: one sentence, status 2, the old delivery whole; with room again it goes on."""
+@contextmanager
+def own_file_system(disk: Path, *options: str) -> Iterator[None]:
+    """Mount a small file system in memory; skips the test where this may not be done."""
     if os.geteuid() != 0:
         pytest.skip("mounting a small file system needs root")
-    folder, _, products, _ = whole
-    disk = tmp_path / "disk"
     disk.mkdir()
     if subprocess.run(
-        ["mount", "-t", "tmpfs", "-o", "size=700k", "tmpfs", str(disk)], capture_output=True, check=False
+        ["mount", "-t", "tmpfs", *options, "tmpfs", str(disk)], capture_output=True, check=False
     ).returncode:
         pytest.skip("this machine does not let a test mount a file system")
     try:
+        yield
+    finally:
+        subprocess.run(["umount", "-l", str(disk)], check=False)
+
+
+def test_full_disk_is_told_and_costs_nothing(whole, tmp_path):
+    """On a small file system that fills: one sentence, status 2, the old delivery whole; with room again it goes on."""
+    folder, _, products, _ = whole
+    disk = tmp_path / "disk"
+    with own_file_system(disk, "-o", "size=700k"):
         shutil.copytree(folder / "inputs", tmp_path / "inputs")
         file = tmp_path / "inputs" / "pipeline.toml"
         file.write_text(file.read_text().replace('folder = "../out"', f'folder = "{disk}/out"'))
@@ -229,8 +240,6 @@ def test_full_disk_is_told_and_costs_nothing(whole, tmp_path):
         result = run_month(file, month=None, progress=Progress(quiet=True))
         name = "extent_daily.parquet"
         assert digests(Path(result["products"]))[name] == digests(products)[name]
-    finally:
-        subprocess.run(["umount", "-l", str(disk)], check=False)
 
 
 def test_output_that_cannot_be_written(whole, tmp_path):
@@ -247,14 +256,9 @@ def test_output_that_cannot_be_written(whole, tmp_path):
 
 def test_output_on_a_read_only_file_system(whole, tmp_path):
     """Nothing can be written where a delivery stands: one sentence with the key, status 2, every byte as it was."""
-    if os.geteuid() != 0:
-        pytest.skip("mounting needs root")
     folder, _, _, _ = whole
     disk = tmp_path / "disk"
-    disk.mkdir()
-    if subprocess.run(["mount", "-t", "tmpfs", "tmpfs", str(disk)], capture_output=True, check=False).returncode:
-        pytest.skip("this machine does not let a test mount a file system")
-    try:
+    with own_file_system(disk):
         shutil.copytree(folder / "out", disk / "out", copy_function=shutil.copy2)
         shutil.copytree(folder / "inputs", tmp_path / "inputs")
         file = tmp_path / "inputs" / "pipeline.toml"
@@ -267,5 +271,3 @@ def test_output_on_a_read_only_file_system(whole, tmp_path):
         assert "key 'output.folder' is" in done.stderr
         assert "Read-only file system" in done.stderr
         assert digests(disk / "out") == before
-    finally:
-        subprocess.run(["umount", "-l", str(disk)], check=False)

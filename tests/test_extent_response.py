@@ -5,7 +5,8 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
-from inundate.extent.response import UNKNOWN, possible_responses, shown
+from inundate.extent.estimate import shown
+from inundate.extent.response import UNKNOWN, possible_responses
 
 
 def made(blur: float, steep: float, bend: float, noise: float = 0.03, seed: int = 0) -> list[np.ndarray]:

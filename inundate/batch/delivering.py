@@ -76,9 +76,9 @@ def conclude(
     daily = None if stage is None else stage.daily
     settings = work.pipeline
     with work.progress.step("stage-area relations"):
-        pairs = make_pairs(observed, daily if daily is not None else _no_stage())
-        outlets = outlet_levels(daily if daily is not None else _no_stage())
-        told, full = through_outlets(best_pairs(pairs), outlets, wetlands, lasting[0])
+        record = daily if daily is not None else _no_stage()
+        pairs = make_pairs(observed, record)
+        told, full = through_outlets(best_pairs(pairs), outlet_levels(record), wetlands, lasting[0])
         relations = fit_relations(told, wetlands, layout.hypsometry, seed=settings.relation.seed)
         work.notes.extend(
             f"wetland {r['wetland_id']}: an outlet holds its level near {r['level_m']:.2f} m ({r['days']} days); its views then "

@@ -10,9 +10,9 @@ import numpy as np
 import pandas as pd
 
 from inundate.batch.archive import ROWS, Archive, read_score
-from inundate.batch.compute import run_units
+from inundate.batch.compute import IN_FLIGHT, run_units
 from inundate.batch.layout import Layout
-from inundate.batch.mapping import UNLIKE_SCALE, dark_value, haze_value, ndvi_value
+from inundate.batch.mapping import DARK, HAZE, NDVI, UNLIKE_SCALE
 from inundate.batch.seasons import ScenePlace
 from inundate.batch.work import Inputs, Work
 from inundate.common.codes import ViewCode
@@ -152,7 +152,7 @@ def observe_groups(
     noise = observe_group(job(_group(layout, sample), None))[1]
     groups = wetland_groups(layout, min(most, -(-layout.site.size // compute.workers)))
     tables: dict[int, pd.DataFrame] = {}
-    batch = 4 * compute.workers
+    batch = IN_FLIGHT * compute.workers
     for start in range(0, len(groups), batch):  # jobs hold their part of the tables: few are made at a time
         jobs = [job(group, noise) for group in groups[start : start + batch]]
         for outcome in run_units(observe_group, jobs, compute, work.progress.say):
@@ -221,8 +221,8 @@ def build_stack(job: GroupJob) -> SceneStack:
     for i, place in enumerate(job.places):
         for name, values in zip(names, read_score(job.archive.score(place.scene_id), names, span), strict=True):
             stack[name][i] = values[pixels - span[0] * ROWS]
-    veil = veiled(haze_value(stack.pop("haze")), stack["code"], job.owner)
-    dark, leafy = dark_value(stack.pop("dark")), job.share[:, job.owner] > 0.5
+    veil = veiled(HAZE.value(stack.pop("haze")), stack["code"], job.owner)
+    dark, leafy = DARK.value(stack.pop("dark")), job.share[:, job.owner] > 0.5
     veil |= shaded(dark, stack["code"], job.owner, job.ring, job.where, leafy)
     stack["code"][veil] = ViewCode.CLOUD
     stack["fraction"][veil] = 255
@@ -245,7 +245,7 @@ def canopy_view(ndvi: np.ndarray, leaf_share: np.ndarray, owner: np.ndarray) -> 
     Parameters
     ----------
     ndvi : ndarray of uint8, shape (scene, pixel)
-        0..200, 255 missing (see mapping.ndvi_code).
+        0..200, 255 missing (see mapping.NDVI).
     leaf_share : ndarray of float32, shape (scene, wetland)
     owner : ndarray of int, shape (pixel,)
         Wetland of each pixel.
@@ -255,7 +255,7 @@ def canopy_view(ndvi: np.ndarray, leaf_share: np.ndarray, owner: np.ndarray) -> 
     out = np.empty(ndvi.shape, np.uint8)
     for start in range(0, ndvi.shape[1], 4096):
         part = slice(start, start + 4096)
-        values, leaf = ndvi_value(ndvi[:, part]), leaf_share[:, owner[part]]
+        values, leaf = NDVI.value(ndvi[:, part]), leaf_share[:, owner[part]]
         with warnings.catch_warnings():
             warnings.simplefilter("ignore", RuntimeWarning)
             peak = np.nanpercentile(np.where(leaf >= 0.9, values, np.nan), 80, axis=0)

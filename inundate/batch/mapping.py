@@ -81,37 +81,28 @@ def _scorer(folder: Path, mark: str) -> _Scorer:  # noqa: ARG001 - the mark is p
     return _Scorer(folder)
 
 
-def ndvi_code(ndvi: np.ndarray) -> np.ndarray:
-    """Turn NDVI -1..1 into uint8 0..200, 255 where missing."""
-    code = np.clip(np.nan_to_num(ndvi) * 100.0 + 100.5, 0, 200).astype(np.uint8)
-    return np.where(np.isfinite(ndvi), code, np.uint8(255))
+@dataclass(frozen=True, slots=True)
+class Bytes:
+    """Numbers kept as uint8 in steps of ``step`` (``per_unit`` of them make 1) from ``zero`` on; 255 where missing."""
+
+    zero: float
+    per_unit: float
+    step: float
+    top: int = 254
+
+    def code(self, values: np.ndarray) -> np.ndarray:
+        """Turn numbers into bytes."""
+        code = np.clip(np.nan_to_num(values) * self.per_unit + (self.zero + 0.5), 0, self.top).astype(np.uint8)
+        return np.where(np.isfinite(values), code, np.uint8(255))
+
+    def value(self, code: np.ndarray) -> np.ndarray:
+        """Turn bytes back into numbers, NaN where 255."""
+        return np.where(code == 255, np.nan, (code.astype(np.float32) - self.zero) * self.step)
 
 
-def ndvi_value(code: np.ndarray) -> np.ndarray:
-    """Turn uint8 0..200 back into NDVI, NaN where 255."""
-    return np.where(code == 255, np.nan, (code.astype(np.float32) - 100.0) * 0.01)
-
-
-def haze_code(haze: np.ndarray) -> np.ndarray:
-    """Turn the haze index -0.1..0.15 into uint8 thousandths above -0.1, 255 where missing."""
-    code = np.clip(np.nan_to_num(haze) * 1000.0 + 100.5, 0, 254).astype(np.uint8)
-    return np.where(np.isfinite(haze), code, np.uint8(255))
-
-
-def haze_value(code: np.ndarray) -> np.ndarray:
-    """Turn thousandths back into the haze index, NaN where 255."""
-    return np.where(code == 255, np.nan, (code.astype(np.float32) - 100.0) * 0.001)
-
-
-def dark_code(dark: np.ndarray) -> np.ndarray:
-    """Turn darkness -3..2 into uint8 fiftieths above -3, 255 where missing."""
-    code = np.clip(np.nan_to_num(dark) * 50.0 + 150.5, 0, 254).astype(np.uint8)
-    return np.where(np.isfinite(dark), code, np.uint8(255))
-
-
-def dark_value(code: np.ndarray) -> np.ndarray:
-    """Turn fiftieths back into darkness, NaN where 255."""
-    return np.where(code == 255, np.nan, (code.astype(np.float32) - 150.0) * 0.02)
+NDVI = Bytes(100.0, 100.0, 0.01, 200)  # -1..1
+HAZE = Bytes(100.0, 1000.0, 0.001)  # -0.1..0.15
+DARK = Bytes(150.0, 50.0, 0.02)  # -3..2
 
 
 def _darkness(job: ScoreJob, bands: tuple[str, ...], reflectance: np.ndarray) -> np.ndarray:
@@ -173,10 +164,10 @@ def _score_part(
     seen = np.flatnonzero(clear & np.isfinite(reflectance).any(axis=0))
     columns = {name: np.full(n, 255, np.uint8) for name in SCORE_COLUMNS}
     columns["code"] = code
-    columns["ndvi"] = ndvi_code(pixel_ndvi(bands, reflectance, code))
+    columns["ndvi"] = NDVI.code(pixel_ndvi(bands, reflectance, code))
     blue, red = (reflectance[bands.index(b)] if b in bands else np.full(n, np.nan, np.float32) for b in ("blue", "red"))
-    columns["haze"] = haze_code(haze_index(blue, red))
-    columns["dark"] = dark_code(np.where(clear, _darkness(job, bands, reflectance), np.nan))
+    columns["haze"] = HAZE.code(haze_index(blue, red))
+    columns["dark"] = DARK.code(np.where(clear, _darkness(job, bands, reflectance), np.nan))
     if seen.size:
         scorer = _scorer(archive.models, job.model_mark)
         leaf = job.leaf_share[owner[seen]].astype(np.float32)

@@ -117,6 +117,14 @@ def neighbour_mean(values: np.ndarray, wetland: WetlandPixels) -> np.ndarray:
     return out / 8.0
 
 
+def shown(held: np.ndarray, steep: float, bend: float) -> np.ndarray:
+    """Return what pixels show that hold a water fraction (after blur): odds to the power ``steep`` over ``bend``."""
+    if steep == 1.0 and bend == 1.0:
+        return held
+    wet = held**steep
+    return wet / (wet + bend * (1.0 - held) ** steep)
+
+
 def expected_fraction(shape: Shape, wetland: WetlandPixels, noise: NoiseModel) -> np.ndarray:
     """Water fraction of whole pixels at each step of area, as scenes show it.
 
@@ -136,9 +144,7 @@ def expected_fraction(shape: Shape, wetland: WetlandPixels, noise: NoiseModel) -
     e = np.clip(wetland.share[:, None] * filling + wetland.other[:, None] * fullness, 0.0, 1.0)
     if noise.blur != 0.0:
         e = np.clip(e + noise.blur * (neighbour_mean(e, wetland) - e), 0.0, 1.0)
-    if noise.steep != 1.0 or noise.bend != 1.0:
-        wet = e**noise.steep
-        e = wet / (wet + noise.bend * (1.0 - e) ** noise.steep)
+    e = shown(e, noise.steep, noise.bend)
     if shape.gain is not None:
         e = e * shape.gain[:, None]
     return np.ascontiguousarray(e, dtype=np.float32)
@@ -234,8 +240,8 @@ def areas(views: Views, shape: Shape, wetland: WetlandPixels, noise: NoiseModel)
     own = shape.departure_var * mixed * wetland.share[None, :] ** 2
     gain = np.where(views.kind >= 0, own / (own + error), 0.0)
     cell = wetland.area_m2 / np.maximum(wetland.share, 1e-12) / wetland.area_max_m2
-    shown = 1.0 if shape.gain is None else shape.gain[None, :]
-    move = gain * np.clip((value - e) / shown, -1.0, 1.0) * (1.0 - wetland.other[None, :])
+    part = 1.0 if shape.gain is None else shape.gain[None, :]
+    move = gain * np.clip((value - e) / part, -1.0, 1.0) * (1.0 - wetland.other[None, :])
     area = mean + move @ cell
     var += 2.0 * (own * (1 - gain)) @ cell**2
     var += noise.steady_var * (4 * mean * (1 - mean) * 0.9 + 0.1)

@@ -13,7 +13,7 @@ from dataclasses import replace
 import numpy as np
 
 from inundate.common.codes import LeafCode
-from inundate.extent.estimate import Views, neighbour_mean, pixel_terms
+from inundate.extent.estimate import Views, neighbour_mean, pixel_terms, shown
 from inundate.extent.noise import NoiseModel
 from inundate.extent.stack import WetlandPixels
 
@@ -27,14 +27,6 @@ _FULL = 0.92
 """Least mean of what all pixels inside the outline show in a wetland's wettest views when it may be full."""
 _LEAST_VIEWS, _LEAST_MIXED = 10, 60
 _CLOSE, _MOST = 1.06, 40  # common practice, no source
-
-
-def shown(held: np.ndarray, steep: float, bend: float) -> np.ndarray:
-    """Return what pixels show that hold a water fraction (after blur): odds to the power ``steep`` over ``bend``."""
-    if steep == 1.0 and bend == 1.0:
-        return held
-    wet = held**steep
-    return wet / (wet + bend * (1.0 - held) ** steep)
 
 
 def full_pixels(views: Views, wetland: WetlandPixels, noise: NoiseModel) -> np.ndarray:

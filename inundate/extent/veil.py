@@ -61,12 +61,8 @@ def veiled(haze: np.ndarray, code: np.ndarray, owner: np.ndarray) -> np.ndarray:
         seen = clear[:, at]
         if not (seen.sum(axis=0) >= _LEAST_VIEWS).any():
             continue
-        values = np.where(seen, haze[:, at], np.nan)
-        with warnings.catch_warnings():
-            warnings.simplefilter("ignore", RuntimeWarning)
-            above = values - np.nanmedian(values, axis=0)
-            spread = 1.4826 * np.nanmedian(np.abs(above))
-        high = seen & (above > _LIMIT * max(float(spread), 1e-4))
+        above, spread = _against_own_past(np.where(seen, haze[:, at], np.nan))
+        high = seen & (above > _LIMIT * max(spread, 1e-4))
         count = seen.sum(axis=1)
         mostly = (high.sum(axis=1) >= 0.5 * count) & (count > 0)
         out[:, at] = high | (seen & mostly[:, None])
@@ -150,12 +146,16 @@ def shaded(
 
 def _fallen(dark: np.ndarray, seen: np.ndarray) -> np.ndarray:
     """Which pixels are far darker than their own median; bool (scene, pixel)."""
-    values = np.where(seen & (seen.sum(axis=0) >= _LEAST_VIEWS), dark, np.nan)
-    with warnings.catch_warnings():
-        warnings.simplefilter("ignore", RuntimeWarning)
-        above = values - np.nanmedian(values, axis=0)
-        spread = 1.4826 * np.nanmedian(np.abs(above))
+    above, spread = _against_own_past(np.where(seen & (seen.sum(axis=0) >= _LEAST_VIEWS), dark, np.nan))
     if not np.isfinite(spread):
         return np.zeros(dark.shape, bool)
     with np.errstate(invalid="ignore"):
-        return above < -max(_DARK_LIMIT * float(spread), _DARK)
+        return above < -max(_DARK_LIMIT * spread, _DARK)
+
+
+def _against_own_past(values: np.ndarray) -> tuple[np.ndarray, float]:
+    """Return values (scene, pixel) less each pixel's median, and their median absolute deviation scaled to a normal's sd."""
+    with warnings.catch_warnings():
+        warnings.simplefilter("ignore", RuntimeWarning)
+        above = values - np.nanmedian(values, axis=0)
+        return above, float(1.4826 * np.nanmedian(np.abs(above)))

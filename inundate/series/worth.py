@@ -105,9 +105,9 @@ def _gains(views: Events, evidence: Evidence) -> np.ndarray:
     error = evidence.truth[at_e] - evidence.share[0, at_e]
     news = views.value[at_v] - evidence.share[0, at_e]
     cluster = evidence.wetland[at_e] * 1000 + evidence.block[at_e]
-    kind, bins = views.kind[at_v], np.digitize(views.open[at_v], _OPENNESS)
-    factors = np.full((4, 3), _UNPROVEN)
     all_bins = np.digitize(views.open, _OPENNESS)
+    kind, bins = views.kind[at_v], all_bins[at_v]
+    factors = np.full((4, 3), _UNPROVEN)
     variance = max(float(np.mean(error**2)), 1e-4) if error.size else 0.01
     for leaf in (1, 2, 3):
         typical = np.array([_usual_sd(views.sd[(views.kind == leaf) & (all_bins == size)]) for size in range(3)])
