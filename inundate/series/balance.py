@@ -1,7 +1,7 @@
-"""Mass balances of a depression: the level from rain, evapotranspiration, runoff, exchange and spill, and its slopes.
+"""Mass balance of a depression: the level from rain, evapotranspiration, inflow, groundwater and spill, and its slopes.
 
-The level is in m above lowest ground (below 0: water under ground). Storage per metre is the flooded share, and the
-drainable pore space elsewhere.
+The level is in m above lowest ground (below 0: water under ground). Water collects and evaporates over the flooded share or over the
+basin floor (``reach``), whichever is larger; a dry part of the floor stores in its pore space only.
 """
 
 from __future__ import annotations
@@ -11,61 +11,60 @@ from numba import njit
 
 from inundate.series.maps import share_at
 
-# The direct balance: rain on the bowl times a multiplier that grows with wetness.
-DIRECT_NAMES = ("rain_multiplier", "pet_multiplier", "exchange", "base", "pore_space", "sill", "wet_inflow")
-DIRECT_MEAN = (0.4, 0.0, -3.7, 0.2, -1.9, 0.0, 0.2)
-DIRECT_SD = (0.7, 0.4, 1.0, 0.6, 0.4, 0.10, 0.3)
-# The catchment balance: rain on connected ground, runoff of a soil store from around it, and a constant seepage.
-CATCHMENT_NAMES = (
-    "catchment_ratio", "pet_multiplier", "exchange", "base", "pore_space", "sill", "soil_depth", "connected", "seepage",
+NAMES = (
+    "inflow_ratio", "pet_multiplier", "exchange", "offset", "pore_space", "sill", "reach", "seepage", "amplitude", "deep_soil",
+    "late",
 )  # fmt: skip
-CATCHMENT_MEAN = (0.7, 0.0, -4.0, 0.2, -1.9, 0.0, 0.0, -1.6, -7.0)
-CATCHMENT_SD = (0.8, 0.3, 1.0, 0.6, 0.4, 0.10, 1.0, 0.5, 0.8)
-DIRECT, CATCHMENT = 0, 1
-# Priors before pooling are wide and common practice, no source: logs of ratios, exchange times of one to two months,
-# pore space 0.15, sill at the largest extent, seepage 1 mm a day.
+"""Logs but for ``offset`` (of the mean groundwater over lowest ground, as a share of the full level), ``deep_soil`` and ``late`` (logits:
+of the deep soil's part in inflow and groundwater, of the slow response of groundwater)."""
+MEAN = (0.7, 0.0, -4.6, 0.3, -1.6, 0.0, -1.1, -7.0, 0.0, 0.0, 0.0)
+SD = (0.8, 0.2, 1.1, 0.5, 0.4, 0.07, 0.5, 0.9, 0.7, 1.2, 1.2)
+# Before pooling, wide and common practice, no source: a catchment of twice the largest extent, exchange with groundwater over
+# months, pore space 0.2, spill at the largest extent, a floor of a third of it, seepage of 1 mm a day.
+NAMED, SIGNALS = len(NAMES), 6
+"""Parameters before those of the loggers' signals, and rows of ``region`` before these."""
+_FASTEST = 0.15
 _DEEPEST_M = -3.0
 _EXTINCTION_M = 0.5
+_FIRST = 0.6
 
 
 @njit(cache=True, nogil=True)
-def bucket_path(
-    form: int,
+def balance_path(
     theta: np.ndarray,
     rain: np.ndarray,
     pet: np.ndarray,
-    runoff: np.ndarray,
-    base: np.ndarray,
-    wet: np.ndarray,
+    region: np.ndarray,
     table: np.ndarray,
     full: float,
     path: np.ndarray,
 ) -> None:
-    """Level (m) a day into ``path`` (time,) for parameters ``theta`` (own ones, then one a column of ``base``)."""
-    own = theta.size - base.shape[1]
-    inflow, loss = np.exp(theta[0]), np.exp(theta[1])
-    exchange, pore = min(np.exp(theta[2]), 1.0), min(np.exp(theta[4]), 1.0)
-    sill = full * np.exp(theta[5])
-    deep, connected, seepage = 0.0, 1.0, 0.0
-    if form == 1:
-        deep = 1.0 / (1.0 + np.exp(-theta[6]))
-        connected, seepage = min(np.exp(theta[7]), 1.0), np.exp(theta[8])
-    level = full * theta[3]
+    """Level (m) a day into ``path`` (time,) for parameters ``theta``: those of ``NAMES``, then one a signal of the loggers.
+
+    ``region`` (6 + signal, time) is :attr:`inundate.series.drivers.Drivers.region` over the loggers' signals, which shift groundwater by
+    their part of the full level; ``table`` the share of the largest extent at equal steps of
+    level up to ``full``.
+    """
+    ratio, loss, seepage = np.exp(theta[0]), np.exp(theta[1]), np.exp(theta[7])
+    exchange, pore, reach = min(np.exp(theta[2]), _FASTEST), min(np.exp(theta[4]), 1.0), min(np.exp(theta[6]), 1.0)
+    sill, amplitude = full * np.exp(theta[5]), np.exp(theta[8])
+    deep, late = 1.0 / (1.0 + np.exp(-theta[9])), 1.0 / (1.0 + np.exp(-theta[10]))
+    level = _FIRST * full
     for t in range(rain.size):
-        target = theta[3]
-        for j in range(base.shape[1]):
-            target += theta[own + j] * base[t, j]
-        share = share_at(level, table, full)
-        store = pore + (1.0 - pore) * share
+        wet = share_at(level, table, full)
+        store, catch = wet, wet
+        if reach > wet:
+            store, catch = wet + pore * (reach - wet), reach
+        soon = region[2, t] + late * (region[3, t] - region[2, t])
+        slow = region[4, t] + late * (region[5, t] - region[4, t])
+        head = full * theta[3] + amplitude * (soon + deep * (slow - soon))
+        for j in range(SIGNALS, region.shape[0]):
+            head += full * theta[NAMED + j - SIGNALS] * region[j, t]
         leave = loss * pet[t] + seepage
         if level < 0.0:
             leave *= np.exp(level / _EXTINCTION_M)
-        if form == 1:
-            part = share + connected * (1.0 - share)
-            gain = part * (rain[t] - leave) + inflow * (runoff[0, t] + deep * (runoff[1, t] - runoff[0, t]))
-        else:
-            gain = inflow * np.exp(theta[6] * wet[t]) * rain[t] - leave
-        level += gain / store + exchange * (full * target - level)
+        water = ratio * (region[0, t] + deep * (region[1, t] - region[0, t]))
+        level += (catch * (rain[t] - leave + exchange * (head - level)) + water) / store
         if level > sill:
             level = sill + min(0.5 * (level - sill), 0.05 * full)
         level = max(level, _DEEPEST_M)
@@ -73,14 +72,11 @@ def bucket_path(
 
 
 @njit(cache=True, nogil=True)
-def bucket_slopes(  # noqa: PLR0912, PLR0915 - the derivative beside each line of the balance
-    form: int,
+def balance_slopes(  # noqa: PLR0915 - the derivative beside each line of the balance
     theta: np.ndarray,
     rain: np.ndarray,
     pet: np.ndarray,
-    runoff: np.ndarray,
-    base: np.ndarray,
-    wet: np.ndarray,
+    region: np.ndarray,
     table: np.ndarray,
     full: float,
     day: np.ndarray,
@@ -88,66 +84,60 @@ def bucket_slopes(  # noqa: PLR0912, PLR0915 - the derivative beside each line o
 ) -> None:
     """Fill ``jac`` (parameter, event) with the change of the level on each event's day by each parameter.
 
-    The same balance as :func:`bucket_path`, carried along with its derivatives. ``day`` rises.
+    The same balance as :func:`balance_path`, carried along with its derivatives. ``day`` rises.
     """
-    own = theta.size - base.shape[1]
-    inflow, loss = np.exp(theta[0]), np.exp(theta[1])
-    exchange, pore = min(np.exp(theta[2]), 1.0), min(np.exp(theta[4]), 1.0)
-    sill = full * np.exp(theta[5])
-    deep, connected, seepage = 0.0, 1.0, 0.0
-    if form == 1:
-        deep = 1.0 / (1.0 + np.exp(-theta[6]))
-        connected, seepage = min(np.exp(theta[7]), 1.0), np.exp(theta[8])
+    ratio, loss, seepage = np.exp(theta[0]), np.exp(theta[1]), np.exp(theta[7])
+    exchange, pore, reach = min(np.exp(theta[2]), _FASTEST), min(np.exp(theta[4]), 1.0), min(np.exp(theta[6]), 1.0)
+    sill, amplitude = full * np.exp(theta[5]), np.exp(theta[8])
+    deep, late = 1.0 / (1.0 + np.exp(-theta[9])), 1.0 / (1.0 + np.exp(-theta[10]))
     slope = np.zeros(theta.size)
-    level = full * theta[3]
-    slope[3] = full
+    level = _FIRST * full
     last, n = table.size - 1, 0
     for t in range(rain.size):
-        target = theta[3]
-        for j in range(base.shape[1]):
-            target += theta[own + j] * base[t, j]
-        share, rise = 0.0, 0.0
+        wet, rise = 0.0, 0.0
         if level > 0.0:
-            share = share_at(level, table, full)
+            wet = share_at(level, table, full)
             if level < full:
                 k = min(int(level / full * last), last - 1)
                 rise = (table[k + 1] - table[k]) * last / full
-        store = pore + (1.0 - pore) * share
-        damp = np.exp(level / _EXTINCTION_M) if level < 0.0 else 1.0
-        leave = (loss * pet[t] + seepage) * damp
-        leave_rise = leave / _EXTINCTION_M if level < 0.0 else 0.0
-        part, net, water = 1.0, 0.0, 0.0
-        if form == 1:
-            part = share + connected * (1.0 - share)
-            net = rain[t] - leave
-            water = inflow * (runoff[0, t] + deep * (runoff[1, t] - runoff[0, t]))
-            gain = part * net + water
-            gain_rise = (1.0 - connected) * rise * net - part * leave_rise
-        else:
-            water = inflow * np.exp(theta[6] * wet[t]) * rain[t]
-            gain = water - leave
-            gain_rise = -leave_rise
-        gap = full * target - level
-        keep = 1.0 + gain_rise / store - gain * (1.0 - pore) * rise / (store * store) - exchange
-        level += gain / store + exchange * gap
-        for j in range(theta.size):
-            slope[j] *= keep
-        slope[0] += water / store
-        slope[1] -= part * loss * pet[t] * damp / store
-        if theta[2] < 0.0:
-            slope[2] += exchange * gap
-        slope[3] += exchange * full
-        if theta[4] < 0.0:
-            slope[4] -= gain / (store * store) * pore * (1.0 - share)
-        if form == 1:
-            slope[6] += inflow * (runoff[1, t] - runoff[0, t]) * deep * (1.0 - deep) / store
-            if theta[7] < 0.0:
-                slope[7] += connected * (1.0 - share) * net / store
-            slope[8] -= part * seepage * damp / store
-        else:
-            slope[6] += wet[t] * water / store
-        for j in range(base.shape[1]):
-            slope[own + j] += exchange * full * base[t, j]
+        store, catch, store_rise, catch_rise, dry = wet, wet, rise, rise, 0.0
+        if reach > wet:
+            dry = reach - wet
+            store, catch, store_rise, catch_rise = wet + pore * dry, reach, (1.0 - pore) * rise, 0.0
+        soon = region[2, t] + late * (region[3, t] - region[2, t])
+        slow = region[4, t] + late * (region[5, t] - region[4, t])
+        mixed = soon + deep * (slow - soon)
+        head = full * theta[3] + amplitude * mixed
+        for j in range(SIGNALS, region.shape[0]):
+            head += full * theta[NAMED + j - SIGNALS] * region[j, t]
+        damp, damp_rise = 1.0, 0.0
+        if level < 0.0:
+            damp = np.exp(level / _EXTINCTION_M)
+            damp_rise = damp / _EXTINCTION_M
+        quick = region[0, t] + deep * (region[1, t] - region[0, t])
+        net = rain[t] - (loss * pet[t] + seepage) * damp + exchange * (head - level)
+        gain = catch * net + ratio * quick
+        net_rise = -(loss * pet[t] + seepage) * damp_rise - exchange
+        slope *= 1.0 + (catch * net_rise + catch_rise * net) / store - gain * store_rise / (store * store)
+        pull = catch * exchange / store
+        slope[0] += ratio * quick / store
+        slope[1] -= catch * loss * pet[t] * damp / store
+        if exchange < _FASTEST:
+            slope[2] += pull * (head - level)
+        slope[3] += pull * full
+        if pore < 1.0:
+            slope[4] -= gain * pore * dry / (store * store)
+        if dry > 0.0 and reach < 1.0:
+            slope[6] += reach * (net - gain * pore / store) / store
+        slope[7] -= catch * seepage * damp / store
+        slope[8] += pull * amplitude * mixed
+        swing = ratio * (region[1, t] - region[0, t]) / store + pull * amplitude * (slow - soon)
+        slope[9] += deep * (1.0 - deep) * swing
+        swing = (1.0 - deep) * (region[3, t] - region[2, t]) + deep * (region[5, t] - region[4, t])
+        slope[10] += pull * amplitude * late * (1.0 - late) * swing
+        for j in range(SIGNALS, region.shape[0]):
+            slope[NAMED + j - SIGNALS] += pull * full * region[j, t]
+        level += gain / store
         if level > sill:
             if 0.5 * (level - sill) < 0.05 * full:
                 level = sill + 0.5 * (level - sill)

@@ -9,7 +9,7 @@ from __future__ import annotations
 import numpy as np
 from numba import njit
 
-from inundate.series.balance import bucket_path, bucket_slopes
+from inundate.series.balance import balance_path, balance_slopes
 from inundate.series.maps import level_at
 
 _HUBER = 2.5
@@ -103,16 +103,13 @@ def _normal_equations(
 
 
 @njit(cache=True, nogil=True)
-def fit_bucket(
-    form: int,
+def fit_balance(
     theta: np.ndarray,
     mean: np.ndarray,
     precision: np.ndarray,
     rain: np.ndarray,
     pet: np.ndarray,
-    runoff: np.ndarray,
-    base: np.ndarray,
-    wet: np.ndarray,
+    region: np.ndarray,
     table: np.ndarray,
     full: float,
     day: np.ndarray,
@@ -130,10 +127,10 @@ def fit_bucket(
     resid2, weight2 = np.empty(count), np.empty(count)
     jac, hess, grad = np.zeros((size, count)), np.zeros((size, size)), np.zeros(size)
     damp = 1e-2
-    bucket_path(form, theta, rain, pet, runoff, base, wet, table, full, path)
+    balance_path(theta, rain, pet, region, table, full, path)
     cost = _cost(path, day, level, inv_low, inv_high, resid, weight) + _prior_cost(theta, mean, precision)
     for step in range(rounds + 1):
-        bucket_slopes(form, theta, rain, pet, runoff, base, wet, table, full, day, jac)
+        balance_slopes(theta, rain, pet, region, table, full, day, jac)
         _normal_equations(jac, resid, weight, precision, precision @ (theta - mean), hess, grad)
         if step == rounds:
             break
@@ -143,7 +140,7 @@ def fit_bucket(
             for a in range(size):
                 damped[a, a] *= 1.0 + damp
             trial = theta + np.linalg.solve(damped, grad)
-            bucket_path(form, trial, rain, pet, runoff, base, wet, table, full, moved)
+            balance_path(trial, rain, pet, region, table, full, moved)
             new = _cost(moved, day, level, inv_low, inv_high, resid2, weight2) + _prior_cost(trial, mean, precision)
             if new < cost:
                 better = True

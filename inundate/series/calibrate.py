@@ -13,11 +13,10 @@ from inundate.series.inputs import Events
 from inundate.series.worth import pair_events
 
 WIDTH_90 = 1.6448536269514722
-# Weight of the pooled value beside a wetland's or a cell's own, in independent blocks; common practice, no source.
+# Weight of the pooled value beside a wetland's or a cell's own, and most of that of hidden seasons beside loggers, in independent
+# blocks; common practice, no source.
 _SHRINK_BLOCKS = 8.0
 _STEPS = 4
-# Weight of hidden loggers under leaves beside other hidden values: the gap to be filled is there; common practice.
-_AIM = 3.0
 
 
 @dataclass(frozen=True, slots=True)
@@ -50,26 +49,35 @@ def _clusters(evidence: Evidence) -> np.ndarray:
 
 
 def choose_weights(evidence: Evidence | None, wetlands: int, kinds: int) -> tuple[np.ndarray, np.ndarray]:
-    """Return the weight of each predictor (wetland, kind) and its held-out RMSE (wetland, kind; NaN where not scored).
+    """Return the weight of each predictor (2, wetland, kind), and its held-out RMSE (wetland, kind; NaN where not scored).
 
-    A wetland's own held-out error counts beside that of all; rows from loggers under leaves count as the aim is there.
+    Weights stand first for bare, then for leafy days. Hidden loggers speak for days of their own kind, and whole seasons of hidden
+    views as much as some blocks at most: there the views are far, which in leaf-off they seldom are. A wetland's own held-out error counts
+    beside that of all.
     """
     scores = np.full((wetlands, kinds), np.nan)
     if evidence is None or evidence.day.size == 0:
-        return np.full((wetlands, kinds), 1 / kinds), scores
+        return np.full((2, wetlands, kinds), 1 / kinds), scores
     weight = _clusters(evidence)
-    square = [(evidence.share[k] - evidence.truth) ** 2 for k in range(kinds)]
     mass = np.bincount(evidence.wetland, weight, wetlands)
     for k in range(kinds):
-        total = np.bincount(evidence.wetland, weight * square[k], wetlands)
+        total = np.bincount(evidence.wetland, weight * (evidence.share[k] - evidence.truth) ** 2, wetlands)
         scores[:, k] = np.where(mass > 0, np.sqrt(total / np.where(mass > 0, mass, 1)), np.nan)
     choices = _simplex(kinds)
     blended = (choices @ evidence.share - evidence.truth) ** 2
-    aim = weight * np.where(evidence.from_stage & (evidence.leaf != 0), _AIM, 1.0)
-    pooled = (blended * aim).sum(axis=1) / aim.sum()
-    own = np.array([np.bincount(evidence.wetland, b * weight, wetlands) for b in blended])
-    best = np.argmin((own + _SHRINK_BLOCKS * pooled[:, None]) / (mass + _SHRINK_BLOCKS), axis=0)
-    return choices[best], scores
+    out = np.empty((2, wetlands, kinds))
+    for leafy in (0, 1):
+        near = evidence.from_stage & ((evidence.leaf != 0) == bool(leafy))
+        far = ~evidence.from_stage
+        heft = np.where(near | far, weight, 0.0)
+        if near.any():
+            heft[far] *= min(_SHRINK_BLOCKS / max(heft[far].sum(), 1e-9), 1.0)
+        pooled = (blended * heft).sum(axis=1) / max(heft.sum(), 1e-9)
+        own = np.array([np.bincount(evidence.wetland, b * heft, wetlands) for b in blended])
+        mass = np.bincount(evidence.wetland, heft, wetlands)
+        best = np.argmin((own + _SHRINK_BLOCKS * pooled[:, None]) / (mass + _SHRINK_BLOCKS), axis=0)
+        out[leafy] = choices[best]
+    return out, scores
 
 
 def _simplex(kinds: int) -> np.ndarray:
@@ -94,7 +102,9 @@ def solve_width(gap: np.ndarray, sd: np.ndarray, noise: np.ndarray, weight: np.n
 
 def blended_evidence(evidence: Evidence, weights: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
     """Return the mean and sd (m) of the blended prediction of each row."""
-    w = weights[evidence.wetland].T
+    leafy = np.array([0.0, 0.5, 1.0, 0.5])[evidence.leaf][:, None]
+    bare, full = weights[:, evidence.wetland]
+    w = (bare + leafy * (full - bare)).T
     mean = (w * evidence.mean).sum(axis=0)
     var = (w * (evidence.sd**2 + (evidence.mean - mean) ** 2)).sum(axis=0)
     return mean, np.sqrt(var)

@@ -14,6 +14,11 @@ from inundate.series.inputs import SPIN_UP_DAYS, Panel
 MEMORIES_DAYS = (5.0, 15.0, 45.0, 120.0, 300.0)
 # Capacity (m) and power of a shallow and a deep soil; within the ranges common for this form, no source.
 SOILS = ((0.05, 1.5), (0.20, 3.0))
+# Share of a day's storage that drains from the quick and the slow reservoir, share of what leaves the soil that recharges the
+# slow one, drainable pore space, and lags (days) of groundwater under a wetland behind the region's: common practice, no source;
+# each wetland's own multipliers and lag are free.
+QUICK_DRAIN, SLOW_DRAIN, RECHARGE_SHARE, YIELD = 0.25, 0.01, 0.4, 0.15
+LAGS_DAYS = (8.0, 60.0)
 # Degree-day melt, m of water per degree and day; common practice, no source.
 MELT_M = 0.003
 
@@ -26,8 +31,9 @@ class Drivers:
     ----------
     rain_m, pet_m : ndarray, shape (spin + day,)
         Rain and melt, and potential evapotranspiration, m; zeros without weather.
-    runoff_m : ndarray, shape (2, spin + day)
-        Runoff of a shallow and of a deep soil, m.
+    region : ndarray, shape (6, spin + day)
+        Inflow from around (m a day) of a shallow and of a deep soil; then groundwater, m about its mean, of the shallow soil after a
+        short and a long lag, and of the deep soil likewise.
     wetness : ndarray, shape (spin + day, memory)
         Antecedent rain minus evapotranspiration at each memory length, standardised.
     season : ndarray, shape (spin + day, 4)
@@ -42,7 +48,7 @@ class Drivers:
 
     rain_m: np.ndarray
     pet_m: np.ndarray
-    runoff_m: np.ndarray
+    region: np.ndarray
     wetness: np.ndarray
     season: np.ndarray
     loggers: np.ndarray
@@ -80,23 +86,38 @@ def snow_and_melt(rain: np.ndarray, temperature: np.ndarray, melt_rate: float) -
 
 
 @njit(cache=True, nogil=True)
-def soil_runoff(rain: np.ndarray, pet: np.ndarray, capacity: float, power: float) -> np.ndarray:
-    """Runoff (m a day) of a soil store: rain times filled share to a power; evaporation falls with the store.
+def region_water(rain: np.ndarray, pet: np.ndarray, capacity: float, power: float) -> tuple[np.ndarray, np.ndarray]:
+    """Inflow from the ground around (m a day) and groundwater storage (m) of a soil store and two reservoirs below it.
 
-    Form of the soil routine of Bergstrom, Development and application of a conceptual runoff model for Scandinavian
-    catchments, SMHI RHO 7, 1976.
+    Rain times the filled share to a power leaves the soil; evaporation falls with the store. Part of what leaves recharges
+    groundwater, which drains slowly; the rest runs off within days. Form of the routines of Bergstrom, Development and application of
+    a conceptual runoff model for Scandinavian catchments, SMHI RHO 7, 1976.
     """
-    out = np.empty(rain.size)
-    store = 0.7 * capacity
+    quick, ground = np.empty(rain.size), np.empty(rain.size)
+    store, upper, lower = 0.8 * capacity, 0.0, 0.2 * rain.mean() / SLOW_DRAIN
     for t in range(rain.size):
-        filled = store / capacity
-        out[t] = rain[t] * filled**power
-        store += rain[t] - out[t] - pet[t] * min(filled / 0.7, 1.0)
+        out = rain[t] * (store / capacity) ** power
+        store += rain[t] - out
         if store > capacity:
-            out[t] += store - capacity
+            out += store - capacity
             store = capacity
-        store = max(store, 0.0)
-    return out
+        store = max(store - pet[t] * min(store / (0.7 * capacity), 1.0), 0.0)
+        upper += (1.0 - RECHARGE_SHARE) * out
+        quick[t] = QUICK_DRAIN * upper
+        upper -= quick[t]
+        lower += RECHARGE_SHARE * out
+        lower -= SLOW_DRAIN * lower
+        ground[t] = lower
+    return quick, ground
+
+
+def _region(rain: np.ndarray, pet: np.ndarray, tail: int) -> np.ndarray:
+    """Inflow of both soils, then groundwater (m about its mean) of each soil after a short and a long lag: (6, time)."""
+    water = [region_water(rain, pet, *soil) for soil in SOILS]
+    heads = [(ground - ground[-tail:].mean()) / YIELD for _, ground in water]
+    return np.ascontiguousarray(
+        [quick for quick, _ in water] + [leaky_sum(head, lag) for head in heads for lag in LAGS_DAYS]
+    )
 
 
 def _full_column(weather: pd.DataFrame, column: str, days: pd.DatetimeIndex) -> np.ndarray:
@@ -204,5 +225,5 @@ def build_drivers(panel: Panel) -> Drivers:
     fold = logger_folds(panel)
     guess = np.column_stack([wetness, season])
     loggers = _logger_signals(panel, fold, guess, spin)
-    runoff = np.array([soil_runoff(rain, pet, *soil) for soil in SOILS])
-    return Drivers(rain, pet, runoff, wetness, season, loggers, fold, panel.weather is not None, spin)
+    region = _region(rain, pet, len(panel.dates))
+    return Drivers(rain, pet, region, wetness, season, loggers, fold, panel.weather is not None, spin)

@@ -19,7 +19,7 @@ from inundate.series.calibrate import (
 )
 from inundate.series.drivers import build_drivers
 from inundate.series.fitting import Setup, make_setup, pool_items
-from inundate.series.heldout import Evidence, hide_blocks, hide_loggers, join
+from inundate.series.heldout import Evidence, hide_blocks, hide_loggers, join, relation_share
 from inundate.series.inputs import Events, FillOptions, SeriesInputs, build_panel
 from inundate.series.maps import LevelMaps, build_maps, share_at, slope_at
 from inundate.series.model import (
@@ -34,7 +34,7 @@ from inundate.series.model import (
 )
 from inundate.series.result import Joint, SeriesResult, daily_table
 from inundate.series.smooth import area_moments
-from inundate.series.worth import scene_factors, worth_of_views
+from inundate.series.worth import correct_leafy, scene_factors
 
 OBSERVED, STAGE, NEIGHBOURS, SEASON = range(4)
 
@@ -43,9 +43,9 @@ def fill_series(inputs: SeriesInputs, *, options: FillOptions | None = None, see
     """Fill the daily extent of every wetland, with 90 % intervals and the reason for each choice.
 
     A wetland's level is what its predictor says plus a slowly varying departure, observed by views (through the bounded
-    level-area map, with error) and by its own logger. Predictors are a mass balance and a linear one on antecedent rain
+    level-area map, with error) and by its own logger. Predictors are a water balance and a linear one on antecedent rain
     minus evapotranspiration, season and the region's loggers; parameters are pooled across wetlands by size and cover.
-    They are blended, and intervals calibrated, by hiding whole seasons of views and whole loggers.
+    They are blended, apart for bare and leafy days, and intervals calibrated, by hiding whole seasons of views and whole loggers.
 
     Parameters
     ----------
@@ -68,7 +68,7 @@ def fill_series(inputs: SeriesInputs, *, options: FillOptions | None = None, see
     setup = make_setup(panel, build_drivers(panel), options, seed)
     logged = {panel.ids[i] for i in np.flatnonzero(setup.drivers.fold > 0)}
     blind = _blind_maps(setup, inputs, logged)
-    setup, views, begun = weigh_views(setup, blind)
+    setup, views, begun = weigh_views(setup)
     fits = [fit_kind(setup, k, views, panel.stage, b) for k, b in zip(available_kinds(setup), begun, strict=True)]
     parts = [
         hide_loggers(setup, blind, fits, views, panel.stage),
@@ -78,7 +78,7 @@ def fill_series(inputs: SeriesInputs, *, options: FillOptions | None = None, see
     evidence = join(found) if found else None
     weights, scores = choose_weights(evidence, len(panel.ids), len(fits))
     everyone = range(len(panel.ids))
-    levels = blend([smooth_levels(setup, f, everyone, views, panel.stage, f.posterior) for f in fits], weights)
+    levels = blend([smooth_levels(setup, f, everyone, views, panel.stage, f.posterior) for f in fits], weights, panel.leaf)
     wide = _widen(setup, levels, evidence, weights, views)
     heldout = heldout_table(setup, blind, evidence, weights)
     reasons = _reasons(setup, fits, weights, scores, evidence)
@@ -98,7 +98,7 @@ def _blind_maps(setup: Setup, inputs: SeriesInputs, logged: set[str]) -> LevelMa
     return build_maps(setup.panel.ids, setup.panel.area_max_m2, Others(), inputs.hypsometry)
 
 
-def weigh_views(setup: Setup, blind: LevelMaps) -> tuple[Setup, Events, list[Fitted | None]]:
+def weigh_views(setup: Setup) -> tuple[Setup, Events, list[Fitted | None]]:
     """Return views with the errors they proved to have, and the first predictor learned from leaf-off views on the way.
 
     The setup returned knows the share of stray views.
@@ -106,21 +106,17 @@ def weigh_views(setup: Setup, blind: LevelMaps) -> tuple[Setup, Events, list[Fit
     kinds, stage, views = available_kinds(setup), setup.panel.stage, setup.panel.views
     begun: list[Fitted | None] = [None] * len(kinds)
     bare = views.keep(views.kind == 0)
-    evidence = None
     if bare.day.size:
         first = learn_kind(setup, kinds[0], bare, stage)
         scores = left_out_scores(setup, first, pool_items(setup), bare, stage)
         factor, stray = scene_factors(bare, scores)
-        bare = bare.with_sd(bare.sd * factor)
         sd = views.sd.copy()
-        sd[views.kind == 0] = bare.sd
+        sd[views.kind == 0] = bare.sd * factor
         views = views.with_sd(sd)
         setup = replace(setup, options=replace(setup.options, outlier_share=stray))
         begun[0] = first
-        if setup.drivers.fold.any() and (views.kind != 0).any():
-            evidence = hide_loggers(setup, blind, [first], bare, stage)
-    sd = views.sd * worth_of_views(views, evidence)
-    return setup, views.with_sd(sd).keep(np.isfinite(sd)), begun
+    sure = stage.certain()
+    return setup, correct_leafy(views, sure, relation_share(setup, sure)), begun
 
 
 def _stage_days(stage: Events, days: int) -> np.ndarray:
@@ -193,19 +189,25 @@ def _reasons(
     logged = np.diff(panel.stage.start)
     frame = pd.DataFrame({"wetland_id": panel.ids, "area_source": panel.maps.source})
     names = [f.kind for f in fits]
-    lead = np.argmax(weights, axis=1)
-    frame["predictor"] = [names[k] if weights[i, k] >= 0.999 else "blend" for i, k in enumerate(lead)]
+    least = weights.min(axis=0)
+    lead = np.argmax(least, axis=1)
+    frame["predictor"] = [names[k] if least[i, k] >= 0.999 else "blend" for i, k in enumerate(lead)]
     for k, fit in enumerate(fits):
         key = fit.kind.replace(" ", "_")
-        frame[f"weight_{key}"] = weights[:, k]
+        frame[f"weight_{key}_leaf_off"] = weights[0, :, k]
+        frame[f"weight_{key}_leaf_on"] = weights[1, :, k]
         frame[f"score_{key}"] = scores[:, k]
-    frame["departure_sd_m"] = sum(weights[:, k] * f.departure.sd for k, f in enumerate(fits)) * setup.maps.full_m
-    frame["departure_memory_days"] = sum(weights[:, k] * f.departure.memory for k, f in enumerate(fits))
+    usual = weights.mean(axis=0)
+    frame["departure_sd_m"] = sum(usual[:, k] * f.departure.sd for k, f in enumerate(fits)) * setup.maps.full_m
+    frame["departure_memory_days"] = sum(usual[:, k] * f.departure.memory for k, f in enumerate(fits))
     frame["n_views"] = np.diff(panel.views.start)
     frame["n_stage_days"] = logged
     words = []
     for i in range(len(panel.ids)):
-        lean = ", ".join(f"{names[k]} {weights[i, k]:.2f}" for k in range(len(names)) if weights[i, k] > 0)
+        lean = "; ".join(
+            f"{name}: " + ", ".join(f"{names[k]} {w[i, k]:.2f}" for k in range(len(names)) if w[i, k] > 0)
+            for name, w in zip(("leaves off", "leaves on"), weights, strict=True)
+        )
         if evidence is None:
             tail = "nothing could be held out, so predictors count alike"
         elif np.isfinite(scores[i]).any():

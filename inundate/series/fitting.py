@@ -10,27 +10,16 @@ import numpy as np
 from numba import njit
 
 from inundate.common.seeds import rng_for
-from inundate.series.balance import (
-    CATCHMENT,
-    CATCHMENT_MEAN,
-    CATCHMENT_SD,
-    DIRECT,
-    DIRECT_MEAN,
-    DIRECT_SD,
-    bucket_path,
-)
-from inundate.series.bucket import fit_bucket, fit_linear, level_targets, linear_path
+from inundate.series.balance import MEAN, SD, SIGNALS, balance_path
+from inundate.series.bucket import fit_balance, fit_linear, level_targets, linear_path
 from inundate.series.drivers import Drivers
 from inundate.series.inputs import Events, FillOptions, Panel
 from inundate.series.maps import LevelMaps
 
 # Day (spin-up included), level (m), and inverse errors below and above (1 / m) of a wetland's events.
 Aim = tuple[np.ndarray, np.ndarray, np.ndarray, np.ndarray]
-KINDS = ("catchment balance", "direct balance", "linear")
-_BALANCES = {
-    "catchment balance": (CATCHMENT, CATCHMENT_MEAN, CATCHMENT_SD),
-    "direct balance": (DIRECT, DIRECT_MEAN, DIRECT_SD),
-}
+BALANCE, LINEAR = "water balance", "linear"
+KINDS = (BALANCE, LINEAR)
 # Days between stage values that enter a fit (the departure between neighbours is nearly the same).
 _STAGE_STEP = 7
 # Weight of the prior covariance and of the prior mean in pooled estimates, in wetlands; common practice, no source.
@@ -67,8 +56,8 @@ class Setup:
     seed : int
     group : ndarray, shape (wetland, covariate)
         1, standardised log size, deciduous, evergreen.
-    base, design : tuple of ndarray
-        A fold each: drivers of the regional water level (spin + day, column), and design of the linear predictor.
+    region, design : tuple of ndarray
+        A fold each: what drives the water balance (row, spin + day), and design of the linear predictor (spin + day, column).
     """
 
     panel: Panel
@@ -77,7 +66,7 @@ class Setup:
     options: FillOptions
     seed: int
     group: np.ndarray
-    base: tuple[np.ndarray, ...]
+    region: tuple[np.ndarray, ...]
     design: tuple[np.ndarray, ...]
 
 
@@ -103,12 +92,12 @@ def make_setup(panel: Panel, drivers: Drivers, options: FillOptions, seed: int) 
     spread = size.std()
     size = (size - size.mean()) / (spread if spread > 0 else 1.0)
     group = np.column_stack([np.ones(size.size), size, panel.cover == 1, panel.cover == 2]).astype(float)
-    base, design = [], []
+    region, design = [], []
     ones = np.ones((drivers.rain_m.size, 1))
     for signals in drivers.loggers:
-        base.append(np.ascontiguousarray(np.column_stack([drivers.wetness[:, 2:], signals])))
+        region.append(np.ascontiguousarray(np.vstack([drivers.region, signals.T])))
         design.append(np.ascontiguousarray(np.column_stack([ones, drivers.season, drivers.wetness, signals])))
-    return Setup(panel, drivers, panel.maps, options, seed, group, tuple(base), tuple(design))
+    return Setup(panel, drivers, panel.maps, options, seed, group, tuple(region), tuple(design))
 
 
 def with_maps(setup: Setup, maps: LevelMaps) -> Setup:
@@ -118,10 +107,9 @@ def with_maps(setup: Setup, maps: LevelMaps) -> Setup:
 
 def first_prior(setup: Setup, kind: str) -> Prior:
     """Return the wide prior before pooling."""
-    if kind in _BALANCES:
-        more = setup.base[0].shape[1]
-        _, centre, wide = _BALANCES[kind]
-        mean, sd = np.r_[centre, np.zeros(more)], np.r_[wide, np.full(more, 0.3)]
+    if kind == BALANCE:
+        more = setup.region[0].shape[0] - SIGNALS
+        mean, sd = np.r_[MEAN, np.zeros(more)], np.r_[SD, np.full(more, 0.3)]
     else:
         more = setup.design[0].shape[1]
         mean, sd = np.zeros(more), np.full(more, 0.25)
@@ -183,24 +171,9 @@ def fit_one(
     table, full = setup.maps.share[i], float(setup.maps.full_m[i])
     if aim[0].size == 0:
         return mean, prior.cov
-    if kind in _BALANCES:
-        d, form = setup.drivers, _BALANCES[kind][0]
-        wet = np.ascontiguousarray(d.wetness[:, 2])
-        hess = fit_bucket(
-            form,
-            theta,
-            mean,
-            precision,
-            d.rain_m,
-            d.pet_m,
-            d.runoff_m,
-            setup.base[fold],
-            wet,
-            table,
-            full,
-            *aim,
-            rounds,
-        )
+    if kind == BALANCE:
+        d = setup.drivers
+        hess = fit_balance(theta, mean, precision, d.rain_m, d.pet_m, setup.region[fold], table, full, *aim, rounds)
     else:
         hess = fit_linear(theta, mean, precision, setup.design[fold], full, *aim, rounds)
     return theta, np.linalg.inv(hess)
@@ -245,34 +218,29 @@ def pool_items(setup: Setup) -> np.ndarray:
     return np.sort(np.concatenate([np.flatnonzero(logged)[:_POOL_WETLANDS], others]))
 
 
-def member_paths(
+def member_sets(
     setup: Setup, kind: str, i: int, theta: np.ndarray, cov: np.ndarray, members: int | None = None
-) -> np.ndarray:
-    """Return levels (member, day) of a wetland for parameter sets drawn from its posterior, in antithetic pairs."""
+) -> tuple[np.ndarray, np.ndarray]:
+    """Return parameter sets (member, parameter) drawn in antithetic pairs, and the squared length of each pair's draw (pair,)."""
     half = max((setup.options.members if members is None else members) // 2, 1)
     draw = rng_for(setup.seed, "members", kind, setup.panel.ids[i]).standard_normal((half, theta.size))
     values, vectors = np.linalg.eigh(cov)
     step = draw @ (vectors * np.sqrt(np.maximum(values, 0))).T
-    sets = np.vstack([theta + step, theta - step])
+    return np.vstack([theta + step, theta - step]), (draw**2).sum(axis=1)
+
+
+def member_paths(
+    setup: Setup, kind: str, i: int, theta: np.ndarray, cov: np.ndarray, members: int | None = None
+) -> np.ndarray:
+    """Return levels (member, day) of a wetland for parameter sets drawn from its posterior, in antithetic pairs."""
+    sets, _ = member_sets(setup, kind, i, theta, cov, members)
     d, fold = setup.drivers, setup.drivers.fold[i]
     table, full = setup.maps.share[i], float(setup.maps.full_m[i])
     out = np.empty((len(sets), len(setup.panel.dates)))
     path = np.empty(d.rain_m.size)
-    wet = np.ascontiguousarray(d.wetness[:, 2]) if d.has_weather else np.zeros(0)
     for m, one in enumerate(sets):
-        if kind in _BALANCES:
-            bucket_path(
-                _BALANCES[kind][0],
-                one,
-                d.rain_m,
-                d.pet_m,
-                d.runoff_m,
-                setup.base[fold],
-                wet,
-                table,
-                full,
-                path,
-            )
+        if kind == BALANCE:
+            balance_path(one, d.rain_m, d.pet_m, setup.region[fold], table, full, path)
         else:
             linear_path(one, setup.design[fold], full, path)
         out[m] = path[d.spin :]

@@ -9,6 +9,7 @@ import numpy as np
 
 from inundate.series.fitting import (
     KINDS,
+    LINEAR,
     Departure,
     Posterior,
     Prior,
@@ -17,6 +18,7 @@ from inundate.series.fitting import (
     fit_many,
     in_threads,
     member_paths,
+    member_sets,
     pool_items,
     pooled_prior,
     targets,
@@ -30,8 +32,6 @@ DEPARTURE_SD = (0.02, 0.04, 0.07, 0.12, 0.2, 0.32)
 DEPARTURE_MEMORY = (6.0, 18.0, 50.0)
 # Day, value, sd, kind and whether it is stage, of one wetland's events in order of day.
 Rows = tuple[np.ndarray, np.ndarray, np.ndarray, np.ndarray, np.ndarray]
-# Members carried where only the spread of the predictor is wanted.
-_FEW = 8
 _FIRST_SD, _FIRST_MEMORY = 0.12, 18.0
 
 
@@ -55,8 +55,8 @@ class Levels:
 
 
 def available_kinds(setup: Setup) -> tuple[str, ...]:
-    """Return the predictor kinds that the inputs allow; mass balances need weather."""
-    return KINDS if setup.drivers.has_weather else KINDS[-1:]
+    """Return the predictor kinds that the inputs allow; the water balance needs weather."""
+    return KINDS if setup.drivers.has_weather else (LINEAR,)
 
 
 def _events_of(views: Events, stage: Events, i: int) -> Rows:
@@ -206,8 +206,8 @@ def departure_logliks(
 
     def work(row: int) -> np.ndarray:
         i = int(items[row])
-        paths = member_paths(setup, kind, i, post.theta[row], post.cov[row], _FEW)
-        return departure_loglik(setup, i, paths, _events_of(views, stage, i))
+        path = member_paths(setup, kind, i, post.theta[row], np.zeros_like(post.cov[row]), 2)[:1]
+        return departure_loglik(setup, i, path, _events_of(views, stage, i))
 
     return np.array(in_threads(work, range(len(items)), setup.options.workers))
 
@@ -251,8 +251,18 @@ def _smooth_one(
     site, site_var = _sites(setup, i, paths, rows, sd, memory)
     phi, s0 = float(np.exp(-1 / memory)), sd * sd
     mean, var = np.empty(paths.shape[1]), np.empty(paths.shape[1])
-    smooth_members(paths, site, site_var, phi, s0 * (1 - phi * phi), s0, mean, var)
+    smooth_members(paths, member_scores(setup, fit, i, *parameters), site, site_var, phi, s0 * (1 - phi * phi), s0, mean, var)
     return mean, var, site, site_var
+
+
+def member_scores(setup: Setup, fit: Fitted, i: int, theta: np.ndarray, cov: np.ndarray) -> np.ndarray:
+    """Return the log of each member's prior over the density it was drawn from; infinite for a predictor without bends."""
+    if fit.kind == LINEAR:
+        return np.full(2 * max(setup.options.members // 2, 1), np.inf)
+    sets, square = member_sets(setup, fit.kind, i, theta, cov)
+    gap = sets - setup.group[i] @ fit.prior.coef
+    away = np.einsum("mi,ij,mj->m", gap, np.linalg.inv(fit.prior.cov), gap)
+    return 0.5 * (np.concatenate([square, square]) - away)
 
 
 def left_out_scores(setup: Setup, fit: Fitted, items: np.ndarray, views: Events, stage: Events) -> np.ndarray:
@@ -292,13 +302,29 @@ def left_out_scores(setup: Setup, fit: Fitted, items: np.ndarray, views: Events,
     return out
 
 
-def blend(levels: Sequence[Levels], weights: np.ndarray) -> Levels:
+def day_weights(weights: np.ndarray, leaf: np.ndarray, kind: int) -> np.ndarray:
+    """Return the weight of one kind (wetland, day): that of bare or of leafy days, halfway between as leaves come and go.
+
+    Parameters
+    ----------
+    weights : ndarray, shape (2, wetland, kind)
+        On bare and on leafy days.
+    leaf : ndarray of uint8, shape (wetland, day)
+    kind : int
+    """
+    leafy = np.array([0.0, 0.5, 1.0, 0.5], np.float32)[leaf]
+    bare, full = weights[:, :, kind].astype(np.float32)
+    return bare[:, None] + leafy * (full - bare)[:, None]
+
+
+def blend(levels: Sequence[Levels], weights: np.ndarray, leaf: np.ndarray) -> Levels:
     """Blend predictors' levels; the spread between them counts in the variance.
 
     Parameters
     ----------
     levels : sequence of Levels, one a kind
-    weights : ndarray, shape (wetland, kind)
+    weights : ndarray, shape (2, wetland, kind)
+    leaf : ndarray of uint8, shape (wetland, day)
 
     Returns
     -------
@@ -306,10 +332,9 @@ def blend(levels: Sequence[Levels], weights: np.ndarray) -> Levels:
     """
     if len(levels) == 1:
         return levels[0]
-    w = weights.astype(np.float32)
     mean, var = np.zeros_like(levels[0].mean), np.zeros_like(levels[0].mean)
     for k, one in enumerate(levels):
-        mean += w[:, k : k + 1] * one.mean
+        mean += day_weights(weights, leaf, k) * one.mean
     for k, one in enumerate(levels):
-        var += w[:, k : k + 1] * (one.sd**2 + (one.mean - mean) ** 2)
+        var += day_weights(weights, leaf, k) * (one.sd**2 + (one.mean - mean) ** 2)
     return Levels(mean, np.sqrt(var))

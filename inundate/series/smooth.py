@@ -15,6 +15,8 @@ from numba import njit
 from inundate.series.kalman import smooth_one
 from inundate.series.maps import share_at
 
+# Least share of members that must count after weighing; common practice, no source.
+_EFFECTIVE = 0.1
 _GRID = 81
 _REACH = 5.0
 # Gauss-Hermite nodes and weights for a standard normal, 11 points.
@@ -160,8 +162,25 @@ def _second_pass(
 
 
 @njit(cache=True, nogil=True)
+def member_weights(like: np.ndarray) -> np.ndarray:
+    """Weights (member,) from logs of likelihood times prior over density drawn from, tempered until enough members count."""
+    size = like.size
+    least = max(_EFFECTIVE * size, 1.0)
+    weight = np.full(size, 1.0 / size)
+    temper = 1.0
+    for _ in range(60):
+        weight[:] = np.exp(temper * (like - like.max()))
+        weight /= weight.sum()
+        if 1.0 / (weight * weight).sum() >= least:
+            break
+        temper *= 0.85
+    return weight
+
+
+@njit(cache=True, nogil=True)
 def smooth_members(
     paths: np.ndarray,
+    score: np.ndarray,
     site: np.ndarray,
     site_var: np.ndarray,
     phi: float,
@@ -169,23 +188,26 @@ def smooth_members(
     s0: float,
     mean: np.ndarray,
     var: np.ndarray,
-) -> float:
-    """Level mean and variance (time,) over members (member, time), each smoothed given the sites; return mean loglik."""
+) -> None:
+    """Level mean and variance (time,) over members (member, time), each smoothed given the sites and weighed by its likelihood.
+
+    ``score`` (member,) is the log of a member's prior over the density it was drawn from; infinite: all members count alike.
+    """
     members, size = paths.shape
-    own, own_var = np.empty(size), np.empty(size)
+    own, own_var = np.empty((members, size)), np.empty(size)
+    like = np.zeros(members)
+    for m in range(members):
+        like[m] = smooth_one(site - paths[m], site_var, phi, q, s0, own[m], own_var)
+    weight = member_weights(like + score) if np.isfinite(score[0]) else np.full(members, 1.0 / members)
     mean[:] = 0.0
     var[:] = 0.0
-    loglik = 0.0
     for m in range(members):
-        loglik += smooth_one(site - paths[m], site_var, phi, q, s0, own, own_var)
         for t in range(size):
-            total = paths[m, t] + own[t]
-            mean[t] += total
-            var[t] += total * total
+            total = paths[m, t] + own[m, t]
+            mean[t] += weight[m] * total
+            var[t] += weight[m] * total * total
     for t in range(size):
-        mean[t] /= members
-        var[t] = max(var[t] / members - mean[t] * mean[t], 0.0) * members / max(members - 1, 1) + own_var[t]
-    return loglik / members
+        var[t] = max(var[t] - mean[t] * mean[t], 0.0) + own_var[t]
 
 
 @njit(cache=True, nogil=True)

@@ -1,10 +1,11 @@
-"""What views under leaves are worth: measured as the part of a hidden prediction's error that they remove."""
+"""What views are worth: scenes that err as a whole, and what canopies hide or feign, measured at the wetlands with loggers."""
 
 from __future__ import annotations
 
+from dataclasses import dataclass, replace
+
 import numpy as np
 
-from inundate.series.heldout import Evidence
 from inundate.series.inputs import Events
 
 # Bounds between classes of views under leaves by the share of ground that the canopy lets through (common practice).
@@ -13,7 +14,8 @@ _OPENNESS = (0.4, 0.6)
 # coarser group beside a finer one. Common practice, no source.
 _UNPROVEN, _SHRINK = 3.0, 4.0
 _STRAY = 0.02
-_USELESS = 30.0
+# A view counts as worthless from this factor on its sd; canopies whose views follow the truth with a lesser slope tell nothing.
+_USELESS, _LEAST_SLOPE = 30.0, 0.1
 # Days over which errors of views under leaves hang together: a canopy hides the same ground all season.
 _LEAFY_MEMORY_DAYS = 60.0
 
@@ -58,73 +60,123 @@ def scene_factors(views: Events, scores: np.ndarray) -> tuple[np.ndarray, float]
     return factor, stray
 
 
-def _gain(error: np.ndarray, news: np.ndarray, cluster: np.ndarray) -> tuple[float, float]:
-    """Return the regression of a prediction's error on what the view adds, and the number of independent clusters."""
-    _, inverse, counts = np.unique(cluster, return_inverse=True, return_counts=True)
-    weight = 1 / counts[inverse]
-    spread = (weight * news**2).sum()
-    return (float((weight * error * news).sum() / spread) if spread > 0 else 0.0), float(counts.size)
+@dataclass(frozen=True, slots=True)
+class Reading:
+    """How views of one leaf state and openness read: ``view = offset + slope * truth``, with an error of ``sd``."""
+
+    offset: float
+    slope: float
+    sd: float
 
 
-def worth_of_views(views: Events, evidence: Evidence | None) -> np.ndarray:
-    """Return the factor on each view's standard deviation, from what it proved worth at loggers hidden for the purpose.
+def correct_leafy(views: Events, stage: Events, truth: tuple[np.ndarray, np.ndarray]) -> Events:
+    """Return views with those under leaves read, and weighed, as they prove at the wetlands with loggers.
 
-    In a group of views (leaf state, openness of the canopy) the gain ``g`` is the regression of the prediction's error on view minus
-    prediction; with error variance ``V`` of the prediction the view's own is ``V (1 - g) / g``. Gains are shrunk from
-    openness groups to leaf states to what an unproven view would have. Errors under leaves persist, so crowded views
-    count less.
+    In a group of views (leaf state, openness of the canopy) a line of view on truth, a wetland's year counting once, tells what canopies
+    hide or feign; views are read back through it. Lines and errors are shrunk from openness groups to leaf states to what an unproven
+    view would be. Errors under leaves persist: crowded views of a season count less, and what wetlands differ by lasts.
 
     Parameters
     ----------
     views : Events
-    evidence : Evidence or None
-        Loggers hidden and predicted without views under leaves; None without loggers.
+    stage : Events
+        Days with certain stage; none without loggers.
+    truth : (share, sd)
+        Share of the largest extent at each stage event, and its standard deviation.
 
     Returns
     -------
-    ndarray, shape (view,)
-        1 in leaf-off (see :func:`scene_factors`), infinite where views proved worth nothing.
+    Events
+        Leaf-off views as they were; views that prove worth nothing are gone.
     """
-    out = np.ones(views.day.size)
     leafy = views.kind != 0
-    out[leafy] = _UNPROVEN
-    if evidence is not None:
-        table = _gains(views, evidence)
-        bins = np.digitize(views.open, _OPENNESS)
-        out[leafy] = table[views.kind[leafy].astype(int), bins[leafy]]
-    crowd = _crowding_by_wetland(views, leafy)
-    out[leafy] *= np.sqrt(crowd[leafy])
-    return np.where(out > _USELESS, np.inf, out)
+    if not leafy.any():
+        return views
+    bins = np.digitize(views.open, _OPENNESS)
+    at, on = pair_events(views, stage)
+    keep = leafy[at]
+    at, on = at[keep], on[keep]
+    table, lasting = _readings(views, bins, at, (truth[0][on], truth[1][on]))
+    crowd, count = _crowding_by_wetland(views, leafy)
+    value, var = views.value.copy(), views.sd**2
+    good = np.ones(views.day.size, bool)
+    for (leaf, size), line in table.items():
+        cell = leafy & (views.kind == leaf) & (bins == size)
+        if not cell.any():
+            continue
+        scale = max(line.sd / _usual_sd(views.sd[cell]), 1.0) if at.size else _UNPROVEN
+        value[cell] = np.clip((views.value[cell] - line.offset) / line.slope, 0.0, 1.0)
+        var[cell] = ((scale * views.sd[cell]) ** 2 * crowd[cell] + lasting * count[cell]) / line.slope**2
+        good[cell] = np.sqrt(var[cell]) < _USELESS * views.sd[cell]
+    return replace(views, value=value, sd=np.sqrt(var)).keep(good)
 
 
-def _gains(views: Events, evidence: Evidence) -> np.ndarray:
-    """Return factors (leaf state, openness)."""
-    key_v = views.owner * 1_000_000 + views.day
-    key_e = evidence.wetland * 1_000_000 + evidence.day
-    at_v, at_e = np.intersect1d(key_v, key_e, return_indices=True)[1:]
-    error = evidence.truth[at_e] - evidence.share[0, at_e]
-    news = views.value[at_v] - evidence.share[0, at_e]
-    cluster = evidence.wetland[at_e] * 1000 + evidence.block[at_e]
-    all_bins = np.digitize(views.open, _OPENNESS)
-    kind, bins = views.kind[at_v], all_bins[at_v]
-    factors = np.full((4, 3), _UNPROVEN)
-    variance = max(float(np.mean(error**2)), 1e-4) if error.size else 0.01
+def _readings(
+    views: Events, bins: np.ndarray, at: np.ndarray, truth: tuple[np.ndarray, np.ndarray]
+) -> tuple[dict[tuple[int, int], Reading], float]:
+    """Return the reading of each leaf state and openness group, and the variance of errors that last in a wetland."""
+    kind, group, value = views.kind[at], bins[at], views.value[at]
+    share, share_sd = truth
+    weight, _ = _blocks(views.owner[at] * 1000 + views.day[at] // 365)
+    moments = _moments(share, weight)
+    table: dict[tuple[int, int], Reading] = {}
+    gap = np.zeros(at.size)
     for leaf in (1, 2, 3):
-        typical = np.array([_usual_sd(views.sd[(views.kind == leaf) & (all_bins == size)]) for size in range(3)])
-        base = variance / (variance + (_UNPROVEN * typical) ** 2)
-        in_leaf = kind == leaf
-        whole, blocks = _gain(error[in_leaf], news[in_leaf], cluster[in_leaf]) if in_leaf.any() else (0.0, 0.0)
+        wide = _UNPROVEN * _usual_sd(views.sd[views.kind == leaf])
+        rows = kind == leaf
+        whole = _line(value[rows], share[rows], share_sd[rows], weight[rows], (Reading(0.0, 1.0, wide), moments))
         for size in range(3):
-            cell = in_leaf & (bins == size)
-            g = (blocks * whole + _SHRINK * base[size]) / (blocks + _SHRINK)
-            sd = typical[size]
-            if cell.any():
-                own, n = _gain(error[cell], news[cell], cluster[cell])
-                g = (n * own + _SHRINK * g) / (n + _SHRINK)
-                sd = float(np.sqrt(np.mean(views.sd[at_v][cell] ** 2)))
-            g = float(np.clip(g, 1e-4, 0.999))
-            factors[leaf, size] = max(np.sqrt(variance * (1 - g) / g) / sd, 1.0)
-    return factors
+            rows = (kind == leaf) & (group == size)
+            table[leaf, size] = line = _line(
+                value[rows], share[rows], share_sd[rows], weight[rows], (whole, moments)
+            )
+            gap[rows] = value[rows] - line.offset - line.slope * share[rows]
+    return table, _lasting(gap, views.owner[at], views.day[at])
+
+
+def _moments(share: np.ndarray, weight: np.ndarray) -> np.ndarray:
+    """Mean of (1, share) times itself, (2, 2); that of an even spread where there is nothing."""
+    if not share.size:
+        return np.array([[1.0, 0.5], [0.5, 1.0 / 3.0]])
+    x = np.column_stack([np.ones(share.size), share])
+    return (x.T * weight) @ x / weight.sum() + np.diag([0.0, 0.02])
+
+
+def _line(
+    value: np.ndarray, share: np.ndarray, share_sd: np.ndarray, weight: np.ndarray, parent: tuple[Reading, np.ndarray]
+) -> Reading:
+    """Fit a line of view on truth, held by its parent's as by ``_SHRINK`` wetland-years."""
+    above, moments = parent
+    if not value.size:
+        return above
+    x = np.column_stack([np.ones(value.size), share])
+    hold = _SHRINK * moments
+    held = np.array([above.offset, above.slope])
+    offset, slope = np.linalg.solve((x.T * weight) @ x + hold, x.T @ (weight * value) + hold @ held)
+    slope = float(np.clip(slope, _LEAST_SLOPE, 1.5))
+    rest = np.maximum((value - offset - slope * share) ** 2 - (slope * share_sd) ** 2, 0.0)
+    var = ((weight * rest).sum() + _SHRINK * above.sd**2) / (weight.sum() + _SHRINK)
+    return Reading(float(offset), slope, float(np.sqrt(var)))
+
+
+def _lasting(gap: np.ndarray, owner: np.ndarray, day: np.ndarray) -> float:
+    """Variance of the mean error of a wetland beyond what errors that come and go would leave; 0 with few wetlands."""
+    means, left = [], []
+    for i in np.unique(owner):
+        mine = np.flatnonzero(owner == i)
+        away = np.abs(day[mine][:, None] - day[mine][None, :])
+        free = (1.0 / np.exp(-away / _LEAFY_MEMORY_DAYS).sum(axis=1)).sum()
+        means.append(gap[mine].mean())
+        left.append(gap[mine].var() / max(free - 1.0, 1.0))
+    if len(means) < 3:
+        return 0.0
+    return float(max(np.mean(np.square(means)) - np.mean(left), 0.0))
+
+
+def _blocks(cluster: np.ndarray) -> tuple[np.ndarray, float]:
+    """Return weights by which each cluster counts once, and the number of clusters."""
+    _, inverse, counts = np.unique(cluster, return_inverse=True, return_counts=True)
+    return 1 / counts[inverse], float(counts.size)
 
 
 def _usual_sd(sd: np.ndarray) -> float:
@@ -132,11 +184,12 @@ def _usual_sd(sd: np.ndarray) -> float:
     return float(np.sqrt(np.mean(sd**2))) if sd.size else 0.15
 
 
-def _crowding_by_wetland(views: Events, leafy: np.ndarray) -> np.ndarray:
-    """Return 1 plus the summed correlation with the wetland's other views under leaves."""
-    out = np.ones(views.day.size)
+def _crowding_by_wetland(views: Events, leafy: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+    """Return 1 plus the summed correlation with the wetland's other views under leaves, and how many of these there are."""
+    out, count = np.ones(views.day.size), np.ones(views.day.size)
     for i in np.unique(views.owner[leafy]):
         rows = np.flatnonzero(leafy[views.start[i] : views.start[i + 1]]) + views.start[i]
         gap = np.abs(views.day[rows][:, None] - views.day[rows][None, :])
         out[rows] = np.exp(-gap / _LEAFY_MEMORY_DAYS).sum(axis=1)
-    return out
+        count[rows] = rows.size
+    return out, count
