@@ -67,7 +67,7 @@ def conclude(
     lasting: tuple[float, float] = (0.0, 0.0),
 ) -> Findings:
     """Fit relations and fill the series."""
-    from inundate.relation import best_pairs, fit_relations, make_pairs, outlet_levels, through_outlets
+    from inundate.relation import best_pairs, fit_relations, make_pairs, outlet_levels, through_outlets, with_outlets
     from inundate.series import FillOptions, SeriesInputs, fill_series
 
     observed, stage = found
@@ -78,8 +78,9 @@ def conclude(
     with work.progress.step("stage-area relations"):
         record = daily if daily is not None else _no_stage()
         pairs = make_pairs(observed, record)
-        told, full = through_outlets(best_pairs(pairs), outlet_levels(record), wetlands, lasting[0])
-        relations = fit_relations(told, wetlands, layout.hypsometry, seed=settings.relation.seed)
+        outlets = outlet_levels(record)
+        told, full = through_outlets(best_pairs(pairs), outlets, wetlands, lasting[0])
+        relations = fit_relations(with_outlets(told, outlets, wetlands), wetlands, layout.hypsometry, seed=settings.relation.seed)
         work.notes.extend(
             f"wetland {r['wetland_id']}: an outlet holds its level near {r['level_m']:.2f} m ({r['days']} days); its views then "
             f"show {100 * r['shown']:.0f} % of its water, and its relation is scaled by that"

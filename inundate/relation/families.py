@@ -33,7 +33,8 @@ _SHARPEN_STEPS = 30
 N_TABLE = 161
 _DRY_RAMP_M = 0.03
 _FLOOR_SHARE = 0.03
-_WATER_FLAT_M = 0.05
+_WATER_FLAT_M, _FLAT_STEPS = 0.05, 5
+_HIGHEST_FLAT = 0.97
 
 
 @nb.njit(cache=True, nogil=True)
@@ -151,15 +152,16 @@ def full_stage(family: int, theta: np.ndarray, table: np.ndarray, span: np.ndarr
 
 def empty_table() -> tuple[np.ndarray, np.ndarray]:
     """Return a hypsometry table and span of the right shape for curves that do not read them."""
-    return np.zeros((ROUGHNESS_M.size, N_TABLE)), np.array([0.0, 1.0, 0.0, 0.0])
+    return np.zeros((ROUGHNESS_M.size, N_TABLE)), np.array([0.0, 1.0, 0.0, 0.0, 0.0])
 
 
-def water_at_survey(stage_m: np.ndarray, share: np.ndarray) -> tuple[float, float]:
+def water_at_survey(stage_m: np.ndarray, share: np.ndarray) -> tuple[float, float, float]:
     """Find the water that stood in a bowl when its elevation was measured.
 
-    A water surface shows as a step: more than 6 % of the area within ``_WATER_FLAT_M`` of the lowest cells, at a slope over
-    twice that of the 15 cm above. The depth below it is where a power law through the ground above runs to zero, with
-    log b held near log 1.3 (sd 0.4; common practice, no source).
+    A water surface shows as a step: the ``_WATER_FLAT_M`` that hold most area hold 6 % of it or more, at a slope over
+    twice that of the 15 cm above, and no more area lies below them (cells at the shore that noise made too low). The depth under the
+    surface is where a power law through the ground above runs to zero, with log b held near log 1.3 (sd 0.4; common practice, no
+    source).
 
     Parameters
     ----------
@@ -168,19 +170,29 @@ def water_at_survey(stage_m: np.ndarray, share: np.ndarray) -> tuple[float, floa
 
     Returns
     -------
-    floor_m, depth_m : float
-        Stage of the top of the step (above the lowest cell), and depth of water below the lowest cell; without water the
-        stage at which 3 % of the area is reached, and 0.
+    floor_m, hidden_m, depth_m : float
+        Stage of the top of the step (above the lowest cell), depth of the lowest ground below the lowest cell (below 0 where noise
+        made cells lower than the ground), and depth of water; without water the stage at which 3 % of the area is reached, 0 and 0.
     """
-    low, mid = np.interp([_WATER_FLAT_M, _WATER_FLAT_M + 0.15], stage_m, share)
-    dry = float(np.interp(_FLOOR_SHARE, share + 1e-12 * np.arange(share.size), stage_m))
-    if low < 0.06 or low / _WATER_FLAT_M < 2.0 * (mid - low) / 0.15:
-        return dry, 0.0
-    above = (stage_m > _WATER_FLAT_M) & (share > low) & (share < 0.95)
+    dry = float(np.interp(_FLOOR_SHARE, share + 1e-12 * np.arange(share.size), stage_m)), 0.0, 0.0
+    step = _WATER_FLAT_M / _FLAT_STEPS
+    grid = np.arange(0.0, float(stage_m[-1]) + step, step)
+    reached = np.interp(grid, stage_m, share)
+    reached[0] = 0.0
+    if grid.size <= _FLAT_STEPS:
+        return dry
+    held = np.where(reached[_FLAT_STEPS:] <= _HIGHEST_FLAT, reached[_FLAT_STEPS:] - reached[:-_FLAT_STEPS], 0.0)
+    at = int(np.argmax(held))
+    top, low = float(grid[at + _FLAT_STEPS]), float(reached[at + _FLAT_STEPS])
+    next_up = float(np.interp(top + 0.15, grid, reached)) - low
+    if held[at] < 0.06 or held[at] / _WATER_FLAT_M < 2.0 * next_up / 0.15 or reached[at] > held[at]:
+        return dry
+    above = (stage_m > top) & (share > low + 1e-9) & (share < 0.95)
+    surface = top - 0.5 * _WATER_FLAT_M
     if above.sum() < 4:
-        return _WATER_FLAT_M, 0.0
+        return top, 0.0, 0.0
     pick = np.linspace(0, above.sum() - 1, min(int(above.sum()), 25)).astype(int)
-    z, y = stage_m[above][pick], np.log(share[above][pick])
+    z, y = stage_m[above][pick] - surface, np.log(share[above][pick])
     best, depth = np.inf, 0.0
     for trial in np.concatenate([[0.01], np.arange(0.03, 3.0, 0.03)]):
         x = np.log(z + trial)
@@ -189,7 +201,7 @@ def water_at_survey(stage_m: np.ndarray, share: np.ndarray) -> tuple[float, floa
         cost = 5.0 * float(np.mean(left**2)) / 0.05**2 + ((np.log(max(b, 0.05)) - np.log(1.3)) / 0.4) ** 2
         if cost < best:
             best, depth = cost, float(trial)
-    return _WATER_FLAT_M, depth
+    return top, depth - surface, depth
 
 
 def _sharpen(mass: np.ndarray, kernel: np.ndarray) -> np.ndarray:
@@ -212,16 +224,16 @@ def hypsometry_table(stage_m: np.ndarray, area_m2: np.ndarray) -> tuple[np.ndarr
     -------
     table : ndarray, shape (roughness level, ``N_TABLE``)
         Share of the largest extent, rising along the second axis, at the levels ``ROUGHNESS_M``.
-    span : ndarray, shape (4,)
-        Stage of the first column, step, stage of the floor, and depth of water at the survey, m; stages count from the
-        lowest ground as far as it is known: the lowest cell less that depth.
+    span : ndarray, shape (5,)
+        Stage of the first column, step, stage of the floor, depth of the lowest ground below the lowest cell, and depth of water at
+        the survey, m; stages count from the lowest ground as far as it is known.
     """
     order = np.argsort(stage_m, kind="stable")
     stage = np.asarray(stage_m, float)[order]
     share = np.maximum.accumulate(np.asarray(area_m2, float)[order])
     share = share / max(share[-1], 1e-9)
-    floor, depth = water_at_survey(stage, share)
-    stage = stage + depth
+    floor, hidden, depth = water_at_survey(stage, share)
+    stage = stage + hidden
     pad = 2.0 * float(ROUGHNESS_M[-1])
     grid = np.linspace(-pad, float(stage[-1]) + pad, N_TABLE)
     step = grid[1] - grid[0]
@@ -236,4 +248,4 @@ def hypsometry_table(stage_m: np.ndarray, area_m2: np.ndarray) -> tuple[np.ndarr
         kernel /= kernel.sum(axis=0)
         found = kernel @ mass if rough > 0 else _sharpen(mass, kernel)
         table[k] = np.cumsum(found) / found.sum()
-    return np.clip(table, 0.0, 1.0), np.array([grid[0], step, floor + depth, depth])
+    return np.clip(table, 0.0, 1.0), np.array([grid[0], step, floor + hidden, hidden, depth])

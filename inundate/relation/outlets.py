@@ -1,4 +1,4 @@
-"""Outlets: the level that a full wetland comes back to and hardly rises above, and what its views then show."""
+"""Outlets: the level that a full wetland comes back to and hardly rises above, and what that says of its views and its curve."""
 
 from __future__ import annotations
 
@@ -29,7 +29,8 @@ def outlet_levels(stage_daily: pd.DataFrame) -> pd.DataFrame:
     Returns
     -------
     DataFrame
-        wetland_id, period, level_m (the lower edge of the pile), days, years; no row where no outlet shows.
+        wetland_id, period, level_m (the lower edge of the pile), days, years, date (the middle one of the days); no row where no
+        outlet shows.
     """
     rows = []
     table = stage_daily[np.isfinite(stage_daily["stage_m"]) & (stage_daily["stage_m"] > TOP_M)]
@@ -43,8 +44,50 @@ def outlet_levels(stage_daily: pd.DataFrame) -> pd.DataFrame:
         below = int(((stage <= top - TOP_M) & (stage > top - 2 * TOP_M)).sum())
         years = int(pd.to_datetime(mine["date"])[high].dt.year.nunique())
         if high.sum() >= LEAST_DAYS and years >= LEAST_YEARS and high.sum() >= LEAST_RATIO * below:
-            rows.append((str(name), part, top - TOP_M, int(high.sum()), years))
-    return pd.DataFrame(rows, columns=["wetland_id", "period", "level_m", "days", "years"])
+            days = np.sort(pd.to_datetime(mine["date"])[high].to_numpy())
+            rows.append((str(name), part, top - TOP_M, int(high.sum()), years, days[days.size // 2]))
+    return pd.DataFrame(rows, columns=["wetland_id", "period", "level_m", "days", "years", "date"])
+
+
+def with_outlets(pairs: pd.DataFrame, outlets: pd.DataFrame, wetlands: pd.DataFrame) -> pd.DataFrame:
+    """Add, for each outlet, the pair that it stands for: its level goes with the largest extent.
+
+    Where a canopy hides all views, this alone ties the stage of a wetland to its elevation model.
+
+    Parameters
+    ----------
+    pairs : DataFrame
+        From :func:`inundate.relation.make_pairs`.
+    outlets : DataFrame
+        From :func:`outlet_levels`.
+    wetlands : DataFrame
+        wetland_id, area_max_m2.
+
+    Returns
+    -------
+    DataFrame
+        Columns of ``pairs``, one row more an outlet (leaf state ``leaf_off``, view fraction 1), sorted by wetland and date.
+    """
+    if outlets.empty:
+        return pairs
+    size = outlets["wetland_id"].map(wetlands.set_index("wetland_id")["area_max_m2"]).to_numpy(float)
+    rows = pd.DataFrame(
+        {
+            "wetland_id": outlets["wetland_id"],
+            "date": pd.to_datetime(outlets["date"]).dt.normalize().astype(pairs["date"].dtype),
+            "stage_m": outlets["level_m"] + 0.5 * TOP_M,
+            "stage_sd_m": 0.5 * TOP_M,
+            "censored": False,
+            "area_m2": FULL * size,
+            "area_sd_m2": FULL_SD * size,
+            "leaf_state": "leaf_off",
+            "view_fraction": 1.0,
+            "period": outlets["period"],
+        }
+    ).reindex(columns=pairs.columns)
+    rows = rows[np.isfinite(rows["area_m2"])].astype(pairs.dtypes.to_dict())
+    both = rows if pairs.empty else pd.concat([pairs, rows], ignore_index=True)
+    return both.sort_values(["wetland_id", "date"], kind="stable", ignore_index=True)
 
 
 def through_outlets(

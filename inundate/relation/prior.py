@@ -86,7 +86,7 @@ def base_means(units: Units) -> dict[int, np.ndarray]:
 def survey_depth(units: Units) -> np.ndarray:
     """Return the depth of water (m, (unit,)) that hid each bowl's lowest ground when its elevation was measured."""
     which = units.table["hypsometry"].to_numpy()
-    return np.where(which >= 0, units.spans[np.maximum(which, 0), 3], 0.0)
+    return np.where(which >= 0, units.spans[np.maximum(which, 0), 4], 0.0)
 
 
 def _hidden(family: int, units: Units, d: int) -> np.ndarray:
