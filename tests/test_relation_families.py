@@ -66,9 +66,27 @@ def test_water_standing_at_the_survey_is_found_with_its_depth():
     seen = np.arange(0, 0.7, 0.01)
     # cells under water lie within 2 cm of its surface; the ground above is as it is
     area = np.where(seen < 0.02, np.interp(wet, stage, share) * seen / 0.02, np.interp(wet + seen - 0.02, stage, share))
-    _, depth = water_at_survey(seen, area)
+    _, hidden, depth = water_at_survey(seen, area)
     assert depth == pytest.approx(wet, abs=0.12)
-    assert water_at_survey(stage, share)[1] == 0.0
+    assert hidden == pytest.approx(depth, abs=0.03)
+    assert water_at_survey(stage, share)[1:] == (0.0, 0.0)
+
+
+@pytest.mark.parametrize("noise", [0.03, 0.09])
+@pytest.mark.parametrize("wet", [0.25, 0.5])
+def test_a_noisy_shore_does_not_hide_the_water(noise, wet):
+    """Shore cells that noise put below the surface do not count as ground; stages count from the ground under water."""
+    rng = np.random.default_rng(3)
+    stage, share = bowl(1.0, 1.4)
+    ground = np.interp(rng.random(4000), share, stage)
+    model = np.where(ground < wet, wet + 0.01 * rng.standard_normal(4000), ground + noise * rng.standard_normal(4000))
+    low = np.sort(model)[40]
+    seen = np.arange(0, model.max() - low + 0.01, 0.01)
+    area = np.searchsorted(np.sort(model - low), seen) / 4000
+    floor, hidden, depth = water_at_survey(seen, np.where(seen > 0, area, 0.0))
+    assert depth == pytest.approx(wet, abs=0.15)
+    assert low - hidden == pytest.approx(wet - depth, abs=0.03)  # zero of the table, as the surface and the depth say
+    assert low + floor == pytest.approx(wet, abs=0.05)
 
 
 def test_bad_numbers_are_refused_with_place_and_rule():

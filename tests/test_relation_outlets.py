@@ -6,7 +6,7 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
-from inundate.relation import outlet_levels, through_outlets
+from inundate.relation import fit_relations, make_pairs, outlet_levels, through_outlets, with_outlets
 
 DAYS = pd.date_range("2031-01-01", periods=3 * 365)
 WETLANDS = pd.DataFrame({"wetland_id": ["a"], "area_max_m2": [1000.0]})
@@ -75,3 +75,36 @@ def test_raised_extents_keep_order_and_bounds(areas, missed, seed):
     assert (got >= before - 1e-9).all()
     assert (got <= 1000.0).all()
     assert (np.diff(got[np.argsort(before, kind="stable")]) >= -1e-9).all()
+
+
+def test_an_outlet_ties_the_stage_of_a_wetland_that_no_view_shows_to_its_elevation_model():
+    """The elevation model's zero lies too high (deep water hid the ground); the outlet alone tells."""
+    stage = record(1.3, seed=4).assign(stage_sd_m=0.01)
+    stage.loc[stage.index % 3 == 0, "stage_m"] = 1.3
+    bowl = pd.DataFrame({"wetland_id": "a", "stage_m": np.arange(0, 0.51, 0.01)})
+    # seen by the survey: a surface that holds a third of the largest extent, then ground up to the rim half a metre above
+    bowl["area_m2"] = np.where(bowl["stage_m"] < 0.015, 0.0, 330 + 670 * (bowl["stage_m"] / 0.5) ** 1.2)
+    none = make_pairs(
+        pd.DataFrame(
+            {"wetland_id": ["a"], "datetime": [DAYS[0]], "area_m2": [1.0], "area_sd_m2": [1.0], "view_fraction": [0.1], "leaf_state": ["leaf_on"], "used": [False]}
+        ),
+        stage,
+    )  # fmt: skip
+    wetlands = WETLANDS.assign(cover="evergreen")
+    both = with_outlets(none, outlet_levels(stage), wetlands, bowl)
+    assert set(both.columns) == {*none.columns, "made"}
+    assert both["made"].all()
+    assert both["stage_m"].max() == pytest.approx(1.285, abs=0.02)
+    assert (np.diff(both.sort_values("stage_m")["area_m2"]) > 0).all()
+    assert (
+        len(with_outlets(none, outlet_levels(stage), wetlands)) == 1
+    )  # without elevation: full at the outlet, no more
+    at = np.array([0.8, 1.29])
+    relations = fit_relations(both, wetlands, bowl)
+    tied = relations.predict("a", at)["area_m2"]
+    assert relations.relations["n_pairs"].iloc[0] == 0  # no view stands behind them
+    assert relations.relations["stage_max_m"].isna().iloc[0]
+    loose = fit_relations(none, wetlands, bowl).predict("a", at)["area_m2"]
+    assert tied.iloc[1] > 900
+    assert tied.iloc[0] < 0.8 * loose.iloc[0]  # half a metre below its outlet the bowl is no longer near full
+    assert with_outlets(none, outlet_levels(record(5.0)), wetlands).empty

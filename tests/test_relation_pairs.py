@@ -5,7 +5,7 @@ import pandas as pd
 import pytest
 
 from inundate.common.errors import InputError
-from inundate.relation import make_pairs
+from inundate.relation import best_pairs, make_pairs
 
 
 def extents() -> pd.DataFrame:
@@ -69,3 +69,17 @@ def test_row_order_does_not_matter():
 def test_a_missing_column_is_named():
     with pytest.raises(InputError, match=r"stage_daily.*stage_sd_m"):
         make_pairs(extents(), stages().drop(columns="stage_sd_m"))
+
+
+def test_canopies_serve_only_where_nothing_better_does():
+    """Pairs under leaves stand in for few leaf-off ones, unless an outlet ties the wetland to an elevation model."""
+    pairs = pd.DataFrame(
+        {
+            "wetland_id": ["a"] * 3 + ["b"] * 3 + ["c"] * 10,
+            "period": "1",
+            "leaf_state": ["leaf_off", "leaf_on", "leaf_on"] * 2 + ["leaf_off"] * 9 + ["green_up"],
+        }
+    )
+    count = best_pairs(pairs).groupby("wetland_id").size()
+    assert count.to_dict() == {"a": 3, "b": 3, "c": 9}
+    assert best_pairs(pairs, anchored={"b"}).groupby("wetland_id").size().to_dict() == {"a": 3, "b": 1, "c": 9}

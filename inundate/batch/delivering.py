@@ -79,8 +79,11 @@ def conclude(
         record = daily if daily is not None else _no_stage()
         pairs = make_pairs(observed, record)
         outlets = outlet_levels(record)
-        told, full = through_outlets(best_pairs(pairs), outlets, wetlands, lasting[0])
-        relations = fit_relations(with_outlets(told, outlets, wetlands), wetlands, layout.hypsometry, seed=settings.relation.seed)
+        ground = layout.hypsometry
+        anchored = set() if ground is None else set(outlets["wetland_id"]) & set(ground["wetland_id"])
+        told, full = through_outlets(best_pairs(pairs, anchored=anchored), outlets, wetlands, lasting[0])
+        told = with_outlets(told, outlets, wetlands, ground)
+        relations = fit_relations(told, wetlands, ground, seed=settings.relation.seed)
         work.notes.extend(
             f"wetland {r['wetland_id']}: an outlet holds its level near {r['level_m']:.2f} m ({r['days']} days); its views then "
             f"show {100 * r['shown']:.0f} % of its water, and its relation is scaled by that"

@@ -23,6 +23,6 @@ __all__ = [
     "make_pairs",
     "outlet_levels",
     "through_outlets",
-    "with_outlets",
     "widen_bands",
+    "with_outlets",
 ]

@@ -17,15 +17,15 @@ _WIDER_SD, _NARROWER_SD = 0.3, 0.07
 
 
 def date_blocks(units: Units, n_blocks: int) -> np.ndarray:
-    """Number contiguous blocks of dates within each unit (int64, (pair,)); equal counts, same day same block."""
+    """Number contiguous blocks of dates within each unit (int64, (pair,)); equal counts, same day same block; -1 where made."""
     out = np.full(units.date.size, -1, np.int64)
     for u in range(units.first.size - 1):
-        lo, hi = units.first[u], units.first[u + 1]
-        n = hi - lo
+        mine = np.flatnonzero(~units.made[units.first[u] : units.first[u + 1]]) + units.first[u]
+        n = mine.size
         if n < 3:
             continue
-        place = np.searchsorted(units.date[lo:hi], units.date[lo:hi], side="left")
-        out[lo:hi] = np.unique(place * min(n_blocks, n) // n, return_inverse=True)[1]
+        place = np.searchsorted(units.date[mine], units.date[mine], side="left")
+        out[mine] = np.unique(place * min(n_blocks, n) // n, return_inverse=True)[1]
     return out
 
 
@@ -33,12 +33,13 @@ def stage_blocks(units: Units) -> np.ndarray:
     """Number the lowest and the highest third of stages of each unit 0 and 1, the rest -1 (int64, (pair,))."""
     out = np.full(units.date.size, -1, np.int64)
     for u in range(units.first.size - 1):
-        lo, hi = units.first[u], units.first[u + 1]
-        if hi - lo < 6:
+        mine = np.flatnonzero(~units.made[units.first[u] : units.first[u + 1]]) + units.first[u]
+        if mine.size < 6:
             continue
-        low, high = np.quantile(units.pairs[lo:hi, 0], [1 / 3, 2 / 3])
-        out[lo:hi][units.pairs[lo:hi, 0] < low] = 0
-        out[lo:hi][units.pairs[lo:hi, 0] > high] = 1
+        stage = units.pairs[mine, 0]
+        low, high = np.quantile(stage, [1 / 3, 2 / 3])
+        out[mine[stage < low]] = 0
+        out[mine[stage > high]] = 1
     return out
 
 

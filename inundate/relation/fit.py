@@ -59,7 +59,7 @@ def fit_relations(
     ----------
     pairs : DataFrame
         wetland_id, date, stage_m, area_m2 and, where known, stage_sd_m, area_sd_m2, censored, leaf_state, view_fraction,
-        period, rising. A wetland with several ``period`` values gets a relation for each (a confirmed split).
+        period, rising, made (see :func:`inundate.relation.with_outlets`). A wetland with several ``period`` values gets a relation for each (a confirmed split).
     wetlands : DataFrame
         wetland_id, area_max_m2 [, cover].
     hypsometry : DataFrame, optional
@@ -105,7 +105,7 @@ def _in_leaf(units: Units) -> np.ndarray:
 def _starts(units: Units, code: int, prior: Prior, fits: dict[int, Fit]) -> np.ndarray:
     mean = prior.mean
     if code == ELEVATION:
-        lift = np.array([0.0, 0.15, -0.1, 0.35])
+        lift = np.array([0.0, 0.15, -0.1, 0.35, -0.3, -0.6])
         starts = np.repeat(mean[:, None], lift.size, axis=1)
         starts[:, :, 0] += lift
         return starts
@@ -162,7 +162,7 @@ def leaf_inflation(units: Units, fit: Fit, codes: list[int], stated: np.ndarray)
     code = codes[-1] if codes[-1] != ELEVATION else codes[0]
     gap = units.pairs[:, 2] - predicted(units, fit, code)
     z2 = (gap / stated) ** 2
-    bare = ~_in_leaf(units)
+    bare = ~_in_leaf(units) & ~units.made
     out = np.ones(stated.size)
     base = float(np.median(z2[bare])) if bare.sum() >= 15 else np.nan
     for state in range(1, 4):
@@ -283,9 +283,9 @@ def _assemble(
     scale_in, scale_out = _scales(units, by_date, by_stage, weights, options.nu)
     unseen = scale_out
     if ELEVATION in codes and options.pool:
-        unseen = unseen_scale(units, priors[ELEVATION], fits[ELEVATION], options.nu)
+        unseen = unseen_scale(units.seen(), priors[ELEVATION], fits[ELEVATION], options.nu)
     known = _serving(units)
-    shifts = find_shifts(units, fits, priors, weights, options)
+    shifts = find_shifts(units.seen(), fits, priors, weights, options)
     curves = Curves(
         units.table.loc[known].assign(unit=np.arange(int(known.sum()))).reset_index(drop=True),
         {c: fits[c].theta[known] for c in codes},
@@ -304,7 +304,7 @@ def _assemble(
         "relations": _relations_table(units, fits, weights, choices).loc[known].reset_index(drop=True),
         "choices": choices,
         "shifts": shifts,
-        "hysteresis": find_hysteresis(units, fits, priors, weights, options),
+        "hysteresis": find_hysteresis(units.seen(), fits, priors, weights, options),
     }
     return RelationSet(curves, tables, units.refused)
 

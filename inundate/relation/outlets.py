@@ -5,12 +5,17 @@ from __future__ import annotations
 import numpy as np
 import pandas as pd
 
+from inundate.relation.families import water_at_survey
+
 TOP_M = 0.03
 LEAST_DAYS, LEAST_YEARS, LEAST_RATIO = 60, 2, 2.0
 """A level is held by an outlet when stage stays within ``TOP_M`` of its highest on so many days of so many years, and so many
 times as often as in the ``TOP_M`` below (common practice, no source)."""
 FULL, FULL_SD = 0.97, 0.05
 """Share of the largest extent that a wetland has at its outlet's level (common practice, no source)."""
+RUNGS, RIM, RIM_SD_M = (0.1, 0.2, 0.3, 0.4, 0.5, 0.6, 0.7, 0.8, 0.85), 0.9, 0.04
+"""Shares of the largest extent whose depth below the rim an elevation model tells; the share at whose level the rim is put (noise and
+uneven ground smear the rest over the rim); and the sd of such a depth, m (common practice, no source)."""
 _LEAST_VIEWS = 3
 _LARGEST = 0.5
 
@@ -49,10 +54,13 @@ def outlet_levels(stage_daily: pd.DataFrame) -> pd.DataFrame:
     return pd.DataFrame(rows, columns=["wetland_id", "period", "level_m", "days", "years", "date"])
 
 
-def with_outlets(pairs: pd.DataFrame, outlets: pd.DataFrame, wetlands: pd.DataFrame) -> pd.DataFrame:
-    """Add, for each outlet, the pair that it stands for: its level goes with the largest extent.
+def with_outlets(
+    pairs: pd.DataFrame, outlets: pd.DataFrame, wetlands: pd.DataFrame, hypsometry: pd.DataFrame | None = None
+) -> pd.DataFrame:
+    """Add the pairs that outlets stand for: full at the outlet's level and, below it, as full as the elevation model says.
 
-    Where a canopy hides all views, this alone ties the stage of a wetland to its elevation model.
+    An outlet is where the rim of a bowl is lowest. It ties the stage of a wetland to its elevation model, whose own zero is seldom
+    known: noise lowers it, and water that stood at the survey hides it. Where a canopy hides all views, nothing else does.
 
     Parameters
     ----------
@@ -62,32 +70,42 @@ def with_outlets(pairs: pd.DataFrame, outlets: pd.DataFrame, wetlands: pd.DataFr
         From :func:`outlet_levels`.
     wetlands : DataFrame
         wetland_id, area_max_m2.
+    hypsometry : DataFrame, optional
+        wetland_id, stage_m, area_m2.
 
     Returns
     -------
     DataFrame
-        Columns of ``pairs``, one row more an outlet (leaf state ``leaf_off``, view fraction 1), sorted by wetland and date.
+        Columns of ``pairs`` and ``made`` (true for rows that were added), sorted by wetland and date.
     """
-    if outlets.empty:
-        return pairs
-    size = outlets["wetland_id"].map(wetlands.set_index("wetland_id")["area_max_m2"]).to_numpy(float)
-    rows = pd.DataFrame(
-        {
-            "wetland_id": outlets["wetland_id"],
-            "date": pd.to_datetime(outlets["date"]).dt.normalize().astype(pairs["date"].dtype),
-            "stage_m": outlets["level_m"] + 0.5 * TOP_M,
-            "stage_sd_m": 0.5 * TOP_M,
-            "censored": False,
-            "area_m2": FULL * size,
-            "area_sd_m2": FULL_SD * size,
-            "leaf_state": "leaf_off",
-            "view_fraction": 1.0,
-            "period": outlets["period"],
-        }
-    ).reindex(columns=pairs.columns)
-    rows = rows[np.isfinite(rows["area_m2"])].astype(pairs.dtypes.to_dict())
-    both = rows if pairs.empty else pd.concat([pairs, rows], ignore_index=True)
-    return both.sort_values(["wetland_id", "date"], kind="stable", ignore_index=True)
+    grounds = {} if hypsometry is None else {str(k): g for k, g in hypsometry.groupby("wetland_id")}
+    size = dict(zip(wetlands["wetland_id"], wetlands["area_max_m2"], strict=True))
+    rows = []
+    for row in outlets.to_dict("records"):
+        largest, level = size.get(row["wetland_id"]), row["level_m"] + 0.5 * TOP_M
+        if largest is None:
+            continue
+        below = _below_rim(grounds[row["wetland_id"]]) if row["wetland_id"] in grounds else []
+        for drop, share, sd in [(0.0, FULL, 0.5 * TOP_M), *below]:
+            rows.append(
+                (row["wetland_id"], row["period"], row["date"], level - drop, sd, share * largest, FULL_SD * largest)
+            )
+    names = ["wetland_id", "period", "date", "stage_m", "stage_sd_m", "area_m2", "area_sd_m2"]
+    made = pd.DataFrame(rows, columns=names).assign(censored=False, leaf_state="leaf_off", view_fraction=1.0)
+    made = made[made["stage_m"] > 0].reindex(columns=pairs.columns)
+    made["date"] = pd.to_datetime(made["date"]).dt.normalize()
+    made = made.astype(pairs.dtypes.to_dict()).assign(made=True)
+    both = [t for t in (pairs.assign(made=False), made) if len(t)] or [made]
+    return pd.concat(both, ignore_index=True).sort_values(["wetland_id", "date"], kind="stable", ignore_index=True)
+
+
+def _below_rim(ground: pd.DataFrame) -> list[tuple[float, float, float]]:
+    """Return (m below the rim, share of the largest extent there, sd in m) from one hypsometry, down to water at the survey."""
+    stage, area = ground["stage_m"].to_numpy(float), ground["area_m2"].to_numpy(float)
+    share = np.maximum.accumulate(area) / max(float(area.max()), 1e-9)
+    floor = float(np.interp(water_at_survey(stage, share)[0], stage, share))
+    level = lambda part: float(np.interp(part, share + 1e-9 * np.arange(share.size), stage))  # noqa: E731
+    return [(level(RIM) - level(part), part, RIM_SD_M) for part in RUNGS if part > floor + FULL_SD]
 
 
 def through_outlets(

@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass, field
+from collections.abc import Collection
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 import pandas as pd
@@ -88,7 +89,7 @@ def make_pairs(extent_observed: pd.DataFrame, stage_daily: pd.DataFrame) -> pd.D
     return both.sort_values(["wetland_id", "date"], kind="stable")[[*PAIR_COLUMNS, "rising"]].reset_index(drop=True)
 
 
-def best_pairs(pairs: pd.DataFrame, *, least: int = 8) -> pd.DataFrame:
+def best_pairs(pairs: pd.DataFrame, *, anchored: Collection[str] = (), least: int = 8) -> pd.DataFrame:
     """Return the pairs that relations should rest on: those with leaves off, where a wetland has enough of them.
 
     A canopy in leaf hides water in ways that an observation's own standard deviation does not fully tell; such pairs serve
@@ -98,6 +99,9 @@ def best_pairs(pairs: pd.DataFrame, *, least: int = 8) -> pd.DataFrame:
     ----------
     pairs : DataFrame
         From :func:`make_pairs`.
+    anchored : collection of str
+        Wetlands whose stage an outlet ties to an elevation model (see :func:`inundate.relation.with_outlets`): that is better, however
+        few their leaf-off pairs.
     least : int
         Leaf-off pairs from which a wetland (and period) needs no others (common practice, no source).
 
@@ -108,7 +112,8 @@ def best_pairs(pairs: pd.DataFrame, *, least: int = 8) -> pd.DataFrame:
     """
     bare = pairs["leaf_state"].astype(str) == "leaf_off"
     count = bare.groupby([pairs["wetland_id"], pairs["period"]]).transform("sum")
-    return pairs[bare | (count < least)].reset_index(drop=True)
+    needed = (count < least) & ~pairs["wetland_id"].isin(list(anchored))
+    return pairs[bare | needed].reset_index(drop=True)
 
 
 def _day(times: pd.Series) -> pd.Series:
@@ -157,6 +162,8 @@ class Units:
         Stage (m), stage sd (m), share of the largest extent, share sd, censored (0/1).
     first : ndarray of int64, shape (unit + 1,)
     date : ndarray of datetime64[ns]; leaf : ndarray of int64 (-1 unknown); rising : ndarray of float64 (pair,)
+    made : ndarray of bool, shape (pair,)
+        Pairs that no view stands behind (see :func:`inundate.relation.with_outlets`): they shape curves, and judge nothing.
     tables, spans : ndarray
         Hypsometry tables (table, level, column) and spans (table, 2).
     hypsometry : dict
@@ -170,6 +177,7 @@ class Units:
     date: np.ndarray
     leaf: np.ndarray
     rising: np.ndarray
+    made: np.ndarray
     tables: np.ndarray
     spans: np.ndarray
     hypsometry: dict[str, tuple[np.ndarray, np.ndarray]]
@@ -179,6 +187,22 @@ class Units:
     def unit_of_pair(self) -> np.ndarray:
         """Position of the unit of each pair (int64)."""
         return np.repeat(np.arange(self.first.size - 1), np.diff(self.first))
+
+    def seen(self) -> Units:
+        """Return the same units with none but pairs that views stand behind."""
+        if not self.made.any():
+            return self
+        keep = ~self.made
+        first = np.concatenate([[0], np.cumsum(keep)])[self.first]
+        return replace(
+            self,
+            pairs=np.ascontiguousarray(self.pairs[keep]),
+            first=first,
+            date=self.date[keep],
+            leaf=self.leaf[keep],
+            rising=self.rising[keep],
+            made=self.made[keep],
+        )
 
 
 def lay_out(
@@ -233,6 +257,7 @@ def lay_out(
         joined["date"].to_numpy("datetime64[ns]"),
         leaf,
         joined["rising"].to_numpy(float),
+        joined["made"].to_numpy(bool),
         tables,
         spans,
         laid,
@@ -272,7 +297,10 @@ def _clean(pairs: pd.DataFrame, sites: pd.DataFrame, options: RelationOptions) -
     for column, value in (("censored", False), ("leaf_state", ""), ("rising", np.nan), ("view_fraction", np.nan)):
         if column not in clean:
             clean[column] = value
-    clean["censored"] = clean["censored"].fillna(False).astype(bool)
+    if "made" not in clean:
+        clean["made"] = False
+    for column in ("censored", "made"):
+        clean[column] = clean[column].fillna(False).astype(bool)
     size = clean["wetland_id"].map(sites.set_index("wetland_id")["area_max_m2"]).astype(float)
     for column in ("stage_sd_m", "area_sd_m2"):
         if column not in clean:
@@ -329,17 +357,15 @@ def _believable(
 
 
 def _unit_table(clean: pd.DataFrame, sites: pd.DataFrame, place: dict[str, int]) -> pd.DataFrame:
-    found = (
-        clean.groupby(["wetland_id", "period"], sort=True)
-        .agg(
-            start=("date", "min"),
-            n_pairs=("date", "size"),
-            stage_min_m=("stage_m", "min"),
-            stage_max_m=("stage_m", "max"),
-        )
+    key = ["wetland_id", "period"]
+    found = clean.groupby(key, sort=True).agg(start=("date", "min")).reset_index()
+    seen = (
+        clean[~clean["made"]]
+        .groupby(key, sort=True)
+        .agg(n_pairs=("date", "size"), stage_min_m=("stage_m", "min"), stage_max_m=("stage_m", "max"))
         .reset_index()
     )
-    units = sites.merge(found, on="wetland_id", how="left")
+    units = sites.merge(found.merge(seen, on=key, how="left"), on="wetland_id", how="left")
     units["period"] = units["period"].fillna("1")
     units = units.sort_values(["wetland_id", "start", "period"], kind="stable").reset_index(drop=True)
     units["n_pairs"] = units["n_pairs"].fillna(0).astype(np.int64)

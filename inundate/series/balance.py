@@ -72,7 +72,7 @@ def balance_path(
 
 
 @njit(cache=True, nogil=True)
-def balance_slopes(  # noqa: PLR0915 - the derivative beside each line of the balance
+def balance_slopes(  # noqa: PLR0912, PLR0915 - the derivative beside each line of the balance
     theta: np.ndarray,
     rain: np.ndarray,
     pet: np.ndarray,

@@ -6,6 +6,7 @@ import itertools
 from dataclasses import dataclass
 
 import numpy as np
+from scipy import stats
 
 from inundate.series.fitting import Setup
 from inundate.series.heldout import Evidence, relation_share
@@ -41,11 +42,15 @@ def size_third(area_max_m2: np.ndarray) -> np.ndarray:
     return (rank * 3) // max(area_max_m2.size, 1)
 
 
-def _clusters(evidence: Evidence) -> np.ndarray:
-    """Weights by which each wetland and block counts once, whatever its number of days."""
+def _clusters(evidence: Evidence, chosen: np.ndarray | None = None) -> np.ndarray:
+    """Weights by which each wetland and block counts once, whatever its number of (chosen) days; 0 for days not chosen."""
     key = evidence.wetland * 1000 + evidence.block
-    _, inverse, counts = np.unique(key, return_inverse=True, return_counts=True)
-    return 1 / counts[inverse]
+    chosen = np.ones(key.size, bool) if chosen is None else chosen
+    out = np.zeros(key.size)
+    if chosen.any():
+        _, inverse, counts = np.unique(key[chosen], return_inverse=True, return_counts=True)
+        out[chosen] = 1 / counts[inverse]
+    return out
 
 
 def choose_weights(evidence: Evidence | None, wetlands: int, kinds: int) -> tuple[np.ndarray, np.ndarray]:
@@ -69,9 +74,10 @@ def choose_weights(evidence: Evidence | None, wetlands: int, kinds: int) -> tupl
     for leafy in (0, 1):
         near = evidence.from_stage & ((evidence.leaf != 0) == bool(leafy))
         far = ~evidence.from_stage
-        heft = np.where(near | far, weight, 0.0)
+        heft, away = _clusters(evidence, near), _clusters(evidence, far)
         if near.any():
-            heft[far] *= min(_SHRINK_BLOCKS / max(heft[far].sum(), 1e-9), 1.0)
+            away *= min(_SHRINK_BLOCKS / max(away.sum(), 1e-9), 1.0)
+        heft += away
         pooled = (blended * heft).sum(axis=1) / max(heft.sum(), 1e-9)
         own = np.array([np.bincount(evidence.wetland, b * heft, wetlands) for b in blended])
         mass = np.bincount(evidence.wetland, heft, wetlands)
@@ -129,8 +135,8 @@ def fit_widths(evidence: Evidence | None, weights: np.ndarray, third: np.ndarray
         blocks = float(weight[rows].sum())
         if blocks <= 0:
             return parent
-        aim = min(0.9 * (1 + 1 / blocks), 0.97)
-        own = solve_width(gap[rows], sd[rows], evidence.level_sd[rows], weight[rows], aim)
+        own = solve_width(gap[rows], sd[rows], evidence.level_sd[rows], weight[rows])
+        own *= float(stats.t.ppf(0.95, max(blocks, 1.0))) / WIDTH_90  # a spread told by few blocks
         return float(np.exp((_SHRINK_BLOCKS * np.log(parent) + blocks * np.log(own)) / (_SHRINK_BLOCKS + blocks)))
 
     far = shrunk(~evidence.from_stage | (evidence.leaf != 0), 1.0)

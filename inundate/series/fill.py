@@ -78,7 +78,9 @@ def fill_series(inputs: SeriesInputs, *, options: FillOptions | None = None, see
     evidence = join(found) if found else None
     weights, scores = choose_weights(evidence, len(panel.ids), len(fits))
     everyone = range(len(panel.ids))
-    levels = blend([smooth_levels(setup, f, everyone, views, panel.stage, f.posterior) for f in fits], weights, panel.leaf)
+    levels = blend(
+        [smooth_levels(setup, f, everyone, views, panel.stage, f.posterior) for f in fits], weights, panel.leaf
+    )
     wide = _widen(setup, levels, evidence, weights, views)
     heldout = heldout_table(setup, blind, evidence, weights)
     reasons = _reasons(setup, fits, weights, scores, evidence)

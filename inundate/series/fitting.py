@@ -57,7 +57,7 @@ class Setup:
     group : ndarray, shape (wetland, covariate)
         1, standardised log size, deciduous, evergreen.
     region, design : tuple of ndarray
-        A fold each: what drives the water balance (row, spin + day), and design of the linear predictor (spin + day, column).
+        A fold each: what drives the water balance, the loggers' first signal last (row, spin + day), and design of the linear predictor (spin + day, column).
     """
 
     panel: Panel
@@ -95,7 +95,7 @@ def make_setup(panel: Panel, drivers: Drivers, options: FillOptions, seed: int) 
     region, design = [], []
     ones = np.ones((drivers.rain_m.size, 1))
     for signals in drivers.loggers:
-        region.append(np.ascontiguousarray(np.vstack([drivers.region, signals.T])))
+        region.append(np.ascontiguousarray(np.vstack([drivers.region, signals[:, :1].T])))
         design.append(np.ascontiguousarray(np.column_stack([ones, drivers.season, drivers.wetness, signals])))
     return Setup(panel, drivers, panel.maps, options, seed, group, tuple(region), tuple(design))
 

@@ -76,7 +76,7 @@ class FillOptions:
         dry ground that they keep calling water: what no number of views of the same wetland averages out.
     """
 
-    members: int = 24
+    members: int = 64
     blocks: int = 4
     score_wetlands: int = 200
     outlier_share: float = 0.02

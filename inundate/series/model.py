@@ -251,7 +251,9 @@ def _smooth_one(
     site, site_var = _sites(setup, i, paths, rows, sd, memory)
     phi, s0 = float(np.exp(-1 / memory)), sd * sd
     mean, var = np.empty(paths.shape[1]), np.empty(paths.shape[1])
-    smooth_members(paths, member_scores(setup, fit, i, *parameters), site, site_var, phi, s0 * (1 - phi * phi), s0, mean, var)
+    smooth_members(
+        paths, member_scores(setup, fit, i, *parameters), site, site_var, phi, s0 * (1 - phi * phi), s0, mean, var
+    )
     return mean, var, site, site_var
 
 

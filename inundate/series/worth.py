@@ -13,6 +13,8 @@ _OPENNESS = (0.4, 0.6)
 # Without loggers a view under leaves counts with this factor on its sd; and the pooled weight, in wetland-years, of a
 # coarser group beside a finer one. Common practice, no source.
 _UNPROVEN, _SHRINK = 3.0, 4.0
+# Standard deviation, from wetland to wetland, of the error of views of ground that a canopy covers; common practice, no source.
+_LASTING = 0.2
 _STRAY = 0.02
 # A view counts as worthless from this factor on its sd; canopies whose views follow the truth with a lesser slope tell nothing.
 _USELESS, _LEAST_SLOPE = 30.0, 0.1
@@ -96,7 +98,8 @@ def correct_leafy(views: Events, stage: Events, truth: tuple[np.ndarray, np.ndar
     at, on = pair_events(views, stage)
     keep = leafy[at]
     at, on = at[keep], on[keep]
-    table, lasting = _readings(views, bins, at, (truth[0][on], truth[1][on]))
+    table, gap = _readings(views, bins, at, (truth[0][on], truth[1][on]))
+    lasting = _lasting(gap, views, at)
     crowd, count = _crowding_by_wetland(views, leafy)
     value, var = views.value.copy(), views.sd**2
     good = np.ones(views.day.size, bool)
@@ -106,15 +109,15 @@ def correct_leafy(views: Events, stage: Events, truth: tuple[np.ndarray, np.ndar
             continue
         scale = max(line.sd / _usual_sd(views.sd[cell]), 1.0) if at.size else _UNPROVEN
         value[cell] = np.clip((views.value[cell] - line.offset) / line.slope, 0.0, 1.0)
-        var[cell] = ((scale * views.sd[cell]) ** 2 * crowd[cell] + lasting * count[cell]) / line.slope**2
+        var[cell] = ((scale * views.sd[cell]) ** 2 * crowd[cell] + lasting[cell] * count[cell]) / line.slope**2
         good[cell] = np.sqrt(var[cell]) < _USELESS * views.sd[cell]
     return replace(views, value=value, sd=np.sqrt(var)).keep(good)
 
 
 def _readings(
     views: Events, bins: np.ndarray, at: np.ndarray, truth: tuple[np.ndarray, np.ndarray]
-) -> tuple[dict[tuple[int, int], Reading], float]:
-    """Return the reading of each leaf state and openness group, and the variance of errors that last in a wetland."""
+) -> tuple[dict[tuple[int, int], Reading], np.ndarray]:
+    """Return the reading of each leaf state and openness group, and what is left of each paired view."""
     kind, group, value = views.kind[at], bins[at], views.value[at]
     share, share_sd = truth
     weight, _ = _blocks(views.owner[at] * 1000 + views.day[at] // 365)
@@ -125,13 +128,11 @@ def _readings(
         wide = _UNPROVEN * _usual_sd(views.sd[views.kind == leaf])
         rows = kind == leaf
         whole = _line(value[rows], share[rows], share_sd[rows], weight[rows], (Reading(0.0, 1.0, wide), moments))
-        for size in range(3):
+        for size in range(len(_OPENNESS) + 1):
             rows = (kind == leaf) & (group == size)
-            table[leaf, size] = line = _line(
-                value[rows], share[rows], share_sd[rows], weight[rows], (whole, moments)
-            )
+            table[leaf, size] = line = _line(value[rows], share[rows], share_sd[rows], weight[rows], (whole, moments))
             gap[rows] = value[rows] - line.offset - line.slope * share[rows]
-    return table, _lasting(gap, views.owner[at], views.day[at])
+    return table, gap
 
 
 def _moments(share: np.ndarray, weight: np.ndarray) -> np.ndarray:
@@ -159,18 +160,22 @@ def _line(
     return Reading(float(offset), slope, float(np.sqrt(var)))
 
 
-def _lasting(gap: np.ndarray, owner: np.ndarray, day: np.ndarray) -> float:
-    """Variance of the mean error of a wetland beyond what errors that come and go would leave; 0 with few wetlands."""
-    means, left = [], []
+def _lasting(gap: np.ndarray, views: Events, at: np.ndarray) -> np.ndarray:
+    """Variance (view,) of errors that last in a wetland: what canopies hide differs from one to the next.
+
+    Believed to be ``_LASTING`` of what the canopy covers; the mean errors of wetlands with loggers, beyond what errors that come and go
+    would leave, scale that, by as many wetlands as there are.
+    """
+    hidden = (_LASTING * (1.0 - np.clip(views.open, 0.0, 1.0))) ** 2 + 1e-4
+    owner, day = views.owner[at], views.day[at]
+    ratio = []
     for i in np.unique(owner):
         mine = np.flatnonzero(owner == i)
         away = np.abs(day[mine][:, None] - day[mine][None, :])
         free = (1.0 / np.exp(-away / _LEAFY_MEMORY_DAYS).sum(axis=1)).sum()
-        means.append(gap[mine].mean())
-        left.append(gap[mine].var() / max(free - 1.0, 1.0))
-    if len(means) < 3:
-        return 0.0
-    return float(max(np.mean(np.square(means)) - np.mean(left), 0.0))
+        left = gap[mine].var() / max(free - 1.0, 1.0)
+        ratio.append((gap[mine].mean() ** 2 - left) / hidden[at][mine].mean())
+    return hidden * max((np.sum(ratio) + _SHRINK) / (len(ratio) + _SHRINK), 0.1)
 
 
 def _blocks(cluster: np.ndarray) -> tuple[np.ndarray, float]:
