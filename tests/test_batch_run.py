@@ -2,6 +2,7 @@
 
 import hashlib
 import json
+import re
 import shutil
 from pathlib import Path
 
@@ -227,6 +228,25 @@ def test_logger_of_an_unknown_wetland_and_unknown_unit(again):
         assert done.exit_code == 2, done.stderr
         assert "loggers.csv" in done.stderr
         assert words in done.stderr
+
+
+def test_polygons_and_scenes_alone_make_a_delivery(small_reserve, tmp_path):
+    """No labels, loggers, elevation or weather: every product is there, and what was lacking is said."""
+    file = copy_inputs(small_reserve, tmp_path)
+    text = file.read_text().replace('elevation = "elevation.tif"', "").replace('starter_examples = "never"', "")
+    for section in ("labels", "loggers", "weather", "stage"):
+        text = re.sub(rf"(?ms)^\[{section}\]\n.*?(?=^\[|\Z)", "", text)
+    file.write_text(text)
+    done = CliRunner().invoke(main, ["run", str(file), "--quiet", "--json"])
+    assert done.exit_code in (0, 1), done.stderr
+    products = Path(json.loads(done.stdout)["products"])
+    for name, columns in COLUMNS.items():
+        assert tuple(pd.read_parquet(products / f"{name}.parquet").columns) == columns, name
+    assert pd.read_parquet(products / "stage_daily.parquet").empty
+    assert (products / "report.html").stat().st_size > 0
+    said = " ".join(json.loads((products / "run.json").read_text())["notes"])
+    for word in ("no logger", "no weather", "no elevation"):
+        assert word in said
 
 
 def test_catalog_with_no_scenes(again):

@@ -69,7 +69,9 @@ def leaf_factors(
     least : int
         Fewer views than this of a leaf state tell nothing: it takes the largest factor found, 2 if none (common practice).
     """
-    size = pairs["wetland_id"].map(dict(zip(wetlands["wetland_id"], wetlands["area_max_m2"], strict=True)))
+    size = (
+        pairs["wetland_id"].map(dict(zip(wetlands["wetland_id"], wetlands["area_max_m2"], strict=True))).astype(float)
+    )
     bare = (pairs["leaf_state"].astype(str) == "leaf_off").groupby(pairs["wetland_id"]).transform("sum") >= 8
     known = bare & (pairs["stage_m"] > 0) & ~pairs["censored"].astype(bool)
     table = pairs[known].assign(size=size[known], told=np.nan)
