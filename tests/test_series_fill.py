@@ -116,6 +116,20 @@ def test_lasting_errors_widen_intervals_and_draws(world, filled):
     assert wide.draws(5).min() >= 0
 
 
+def test_a_part_of_lasting_errors_is_left_where_something_else_tells(world):
+    """One wetland with a quarter of the lasting errors lies between none and all; the others are as with all."""
+    option = dataclasses.replace(QUICK, lasting=(0.2, 0.05))
+    name = world.wetlands["wetland_id"].iloc[0]
+    part = dataclasses.replace(world.inputs, lasting_part={name: 0.25})
+    width = {}
+    for key, inputs, options in (("none", world.inputs, QUICK), ("all", world.inputs, option), ("part", part, option)):
+        daily = table(fill_series(inputs, options=options, seed=1))
+        width[key] = (daily["area_hi_m2"] - daily["area_lo_m2"]).groupby(daily["wetland_id"]).mean()
+    assert width["none"][name] < width["part"][name] < width["all"][name]
+    others = width["all"].index != name
+    assert (width["part"][others] == width["all"][others]).all()
+
+
 def test_heldout_values_are_told(world, filled):
     """What was hidden and predicted stands beside the truth of the views, by kind."""
     held = filled.heldout

@@ -67,7 +67,15 @@ def conclude(
     lasting: tuple[float, float] = (0.0, 0.0),
 ) -> Findings:
     """Fit relations and fill the series."""
-    from inundate.relation import best_pairs, fit_relations, make_pairs, outlet_levels, through_outlets, with_outlets
+    from inundate.relation import (
+        best_pairs,
+        fit_relations,
+        lasting_parts,
+        make_pairs,
+        outlet_levels,
+        through_outlets,
+        with_outlets,
+    )
     from inundate.series import FillOptions, SeriesInputs, fill_series
 
     observed, stage = found
@@ -99,7 +107,16 @@ def conclude(
     with work.progress.step("filling the series"):
         series = fill_series(
             SeriesInputs(
-                wetlands, observed, daily, relations, layout.hypsometry, inputs.weather, leaf_daily, dates[0], last
+                wetlands,
+                observed,
+                daily,
+                relations,
+                layout.hypsometry,
+                inputs.weather,
+                leaf_daily,
+                dates[0],
+                last,
+                lasting_parts(outlets, wetlands, ground, lasting),
             ),
             options=FillOptions(workers=settings.compute.workers, lasting=lasting),
             seed=settings.series.seed,

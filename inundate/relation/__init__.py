@@ -9,7 +9,7 @@ from inundate.relation.estimator import StageAreaRelation
 from inundate.relation.fit import fit_relations
 from inundate.relation.lasting import leaf_factors, widen_bands
 from inundate.relation.options import RelationOptions
-from inundate.relation.outlets import outlet_levels, through_outlets, with_outlets
+from inundate.relation.outlets import lasting_parts, outlet_levels, through_outlets, with_outlets
 from inundate.relation.pairs import best_pairs, make_pairs
 from inundate.relation.relations import RelationSet
 
@@ -19,6 +19,7 @@ __all__ = [
     "StageAreaRelation",
     "best_pairs",
     "fit_relations",
+    "lasting_parts",
     "leaf_factors",
     "make_pairs",
     "outlet_levels",

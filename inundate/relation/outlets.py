@@ -99,6 +99,46 @@ def with_outlets(
     return pd.concat(both, ignore_index=True).sort_values(["wetland_id", "date"], kind="stable", ignore_index=True)
 
 
+def lasting_parts(
+    outlets: pd.DataFrame, wetlands: pd.DataFrame, hypsometry: pd.DataFrame | None, lasting: tuple[float, float]
+) -> dict[str, float]:
+    """Return the part of lasting errors of views that is left where an outlet ties a wetland to its elevation model.
+
+    Two witnesses of the same curve: views, which err by ``lasting``, and the elevation model hung on the outlet, which errs by the sd of
+    its depths (times the share that a metre fills) and of the share at the rim. The part left is the error of both together over that
+    of views alone, for a half full wetland.
+
+    Parameters
+    ----------
+    outlets : DataFrame
+        From :func:`outlet_levels`.
+    wetlands : DataFrame
+        wetland_id.
+    hypsometry : DataFrame or None
+        wetland_id, stage_m, area_m2.
+    lasting : (float, float)
+        Water missed and dry ground added that last in a wetland, sds as shares.
+
+    Returns
+    -------
+    dict
+        wetland_id -> 0..1, for wetlands with outlet and elevation.
+    """
+    views = 0.5 * float(np.hypot(*lasting))
+    if hypsometry is None or views <= 0:
+        return {}
+    wanted = set(outlets["wetland_id"]) & set(wetlands["wetland_id"])
+    out = {}
+    for name, ground in hypsometry[hypsometry["wetland_id"].isin(wanted)].groupby("wetland_id"):
+        rungs = _below_rim(ground)
+        if len(rungs) < 2:
+            continue
+        (deep, least, _), (near, most, _) = rungs[0], rungs[-1]
+        model = float(np.hypot(RIM_SD_M * (most - least) / max(deep - near, 0.05), FULL_SD))
+        out[str(name)] = model / float(np.hypot(model, views))
+    return out
+
+
 def _below_rim(ground: pd.DataFrame) -> list[tuple[float, float, float]]:
     """Return (m below the rim, share of the largest extent there, sd in m) from one hypsometry, down to water at the survey."""
     stage, area = ground["stage_m"].to_numpy(float), ground["area_m2"].to_numpy(float)

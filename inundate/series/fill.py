@@ -84,7 +84,14 @@ def fill_series(inputs: SeriesInputs, *, options: FillOptions | None = None, see
     wide = _widen(setup, levels, evidence, weights, views)
     heldout = heldout_table(setup, blind, evidence, weights)
     reasons = _reasons(setup, fits, weights, scores, evidence)
-    made = _assemble(setup, levels, wide, views, (reasons, _joint(evidence, weights, fits)), options.lasting)
+    made = _assemble(
+        setup,
+        levels,
+        wide,
+        views,
+        (reasons, _joint(evidence, weights, fits)),
+        (options.lasting, inputs.lasting_part or {}),
+    )
     return replace(made, heldout=heldout)
 
 
@@ -232,7 +239,7 @@ def _assemble(
     sd: np.ndarray,
     views: Events,
     rest: tuple[pd.DataFrame, Joint],
-    lasting: tuple[float, float],
+    lasting: tuple[tuple[float, float], dict[str, float]],
 ) -> SeriesResult:
     panel = setup.panel
     count, days = levels.mean.shape
@@ -249,7 +256,8 @@ def _assemble(
             one[2],
             WIDTH_90,
         )
-        widen_lasting(one, lasting)
+        part = lasting[1].get(panel.ids[i], 1.0)
+        widen_lasting(one, (part * lasting[0][0], part * lasting[0][1]))
         areas[:, i] = np.minimum(one * panel.area_max_m2[i], panel.area_max_m2[i])
     basis = _basis(setup, levels, views)
     daily = daily_table(panel.ids, panel.dates, areas, basis, panel.leaf)
@@ -265,7 +273,7 @@ def _assemble(
         panel.area_max_m2,
         rest[1],
         setup.seed,
-        lasting,
+        *lasting,
     )
 
 

@@ -40,6 +40,8 @@ class SeriesInputs:
         wetland_id, date, leaf_state [, leaf_share].
     first_date, last_date : Timestamp or None
         First and last day wanted; None means the span of views, stage and (last) the leaf calendar.
+    lasting_part : dict or None
+        wetland_id -> part (0..1) of ``FillOptions.lasting`` that is left where something beside views tells a wetland's curve; 1 elsewhere.
     """
 
     wetlands: pd.DataFrame
@@ -51,6 +53,7 @@ class SeriesInputs:
     leaf_daily: pd.DataFrame
     first_date: pd.Timestamp | None = None
     last_date: pd.Timestamp | None = None
+    lasting_part: dict[str, float] | None = None
 
 
 @dataclass(frozen=True, slots=True)

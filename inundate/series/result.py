@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterator
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 
 import numpy as np
 import pandas as pd
@@ -78,6 +78,8 @@ class SeriesResult:
     seed : int
     lasting : (float, float)
         See ``FillOptions.lasting``; the intervals hold it, and each draw a wetland's own share of it.
+    lasting_part : dict
+        wetland_id -> part of ``lasting`` that is left there; 1 where not named.
     heldout : DataFrame or None
         What was hidden and predicted: wetland_id, date, kind (``views`` / ``logger``), leaf_state, known_m2, known_sd_m2,
         area_m2, area_lo_m2, area_hi_m2.
@@ -95,6 +97,7 @@ class SeriesResult:
     joint: Joint
     seed: int
     lasting: tuple[float, float] = (0.0, 0.0)
+    lasting_part: dict[str, float] = field(default_factory=dict)
     heldout: pd.DataFrame | None = None
 
     @property
@@ -135,7 +138,8 @@ class SeriesResult:
 
     def _with_lasting(self, out: np.ndarray, wetland: str, n: int) -> np.ndarray:
         """Add to each draw (draw, day) what views of this wetland may keep missing or adding, in place."""
-        missed, added = self.lasting
+        part = self.lasting_part.get(wetland, 1.0)
+        missed, added = (part * value for value in self.lasting)
         if missed > 0 or added > 0:
             z = rng_for(self.seed, "lasting", wetland).standard_normal((n, 2), dtype=np.float32)
             largest = np.float32(self.area_max_m2[self.wetland_ids.index(wetland)])
