@@ -107,6 +107,31 @@ def test_a_wetland_never_seen_is_wide(world):
     assert width[mine].mean() > width[~mine].mean()
 
 
+def test_views_that_a_canopy_hides_serve_a_wetland_that_has_no_other(world):
+    """Through gaps too small for an extent of its own, years of views still tell wet from dry; elsewhere they count nothing."""
+    name, other = world.wetlands["wetland_id"].iloc[[4, 3]]  # an evergreen one, and one with usable views
+    seen = world.inputs.observed
+    hidden = seen.assign(
+        clear_fraction=0.9, view_fraction=0.2, reason="canopy hides it", used=False, leaf_state="leaf_on"
+    )
+    size = world.wetlands.set_index("wetland_id")["area_max_m2"]
+    hidden = hidden.assign(
+        area_m2=0.95 * hidden["wetland_id"].map(size), area_sd_m2=0.1 * hidden["wetland_id"].map(size)
+    )
+    width, middle = {}, {}
+    for key, table_seen in (
+        ("none", seen[seen["wetland_id"] != name]),
+        ("dim", pd.concat([seen[seen["wetland_id"] != name], hidden[hidden["wetland_id"].isin([name, other])]])),
+    ):
+        inputs = dataclasses.replace(world.inputs, observed=table_seen)
+        daily = table(fill_series(inputs, options=QUICK, seed=1))
+        width[key] = (daily["area_hi_m2"] - daily["area_lo_m2"]).groupby(daily["wetland_id"]).mean()
+        middle[key] = daily.groupby("wetland_id")["area_m2"].mean()
+    assert middle["dim"][name] > middle["none"][name] + 0.05 * size[name]
+    assert width["dim"][name] < width["none"][name]
+    assert middle["dim"][other] == pytest.approx(middle["none"][other], rel=0.02)
+
+
 def test_lasting_errors_widen_intervals_and_draws(world, filled):
     """The lasting part leaves the middle alone, widens intervals, and spreads draws."""
     wide = fill_series(world.inputs, options=dataclasses.replace(QUICK, lasting=(0.2, 0.05)), seed=1)

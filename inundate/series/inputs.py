@@ -15,6 +15,9 @@ SPIN_UP_DAYS = 730
 
 
 _TELLS_VIEW = {"view_fraction", "clear_fraction"}
+LEAST_OPEN, DIM = 0.15, 0.3
+"""Share of the ground that a canopy must let through for a view to tell anything, and below which it proves nothing about other canopies
+(common practice, no source)."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -26,8 +29,8 @@ class SeriesInputs:
     wetlands : DataFrame
         wetland_id, area_max_m2, cover.
     observed : DataFrame
-        extent_observed: wetland_id, datetime, area_m2, area_sd_m2, leaf_state, used (rows with ``used`` false count nothing)
-        [, view_fraction, clear_fraction].
+        extent_observed: wetland_id, datetime, area_m2, area_sd_m2, leaf_state, used [, view_fraction, clear_fraction, reason]. Rows
+        with ``used`` false count nothing, but for wetlands that have no other: there a view that the canopy hides serves.
     stage_daily : DataFrame or None
         Full daily stage: wetland_id, date, stage_m, stage_sd_m, censored.
     relations : Relations or None
@@ -243,9 +246,8 @@ def _views(
     table = inputs.observed
     _need(table, "observed", ("wetland_id", "datetime", "area_m2", "area_sd_m2", "leaf_state", "used"))
     wetland = table["wetland_id"].astype(str).map(place)
-    good = (
-        table["used"].astype(bool) & wetland.notna() & np.isfinite(table["area_m2"]) & np.isfinite(table["area_sd_m2"])
-    )
+    good = (table["used"].astype(bool) | _last_resort(table)) & wetland.notna()
+    good &= np.isfinite(table["area_m2"]) & np.isfinite(table["area_sd_m2"])
     table, wetland = table[good], wetland[good].astype(np.int64)
     unknown = set(table["leaf_state"].astype(str)) - set(LEAF_STATES)
     if unknown:
@@ -259,6 +261,15 @@ def _views(
     seen = table[["view_fraction", "clear_fraction"]].to_numpy(float) if set(table.columns) >= _TELLS_VIEW else None
     frame["open"] = 1.0 if seen is None else np.clip(seen[:, 0] / np.maximum(seen[:, 1], 1e-6), 0.0, 1.0)
     return _merge_days(frame)
+
+
+def _last_resort(table: pd.DataFrame) -> pd.Series:
+    """Which views that the canopy hides serve: those of wetlands without any usable view, where gaps let some ground be seen."""
+    if not {"reason", *_TELLS_VIEW} <= set(table.columns):
+        return pd.Series(False, index=table.index)
+    never = ~table["used"].astype(bool).groupby(table["wetland_id"]).transform("any")
+    seen = (table["clear_fraction"] >= 0.5) & (table["view_fraction"] >= LEAST_OPEN * table["clear_fraction"])
+    return never & seen & (table["reason"] == "canopy hides it")
 
 
 def _stage(table: pd.DataFrame | None, place: dict[str, int], first: pd.Timestamp) -> pd.DataFrame:

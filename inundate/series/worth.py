@@ -6,7 +6,7 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
-from inundate.series.inputs import Events
+from inundate.series.inputs import DIM, Events
 
 # Bounds between classes of views under leaves by the share of ground that the canopy lets through (common practice).
 _OPENNESS = (0.4, 0.6)
@@ -94,9 +94,10 @@ def correct_leafy(views: Events, stage: Events, truth: tuple[np.ndarray, np.ndar
     leafy = views.kind != 0
     if not leafy.any():
         return views
+    dim = leafy & (views.open < DIM)
     bins = np.digitize(views.open, _OPENNESS)
     at, on = pair_events(views, stage)
-    keep = leafy[at]
+    keep = leafy[at] & ~dim[at]
     at, on = at[keep], on[keep]
     table, gap = _readings(views, bins, at, (truth[0][on], truth[1][on]))
     lasting = _lasting(gap, views, at)
@@ -104,13 +105,14 @@ def correct_leafy(views: Events, stage: Events, truth: tuple[np.ndarray, np.ndar
     value, var = views.value.copy(), views.sd**2
     good = np.ones(views.day.size, bool)
     for (leaf, size), line in table.items():
-        cell = leafy & (views.kind == leaf) & (bins == size)
+        cell = leafy & ~dim & (views.kind == leaf) & (bins == size)
         if not cell.any():
             continue
         scale = max(line.sd / _usual_sd(views.sd[cell]), 1.0) if at.size else _UNPROVEN
         value[cell] = np.clip((views.value[cell] - line.offset) / line.slope, 0.0, 1.0)
         var[cell] = ((scale * views.sd[cell]) ** 2 * crowd[cell] + lasting[cell] * count[cell]) / line.slope**2
         good[cell] = np.sqrt(var[cell]) < _USELESS * views.sd[cell]
+    var[dim] = (_UNPROVEN * views.sd[dim]) ** 2 * crowd[dim] + _LASTING**2 * count[dim]
     return replace(views, value=value, sd=np.sqrt(var)).keep(good)
 
 
@@ -125,7 +127,7 @@ def _readings(
     table: dict[tuple[int, int], Reading] = {}
     gap = np.zeros(at.size)
     for leaf in (1, 2, 3):
-        wide = _UNPROVEN * _usual_sd(views.sd[views.kind == leaf])
+        wide = _UNPROVEN * _usual_sd(views.sd[(views.kind == leaf) & (views.open >= DIM)])
         rows = kind == leaf
         whole = _line(value[rows], share[rows], share_sd[rows], weight[rows], (Reading(0.0, 1.0, wide), moments))
         for size in range(len(_OPENNESS) + 1):
