@@ -6,7 +6,15 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
-from inundate.relation import fit_relations, lasting_parts, make_pairs, outlet_levels, through_outlets, with_outlets
+from inundate.relation import (
+    believed_outlets,
+    fit_relations,
+    lasting_parts,
+    make_pairs,
+    outlet_levels,
+    through_outlets,
+    with_outlets,
+)
 
 DAYS = pd.date_range("2031-01-01", periods=3 * 365)
 WETLANDS = pd.DataFrame({"wetland_id": ["a"], "area_max_m2": [1000.0]})
@@ -121,3 +129,22 @@ def test_two_witnesses_err_less_than_one():
     assert lasting_parts(outlets, WETLANDS, None, (0.08, 0.06)) == {}
     assert lasting_parts(outlets.iloc[:0], WETLANDS, bowl, (0.08, 0.06)) == {}
     assert lasting_parts(outlets, WETLANDS, bowl, (0.0, 0.0)) == {}
+
+
+def test_a_level_that_views_contradict_is_no_outlet():
+    """A weir below the rim: full by the record, a third full by every view; with two views only nobody can tell."""
+    outlets = pd.DataFrame({"wetland_id": ["a"], "period": [0], "level_m": [0.38], "days": [100], "years": [3]})
+    pairs = pd.DataFrame(
+        {
+            "wetland_id": "a",
+            "period": 0,
+            "stage_m": [0.39, 0.395, 0.4],
+            "area_m2": [330.0, 350.0, 340.0],
+            "leaf_state": "leaf_off",
+        }
+    )
+    assert believed_outlets(outlets, pairs, WETLANDS).empty
+    assert len(believed_outlets(outlets, pairs.iloc[:2], WETLANDS)) == 1
+    assert len(believed_outlets(outlets, pairs.assign(area_m2=820.0), WETLANDS)) == 1
+    assert len(believed_outlets(outlets, pairs.assign(leaf_state="leaf_on"), WETLANDS)) == 1
+    assert believed_outlets(outlets.iloc[:0], pairs, WETLANDS).empty

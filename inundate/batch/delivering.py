@@ -68,6 +68,7 @@ def conclude(
 ) -> Findings:
     """Fit relations and fill the series."""
     from inundate.relation import (
+        believed_outlets,
         best_pairs,
         fit_relations,
         lasting_parts,
@@ -86,7 +87,7 @@ def conclude(
     with work.progress.step("stage-area relations"):
         record = daily if daily is not None else _no_stage()
         pairs = make_pairs(observed, record)
-        outlets = outlet_levels(record)
+        outlets = believed_outlets(outlet_levels(record), pairs, wetlands)
         ground = layout.hypsometry
         anchored = set() if ground is None else set(outlets["wetland_id"]) & set(ground["wetland_id"])
         told, full = through_outlets(best_pairs(pairs, anchored=anchored), outlets, wetlands, lasting[0])

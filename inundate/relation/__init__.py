@@ -9,7 +9,7 @@ from inundate.relation.estimator import StageAreaRelation
 from inundate.relation.fit import fit_relations
 from inundate.relation.lasting import leaf_factors, widen_bands
 from inundate.relation.options import RelationOptions
-from inundate.relation.outlets import lasting_parts, outlet_levels, through_outlets, with_outlets
+from inundate.relation.outlets import believed_outlets, lasting_parts, outlet_levels, through_outlets, with_outlets
 from inundate.relation.pairs import best_pairs, make_pairs
 from inundate.relation.relations import RelationSet
 
@@ -17,6 +17,7 @@ __all__ = [
     "RelationOptions",
     "RelationSet",
     "StageAreaRelation",
+    "believed_outlets",
     "best_pairs",
     "fit_relations",
     "lasting_parts",

@@ -17,7 +17,7 @@ RUNGS, RIM, RIM_SD_M = (0.1, 0.2, 0.3, 0.4, 0.5, 0.6, 0.7, 0.8, 0.85), 0.9, 0.04
 """Shares of the largest extent whose depth below the rim an elevation model tells; the share at whose level the rim is put (noise and
 uneven ground smear the rest over the rim); and the sd of such a depth, m (common practice, no source)."""
 _LEAST_VIEWS = 3
-_LARGEST = 0.5
+_LARGEST = 0.5  # of the water that views may miss
 
 
 def outlet_levels(stage_daily: pd.DataFrame) -> pd.DataFrame:
@@ -52,6 +52,36 @@ def outlet_levels(stage_daily: pd.DataFrame) -> pd.DataFrame:
             days = np.sort(pd.to_datetime(mine["date"])[high].to_numpy())
             rows.append((str(name), part, top - TOP_M, int(high.sum()), years, days[days.size // 2]))
     return pd.DataFrame(rows, columns=["wetland_id", "period", "level_m", "days", "years", "date"])
+
+
+def believed_outlets(outlets: pd.DataFrame, pairs: pd.DataFrame, wetlands: pd.DataFrame) -> pd.DataFrame:
+    """Return the outlets that views do not contradict: a held level (a weir, a pump) need not be that of the largest extent.
+
+    Parameters
+    ----------
+    outlets : DataFrame
+        From :func:`outlet_levels`.
+    pairs : DataFrame
+        From :func:`inundate.relation.make_pairs`.
+    wetlands : DataFrame
+        wetland_id, area_max_m2.
+
+    Returns
+    -------
+    DataFrame
+        Rows of ``outlets`` but for those at whose level three leaf-off views or more show, in the median, less than half of the largest
+        extent.
+    """
+    size = dict(zip(wetlands["wetland_id"], wetlands["area_max_m2"], strict=True))
+    bare = pairs[pairs["leaf_state"].astype(str) == "leaf_off"]
+    keep = []
+    for row in outlets.to_dict("records"):
+        mine = (bare["wetland_id"] == row["wetland_id"]) & (bare["stage_m"] > row["level_m"])
+        if "period" in bare:
+            mine &= bare["period"] == row["period"]
+        share = bare.loc[mine, "area_m2"] / size.get(row["wetland_id"], np.nan)
+        keep.append(len(share) < _LEAST_VIEWS or not float(share.median()) < 1.0 - _LARGEST)
+    return outlets[np.array(keep, bool)].reset_index(drop=True)
 
 
 def with_outlets(
