@@ -9,7 +9,7 @@ from hypothesis import strategies as st
 from inundate.extent import widen_observed
 from inundate.pixels import between_sd, lasting_errors
 from inundate.pixels.lasting import UNKNOWN
-from inundate.relation import fit_relations, leaf_factors, widen_bands
+from inundate.relation import fit_relations, leaf_factors, widen_bands, with_shared_errors
 from inundate.series.fill import widen_lasting
 
 WETLANDS = pd.DataFrame({"wetland_id": ["a", "b"], "area_max_m2": [100.0, 1000.0]})
@@ -115,3 +115,28 @@ def test_leaf_factors_are_what_makes_nine_in_ten_views_fit():
     wide = widen_observed(observed, wetlands, (0.0, 0.0), factors)["area_sd_m2"].to_numpy()
     assert wide[0] == pytest.approx(20 * factors["leaf_on"])
     assert wide[1] == 20.0
+
+
+def test_many_views_that_share_an_error_do_not_outvote_another_witness():
+    """By hand: 3 wet views of wetland a share 0.05 of 100 m2; wetland b has no elevation on an outlet, dry and made rows stay."""
+    pairs = pd.DataFrame(
+        {
+            "wetland_id": ["a"] * 6 + ["b"] * 2,
+            "stage_m": [0.2, 0.3, 0.4, -0.1, 0.5, 0.45, 0.2, 0.3],
+            "area_sd_m2": 6.0,
+            "made": [False] * 4 + [True] * 2 + [False] * 2,
+        }
+    )
+    got = with_shared_errors(pairs, WETLANDS, (0.08, 0.06))["area_sd_m2"]
+    assert got.iloc[:3].to_numpy() == pytest.approx(np.sqrt(36 + 3 * 25.0))
+    assert (got.iloc[3:] == 6.0).all()
+    assert 1 / (1 / (got.iloc[:3] ** 2 - 36)).sum() == pytest.approx(25.0)  # together: the shared error, once
+    assert with_shared_errors(pairs.iloc[:0], WETLANDS, (0.08, 0.06)).empty
+
+
+def test_bands_take_the_part_that_is_left():
+    rows = pd.DataFrame({"wetland_id": ["a", "b"], "stage_m": 0.5, "area_m2": [50.0, 500.0], "area_lo_m2": [49.0, 490.0], "area_hi_m2": [51.0, 510.0]})  # fmt: skip
+    whole, part = (widen_bands(rows, WETLANDS, (0.2, 0.1), p) for p in (None, {"a": 0.5}))
+    width = lambda t: (t["area_hi_m2"] - t["area_lo_m2"]).to_numpy()  # noqa: E731
+    assert width(part)[0] < 0.6 * width(whole)[0]
+    assert width(part)[1] == width(whole)[1]

@@ -15,6 +15,7 @@ from inundate.relation import (
     through_outlets,
     with_outlets,
 )
+from inundate.relation.outlets import up_to_rim
 
 DAYS = pd.date_range("2031-01-01", periods=3 * 365)
 WETLANDS = pd.DataFrame({"wetland_id": ["a"], "area_max_m2": [1000.0]})
@@ -119,13 +120,12 @@ def test_an_outlet_ties_the_stage_of_a_wetland_that_no_view_shows_to_its_elevati
 
 
 def test_two_witnesses_err_less_than_one():
-    """A bowl of 1 m with straight walls: 4 cm of depth are 4 % of its extent, with 5 % at the rim 6.4 %; views err by 5 % at half."""
+    """A bowl of 1 m whose extent rises evenly: 4 cm of depth are 4 % of it; views err by 5 % when it is half full."""
     bowl = pd.DataFrame({"wetland_id": "a", "stage_m": np.arange(0, 1.01, 0.01)})
     bowl["area_m2"] = 1000.0 * bowl["stage_m"]
     outlets = pd.DataFrame({"wetland_id": ["a"], "period": [0], "level_m": [0.9], "date": [DAYS[0]]})
     part = lasting_parts(outlets, WETLANDS, bowl, (0.08, 0.06))
-    model = np.hypot(0.04, 0.05)
-    assert part["a"] == pytest.approx(model / np.hypot(model, 0.05), rel=0.02)
+    assert part["a"] == pytest.approx(0.04 / np.hypot(0.04, 0.05), rel=0.02)
     assert lasting_parts(outlets, WETLANDS, None, (0.08, 0.06)) == {}
     assert lasting_parts(outlets.iloc[:0], WETLANDS, bowl, (0.08, 0.06)) == {}
     assert lasting_parts(outlets, WETLANDS, bowl, (0.0, 0.0)) == {}
@@ -148,3 +148,19 @@ def test_a_level_that_views_contradict_is_no_outlet():
     assert len(believed_outlets(outlets, pairs.assign(area_m2=820.0), WETLANDS)) == 1
     assert len(believed_outlets(outlets, pairs.assign(leaf_state="leaf_on"), WETLANDS)) == 1
     assert believed_outlets(outlets.iloc[:0], pairs, WETLANDS).empty
+
+
+@pytest.mark.parametrize("power", [0.7, 1.3, 2.5])
+def test_noise_does_not_lift_the_rim(power):
+    """A bowl of 1 m seen with 6 cm of noise: full at its rim again, within 4 cm, and untouched below 85 %."""
+    rng = np.random.default_rng(1)
+    ground = rng.random(20_000) ** (1 / power)
+    model = np.sort(ground + 0.06 * rng.standard_normal(ground.size))
+    stage = np.arange(model[0], model[-1] + 0.01, 0.01)
+    share = np.searchsorted(model, stage) / model.size
+    got = up_to_rim(stage, share)
+    full = [float(stage[np.searchsorted(s, 0.999)]) for s in (share, got)]
+    assert full[0] > 1.08
+    assert full[1] == pytest.approx(1.0, abs=0.05)
+    assert (np.diff(got) >= -1e-12).all()
+    assert (got[share < 0.85] == share[share < 0.85]).all()

@@ -76,6 +76,7 @@ def conclude(
         outlet_levels,
         through_outlets,
         with_outlets,
+        with_shared_errors,
     )
     from inundate.series import FillOptions, SeriesInputs, fill_series
 
@@ -91,7 +92,7 @@ def conclude(
         ground = layout.hypsometry
         anchored = set() if ground is None else set(outlets["wetland_id"]) & set(ground["wetland_id"])
         told, full = through_outlets(best_pairs(pairs, anchored=anchored), outlets, wetlands, lasting[0])
-        told = with_outlets(told, outlets, wetlands, ground)
+        told = with_shared_errors(with_outlets(told, outlets, wetlands, ground), wetlands, lasting)
         relations = fit_relations(told, wetlands, ground, seed=settings.relation.seed)
         work.notes.extend(
             f"wetland {r['wetland_id']}: an outlet holds its level near {r['level_m']:.2f} m ({r['days']} days); its views then "
@@ -159,7 +160,7 @@ def write_tables(
     stage = stage[pd.to_datetime(stage["date"]) <= found.last]
     stage = write_product_table(folder, "stage_daily", stage)
     write_product_table(folder, "relations", found.relations.relations)
-    bands = widen_bands(found.relations.table(), found.wetlands, lasting)
+    bands = widen_bands(found.relations.table(), found.wetlands, lasting, found.series.lasting_part)
     write_product_table(folder, "relation_table", bands)
     write_product_table(folder, "hydroperiod", hydroperiod(found.series, settings.water_year_start_month))
     classes = size_classes(found.series, found.wetlands, settings.size_class_edges_ha)

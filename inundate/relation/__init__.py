@@ -7,7 +7,7 @@ shifts; :class:`StageAreaRelation` is the same for one wetland as a scikit-learn
 
 from inundate.relation.estimator import StageAreaRelation
 from inundate.relation.fit import fit_relations
-from inundate.relation.lasting import leaf_factors, widen_bands
+from inundate.relation.lasting import leaf_factors, widen_bands, with_shared_errors
 from inundate.relation.options import RelationOptions
 from inundate.relation.outlets import believed_outlets, lasting_parts, outlet_levels, through_outlets, with_outlets
 from inundate.relation.pairs import best_pairs, make_pairs
@@ -27,4 +27,5 @@ __all__ = [
     "through_outlets",
     "widen_bands",
     "with_outlets",
+    "with_shared_errors",
 ]

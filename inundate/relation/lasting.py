@@ -10,7 +10,9 @@ from inundate.relation.relations import RelationSet
 Z_90 = 1.6448536269514722
 
 
-def widen_bands(table: pd.DataFrame, wetlands: pd.DataFrame, lasting: tuple[float, float]) -> pd.DataFrame:
+def widen_bands(
+    table: pd.DataFrame, wetlands: pd.DataFrame, lasting: tuple[float, float], parts: dict[str, float] | None = None
+) -> pd.DataFrame:
     """Return a relation table with 90 % bands widened by errors that no number of pairs averages out.
 
     Parameters
@@ -22,6 +24,8 @@ def widen_bands(table: pd.DataFrame, wetlands: pd.DataFrame, lasting: tuple[floa
     lasting : (float, float)
         Standard deviations, from wetland to wetland, of the share of water that views keep missing and of the share of
         dry ground that they keep calling water.
+    parts : dict, optional
+        From :func:`inundate.relation.lasting_parts`.
 
     Returns
     -------
@@ -31,7 +35,8 @@ def widen_bands(table: pd.DataFrame, wetlands: pd.DataFrame, lasting: tuple[floa
     largest = table["wetland_id"].map(dict(zip(wetlands["wetland_id"], wetlands["area_max_m2"], strict=True)))
     area, low, high = (table[c].to_numpy(float) for c in ("area_m2", "area_lo_m2", "area_hi_m2"))
     most = largest.to_numpy(float)
-    reach = Z_90 * np.hypot(area * lasting[0], (most - area) * lasting[1]) * (high > 0)
+    left = table["wetland_id"].map(parts or {}).astype(float).fillna(1.0).to_numpy()
+    reach = Z_90 * left * np.hypot(area * lasting[0], (most - area) * lasting[1]) * (high > 0)
     out = table.assign(
         area_lo_m2=np.clip(area - np.hypot(area - low, reach), 0.0, area),
         area_hi_m2=np.clip(area + np.hypot(high - area, reach), area, np.maximum(most, area)),
@@ -41,6 +46,36 @@ def widen_bands(table: pd.DataFrame, wetlands: pd.DataFrame, lasting: tuple[floa
         out[name] = out.groupby(keys, sort=False)[name].cummax()
     out["area_lo_m2"] = np.minimum(out["area_lo_m2"], out["area_m2"])
     return out
+
+
+def with_shared_errors(pairs: pd.DataFrame, wetlands: pd.DataFrame, lasting: tuple[float, float]) -> pd.DataFrame:
+    """Widen pairs by the error that all views of a wetland share, where an elevation model hung on an outlet tells beside them.
+
+    With ``n`` views that share an error of variance ``v`` (that of a half full wetland) each gets ``n v`` more: together they then say as
+    much as one view without noise, and do not outvote the other witness by their number.
+
+    Parameters
+    ----------
+    pairs : DataFrame
+        wetland_id, stage_m, area_sd_m2, made; from :func:`inundate.relation.with_outlets`.
+    wetlands : DataFrame
+        wetland_id, area_max_m2.
+    lasting : (float, float)
+        Water missed and dry ground added that last in a wetland, sds as shares.
+
+    Returns
+    -------
+    DataFrame
+        Rows of ``pairs`` in their order; rows that are made, dry, or of wetlands with less than two made rows stay as they are.
+    """
+    made = pairs["made"].astype(bool)
+    size = (
+        pairs["wetland_id"].map(dict(zip(wetlands["wetland_id"], wetlands["area_max_m2"], strict=True))).astype(float)
+    )
+    seen = (made.groupby(pairs["wetland_id"]).transform("sum") > 1) & ~made & (pairs["stage_m"] > 0)
+    shared = seen.groupby(pairs["wetland_id"]).transform("sum") * (0.5 * np.hypot(*lasting) * size) ** 2
+    wide = np.sqrt(pairs["area_sd_m2"].astype(float) ** 2 + shared)
+    return pairs.assign(area_sd_m2=np.where(seen, wide, pairs["area_sd_m2"]))
 
 
 def leaf_factors(

@@ -13,9 +13,10 @@ LEAST_DAYS, LEAST_YEARS, LEAST_RATIO = 60, 2, 2.0
 times as often as in the ``TOP_M`` below (common practice, no source)."""
 FULL, FULL_SD = 0.97, 0.05
 """Share of the largest extent that a wetland has at its outlet's level (common practice, no source)."""
-RUNGS, RIM, RIM_SD_M = (0.1, 0.2, 0.3, 0.4, 0.5, 0.6, 0.7, 0.8, 0.85), 0.9, 0.04
+RUNGS, RIM, RIM_SD_M = (0.1, 0.2, 0.3, 0.4, 0.5, 0.6, 0.7, 0.8, 0.85), 0.95, 0.04
 """Shares of the largest extent whose depth below the rim an elevation model tells; the share at whose level the rim is put (noise and
 uneven ground smear the rest over the rim); and the sd of such a depth, m (common practice, no source)."""
+_RIM_LINE = (0.6, 0.85)
 _LEAST_VIEWS = 3
 _LARGEST = 0.5  # of the water that views may miss
 
@@ -135,8 +136,8 @@ def lasting_parts(
     """Return the part of lasting errors of views that is left where an outlet ties a wetland to its elevation model.
 
     Two witnesses of the same curve: views, which err by ``lasting``, and the elevation model hung on the outlet, which errs by the sd of
-    its depths (times the share that a metre fills) and of the share at the rim. The part left is the error of both together over that
-    of views alone, for a half full wetland.
+    its depths times the share that a metre fills. The part left is the error of both together over that of views alone, for a half
+    full wetland.
 
     Parameters
     ----------
@@ -164,9 +165,33 @@ def lasting_parts(
         if len(rungs) < 2:
             continue
         (deep, least, _), (near, most, _) = rungs[0], rungs[-1]
-        model = float(np.hypot(RIM_SD_M * (most - least) / max(deep - near, 0.05), FULL_SD))
+        model = RIM_SD_M * (most - least) / max(deep - near, 0.05)
         out[str(name)] = model / float(np.hypot(model, views))
     return out
+
+
+def up_to_rim(stage_m: np.ndarray, share: np.ndarray) -> np.ndarray:
+    """Return a hypsometry whose top ends at the rim.
+
+    The outline of a wetland is where its rim lies, so the bowl is full there; noise of the model and uneven ground smear the highest
+    cells over it. From 85 % up the curve follows the line through its 60 and 85 %, where that is steeper than what the model shows (a
+    power law of stage with an exponent of 0.5 to 3 then ends within 4 % of its depth).
+
+    Parameters
+    ----------
+    stage_m, share : ndarray, shape (step,)
+        Stage, rising, and share of the largest extent below it, never falling, up to 1.
+
+    Returns
+    -------
+    ndarray of float64, shape (step,)
+    """
+    rising = share + 1e-9 * np.arange(share.size)
+    low, high = (float(np.interp(part, rising, stage_m)) for part in _RIM_LINE)
+    if high <= low:
+        return share
+    line = _RIM_LINE[1] + (_RIM_LINE[1] - _RIM_LINE[0]) * (stage_m - high) / (high - low)
+    return np.where(stage_m > high, np.clip(np.maximum(line, share), 0.0, 1.0), share)
 
 
 def _below_rim(ground: pd.DataFrame) -> list[tuple[float, float, float]]:
@@ -174,6 +199,7 @@ def _below_rim(ground: pd.DataFrame) -> list[tuple[float, float, float]]:
     stage, area = ground["stage_m"].to_numpy(float), ground["area_m2"].to_numpy(float)
     share = np.maximum.accumulate(area) / max(float(area.max()), 1e-9)
     floor = float(np.interp(water_at_survey(stage, share)[0], stage, share))
+    share = up_to_rim(stage, share)
     level = lambda part: float(np.interp(part, share + 1e-9 * np.arange(share.size), stage))  # noqa: E731
     return [(level(RIM) - level(part), part, RIM_SD_M) for part in RUNGS if part > floor + FULL_SD]
 
