@@ -113,6 +113,7 @@ def test_an_outlet_ties_the_stage_of_a_wetland_that_no_view_shows_to_its_elevati
     tied = relations.predict("a", at)["area_m2"]
     assert relations.relations["n_pairs"].iloc[0] == 0  # no view stands behind them
     assert relations.relations["stage_max_m"].isna().iloc[0]
+    assert "outlet" in relations.relations["note"].iloc[0]
     loose = fit_relations(none, wetlands, bowl).predict("a", at)["area_m2"]
     assert tied.iloc[1] > 900
     assert tied.iloc[0] < 0.8 * loose.iloc[0]  # half a metre below its outlet the bowl is no longer near full

@@ -376,12 +376,16 @@ def _unit_table(clean: pd.DataFrame, sites: pd.DataFrame, place: dict[str, int])
     units["valid_to"] = following - pd.Timedelta(days=1)
     units["hypsometry"] = units["wetland_id"].map(place).fillna(-1).astype(np.int64)
     spread = (units["stage_max_m"] - units["stage_min_m"]).to_numpy(float)
-    units["note"] = [_note(n, wide) for n, wide in zip(units["n_pairs"].to_numpy(), spread, strict=True)]
+    hung = set(map(tuple, clean.loc[clean["made"], ["wetland_id", "period"]].to_numpy()))
+    keys = zip(units["wetland_id"], units["period"], units["n_pairs"].to_numpy(), spread, strict=True)
+    units["note"] = [_note(n, wide, (name, period) in hung) for name, period, n, wide in keys]
     units["unit"] = np.arange(len(units))
     return units.drop(columns="start")
 
 
-def _note(n_pairs: int, spread_m: float) -> str:
+def _note(n_pairs: int, spread_m: float, hung: bool) -> str:
+    if n_pairs == 0 and hung:
+        return "no pairs: the relation rests on elevation, tied to stage by an outlet that the record shows"
     if n_pairs == 0:
         return "no pairs: the relation rests on other wetlands and elevation alone"
     if n_pairs == 1:
