@@ -18,6 +18,8 @@ BAND_ROLES = (
 )
 LEAF_STATES = ("leaf_off", "green_up", "leaf_on", "leaf_fall")
 COVERS = ("open", "deciduous", "evergreen")
+CANOPY_HIDES = "canopy hides it"
+"""Reason of a view that is not used."""
 BASES = ("observed", "stage", "neighbours", "season")
 MAP_NOT_SEEN = 255
 

@@ -8,6 +8,7 @@ import numpy as np
 import pandas as pd
 
 from inundate.common.errors import InputError
+from inundate.common.sizes import largest_extents
 
 
 def apply_decisions(observed: pd.DataFrame, decisions: pd.DataFrame) -> pd.DataFrame:
@@ -125,7 +126,7 @@ def widen_observed(
         Factor on the view's own sd by leaf state (see relation.leaf_factors); 1 where not given.
     """
     own = observed["area_sd_m2"] * observed["leaf_state"].map(leafy or {}).fillna(1.0).astype(float)
-    largest = observed["wetland_id"].map(dict(zip(wetlands["wetland_id"], wetlands["area_max_m2"], strict=True)))
+    largest = largest_extents(observed["wetland_id"], wetlands)
     own = own.clip(upper=0.5 * largest)  # no view is worse than not knowing at all
     missed, added = observed["area_m2"] * lasting[0], (largest - observed["area_m2"]) * lasting[1]
     return observed.assign(area_sd_m2=np.sqrt(own**2 + missed**2 + added**2))

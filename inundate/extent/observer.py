@@ -9,7 +9,7 @@ import pandas as pd
 from sklearn.base import BaseEstimator
 from sklearn.exceptions import NotFittedError
 
-from inundate.common.codes import LEAF_STATES
+from inundate.common.codes import CANOPY_HIDES, LEAF_STATES
 from inundate.common.errors import InputError
 from inundate.common.seeds import rng_for, seed_for
 from inundate.extent.combining import apply_decisions
@@ -34,7 +34,7 @@ REASONS = (
     "",
     "nothing seen",
     "ice or snow",
-    "canopy hides it",
+    CANOPY_HIDES,
     "outside the scene",
     "too few pixels seen",
     "shift not known",
@@ -330,7 +330,7 @@ def _reasons(views: Views, sd: np.ndarray, scene_reason: np.ndarray | None, opti
     out = np.full(clear.size, "", dtype=object)
     few = (view < options.least_view) | (sd > options.widest_sd)
     out[few] = "too few pixels seen"
-    out[few & (clear >= 0.3) & (view < 0.7 * clear)] = "canopy hides it"
+    out[few & (clear >= 0.3) & (view < 0.7 * clear)] = CANOPY_HIDES
     out[clear <= 0] = "nothing seen"
     out[views.ice >= options.ice_share] = "ice or snow"
     out[(clear <= 0) & (views.off >= 0.999 * views.off.max(initial=0.5)) & (views.off >= 0.5)] = "outside the scene"

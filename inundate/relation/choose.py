@@ -20,7 +20,7 @@ def date_blocks(units: Units, n_blocks: int) -> np.ndarray:
     """Number contiguous blocks of dates within each unit (int64, (pair,)); equal counts, same day same block; -1 where made."""
     out = np.full(units.date.size, -1, np.int64)
     for u in range(units.first.size - 1):
-        mine = np.flatnonzero(~units.made[units.first[u] : units.first[u + 1]]) + units.first[u]
+        mine = units.seen_rows(u)
         n = mine.size
         if n < 3:
             continue
@@ -33,7 +33,7 @@ def stage_blocks(units: Units) -> np.ndarray:
     """Number the lowest and the highest third of stages of each unit 0 and 1, the rest -1 (int64, (pair,))."""
     out = np.full(units.date.size, -1, np.int64)
     for u in range(units.first.size - 1):
-        mine = np.flatnonzero(~units.made[units.first[u] : units.first[u + 1]]) + units.first[u]
+        mine = units.seen_rows(u)
         if mine.size < 6:
             continue
         stage = units.pairs[mine, 0]

@@ -59,7 +59,8 @@ def fit_relations(
     ----------
     pairs : DataFrame
         wetland_id, date, stage_m, area_m2 and, where known, stage_sd_m, area_sd_m2, censored, leaf_state, view_fraction,
-        period, rising, made (see :func:`inundate.relation.with_outlets`). A wetland with several ``period`` values gets a relation for each (a confirmed split).
+        period, rising, made (see :func:`inundate.relation.with_outlets`). A wetland with several ``period`` values gets a
+        relation for each (a confirmed split).
     wetlands : DataFrame
         wetland_id, area_max_m2 [, cover].
     hypsometry : DataFrame, optional
@@ -281,11 +282,11 @@ def _assemble(
     if SPLINE in codes:
         wide = band_weights(weights, units.table["n_pairs"].to_numpy() > 0)
     scale_in, scale_out = _scales(units, by_date, by_stage, weights, options.nu)
-    unseen = scale_out
+    unseen, seen = scale_out, units.seen()
     if ELEVATION in codes and options.pool:
-        unseen = unseen_scale(units.seen(), priors[ELEVATION], fits[ELEVATION], options.nu)
+        unseen = unseen_scale(seen, priors[ELEVATION], fits[ELEVATION], options.nu)
     known = _serving(units)
-    shifts = find_shifts(units.seen(), fits, priors, weights, options)
+    shifts = find_shifts(seen, fits, priors, weights, options)
     curves = Curves(
         units.table.loc[known].assign(unit=np.arange(int(known.sum()))).reset_index(drop=True),
         {c: fits[c].theta[known] for c in codes},
@@ -304,7 +305,7 @@ def _assemble(
         "relations": _relations_table(units, fits, weights, choices).loc[known].reset_index(drop=True),
         "choices": choices,
         "shifts": shifts,
-        "hysteresis": find_hysteresis(units.seen(), fits, priors, weights, options),
+        "hysteresis": find_hysteresis(seen, fits, priors, weights, options),
     }
     return RelationSet(curves, tables, units.refused)
 

@@ -5,6 +5,7 @@ from __future__ import annotations
 import numpy as np
 import pandas as pd
 
+from inundate.common.sizes import largest_extents
 from inundate.relation.relations import RelationSet
 
 Z_90 = 1.6448536269514722
@@ -32,9 +33,8 @@ def widen_bands(
     DataFrame
         Bands within 0 and the largest extent, never falling with stage; 0 where the relation says dry for certain.
     """
-    largest = table["wetland_id"].map(dict(zip(wetlands["wetland_id"], wetlands["area_max_m2"], strict=True)))
+    most = largest_extents(table["wetland_id"], wetlands).to_numpy()
     area, low, high = (table[c].to_numpy(float) for c in ("area_m2", "area_lo_m2", "area_hi_m2"))
-    most = largest.to_numpy(float)
     left = table["wetland_id"].map(parts or {}).astype(float).fillna(1.0).to_numpy()
     reach = Z_90 * left * np.hypot(area * lasting[0], (most - area) * lasting[1]) * (high > 0)
     out = table.assign(
@@ -46,6 +46,11 @@ def widen_bands(
         out[name] = out.groupby(keys, sort=False)[name].cummax()
     out["area_lo_m2"] = np.minimum(out["area_lo_m2"], out["area_m2"])
     return out
+
+
+def shared_sd(lasting: tuple[float, float]) -> float:
+    """Return the sd (share of the largest extent) of what lasts in a half full wetland: half is missed in part, half added in part."""
+    return 0.5 * float(np.hypot(*lasting))
 
 
 def with_shared_errors(pairs: pd.DataFrame, wetlands: pd.DataFrame, lasting: tuple[float, float]) -> pd.DataFrame:
@@ -69,11 +74,9 @@ def with_shared_errors(pairs: pd.DataFrame, wetlands: pd.DataFrame, lasting: tup
         Rows of ``pairs`` in their order; rows that are made, dry, or of wetlands with less than two made rows stay as they are.
     """
     made = pairs["made"].astype(bool)
-    size = (
-        pairs["wetland_id"].map(dict(zip(wetlands["wetland_id"], wetlands["area_max_m2"], strict=True))).astype(float)
-    )
+    size = largest_extents(pairs["wetland_id"], wetlands)
     seen = (made.groupby(pairs["wetland_id"]).transform("sum") > 1) & ~made & (pairs["stage_m"] > 0)
-    shared = seen.groupby(pairs["wetland_id"]).transform("sum") * (0.5 * np.hypot(*lasting) * size) ** 2
+    shared = seen.groupby(pairs["wetland_id"]).transform("sum") * (shared_sd(lasting) * size) ** 2
     wide = np.sqrt(pairs["area_sd_m2"].astype(float) ** 2 + shared)
     return pairs.assign(area_sd_m2=np.where(seen, wide, pairs["area_sd_m2"]))
 
@@ -104,9 +107,7 @@ def leaf_factors(
     least : int
         Fewer views than this of a leaf state tell nothing: it takes the largest factor found, 2 if none (common practice).
     """
-    size = (
-        pairs["wetland_id"].map(dict(zip(wetlands["wetland_id"], wetlands["area_max_m2"], strict=True))).astype(float)
-    )
+    size = largest_extents(pairs["wetland_id"], wetlands)
     bare = (pairs["leaf_state"].astype(str) == "leaf_off").groupby(pairs["wetland_id"]).transform("sum") >= 8
     known = bare & (pairs["stage_m"] > 0) & ~pairs["censored"].astype(bool)
     table = pairs[known].assign(size=size[known], told=np.nan)

@@ -5,7 +5,9 @@ from __future__ import annotations
 import numpy as np
 import pandas as pd
 
+from inundate.common.sizes import largest_extents
 from inundate.relation.families import water_at_survey
+from inundate.relation.lasting import shared_sd
 
 TOP_M = 0.03
 LEAST_DAYS, LEAST_YEARS, LEAST_RATIO = 60, 2, 2.0
@@ -73,14 +75,13 @@ def believed_outlets(outlets: pd.DataFrame, pairs: pd.DataFrame, wetlands: pd.Da
         Rows of ``outlets`` but for those at whose level three leaf-off views or more show, in the median, less than half of the largest
         extent.
     """
-    size = dict(zip(wetlands["wetland_id"], wetlands["area_max_m2"], strict=True))
     bare = pairs[pairs["leaf_state"].astype(str) == "leaf_off"]
     keep = []
-    for row in outlets.to_dict("records"):
+    for row in outlets.assign(largest=largest_extents(outlets["wetland_id"], wetlands)).to_dict("records"):
         mine = (bare["wetland_id"] == row["wetland_id"]) & (bare["stage_m"] > row["level_m"])
         if "period" in bare:
             mine &= bare["period"] == row["period"]
-        share = bare.loc[mine, "area_m2"] / size.get(row["wetland_id"], np.nan)
+        share = bare.loc[mine, "area_m2"] / row["largest"]
         keep.append(len(share) < _LEAST_VIEWS or not float(share.median()) < 1.0 - _LARGEST)
     return outlets[np.array(keep, bool)].reset_index(drop=True)
 
@@ -110,20 +111,16 @@ def with_outlets(
         Columns of ``pairs`` and ``made`` (true for rows that were added), sorted by wetland and date.
     """
     grounds = {} if hypsometry is None else {str(k): g for k, g in hypsometry.groupby("wetland_id")}
-    size = dict(zip(wetlands["wetland_id"], wetlands["area_max_m2"], strict=True))
     rows = []
-    for row in outlets.to_dict("records"):
-        largest, level = size.get(row["wetland_id"]), row["level_m"] + 0.5 * TOP_M
-        if largest is None:
-            continue
+    for row in outlets.assign(largest=largest_extents(outlets["wetland_id"], wetlands)).to_dict("records"):
+        level, largest = row["level_m"] + 0.5 * TOP_M, row["largest"]
+        key = row["wetland_id"], row["period"], row["date"]
         below = _below_rim(grounds[row["wetland_id"]]) if row["wetland_id"] in grounds else []
-        for drop, share, sd in [(0.0, FULL, 0.5 * TOP_M), *below]:
-            rows.append(
-                (row["wetland_id"], row["period"], row["date"], level - drop, sd, share * largest, FULL_SD * largest)
-            )
+        rows.append((*key, level, 0.5 * TOP_M, FULL * largest, FULL_SD * largest))
+        rows.extend((*key, level - drop, RIM_SD_M, share * largest, FULL_SD * largest) for drop, share in below)
     names = ["wetland_id", "period", "date", "stage_m", "stage_sd_m", "area_m2", "area_sd_m2"]
     made = pd.DataFrame(rows, columns=names).assign(censored=False, leaf_state="leaf_off", view_fraction=1.0)
-    made = made[made["stage_m"] > 0].reindex(columns=pairs.columns)
+    made = made[(made["stage_m"] > 0) & made["area_m2"].notna()].reindex(columns=pairs.columns)
     made["date"] = pd.to_datetime(made["date"]).dt.normalize()
     made = made.astype(pairs.dtypes.to_dict()).assign(made=True)
     both = [t for t in (pairs.assign(made=False), made) if len(t)] or [made]
@@ -155,7 +152,7 @@ def lasting_parts(
     dict
         wetland_id -> 0..1, for wetlands with outlet and elevation.
     """
-    views = 0.5 * float(np.hypot(*lasting))
+    views = shared_sd(lasting)
     if hypsometry is None or views <= 0:
         return {}
     wanted = set(outlets["wetland_id"]) & set(wetlands["wetland_id"])
@@ -164,7 +161,7 @@ def lasting_parts(
         rungs = _below_rim(ground)
         if len(rungs) < 2:
             continue
-        (deep, least, _), (near, most, _) = rungs[0], rungs[-1]
+        (deep, least), (near, most) = rungs[0], rungs[-1]
         model = RIM_SD_M * (most - least) / max(deep - near, 0.05)
         out[str(name)] = model / float(np.hypot(model, views))
     return out
@@ -186,22 +183,26 @@ def up_to_rim(stage_m: np.ndarray, share: np.ndarray) -> np.ndarray:
     -------
     ndarray of float64, shape (step,)
     """
-    rising = share + 1e-9 * np.arange(share.size)
-    low, high = (float(np.interp(part, rising, stage_m)) for part in _RIM_LINE)
+    low, high = (_stage_at(part, stage_m, share) for part in _RIM_LINE)
     if high <= low:
         return share
     line = _RIM_LINE[1] + (_RIM_LINE[1] - _RIM_LINE[0]) * (stage_m - high) / (high - low)
     return np.where(stage_m > high, np.clip(np.maximum(line, share), 0.0, 1.0), share)
 
 
-def _below_rim(ground: pd.DataFrame) -> list[tuple[float, float, float]]:
-    """Return (m below the rim, share of the largest extent there, sd in m) from one hypsometry, down to water at the survey."""
+def _stage_at(part: float, stage_m: np.ndarray, share: np.ndarray) -> float:
+    """Return the stage at which a share of the largest extent is reached; ``share`` never falls."""
+    return float(np.interp(part, share + 1e-9 * np.arange(share.size), stage_m))
+
+
+def _below_rim(ground: pd.DataFrame) -> list[tuple[float, float]]:
+    """Return (m below the rim, share of the largest extent there) from one hypsometry, down to water at the survey."""
     stage, area = ground["stage_m"].to_numpy(float), ground["area_m2"].to_numpy(float)
     share = np.maximum.accumulate(area) / max(float(area.max()), 1e-9)
     floor = float(np.interp(water_at_survey(stage, share)[0], stage, share))
     share = up_to_rim(stage, share)
-    level = lambda part: float(np.interp(part, share + 1e-9 * np.arange(share.size), stage))  # noqa: E731
-    return [(level(RIM) - level(part), part, RIM_SD_M) for part in RUNGS if part > floor + FULL_SD]
+    rim = _stage_at(RIM, stage, share)
+    return [(rim - _stage_at(part, stage, share), part) for part in RUNGS if part > floor + FULL_SD]
 
 
 def through_outlets(

@@ -11,6 +11,7 @@ from scipy import stats
 
 from inundate.common.codes import LEAF_STATES
 from inundate.common.errors import InputError, Refusal
+from inundate.common.sizes import largest_extents
 from inundate.relation.families import empty_table, hypsometry_table
 from inundate.relation.options import RelationOptions
 
@@ -165,7 +166,7 @@ class Units:
     made : ndarray of bool, shape (pair,)
         Pairs that no view stands behind (see :func:`inundate.relation.with_outlets`): they shape curves, and judge nothing.
     tables, spans : ndarray
-        Hypsometry tables (table, level, column) and spans (table, 2).
+        Hypsometry tables (table, level, column) and spans (table, 5), see :func:`inundate.relation.families.hypsometry_table`.
     hypsometry : dict
         wetland_id -> (stage_m, area share) as laid out.
     refused : list of Refusal
@@ -187,6 +188,10 @@ class Units:
     def unit_of_pair(self) -> np.ndarray:
         """Position of the unit of each pair (int64)."""
         return np.repeat(np.arange(self.first.size - 1), np.diff(self.first))
+
+    def seen_rows(self, unit: int) -> np.ndarray:
+        """Positions of the pairs of one unit that views stand behind (int64)."""
+        return np.flatnonzero(~self.made[self.first[unit] : self.first[unit + 1]]) + self.first[unit]
 
     def seen(self) -> Units:
         """Return the same units with none but pairs that views stand behind."""
@@ -294,14 +299,18 @@ def _clean(pairs: pd.DataFrame, sites: pd.DataFrame, options: RelationOptions) -
     clean["wetland_id"] = clean["wetland_id"].astype(str)
     clean["date"] = _day(clean["date"]) if len(clean) else pd.to_datetime(clean["date"])
     clean["period"] = clean["period"].astype(str) if "period" in clean else "1"
-    for column, value in (("censored", False), ("leaf_state", ""), ("rising", np.nan), ("view_fraction", np.nan)):
+    for column, value in (
+        ("censored", False),
+        ("made", False),
+        ("leaf_state", ""),
+        ("rising", np.nan),
+        ("view_fraction", np.nan),
+    ):
         if column not in clean:
             clean[column] = value
-    if "made" not in clean:
-        clean["made"] = False
     for column in ("censored", "made"):
         clean[column] = clean[column].fillna(False).astype(bool)
-    size = clean["wetland_id"].map(sites.set_index("wetland_id")["area_max_m2"]).astype(float)
+    size = largest_extents(clean["wetland_id"], sites)
     for column in ("stage_sd_m", "area_sd_m2"):
         if column not in clean:
             clean[column] = np.nan

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import itertools
-from dataclasses import dataclass
 
 import numpy as np
 from scipy import stats
@@ -11,29 +10,14 @@ from scipy import stats
 from inundate.series.fitting import Setup
 from inundate.series.heldout import Evidence, relation_share
 from inundate.series.inputs import Events
-from inundate.series.worth import pair_events
+from inundate.series.model import with_leaves
+from inundate.series.worth import count_once, pair_events
 
 WIDTH_90 = 1.6448536269514722
 # Weight of the pooled value beside a wetland's or a cell's own, and most of that of hidden seasons beside loggers, in independent
 # blocks; common practice, no source.
 _SHRINK_BLOCKS = 8.0
 _STEPS = 4
-
-
-@dataclass(frozen=True, slots=True)
-class Widths:
-    """Factors on the level's standard deviation.
-
-    Attributes
-    ----------
-    predicted : ndarray, shape (4, 3)
-        By leaf state and size third, for days without own stage.
-    stage : float
-        For days with own stage.
-    """
-
-    predicted: np.ndarray
-    stage: float
 
 
 def size_third(area_max_m2: np.ndarray) -> np.ndarray:
@@ -47,9 +31,7 @@ def _clusters(evidence: Evidence, chosen: np.ndarray | None = None) -> np.ndarra
     key = evidence.wetland * 1000 + evidence.block
     chosen = np.ones(key.size, bool) if chosen is None else chosen
     out = np.zeros(key.size)
-    if chosen.any():
-        _, inverse, counts = np.unique(key[chosen], return_inverse=True, return_counts=True)
-        out[chosen] = 1 / counts[inverse]
+    out[chosen] = count_once(key[chosen])
     return out
 
 
@@ -93,13 +75,13 @@ def _simplex(kinds: int) -> np.ndarray:
     return grid[np.argsort((grid**2).sum(axis=1), kind="stable")]
 
 
-def solve_width(gap: np.ndarray, sd: np.ndarray, noise: np.ndarray, weight: np.ndarray, aim: float = 0.9) -> float:
-    """Return the factor on ``sd`` at which a share ``aim`` of gaps lies inside; ``noise`` is the hidden value's own error."""
+def solve_width(gap: np.ndarray, sd: np.ndarray, noise: np.ndarray, weight: np.ndarray) -> float:
+    """Return the factor on ``sd`` at which nine in ten gaps lie inside; ``noise`` is the hidden value's own error."""
     low, high = 0.2, 6.0
     for _ in range(40):
         middle = np.sqrt(low * high)
         inside = np.abs(gap) <= WIDTH_90 * np.sqrt((middle * sd) ** 2 + noise**2)
-        if (inside * weight).sum() >= aim * weight.sum():
+        if (inside * weight).sum() >= 0.9 * weight.sum():
             high = middle
         else:
             low = middle
@@ -108,9 +90,8 @@ def solve_width(gap: np.ndarray, sd: np.ndarray, noise: np.ndarray, weight: np.n
 
 def blended_evidence(evidence: Evidence, weights: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
     """Return the mean and sd (m) of the blended prediction of each row."""
-    leafy = np.array([0.0, 0.5, 1.0, 0.5])[evidence.leaf][:, None]
-    bare, full = weights[:, evidence.wetland]
-    w = (bare + leafy * (full - bare)).T
+    bare, leafy = weights[:, evidence.wetland]
+    w = with_leaves(bare, leafy, evidence.leaf[:, None]).T
     mean = (w * evidence.mean).sum(axis=0)
     var = (w * (evidence.sd**2 + (evidence.mean - mean) ** 2)).sum(axis=0)
     return mean, np.sqrt(var)

@@ -32,7 +32,7 @@ from inundate.series.model import (
     left_out_scores,
     smooth_levels,
 )
-from inundate.series.result import Joint, SeriesResult, daily_table
+from inundate.series.result import Joint, SeriesResult, daily_table, lasting_left
 from inundate.series.smooth import area_moments
 from inundate.series.worth import correct_leafy, scene_factors
 
@@ -256,8 +256,7 @@ def _assemble(
             one[2],
             WIDTH_90,
         )
-        part = lasting[1].get(panel.ids[i], 1.0)
-        widen_lasting(one, (part * lasting[0][0], part * lasting[0][1]))
+        widen_lasting(one, lasting_left(*lasting, panel.ids[i]))
         areas[:, i] = np.minimum(one * panel.area_max_m2[i], panel.area_max_m2[i])
     basis = _basis(setup, levels, views)
     daily = daily_table(panel.ids, panel.dates, areas, basis, panel.leaf)

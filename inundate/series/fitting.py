@@ -11,8 +11,8 @@ from numba import njit
 
 from inundate.common.seeds import rng_for
 from inundate.series.balance import MEAN, SD, SIGNALS, balance_path
-from inundate.series.bucket import fit_balance, fit_linear, level_targets, linear_path
 from inundate.series.drivers import Drivers
+from inundate.series.fits import fit_balance, fit_linear, level_targets, linear_path
 from inundate.series.inputs import Events, FillOptions, Panel
 from inundate.series.maps import LevelMaps
 
@@ -57,7 +57,8 @@ class Setup:
     group : ndarray, shape (wetland, covariate)
         1, standardised log size, deciduous, evergreen.
     region, design : tuple of ndarray
-        A fold each: what drives the water balance, the loggers' first signal last (row, spin + day), and design of the linear predictor (spin + day, column).
+        A fold each: what drives the water balance, the loggers' first signal last (row, spin + day), and design of the linear
+        predictor (spin + day, column).
     """
 
     panel: Panel
@@ -218,22 +219,19 @@ def pool_items(setup: Setup) -> np.ndarray:
     return np.sort(np.concatenate([np.flatnonzero(logged)[:_POOL_WETLANDS], others]))
 
 
-def member_sets(
-    setup: Setup, kind: str, i: int, theta: np.ndarray, cov: np.ndarray, members: int | None = None
-) -> tuple[np.ndarray, np.ndarray]:
-    """Return parameter sets (member, parameter) drawn in antithetic pairs, and the squared length of each pair's draw (pair,)."""
-    half = max((setup.options.members if members is None else members) // 2, 1)
+def member_sets(setup: Setup, kind: str, i: int, theta: np.ndarray, cov: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+    """Return parameter sets (member, parameter) of a wetland drawn from its posterior in antithetic pairs, and the squared length of each
+    set's draw (member,).
+    """
+    half = max(setup.options.members // 2, 1)
     draw = rng_for(setup.seed, "members", kind, setup.panel.ids[i]).standard_normal((half, theta.size))
     values, vectors = np.linalg.eigh(cov)
     step = draw @ (vectors * np.sqrt(np.maximum(values, 0))).T
-    return np.vstack([theta + step, theta - step]), (draw**2).sum(axis=1)
+    return np.vstack([theta + step, theta - step]), np.tile((draw**2).sum(axis=1), 2)
 
 
-def member_paths(
-    setup: Setup, kind: str, i: int, theta: np.ndarray, cov: np.ndarray, members: int | None = None
-) -> np.ndarray:
-    """Return levels (member, day) of a wetland for parameter sets drawn from its posterior, in antithetic pairs."""
-    sets, _ = member_sets(setup, kind, i, theta, cov, members)
+def member_paths(setup: Setup, kind: str, i: int, sets: np.ndarray) -> np.ndarray:
+    """Return levels (member, day) of a wetland for parameter sets (member, parameter)."""
     d, fold = setup.drivers, setup.drivers.fold[i]
     table, full = setup.maps.share[i], float(setup.maps.full_m[i])
     out = np.empty((len(sets), len(setup.panel.dates)))

@@ -7,7 +7,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 import pandas as pd
 
-from inundate.common.codes import COVERS, LEAF_STATES
+from inundate.common.codes import CANOPY_HIDES, COVERS, LEAF_STATES
 from inundate.common.errors import InputError
 from inundate.series.maps import LevelMaps, Relations, build_maps
 
@@ -269,7 +269,7 @@ def _last_resort(table: pd.DataFrame) -> pd.Series:
         return pd.Series(False, index=table.index)
     never = ~table["used"].astype(bool).groupby(table["wetland_id"]).transform("any")
     seen = (table["clear_fraction"] >= 0.5) & (table["view_fraction"] >= LEAST_OPEN * table["clear_fraction"])
-    return never & seen & (table["reason"] == "canopy hides it")
+    return never & seen & (table["reason"] == CANOPY_HIDES)
 
 
 def _stage(table: pd.DataFrame | None, place: dict[str, int], first: pd.Timestamp) -> pd.DataFrame:

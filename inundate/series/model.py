@@ -206,7 +206,7 @@ def departure_logliks(
 
     def work(row: int) -> np.ndarray:
         i = int(items[row])
-        path = member_paths(setup, kind, i, post.theta[row], np.zeros_like(post.cov[row]), 2)[:1]
+        path = member_paths(setup, kind, i, post.theta[row][None])
         return departure_loglik(setup, i, path, _events_of(views, stage, i))
 
     return np.array(in_threads(work, range(len(items)), setup.options.workers))
@@ -246,25 +246,24 @@ def _smooth_one(
     setup: Setup, fit: Fitted, i: int, parameters: tuple[np.ndarray, np.ndarray], rows: Rows
 ) -> tuple[np.ndarray, np.ndarray, np.ndarray, np.ndarray]:
     """Return mean and variance of the level (day,), and the normal observations that stand for the events."""
-    paths = member_paths(setup, fit.kind, i, *parameters)
+    sets, square = member_sets(setup, fit.kind, i, *parameters)
+    paths = member_paths(setup, fit.kind, i, sets)
     sd, memory = float(fit.departure.sd[i] * setup.maps.full_m[i]), float(fit.departure.memory[i])
     site, site_var = _sites(setup, i, paths, rows, sd, memory)
     phi, s0 = float(np.exp(-1 / memory)), sd * sd
     mean, var = np.empty(paths.shape[1]), np.empty(paths.shape[1])
-    smooth_members(
-        paths, member_scores(setup, fit, i, *parameters), site, site_var, phi, s0 * (1 - phi * phi), s0, mean, var
-    )
+    score = member_scores(setup, fit, i, sets, square)
+    smooth_members(paths, score, site, site_var, phi, s0 * (1 - phi * phi), s0, mean, var)
     return mean, var, site, site_var
 
 
-def member_scores(setup: Setup, fit: Fitted, i: int, theta: np.ndarray, cov: np.ndarray) -> np.ndarray:
+def member_scores(setup: Setup, fit: Fitted, i: int, sets: np.ndarray, square: np.ndarray) -> np.ndarray:
     """Return the log of each member's prior over the density it was drawn from; infinite for a predictor without bends."""
     if fit.kind == LINEAR:
-        return np.full(2 * max(setup.options.members // 2, 1), np.inf)
-    sets, square = member_sets(setup, fit.kind, i, theta, cov)
+        return np.full(len(sets), np.inf)
     gap = sets - setup.group[i] @ fit.prior.coef
     away = np.einsum("mi,ij,mj->m", gap, np.linalg.inv(fit.prior.cov), gap)
-    return 0.5 * (np.concatenate([square, square]) - away)
+    return 0.5 * (square - away)
 
 
 def left_out_scores(setup: Setup, fit: Fitted, items: np.ndarray, views: Events, stage: Events) -> np.ndarray:
@@ -304,6 +303,11 @@ def left_out_scores(setup: Setup, fit: Fitted, items: np.ndarray, views: Events,
     return out
 
 
+def with_leaves(bare: np.ndarray, leafy: np.ndarray, leaf: np.ndarray) -> np.ndarray:
+    """Go from values on bare days to those on leafy days by leaf state code, halfway as leaves come and go; shapes broadcast."""
+    return bare + np.array([0.0, 0.5, 1.0, 0.5], bare.dtype)[leaf] * (leafy - bare)
+
+
 def day_weights(weights: np.ndarray, leaf: np.ndarray, kind: int) -> np.ndarray:
     """Return the weight of one kind (wetland, day): that of bare or of leafy days, halfway between as leaves come and go.
 
@@ -314,9 +318,8 @@ def day_weights(weights: np.ndarray, leaf: np.ndarray, kind: int) -> np.ndarray:
     leaf : ndarray of uint8, shape (wetland, day)
     kind : int
     """
-    leafy = np.array([0.0, 0.5, 1.0, 0.5], np.float32)[leaf]
-    bare, full = weights[:, :, kind].astype(np.float32)
-    return bare[:, None] + leafy * (full - bare)[:, None]
+    bare, leafy = weights[:, :, kind].astype(np.float32)
+    return with_leaves(bare[:, None], leafy[:, None], leaf)
 
 
 def blend(levels: Sequence[Levels], weights: np.ndarray, leaf: np.ndarray) -> Levels:

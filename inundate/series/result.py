@@ -138,8 +138,7 @@ class SeriesResult:
 
     def _with_lasting(self, out: np.ndarray, wetland: str, n: int) -> np.ndarray:
         """Add to each draw (draw, day) what views of this wetland may keep missing or adding, in place."""
-        part = self.lasting_part.get(wetland, 1.0)
-        missed, added = (part * value for value in self.lasting)
+        missed, added = lasting_left(self.lasting, self.lasting_part, wetland)
         if missed > 0 or added > 0:
             z = rng_for(self.seed, "lasting", wetland).standard_normal((n, 2), dtype=np.float32)
             largest = np.float32(self.area_max_m2[self.wetland_ids.index(wetland)])
@@ -160,6 +159,12 @@ class SeriesResult:
         for i, block in self.iter_draws(n):
             out[:, i] = block
         return out
+
+
+def lasting_left(lasting: tuple[float, float], parts: dict[str, float], wetland: str) -> tuple[float, float]:
+    """Return the lasting errors (missed, added) that are left in a wetland."""
+    part = parts.get(wetland, 1.0)
+    return part * lasting[0], part * lasting[1]
 
 
 def daily_table(

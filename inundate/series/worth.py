@@ -122,7 +122,7 @@ def _readings(
     """Return the reading of each leaf state and openness group, and what is left of each paired view."""
     kind, group, value = views.kind[at], bins[at], views.value[at]
     share, share_sd = truth
-    weight, _ = _blocks(views.owner[at] * 1000 + views.day[at] // 365)
+    weight = count_once(views.owner[at] * 1000 + views.day[at] // 365)
     moments = _moments(share, weight)
     table: dict[tuple[int, int], Reading] = {}
     gap = np.zeros(at.size)
@@ -180,10 +180,10 @@ def _lasting(gap: np.ndarray, views: Events, at: np.ndarray) -> np.ndarray:
     return hidden * max((np.sum(ratio) + _SHRINK) / (len(ratio) + _SHRINK), 0.1)
 
 
-def _blocks(cluster: np.ndarray) -> tuple[np.ndarray, float]:
-    """Return weights by which each cluster counts once, and the number of clusters."""
-    _, inverse, counts = np.unique(cluster, return_inverse=True, return_counts=True)
-    return 1 / counts[inverse], float(counts.size)
+def count_once(key: np.ndarray) -> np.ndarray:
+    """Return weights by which the rows of each key add up to 1."""
+    _, inverse, counts = np.unique(key, return_inverse=True, return_counts=True)
+    return 1 / counts[inverse]
 
 
 def _usual_sd(sd: np.ndarray) -> float:
